@@ -1,0 +1,231 @@
+"""Every deliberate error and every finding, in one catalogue. Imports nothing of ours.
+
+    Terrain2qError              anything this package says no with
+    ├── InputError              an input is wrong; nothing was written (also a ValueError)
+    │   └── ProfileError        a section's own numbers are wrong
+    ├── OutputError             a result cannot be written (also an OSError)
+    └── NoAnswerError           the question has no answer; `nearest` says what can be had
+
+An error stops; a :class:`Finding` is noted about one place and the rest goes on. Both carry a code
+of :data:`CATALOGUE`, and each code has a heading in ``docs/findings.md``.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from types import MappingProxyType
+
+ERROR, FAILED, DOUBTFUL, NOTE = "error", "failed", "doubtful", "note"
+SEVERITIES = (FAILED, DOUBTFUL, NOTE)
+"""Severities of findings, the worst first. An ``error`` stops the run and is never a finding."""
+
+
+@dataclass(frozen=True)
+class Kind:
+    """What one code of the catalogue means: its usual severity, a title and the remedy."""
+
+    severity: str
+    title: str
+    remedy: str
+
+
+CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
+    # --- errors: the inputs are wrong and nothing was written -------------------------------------
+    "file-missing": Kind(ERROR, "A file or folder is not there", "Correct the path; paths are relative to the study file."),
+    "file-unreadable": Kind(ERROR, "A file cannot be read", "Check that the file is whole and of the kind expected."),
+    "study-not-toml": Kind(ERROR, "The study file is not valid TOML", "Mend the line named; `terrain2q start` writes a valid file to fill in."),
+    "key-unknown": Kind(ERROR, "A key the study file does not have", "Use the nearest known key, or delete the line."),
+    "key-missing": Kind(ERROR, "A key is needed and not there", "Add the key to the study file or give it as an option."),
+    "key-conflict": Kind(ERROR, "Two keys contradict each other", "Keep one of the two."),
+    "value-not-allowed": Kind(ERROR, "A value of the wrong type or outside what is allowed", "Give a value as described."),
+    "layer-missing": Kind(ERROR, "A file has no such layer", "Name one of the file's layers after `|layer=`."),
+    "layer-empty": Kind(ERROR, "A layer has no features", "Give a layer with features."),
+    "geometry-kind": Kind(ERROR, "A layer holds the wrong kind of geometry", "Give a layer of the kind named."),
+    "field-missing": Kind(ERROR, "A layer or table has no such column", "Name one of the columns listed."),
+    "crs-missing": Kind(ERROR, "A layer or raster does not say its coordinate reference system", "Assign the CRS with a GIS before running."),
+    "crs-unknown": Kind(ERROR, "A coordinate reference system is not recognised", "Give an authority code such as EPSG:26915."),
+    "elevation-unit-unknown": Kind(ERROR, "The raster does not say the unit of its elevations", 'Set `elevation_unit = "m"`, `"ft"` or `"us-ft"` under [terrain].'),
+    "tiles-differ": Kind(ERROR, "Tiles of the terrain do not fit together", "Bring the tiles to one CRS, unit and cell size."),
+    "id-duplicate": Kind(ERROR, "Two features carry the same id", "Make the ids unique, or name another id field."),
+    "id-missing": Kind(ERROR, "A feature has no id", "Fill in the id, or name another id field."),
+    "class-missing": Kind(ERROR, "Land-cover classes are not in the roughness table", "Add a row for each class listed."),
+    "table-unknown": Kind(ERROR, "No built-in table has this name", "`terrain2q tables` lists them."),
+    "number-not-positive": Kind(ERROR, "A roughness, slope or discharge is not above zero", "Give a number above zero."),
+    "station-decreases": Kind(ERROR, "Stations of a section decrease", "Give the points from left to right; two equal stations make a vertical face."),
+    "profile-too-short": Kind(ERROR, "A section has no width", "Give at least two points at different stations."),
+    "number-not-finite": Kind(ERROR, "A number is missing or not finite", "Remove the point or fill in the number."),
+    "subareas-do-not-cover": Kind(ERROR, "The subareas leave a gap or overlap", "Let each subarea start where the one before ends, from the first station to the last."),
+    "station-outside": Kind(ERROR, "A station lies outside the section", "Give a station between the section's ends."),
+    "output-exists": Kind(ERROR, "The output folder already holds results", "Set `overwrite = true` under [output], or name another folder."),
+    "output-not-writable": Kind(ERROR, "The output cannot be written", "Choose a folder you can write to, with room on the disk."),
+    "no-answer": Kind(ERROR, "The question has no answer for this section", "The message gives the nearest value that can be reached."),
+    # --- findings: one place, the rest goes on ----------------------------------------------------
+    "line-empty": Kind(FAILED, "A cut line has no geometry or no length", "Draw the line again."),
+    "line-not-finite": Kind(FAILED, "A cut line has coordinates that are not numbers", "Draw the line again."),
+    "line-multipart": Kind(FAILED, "A cut line has several parts", "Join the parts, or give each part its own id."),
+    "line-parts-joined": Kind(NOTE, "A cut line came as a multipart of parts that join", "Nothing; store it as a single line to lose this note."),
+    "line-off-terrain": Kind(FAILED, "A cut line lies off the terrain", "Move the line or add the tile that is missing."),
+    "line-leaves-terrain": Kind(DOUBTFUL, "A cut line runs off the terrain", "Shorten the line or add the tile that is missing."),
+    "gap-bridged": Kind(DOUBTFUL, "A short gap in the terrain was bridged by a straight line", "Look at the ground there, or fill the gap in the terrain."),
+    "gap-ends-section": Kind(DOUBTFUL, "A gap in the terrain ends the usable part of a section", "Fill the gap in the terrain or draw the line elsewhere."),
+    "gap-at-stream": Kind(FAILED, "The terrain has a gap where the stream crosses", "Fill the gap in the terrain or draw the line elsewhere."),
+    "direction-unknown": Kind(NOTE, "No stream line tells which way a cut line runs; its drawn direction was kept", "Give stream lines, or make sure the line runs left to right looking downstream."),
+    "line-turned": Kind(NOTE, "A cut line was drawn right to left and has been turned", "Nothing; stations now run left to right looking downstream."),
+    "line-misses-stream": Kind(DOUBTFUL, "A cut line does not cross any stream", "Lengthen or move the line so that it crosses its stream once."),
+    "line-crosses-stream-again": Kind(DOUBTFUL, "A cut line crosses its stream more than once", "Bend or shorten the line so that it crosses once."),
+    "line-crosses-streams": Kind(DOUBTFUL, "A cut line crosses more than one stream", "Shorten the line so that it crosses one stream, or accept that the flow is that of one stream."),
+    "lines-meet": Kind(DOUBTFUL, "Two cut lines of one stream meet", "Bend or shorten one so that they do not meet."),
+    "line-oblique": Kind(NOTE, "A cut line is far from square to its stream", "Turn the line square to the flow; a slanted section is too wide."),
+    "no-low-ground": Kind(FAILED, "A section has no ground below its ends", "Draw the line across the stream, from high ground to high ground."),
+    "end-is-lowest": Kind(DOUBTFUL, "The ground falls away at a section's end", "Lengthen the line to high ground."),
+    "polygon-mended": Kind(NOTE, "An invalid polygon was mended", "Mend the polygon in its source."),
+    "polygon-dropped": Kind(DOUBTFUL, "A polygon could not be used", "Mend the polygon in its source."),
+    "cover-gap": Kind(DOUBTFUL, "The land cover has a gap under a section; the default roughness was used", "Fill the gap in the land cover, or check the default."),
+    "cover-gap-no-default": Kind(FAILED, "The land cover has a gap under a section and there is no default roughness", "Fill the gap, or set `default_n` under [land_cover]."),
+    "cover-overlap": Kind(NOTE, "Land-cover polygons overlap under a section", "Mend the overlap; the higher roughness was used."),
+    "channel-not-found": Kind(DOUBTFUL, "No channel could be told apart in the profile", "Draw a channel polygon, or look at the section; the lowest ground was used."),
+    "channel-by-polygon-missing": Kind(DOUBTFUL, "No channel polygon meets this section", "Extend the channel polygon, or set `banks = \"auto\"`."),
+    "channel-in-pieces": Kind(NOTE, "The channel polygon meets a section more than once", "Look at the section; the piece at the stream was taken."),
+    "slope-missing": Kind(FAILED, "A cut line has no slope", "Fill in the slope field, or set `value` under [slope]."),
+    "slope-not-positive": Kind(FAILED, "A cut line's slope is not above zero", "Correct the slope field."),
+    "slope-steep": Kind(DOUBTFUL, "The slope is steeper than normal depth is usually trusted at", "Check the slope; above 4 % flow is seldom near uniform."),
+    "slope-flat": Kind(DOUBTFUL, "The slope is so flat that the stage is very sensitive to it", "Check the slope and look for backwater."),
+    "flow-missing": Kind(FAILED, "No design flow applies to a section", "Add a row for this stream or section to the flows."),
+    "above-section-ends": Kind(DOUBTFUL, "Water stands above an end of the section", "Lengthen the line to higher ground; the stage is on the high side."),
+    "bank-passed": Kind(NOTE, "Water passes a bank into lower ground behind it", "Follow the water on the map; the channel's stage stays at the bank's top while the hollow fills."),
+    "several-stages": Kind(DOUBTFUL, "Several stages carry this discharge; the highest was taken", "Divide the section where the shelf begins."),
+    "supercritical": Kind(DOUBTFUL, "Normal flow is supercritical", "Check slope and roughness; use the critical stage where the flow cannot stay shallow."),
+    "velocity-high": Kind(DOUBTFUL, "The mean velocity is above 6 m/s", "Check slope, roughness and discharge."),
+    "alpha-high": Kind(DOUBTFUL, "The velocity coefficient alpha is above 2", "Check the division into subareas; the velocities differ widely."),
+    "surface-tilts": Kind(NOTE, "Water in a hollow stands lower than in the channel", "Treat the stage behind the bank apart."),
+    "elevation-unit-contradicted": Kind(DOUBTFUL, "The study and the raster state different elevation units; the study's was used", "Remove `elevation_unit`, or correct the raster."),
+    "section-failed": Kind(FAILED, "A section could not be worked out", "See the message; please report it if the inputs look right."),
+})  # fmt: skip
+
+
+class Terrain2qError(Exception):
+    """Anything this package says no with: what, where, how to fix it, and a code of the catalogue.
+
+    Parameters
+    ----------
+    code : str
+        A code of :data:`CATALOGUE`.
+    what : str
+        What is wrong, with the value.
+    where : str
+        The file, layer, feature or argument.
+    fix : str, optional
+        What to do; the catalogue's remedy where empty.
+    """
+
+    def __init__(self, code: str, what: str, *, where: str = "", fix: str = "") -> None:
+        if code not in CATALOGUE:
+            raise KeyError(f"{code!r} is not in the catalogue")
+        self.code, self.what, self.where, self.fix = code, what, where, fix or CATALOGUE[code].remedy
+        super().__init__(code, what)
+
+    def __str__(self) -> str:
+        lines = [f"{self.what}  [{self.code}]"]
+        if self.where:
+            lines.append(f"  where: {self.where}")
+        lines.append(f"  fix:   {self.fix}")
+        return "\n".join(lines)
+
+    def __reduce__(self):
+        return (_rebuild, (type(self), self.__dict__.copy()))
+
+    def at(self, where: str) -> Terrain2qError:
+        """Return the same error with the place put in front of where it was seen."""
+        other = _rebuild(type(self), self.__dict__.copy())
+        other.where = f"{where}: {self.where}" if self.where else where
+        return other
+
+    def as_dict(self) -> dict[str, str]:
+        """Return the error as plain text fields, for ``--json``."""
+        return {"code": self.code, "what": self.what, "where": self.where, "fix": self.fix}
+
+
+def _rebuild(kind: type[Terrain2qError], state: dict) -> Terrain2qError:
+    error = kind.__new__(kind)
+    error.__dict__.update(state)
+    error.args = (state["code"], state["what"])
+    return error
+
+
+class InputError(Terrain2qError, ValueError):
+    """An input is wrong; nothing was written."""
+
+
+class ProfileError(InputError):
+    """A section's own numbers are wrong."""
+
+
+class OutputError(Terrain2qError, OSError):
+    """A result cannot be written."""
+
+
+class NoAnswerError(Terrain2qError, ArithmeticError):
+    """The question has no answer for this section.
+
+    Attributes
+    ----------
+    nearest : float
+        The nearest value that can be reached (NaN where there is none); `what` says of which quantity.
+    """
+
+    def __init__(self, what: str, *, nearest: float = float("nan"), where: str = "", fix: str = "") -> None:
+        super().__init__("no-answer", what, where=where, fix=fix)
+        self.nearest = nearest
+
+
+@dataclass(frozen=True)
+class Finding:
+    """One thing a reviewer must know about one place.
+
+    Attributes
+    ----------
+    code : str
+        A code of :data:`CATALOGUE`.
+    message : str
+        What was found here, with the numbers.
+    layer, feature_id : str
+        The layer of the inputs or results, and the feature.
+    severity, remedy : str
+        From the catalogue, unless stated.
+    x, y : float
+        The place in the terrain's CRS, NaN where there is none.
+    """
+
+    code: str
+    message: str
+    layer: str = ""
+    feature_id: str = ""
+    severity: str = ""
+    remedy: str = ""
+    x: float = float("nan")
+    y: float = float("nan")
+
+    def __post_init__(self) -> None:
+        kind = CATALOGUE[self.code]
+        if not self.severity:
+            object.__setattr__(self, "severity", kind.severity)
+        if not self.remedy:
+            object.__setattr__(self, "remedy", kind.remedy)
+        if self.severity not in SEVERITIES:
+            raise ValueError(f"a finding's severity is one of {SEVERITIES}, not {self.severity!r}")
+
+    def at(self, x: float, y: float) -> Finding:
+        """Return the same finding with a place."""
+        return replace(self, x=float(x), y=float(y))
+
+
+def worst(severities) -> str:
+    """Return the worst of some severities, or an empty string where there is none.
+
+    Examples
+    --------
+    >>> worst(["note", "doubtful"])
+    'doubtful'
+    """
+    found = set(severities)
+    return next((s for s in SEVERITIES if s in found), "")

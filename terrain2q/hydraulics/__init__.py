@@ -1,0 +1,1 @@
+"""Section hydraulics: arrays in, arrays out. Knows no files, no GIS and no screen."""

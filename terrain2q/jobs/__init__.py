@@ -1,0 +1,1 @@
+"""The jobs: plain functions from checked inputs to results."""
