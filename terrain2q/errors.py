@@ -2,6 +2,7 @@
 
     Terrain2qError              anything this package says no with
     ├── InputError              an input is wrong; nothing was written (also a ValueError)
+    │   ├── InputErrors         several inputs are wrong; each is in `problems`
     │   └── ProfileError        a section's own numbers are wrong
     ├── OutputError             a result cannot be written (also an OSError)
     └── NoAnswerError           the question has no answer; `nearest` says what can be had
@@ -154,6 +155,43 @@ def _rebuild(kind: type[Terrain2qError], state: dict) -> Terrain2qError:
 
 class InputError(Terrain2qError, ValueError):
     """An input is wrong; nothing was written."""
+
+
+class InputErrors(InputError):
+    """Several inputs are wrong and are reported together; nothing was written.
+
+    Code, place and remedy are those of the first; the text lists all.
+
+    Attributes
+    ----------
+    problems : tuple of InputError
+        At least two, in the order met.
+    """
+
+    def __init__(self, problems) -> None:
+        self.problems: tuple[InputError, ...] = tuple(problems)
+        first = self.problems[0]
+        super().__init__(first.code, first.what, where=first.where, fix=first.fix)
+
+    def __str__(self) -> str:
+        return "\n".join([f"{len(self.problems)} problems", *map(str, self.problems)])
+
+    def at(self, where: str) -> InputErrors:
+        """Return the same errors with the place put in front of where each was seen."""
+        return InputErrors(problem.at(where) for problem in self.problems)
+
+    def as_dict(self) -> dict:
+        """Return the first error as plain text fields, and all of them under ``problems``."""
+        return super().as_dict() | {"problems": [problem.as_dict() for problem in self.problems]}
+
+
+def raise_together(problems) -> None:
+    """Raise what is in `problems`: nothing where it is empty, the one, or all as one :class:`InputErrors`."""
+    problems = list(problems)
+    if len(problems) == 1:
+        raise problems[0]
+    if problems:
+        raise InputErrors(problems)
 
 
 class ProfileError(InputError):
