@@ -79,6 +79,7 @@ CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
     "lines-meet": Kind(DOUBTFUL, "Two cut lines of one stream meet", "Bend or shorten one so that they do not meet."),
     "line-crosses-itself": Kind(DOUBTFUL, "A cut line crosses itself", "Draw the line so that it never comes back over itself."),
     "line-oblique": Kind(NOTE, "A cut line is far from square to its stream", "Turn the line square to the flow; a slanted section is too wide."),
+    "stream-unusable": Kind(DOUBTFUL, "A stream line has no geometry, no length or broken coordinates; it was left out", "Draw the stream line again."),
     "stream-gap": Kind(NOTE, "The parts of a stream do not join; stream distances run straight over the gap", "Join the parts in the stream layer."),
     "stream-parts-oppose": Kind(DOUBTFUL, "Parts of a stream run against each other", "Turn the part that runs upstream; streams are drawn downstream."),
     "no-low-ground": Kind(FAILED, "A section has no ground below its ends", "Draw the line across the stream, from high ground to high ground."),
