@@ -1,0 +1,844 @@
+"""The study file -> frozen, checked dataclasses. Defaults live here and nowhere else.
+
+A study is a few tables of keys. Each table is a dataclass below, each key one field made by
+:func:`key`, with its kind, its checks and a line of help; the options of the command line, the
+commented file that ``terrain2q start`` writes and the page of keys in the docs are made from them.
+
+To add a key, add a field. To add a table, add a class and a field of :class:`Study`.
+"""
+
+# ruff: noqa: RUF009
+# `key` and `_table` make dataclass fields, which that rule does not know.
+
+from __future__ import annotations
+
+import difflib
+import math
+import os
+import re
+import tomllib
+from collections.abc import Collection, Iterator, Mapping
+from dataclasses import MISSING, dataclass, field, fields
+from pathlib import Path
+from typing import Any, ClassVar
+
+from terrain2q.errors import InputError, raise_together
+from terrain2q.units import ELEVATION_UNITS, SYSTEMS, UnitSystem, unit_system
+
+NEEDED_TO_RUN = ("terrain", "cut_lines", "land_cover", "slope")
+"""Tables without which no section can be worked out."""
+
+# --------------------------------------------------------------------------------------------------
+# Keys and tables
+
+
+@dataclass(frozen=True)
+class Key:
+    """What one key of the study file is.
+
+    Attributes
+    ----------
+    help : str
+        One line for the options, the commented study file and the docs.
+    kind : str
+        One of :data:`KINDS`.
+    example : str
+        A value as it is written in TOML.
+    needed : bool
+        The table cannot do without it.
+    quantity : str
+        ``length`` and so on (see :mod:`terrain2q.units`) where the value is in the study's units.
+    choices : tuple of str
+        The values allowed, for the kind ``choice``.
+    least : int
+        The least value allowed, for the kind ``count``.
+    """
+
+    help: str
+    kind: str
+    example: str
+    needed: bool = False
+    quantity: str = ""
+    choices: tuple[str, ...] = ()
+    least: int = 0
+
+
+def key(help: str, kind: str, example: str, *, default: object = None, **more: Any) -> Any:
+    """Return a dataclass field for one key; see :class:`Key`."""
+    return field(default=default, metadata={"key": Key(help, kind, example, **more)})
+
+
+class Table:
+    """One table of the study file: a frozen dataclass whose fields are made by :func:`key`."""
+
+    either: ClassVar[tuple[tuple[str, str], ...]] = ()
+    """Pairs of keys of which only one may be given."""
+
+    def __post_init__(self) -> None:
+        given = {f.name: getattr(self, f.name) for f in fields(self) if getattr(self, f.name) != f.default}
+        values, problems = _read_table(type(self), given, lambda name: f"[{_table_name(type(self))}] {name}")
+        raise_together(problems)
+        for name, value in values.items():
+            object.__setattr__(self, name, value)
+
+    @classmethod
+    def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
+        """Yield keys of which one more must be given, beside those that are always needed."""
+        return iter(())
+
+
+def keys_of(table: type[Table]) -> dict[str, Key]:
+    """Return the keys of a table's class, by name, in order."""
+    return {f.name: f.metadata["key"] for f in fields(table)}
+
+
+def default_of(table: type[Table], name: str) -> object:
+    """Return the default of a key; None where there is none."""
+    return next(f.default for f in fields(table) if f.name == name)
+
+
+@dataclass(frozen=True)
+class StudyTable(Table):
+    """The study as a whole."""
+
+    name: str = key("name of the study, for pages and reports", "text", '"Mill Creek"', default="")
+    units: str = key(
+        "units the study states and receives: us (feet, ft³/s) or si (metres, m³/s)",
+        "choice", '"us"', choices=tuple(sorted(SYSTEMS, reverse=True)), needed=True,
+    )  # fmt: skip
+    crs: str | None = key("projected CRS to work in; the terrain's where absent", "text", '"EPSG:26915"')
+
+    @property
+    def system(self) -> UnitSystem:
+        """The system of units."""
+        return unit_system(self.units)
+
+
+@dataclass(frozen=True)
+class TerrainTable(Table):
+    """The ground."""
+
+    dem: tuple[str, ...] = key(
+        "elevation raster, or a list of tiles of one grid", "rasters", '"dem.tif"', needed=True
+    )
+    elevation_unit: str | None = key(
+        "unit of the elevations, needed only where the raster does not say: m, ft or us-ft",
+        "choice", '"m"', choices=tuple(ELEVATION_UNITS),
+    )  # fmt: skip
+    sampling: str = key(
+        "how the ground between cell centres is read: bilinear or nearest",
+        "choice", '"bilinear"', choices=("bilinear", "nearest"), default="bilinear",
+    )  # fmt: skip
+    spacing: float | None = key(
+        "distance between stations, in the study's length unit; one cell where absent",
+        "number", "3.0", quantity="length",
+    )  # fmt: skip
+
+
+@dataclass(frozen=True)
+class StreamsTable(Table):
+    """Stream lines, drawn downstream; they tell left from right and give stream distances."""
+
+    path: str = key("line layer of streams", "layer", '"data.gpkg|layer=streams"', needed=True)
+    id_field: str | None = key("field with the stream's name or id", "text", '"name"')
+
+
+@dataclass(frozen=True)
+class CutLinesTable(Table):
+    """Cut lines: lines drawn across the stream from high ground to high ground."""
+
+    path: str = key("line layer of cut lines", "layer", '"data.gpkg|layer=cut_lines"', needed=True)
+    id_field: str | None = key("field with the cut line's id", "text", '"section_id"')
+
+
+@dataclass(frozen=True)
+class LandCoverTable(Table):
+    """Land cover, which gives the roughness. `default_n` alone is one roughness everywhere."""
+
+    path: str | None = key("polygon layer of land cover", "layer", '"data.gpkg|layer=land_cover"')
+    class_field: str | None = key("field with the land-cover class", "text", '"class"')
+    table: Path | None = key(
+        "CSV with the columns class, n and optionally n_low, n_high, source", "file", '"roughness.csv"'
+    )
+    default_n: float | None = key(
+        "roughness n where the cover has a gap; alone, one roughness everywhere",
+        "number", "0.05", quantity="roughness",
+    )  # fmt: skip
+
+    @classmethod
+    def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
+        """Yield what is missing for a roughness everywhere."""
+        together = ("path", "class_field", "table")
+        if any(name in given for name in together):
+            yield from ((name,) for name in together if name not in given)
+        elif "default_n" not in given:
+            yield "path", "default_n"
+
+
+@dataclass(frozen=True)
+class ChannelTable(Table):
+    """The channel: drawn as polygons, or found in each profile."""
+
+    either = (("path", "banks"),)
+    path: str | None = key("polygon layer of channels", "layer", '"data.gpkg|layer=channel"')
+    banks: str = key(
+        "auto finds the tops of bank in each profile; none leaves the section undivided",
+        "choice", '"auto"', choices=("auto", "none"), default="auto",
+    )  # fmt: skip
+    n: float | None = key(
+        "roughness n of the channel; that of its land cover where absent",
+        "number", "0.035", quantity="roughness",
+    )  # fmt: skip
+
+
+@dataclass(frozen=True)
+class SlopeTable(Table):
+    """The energy slope, which normal flow takes as the slope of the stream."""
+
+    either = (("value", "field"),)
+    value: float | None = key(
+        "one slope for every section, fall over run", "number", "0.002", quantity="ratio"
+    )
+    field: str | None = key("field of the cut lines with the slope", "text", '"slope"')
+
+    @classmethod
+    def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
+        """Yield what is missing for a slope."""
+        if not given:
+            yield "value", "field"
+
+
+@dataclass(frozen=True)
+class FlowsTable(Table):
+    """Design flows."""
+
+    either = (("path", "events"),)
+    path: Path | None = key(
+        "CSV with the columns event, discharge and optionally probability, stream, section, distance",
+        "file", '"flows.csv"',
+    )  # fmt: skip
+    events: Mapping[str, float] | None = key(
+        "discharge of each event, the same for every section",
+        "events", '{ "10-year" = 850, "100-year" = 2400 }', quantity="flow",
+    )  # fmt: skip
+
+    @classmethod
+    def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
+        """Yield what is missing for a flow."""
+        if not given:
+            yield "path", "events"
+
+
+@dataclass(frozen=True)
+class RatingTable(Table):
+    """The rating of each section."""
+
+    stages: int = key("number of stages in a rating", "count", "30", default=30, least=2)
+    top: float | None = key(
+        "height of the last stage above the lowest ground; the lower end of the section where absent",
+        "number", "15.0", quantity="length",
+    )  # fmt: skip
+
+
+@dataclass(frozen=True)
+class OutputTable(Table):
+    """What is written."""
+
+    folder: Path = key("folder for the results", "folder", '"output"', default=Path("output"))
+    overwrite: bool = key("true replaces earlier results in the folder", "flag", "false", default=False)
+
+
+def _table(cls: type[Table], *, when_absent: str = "none") -> Any:
+    return field(metadata={"table": cls, "when_absent": when_absent})
+
+
+@dataclass(frozen=True)
+class Study:
+    """A checked study: one attribute a table, paths made absolute.
+
+    Values stand as the study states them; :meth:`in_si` turns one into SI. A table that is absent is
+    None, or has its defaults where every key has one (`channel`, `rating`, `output`).
+
+    Attributes
+    ----------
+    path : pathlib.Path or None
+        The study file; None where the study came from options alone.
+    folder : pathlib.Path
+        Where relative paths of the study file start.
+    """
+
+    study: StudyTable = _table(StudyTable)
+    terrain: TerrainTable | None = _table(TerrainTable)
+    streams: StreamsTable | None = _table(StreamsTable)
+    cut_lines: CutLinesTable | None = _table(CutLinesTable)
+    land_cover: LandCoverTable | None = _table(LandCoverTable)
+    channel: ChannelTable = _table(ChannelTable, when_absent="defaults")
+    slope: SlopeTable | None = _table(SlopeTable)
+    flows: FlowsTable | None = _table(FlowsTable)
+    rating: RatingTable = _table(RatingTable, when_absent="defaults")
+    output: OutputTable = _table(OutputTable, when_absent="defaults")
+    path: Path | None = None
+    folder: Path = field(default_factory=Path.cwd)
+
+    @property
+    def system(self) -> UnitSystem:
+        """The study's system of units."""
+        return self.study.system
+
+    def in_si(self, name: str) -> float | None:
+        """Return the value of a numeric key in SI; None where it is not given.
+
+        Parameters
+        ----------
+        name : str
+            Table and key, such as ``terrain.spacing``.
+        """
+        table_name, _, key_name = name.partition(".")
+        table = getattr(self, table_name)
+        value = None if table is None else getattr(table, key_name)
+        if value is None:
+            return None
+        return float(value) / self.system.per_si(keys_of(TABLES[table_name])[key_name].quantity or "ratio")
+
+    def inputs(self) -> dict[str, tuple[str, ...]]:
+        """Return the files the study reads, by ``table.key``, without layer names."""
+        found: dict[str, tuple[str, ...]] = {}
+        for table_name, cls in TABLES.items():
+            table = getattr(self, table_name)
+            for name, about in keys_of(cls).items():
+                value = None if table is None else getattr(table, name)
+                if value is not None and about.kind in ("file", "layer", "rasters"):
+                    paths = value if isinstance(value, tuple) else (value,)
+                    found[f"{table_name}.{name}"] = tuple(split_layer(str(path))[0] for path in paths)
+        return found
+
+    def as_dict(self) -> dict[str, dict[str, object]]:
+        """Return tables of plain values, without what is absent, as a study file would hold them."""
+        tables: dict[str, dict[str, object]] = {}
+        for table_name, cls in TABLES.items():
+            table = getattr(self, table_name)
+            if table is not None:
+                values = {name: getattr(table, name) for name in keys_of(cls)}
+                tables[table_name] = {name: _plain(v) for name, v in values.items() if v is not None}
+        return tables
+
+
+TABLES: dict[str, type[Table]] = {f.name: f.metadata["table"] for f in fields(Study) if "table" in f.metadata}
+"""The class of each table, by its name in the study file, in order."""
+
+DEFAULTED = frozenset(f.name for f in fields(Study) if f.metadata.get("when_absent") == "defaults")
+"""The tables that are there with their defaults where the study has none."""
+
+
+def _table_name(cls: type[Table]) -> str:
+    return next(name for name, other in TABLES.items() if other is cls)
+
+
+def _plain(value: object) -> object:
+    if isinstance(value, Path):
+        return str(value)
+    if isinstance(value, tuple):
+        return [_plain(v) for v in value]
+    return dict(value) if isinstance(value, Mapping) else value
+
+
+# --------------------------------------------------------------------------------------------------
+# Kinds: what a value must be, and how an option's text is read
+
+
+class _Refused(Exception):
+    """A value is not of its kind: what is needed, in words, and the code if not the usual one."""
+
+    def __init__(self, needed: str, code: str = "value-not-allowed", fix: str = "") -> None:
+        super().__init__(needed)
+        self.needed, self.code, self.fix = needed, code, fix
+
+
+def _text(about: Key, value: object) -> str:
+    if not isinstance(value, str):
+        raise _Refused('text in quotes, such as "north"')
+    return value
+
+
+def _choice(about: Key, value: object) -> str:
+    if not isinstance(value, str) or value not in about.choices:
+        raise _Refused(" or ".join(f'"{choice}"' for choice in about.choices))
+    return value
+
+
+def positive_number(value: object) -> float:
+    """Return `value` as a float above zero, or raise :class:`_Refused`; bool is not a number."""
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        raise _Refused("a number above zero")
+    try:
+        number = float(value)
+    except OverflowError:
+        number = math.inf
+    if not math.isfinite(number):
+        raise _Refused("a finite number above zero")
+    if number <= 0.0:
+        raise _Refused("a number above zero", "number-not-positive")
+    return number
+
+
+def _number(about: Key, value: object) -> float:
+    return positive_number(value)
+
+
+def _count(about: Key, value: object) -> int:
+    if isinstance(value, bool) or not isinstance(value, int) or value < about.least:
+        raise _Refused(f"a whole number, {about.least} or more")
+    return value
+
+
+def _flag(about: Key, value: object) -> bool:
+    if not isinstance(value, bool):
+        raise _Refused("true or false")
+    return value
+
+
+def _path_text(about: Key, value: object) -> str:
+    if isinstance(value, os.PathLike):
+        value = os.fspath(value)
+    if not isinstance(value, str) or not value.strip():
+        raise _Refused("a path in quotes")
+    return value
+
+
+def _path(about: Key, value: object) -> Path:
+    return Path(_path_text(about, value))
+
+
+def _layer(about: Key, value: object) -> str:
+    text = _path_text(about, value)
+    layer = split_layer(text)[1]
+    if layer == "" or (layer is None and "|" in text):
+        raise _Refused("a path, or a path and a layer", fix='write "file.gpkg|layer=name"')
+    return text
+
+
+def _rasters(about: Key, value: object) -> tuple[str, ...]:
+    values = value if isinstance(value, list | tuple) else [value]
+    if not values:
+        raise _Refused("a path, or a list of paths")
+    return tuple(_path_text(about, v) for v in values)
+
+
+def _events(about: Key, value: object) -> dict[str, float]:
+    if not isinstance(value, Mapping) or not value:
+        raise _Refused("a table of events and discharges", fix='write events = { "10-year" = 850 }')
+    numbers = {}
+    for name, discharge in value.items():
+        if not isinstance(name, str) or not name.strip():
+            raise _Refused("a name for each event")
+        try:
+            numbers[name] = positive_number(discharge)
+        except _Refused as refused:
+            raise _Refused(f'{refused.needed} for "{name}"', refused.code) from None
+    return numbers
+
+
+KINDS = {
+    "text": _text,
+    "choice": _choice,
+    "number": _number,
+    "count": _count,
+    "flag": _flag,
+    "file": _path,
+    "folder": _path,
+    "layer": _layer,
+    "rasters": _rasters,
+    "events": _events,
+}
+"""The kinds of key: each a function that returns the checked value or refuses."""
+
+
+def _from_option(kind: str, given: object) -> object:
+    """Return the value that an option's text (or texts) stands for; what cannot be read stays text."""
+    if kind in ("rasters", "events") and isinstance(given, list | tuple):
+        if kind == "rasters" or not all(isinstance(part, str) for part in given):
+            return list(given)
+        pairs = [part.rpartition("=") for part in given]
+        if len(pairs) == 1 and given[0].lstrip().startswith("{"):
+            return _from_option(kind, given[0])
+        return {name.strip(): _as_number(value, float) for name, _, value in pairs}
+    if not isinstance(given, str):
+        return given
+    if (kind == "rasters" and given.startswith("[")) or (kind == "events" and given.lstrip().startswith("{")):
+        try:
+            return tomllib.loads(f"value = {given}")["value"]
+        except tomllib.TOMLDecodeError:
+            return given
+    if kind == "events":
+        return _from_option(kind, given.split(","))
+    if kind == "number":
+        return _as_number(given, float)
+    if kind == "count":
+        return _as_number(given, int)
+    if kind == "flag":
+        return {"true": True, "false": False}.get(given.strip().lower(), given)
+    return given
+
+
+def _as_number(text: str, kind: type) -> object:
+    try:
+        return kind(text)
+    except ValueError:
+        return text
+
+
+# --------------------------------------------------------------------------------------------------
+# Paths
+
+
+def split_layer(spec: str) -> tuple[str, str | None]:
+    """Return the path and the layer's name (None where none is named) of ``path|layer=name``.
+
+    Examples
+    --------
+    >>> split_layer("data.gpkg|layer=roads")
+    ('data.gpkg', 'roads')
+    >>> split_layer("roads.shp")
+    ('roads.shp', None)
+    """
+    path, bar, layer = spec.partition("|layer=")
+    return path, (layer.strip() if bar else None)
+
+
+def _is_virtual(path: str) -> bool:
+    # Names that only the raster and vector libraries can open: inside an archive, on a server, a
+    # part of a file. One letter before a colon is a drive.
+    return path.startswith("/vsi") or re.match(r"[A-Za-z][A-Za-z0-9_+.-]+:", path) is not None
+
+
+def _absolute(path: str, folder: Path) -> str:
+    if _is_virtual(path):
+        return path
+    return os.path.normpath(os.path.join(folder, os.path.expanduser(path)))
+
+
+def _placed(kind: str, value: Any, folder: Path) -> Any:
+    """Return a checked value with its paths made absolute."""
+    if kind in ("file", "folder"):
+        return Path(_absolute(str(value), folder))
+    if kind == "layer":
+        path, layer = split_layer(value)
+        return _absolute(path, folder) + ("" if layer is None else f"|layer={layer}")
+    if kind == "rasters":
+        return tuple(_absolute(path, folder) for path in value)
+    return value
+
+
+def _absent_files(kind: str, value: Any) -> list[str]:
+    """Return those of the paths in a placed value that are not there."""
+    if kind == "file":
+        return [] if value.is_file() else [str(value)]
+    paths = {"layer": lambda: [split_layer(value)[0]], "rasters": lambda: list(value)}.get(kind, list)()
+    return [path for path in paths if not _is_virtual(path) and not os.path.exists(path)]
+
+
+# --------------------------------------------------------------------------------------------------
+# Reading
+
+
+def nearest(word: str, known: Collection[str]) -> str:
+    """Return the known word most like `word`.
+
+    Examples
+    --------
+    >>> nearest("spacng", ["sampling", "spacing"])
+    'spacing'
+    """
+    return difflib.get_close_matches(word.lower(), known, n=1, cutoff=0.0)[0]
+
+
+def _read_table(
+    cls: type[Table], given: Mapping[str, object], place
+) -> tuple[dict[str, Any], list[InputError]]:
+    """Return the checked values of the keys given, and every problem; `place` says where a key stands."""
+    table_name, keys = _table_name(cls), keys_of(cls)
+    values: dict[str, Any] = {}
+    problems: list[InputError] = []
+    for name, value in given.items():
+        if name not in keys:
+            problems.append(_unknown_key(table_name, name, place(name)))
+            continue
+        try:
+            values[name] = KINDS[keys[name].kind](keys[name], value)
+        except _Refused as refused:
+            problems.append(
+                InputError(
+                    refused.code,
+                    f"{table_name}.{name} is {_shown(value)}; needed is {refused.needed}",
+                    where=place(name),
+                    fix=refused.fix or f"for example {name} = {keys[name].example}",
+                )
+            )
+    # A key that was most likely misspelt is reported once, as unknown, not as missing too.
+    meant = {
+        close for name in given if name not in keys for close in difflib.get_close_matches(name, keys, n=1)
+    }
+    absent = [(name,) for name, about in keys.items() if about.needed and name not in given]
+    absent += cls.missing([name for name in given if name in keys])
+    for names in absent:
+        if not meant.intersection(names):
+            lines = " or ".join(f"{name} = {keys[name].example}" for name in names)
+            options = " or ".join(f"--{table_name}.{name}" for name in names)
+            problems.append(
+                InputError(
+                    "key-missing",
+                    f"[{table_name}] has no {' and no '.join(names)}",
+                    where=place(""),
+                    fix=f"add {lines} under [{table_name}], or give {options}",
+                )
+            )
+    for first, second in cls.either:
+        if first in given and second in given:
+            problems.append(
+                InputError(
+                    "key-conflict",
+                    f"{table_name}.{first} and {table_name}.{second} are both given",
+                    where=place(second),
+                    fix=f"keep {first} or {second}, not both",
+                )
+            )
+    return values, problems
+
+
+def _shown(value: object) -> str:
+    if isinstance(value, bool):
+        return str(value).lower()
+    if isinstance(value, str):
+        return f'"{value}"'
+    if isinstance(value, dict):
+        return ", ".join(f"{name} = {_shown(inner)}" for name, inner in value.items())
+    return str(value)
+
+
+def _unknown_key(table_name: str, name: str, where: str) -> InputError:
+    known = list(keys_of(TABLES[table_name]))
+    elsewhere = [f"{other}.{name}" for other, cls in TABLES.items() if name in keys_of(cls)]
+    close = difflib.get_close_matches(name.lower(), known, n=1)
+    best = close[0] if close or not elsewhere else elsewhere[0]
+    if not close and not elsewhere:
+        best = nearest(name, known)
+    return InputError(
+        "key-unknown",
+        f'unknown key "{name}" in [{table_name}]; the nearest known is {best}',
+        where=where,
+        fix=f"[{table_name}] takes {', '.join(known)}",
+    )
+
+
+def _unknown_table(name: str, value: object, where: str) -> InputError:
+    if isinstance(value, dict | list):
+        what = f"unknown table [{name}]; the nearest known is [{nearest(name, list(TABLES))}]"
+    else:
+        homes = [f"{table}.{name}" for table, cls in TABLES.items() if name in keys_of(cls)]
+        every = [f"{table}.{k}" for table, cls in TABLES.items() for k in keys_of(cls)]
+        best = homes[0] if homes else nearest(name, every)
+        what = f'key "{name}" stands before any table; the nearest known is {best}'
+    return InputError("key-unknown", what, where=where, fix=f"tables are {', '.join(TABLES)}")
+
+
+def _read_toml(path: Path) -> tuple[dict[str, Any], str]:
+    """Return the tables of a TOML file and its text."""
+    try:
+        raw = path.read_bytes()
+    except FileNotFoundError:
+        raise InputError(
+            "file-missing",
+            f"no study file {path}",
+            where=str(path),
+            fix="`terrain2q start FOLDER` writes one",
+        ) from None
+    except OSError as error:
+        raise InputError("file-unreadable", f"{path}: {error.strerror}", where=str(path)) from None
+    try:
+        text = raw.decode("utf-8-sig")
+        return tomllib.loads(text.replace("\r\n", "\n")), text
+    except UnicodeDecodeError as error:
+        line = raw.count(b"\n", 0, error.start) + 1
+        raise InputError(
+            "study-not-toml",
+            "the text is not UTF-8",
+            where=f"{path}, line {line}",
+            fix="save the file as UTF-8",
+        ) from None
+    except tomllib.TOMLDecodeError as error:
+        raise _not_toml(path, text, str(error)) from None
+
+
+def _not_toml(path: Path, text: str, message: str) -> InputError:
+    what, _, position = message.rstrip(")").partition(" (at ")
+    found = re.match(r"line (\d+), column (\d+)", position)
+    lines = text.splitlines() or [""]
+    number = int(found[1]) if found else len(lines)
+    line = lines[min(number, len(lines)) - 1].strip()
+    fix = "write paths with / or in single quotes: 'C:\\data\\dem.tif'" if "\\" in line else ""
+    return InputError("study-not-toml", f"{what}: {line}", where=f"{path}, line {number}", fix=fix)
+
+
+def _line_numbers(text: str) -> dict[tuple[str, str], int]:
+    """Return the line of each table and key. Only for messages: text in quotes over lines may mislead it."""
+    found: dict[tuple[str, str], int] = {}
+    table = ""
+    for number, line in enumerate(text.splitlines(), start=1):
+        if header := re.match(r"\s*\[+\s*([^\]]+?)\s*\]", line):
+            table, _, inner = header[1].replace('"', "").partition(".")
+            found.setdefault((table, inner), number)
+        elif name := re.match(r"""\s*["']?([\w.-]+)["']?\s*=""", line):
+            found.setdefault((table, name[1]), number)
+    return found
+
+
+def load_study(
+    path: str | os.PathLike[str] | None,
+    options: Mapping[str, object] | None = None,
+    *,
+    needs: Collection[str] = NEEDED_TO_RUN,
+) -> Study:
+    """Read and check a study file, options, or both.
+
+    Parameters
+    ----------
+    path : path-like or None
+        The study file; None where the options are the whole study.
+    options : mapping of str to object, optional
+        Values by ``table.key``, as text or already of the key's kind. They go before the file's; an
+        option that excludes a key of the file (``slope.value`` against ``field``) takes its place.
+        Relative paths in options start at the current folder, those of the file at the file.
+    needs : collection of str
+        The tables that may not be absent.
+
+    Returns
+    -------
+    Study
+
+    Raises
+    ------
+    InputError
+        The study is wrong; :class:`~terrain2q.errors.InputErrors` where there are several problems.
+        Codes: ``file-missing``, ``file-unreadable``, ``study-not-toml``, ``key-unknown``,
+        ``key-missing``, ``key-conflict``, ``value-not-allowed``, ``number-not-positive``.
+    """
+    here = Path.cwd()
+    problems: list[InputError] = []
+    given: dict[str, dict[str, object]] = {}
+    lines: dict[tuple[str, str], int] = {}
+    unknown: list[str] = []
+    study_path = None if path is None else Path(path)
+    if study_path is not None:
+        tables, text = _read_toml(study_path)
+        lines = _line_numbers(text)
+        for name, value in tables.items():
+            if name in TABLES and isinstance(value, dict):
+                given[name] = dict(value)
+                continue
+            where = (
+                _where(study_path, lines, name, "")
+                if (name, "") in lines
+                else _where(study_path, lines, "", name)
+            )
+            if name in TABLES:
+                problems.append(
+                    InputError(
+                        "value-not-allowed",
+                        f"{name} is not a table of keys",
+                        where=where,
+                        fix=f"begin it with [{name}]",
+                    )
+                )
+                given[name] = {}
+            else:
+                unknown.append(name)
+                problems.append(_unknown_table(name, value, where))
+
+    from_options: set[tuple[str, str]] = set()
+    for option, value in (options or {}).items():
+        table_name, _, name = option.partition(".")
+        if table_name not in TABLES or name not in keys_of(TABLES[table_name]):
+            every = [f"{table}.{k}" for table, cls in TABLES.items() for k in keys_of(cls)]
+            what = f'unknown option "{option}"; the nearest known is {nearest(option, every)}'
+            problems.append(InputError("key-unknown", what, where=f"--{option}"))
+            continue
+        from_options.add((table_name, name))
+        values = given.setdefault(table_name, {})
+        values[name] = _from_option(keys_of(TABLES[table_name])[name].kind, value)
+    for table_name, name in from_options:
+        for pair in TABLES[table_name].either:
+            if name in pair:
+                other = pair[1 - pair.index(name)]
+                if (table_name, other) not in from_options:
+                    given[table_name].pop(other, None)
+
+    folder = here if study_path is None else study_path.absolute().parent
+    # A table that was most likely misspelt is reported once, as unknown, not as missing too.
+    meant = {close for name in unknown for close in difflib.get_close_matches(name, TABLES, n=1)}
+    made: dict[str, Table | None] = {}
+    for table_name, cls in TABLES.items():
+        made[table_name] = None
+        asked = table_name in given or (table_name in ("study", *needs) and table_name not in meant)
+        if not asked and table_name not in DEFAULTED:
+            continue
+
+        def place(name: str, table_name: str = table_name) -> str:
+            if (table_name, name) in from_options:
+                return f"--{table_name}.{name}"
+            return _where(study_path, lines, table_name, name)
+
+        values, wrong = _read_table(cls, given.get(table_name, {}), place)
+        for name, about in keys_of(cls).items():
+            if about.kind == "folder":
+                values.setdefault(name, default_of(cls, name))
+            if name in values:
+                start = here if (table_name, name) in from_options else folder
+                values[name] = _placed(about.kind, values[name], start)
+                for absent in _absent_files(about.kind, values[name]):
+                    what = f"{table_name}.{name}: no file {absent}"
+                    fix = "correct the path; it starts at the current folder" if start is here else ""
+                    wrong.append(InputError("file-missing", what, where=place(name), fix=fix))
+        problems += wrong
+        made[table_name] = None if wrong else cls(**values)
+    raise_together(problems)
+    return Study(**made, path=study_path, folder=folder)  # type: ignore[arg-type]
+
+
+def _where(path: Path | None, lines: Mapping[tuple[str, str], int], table: str, name: str) -> str:
+    if path is None:
+        return "the options"
+    line = lines.get((table, name))
+    if line is None:
+        line = lines.get((table, ""))
+    return f"{path}" + (f", line {line}" if line else "") + (f", [{table}]" if table else "")
+
+
+# --------------------------------------------------------------------------------------------------
+# The page of keys
+
+
+def shown_default(table: type[Table], name: str) -> str:
+    """Return a key's default as it is written in TOML; empty where there is none."""
+    value = default_of(table, name)
+    if value is MISSING or value is None or value == "":
+        return ""
+    return f'"{value}"' if isinstance(value, Path) else _shown(value)
+
+
+def keys_page() -> str:
+    """Return every table and key as Markdown, for the docs."""
+    parts = []
+    for table_name, cls in TABLES.items():
+        parts += [f"## [{table_name}]", "", (cls.__doc__ or "").splitlines()[0], ""]
+        parts += ["| key | meaning | default | example |", "|---|---|---|---|"]
+        for name, about in keys_of(cls).items():
+            default = (
+                "needed" if about.needed else f"`{shown}`" if (shown := shown_default(cls, name)) else ""
+            )
+            parts.append(
+                f"| `{name}` | {about.help} | {default} | `{about.example.replace('|', chr(92) + '|')}` |"
+            )
+        if cls.either:
+            parts += ["", *(f"Only one of `{a}` and `{b}` may be given." for a, b in cls.either)]
+        parts.append("")
+    return "\n".join(parts)
