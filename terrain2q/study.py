@@ -501,8 +501,9 @@ def split_layer(spec: str) -> tuple[str, str | None]:
     >>> split_layer("roads.shp")
     ('roads.shp', None)
     """
-    path, bar, layer = spec.partition("|layer=")
-    return path, (layer.strip() if bar else None)
+    # GDAL's users also write layername; both mean the same.
+    path, bar, layer = spec.replace("|layername=", "|layer=", 1).partition("|layer=")
+    return path.strip(), (layer.strip() if bar else None)
 
 
 def _is_virtual(path: str) -> bool:

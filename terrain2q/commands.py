@@ -1,0 +1,359 @@
+"""The command line: options -> study -> jobs -> what is printed. No arithmetic.
+
+Results go to stdout, as text or one JSON object; progress and errors go to stderr. Everything heavy
+is imported inside the commands, so that help answers at once.
+"""
+
+# ruff: noqa: D301
+# The backspaces in docstrings tell click to keep the lines of an example.
+
+from __future__ import annotations
+
+import json
+import math
+import sys
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+
+import click
+
+from terrain2q import __version__
+from terrain2q.errors import CATALOGUE, SEVERITIES, InputErrors, NoAnswerError, Terrain2qError
+from terrain2q.study import TABLES, Key, Study, Table, keys_of, load_study, shown_default
+
+DONE, WRONG_INPUT, NO_ANSWER, INTERRUPTED = 0, 2, 3, 130
+"""Exit codes."""
+
+CAUTION = (
+    "Screening estimates; no substitute for a study by a licensed engineer. "
+    "Local codes and the floodplain authority decide."
+)
+
+_METAVARS = {
+    "text": "TEXT", "number": "NUMBER", "count": "WHOLE NUMBER", "file": "FILE", "folder": "FOLDER",
+    "layer": "FILE[|layer=NAME]", "rasters": "FILE", "events": "EVENT=DISCHARGE",
+}  # fmt: skip
+
+
+# --------------------------------------------------------------------------------------------------
+# Parts of every command
+
+
+class _Program(click.Group):
+    """The group of commands, with this program's exit codes and its way of printing errors."""
+
+    def main(self, args: Sequence[str] | None = None, *more: Any, standalone_mode: bool = True, **extra: Any):
+        """Run a command and exit with its code.
+
+        Wrong inputs are printed; our own bugs keep their traceback.
+        """
+        if not standalone_mode:
+            return super().main(args, *more, standalone_mode=False, **extra)
+        arguments = list(sys.argv[1:] if args is None else args)
+        as_json = "--json" in arguments
+        try:
+            code = super().main(arguments, *more, standalone_mode=False, **extra)
+        except click.ClickException as error:
+            error.show(sys.stderr)
+            code = WRONG_INPUT
+            if as_json:
+                _print_json({"errors": [_usage_error(error)]})
+        except Terrain2qError as error:
+            click.echo(f"Error: {error}", err=True)
+            code = NO_ANSWER if isinstance(error, NoAnswerError) else WRONG_INPUT
+            if as_json:
+                each = error.problems if isinstance(error, InputErrors) else [error]
+                _print_json({"errors": [one.as_dict() for one in each]})
+        except (click.Abort, KeyboardInterrupt):
+            click.echo("Interrupted; nothing is half-written.", err=True)
+            code = INTERRUPTED
+        sys.exit(code or DONE)
+
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        """Return the commands in the order they are used."""
+        return list(self.commands)
+
+
+class _StudyCommand(click.Command):
+    """A command whose options are the keys of the study file, shown by table in the help."""
+
+    def __init__(self, *args: Any, params: Sequence[click.Parameter] = (), **more: Any) -> None:
+        keys = [_KeyOption(table, TABLES[table], name, about) for table, name, about in _every_key()]
+        super().__init__(*args, params=[*params, *keys], **more)
+
+    def parse_args(self, ctx: click.Context, args: list[str]) -> list[str]:
+        # A flag alone means true; a value may follow, which click would otherwise take for the study file.
+        flags = {f"--{table}.{name}" for table, name, about in _every_key() if about.kind == "flag"}
+        joined: list[str] = []
+        waiting = iter(args)
+        held = next(waiting, None)
+        while held is not None:
+            following = next(waiting, None)
+            if held in flags:
+                given = following if following in ("true", "false") else None
+                joined.append(f"{held}={given or 'true'}")
+                held = next(waiting, None) if given else following
+            else:
+                joined.append(held)
+                held = following
+        return super().parse_args(ctx, joined)
+
+    def format_options(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        """Write the command's own options, then the keys of each table."""
+        groups: dict[str, list[tuple[str, str]]] = {"Options": []}
+        for parameter in self.get_params(ctx):
+            record = parameter.get_help_record(ctx)
+            if record is not None and isinstance(parameter, click.Option):
+                table = parameter.table if isinstance(parameter, _KeyOption) else ""
+                groups.setdefault(f"[{table}]" if table else "Options", []).append(record)
+        for title, records in groups.items():
+            with formatter.section(title):
+                formatter.write_dl(records)
+
+
+class _KeyOption(click.Option):
+    """One key of the study file as an option."""
+
+    def __init__(self, table: str, cls: type[Table], name: str, about: Key) -> None:
+        self.table = table
+        self.key = f"{table}.{name}"
+        several = about.kind in ("rasters", "events")
+        default = shown_default(cls, name)
+        metavar = _METAVARS.get(about.kind) or "|".join(about.choices or ("true", "false"))
+        notes = [
+            note
+            for note in ("repeat for several" if several else "", default and f"default {default}")
+            if note
+        ]
+        super().__init__(
+            [f"--{self.key}", f"{table}__{name}"],
+            metavar=metavar,
+            multiple=several,
+            expose_value=False,
+            callback=self._keep,
+            help=about.help + (f" ({'; '.join(notes)})" if notes else ""),
+        )
+
+    def _keep(self, ctx: click.Context, parameter: click.Parameter, value: Any) -> None:
+        if value is not None and value != ():
+            ctx.ensure_object(dict)[self.key] = value
+
+
+def _every_key() -> Iterator[tuple[str, str, Key]]:
+    for table, cls in TABLES.items():
+        for name, about in keys_of(cls).items():
+            yield table, name, about
+
+
+def _takes_study(command: Callable[..., Any]) -> Callable[..., Any]:
+    """Give a command the argument STUDY.toml and the options --json and --strict."""
+    for decorate in (
+        click.option("--strict", is_flag=True, help="Exit with 3 when any feature is without an answer."),
+        click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of text."),
+        click.argument("study_path", metavar="[STUDY.toml]", required=False, type=click.Path(path_type=Path)),
+    ):
+        command = decorate(command)
+    return command
+
+
+def _study(ctx: click.Context, study_path: Path | None) -> Study:
+    options = ctx.obj or {}
+    if study_path is None and not options:
+        raise click.UsageError("give a study file, or its keys as options", ctx)
+    return load_study(study_path, options)
+
+
+def _usage_error(error: click.ClickException) -> dict[str, str]:
+    code = "value-not-allowed"
+    if isinstance(error, click.NoSuchOption):
+        code = "key-unknown"
+    elif isinstance(error, click.MissingParameter):
+        code = "key-missing"
+    return {
+        "code": code,
+        "what": error.format_message(),
+        "where": "the command line",
+        "fix": CATALOGUE[code].remedy
+        if code != "value-not-allowed"
+        else "`--help` shows what the command takes",
+    }
+
+
+def _print_json(value: object) -> None:
+    click.echo(json.dumps(_json_ready(value), indent=2, ensure_ascii=False, allow_nan=False))
+
+
+def _json_ready(value: Any) -> Any:
+    """Return `value` as JSON can hold it: null for numbers that are not finite, text for paths."""
+    if isinstance(value, dict):
+        return {str(name): _json_ready(inner) for name, inner in value.items()}
+    if isinstance(value, list | tuple):
+        return [_json_ready(inner) for inner in value]
+    if hasattr(value, "tolist"):  # an array or a number of NumPy
+        return _json_ready(value.tolist())
+    if isinstance(value, float) and not math.isfinite(value):
+        return None
+    return str(value) if isinstance(value, Path) else value
+
+
+@contextmanager
+def _progress() -> Iterator[Callable[[int, int, str], None]]:
+    """Yield `progress(done, total, label)`: a bar where stderr is a terminal, else a line a step."""
+    state: dict[str, Any] = {"label": None, "bar": None}
+    terminal = sys.stderr.isatty()
+
+    def close() -> None:
+        if state["bar"] is not None:
+            state["bar"].__exit__(None, None, None)
+            state["bar"] = None
+
+    def progress(done: int, total: int, label: str = "") -> None:
+        if label != state["label"]:
+            close()
+            state["label"] = label
+            if terminal:
+                state["bar"] = click.progressbar(length=max(total, 1), label=label, file=sys.stderr)
+                state["bar"].__enter__()
+            elif label:
+                click.echo(label, err=True)
+        if state["bar"] is not None:
+            state["bar"].update(done - state["bar"].pos)
+
+    try:
+        yield progress
+    finally:
+        close()
+
+
+# --------------------------------------------------------------------------------------------------
+# The commands
+
+
+@click.group(
+    cls=_Program,
+    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 110},
+    epilog=CAUTION,
+)
+@click.version_option(__version__, prog_name="terrain2q")
+def main() -> None:
+    """How much water a stream carries, and how high it stands, from terrain.
+
+    \b
+    Examples:
+      terrain2q start .                 write study.toml from the data found here
+      terrain2q check study.toml        look at every input
+      terrain2q run study.toml          sections, ratings and design stages
+
+    Results go to stdout, progress and errors to stderr. Exit codes: 0 done; 2 the inputs are wrong and
+    nothing was written; 3 no feature could be answered, or with --strict any was not; 130 interrupted.
+    """
+
+
+@main.command(epilog=CAUTION)
+@click.argument("folder", type=click.Path(path_type=Path))
+@click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of text.")
+def start(folder: Path, as_json: bool) -> None:
+    """Write a study file to fill in, from the data found in FOLDER.
+
+    Looks at the folder and one level below, recognises the terrain, the layers and the tables, and writes
+    FOLDER/study.toml with a comment on every key. A guess is called a guess. An existing study file is kept.
+
+    \b
+    Example:
+      terrain2q start mill_creek
+    """
+    from terrain2q.start import start_study
+
+    found = start_study(folder)
+    if as_json:
+        _print_json(found.as_dict())
+    else:
+        click.echo(found.text())
+
+
+@main.command(cls=_StudyCommand, epilog=CAUTION)
+@_takes_study
+@click.pass_context
+def check(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool) -> int:
+    """Look at every input and report findings; writes nothing.
+
+    Every key of the study file is an option too, and goes before the file. Relative paths in options start
+    at the current folder, those in the study file at the file.
+
+    \b
+    Example:
+      terrain2q check study.toml
+      terrain2q check study.toml --json --strict
+    """
+    study = _study(ctx, study_path)
+    from terrain2q.jobs.run import check_study
+
+    findings = check_study(study)
+    counts = {severity: sum(f.severity == severity for f in findings) for severity in SEVERITIES}
+    if as_json:
+        _print_json({"counts": counts, "findings": [_finding(f) for f in findings]})
+    else:
+        click.echo(_findings_text(findings, counts))
+    return NO_ANSWER if strict and counts["failed"] else DONE
+
+
+@main.command(cls=_StudyCommand, epilog=CAUTION)
+@_takes_study
+@click.pass_context
+def run(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool) -> int:
+    """Do everything the study asks for, into its output folder.
+
+    Every key of the study file is an option too, and goes before the file. Relative paths in options start
+    at the current folder, those in the study file at the file.
+
+    \b
+    Examples:
+      terrain2q run study.toml
+      terrain2q run study.toml --slope.value 0.003 --output.folder steeper
+      terrain2q run --study.units us --terrain.dem dem.tif --cut_lines.path lines.gpkg \\
+          --land_cover.default_n 0.05 --slope.value 0.002 --flows.events 10-year=850
+    """
+    study = _study(ctx, study_path)
+    from terrain2q.jobs.run import run_study
+
+    with _progress() as progress:
+        results = run_study(study, progress=progress)
+    if as_json:
+        _print_json(results.summary())
+    else:
+        click.echo(results.summary_text())
+    if not results.answered_sections or (strict and results.failed_sections):
+        return NO_ANSWER
+    return DONE
+
+
+def _finding(finding: Any) -> dict[str, object]:
+    names = ("code", "severity", "layer", "feature_id", "message", "remedy", "x", "y")
+    return {name: getattr(finding, name) for name in names}
+
+
+def _findings_text(findings: Sequence[Any], counts: dict[str, int]) -> str:
+    lines = []
+    for severity in SEVERITIES:
+        of_severity = [f for f in findings if f.severity == severity]
+        if not of_severity:
+            continue
+        lines.append(f"{severity} ({counts[severity]})")
+        for code in dict.fromkeys(f.code for f in of_severity):
+            lines.append(f"  {CATALOGUE[code].title}  [{code}]")
+            same = [f for f in of_severity if f.code == code]
+            for one in same:
+                place = " ".join(part for part in (one.layer, one.feature_id) if part)
+                lines.append(f"    {place}: {one.message}" if place else f"    {one.message}")
+            lines += [f"    fix: {remedy}" for remedy in dict.fromkeys(f.remedy for f in same)]
+        lines.append("")
+    if not findings:
+        return "No findings: every input can be used."
+    lines.append(", ".join(f"{counts[severity]} {severity}" for severity in SEVERITIES))
+    return "\n".join(lines)
+
+
+if __name__ == "__main__":
+    main()
