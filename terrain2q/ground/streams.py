@@ -1,0 +1,390 @@
+"""Stream lines: parts of one stream joined, ground distances along it, and its direction at a place."""
+
+from __future__ import annotations
+
+from collections import defaultdict
+from functools import cached_property
+
+import geopandas
+import numpy as np
+import pyproj
+import shapely
+from scipy.sparse import coo_array
+from scipy.sparse.csgraph import connected_components
+from scipy.spatial import cKDTree
+
+from terrain2q.errors import Finding
+from terrain2q.ground.layers import horizontal
+from terrain2q.units import SI, UnitSystem
+
+JOIN_TOLERANCE = 1e-3
+"""Metres within which two ends, or an end and a line, are taken to meet."""
+
+_PIECE = 50
+_MOST_BRIDGED = 200
+
+
+def length_text(metres: float, units: UnitSystem = SI) -> str:
+    """Return a length as it is read in a finding, in the study's units.
+
+    Examples
+    --------
+    >>> length_text(12.345)
+    '12.3 m'
+    """
+    value = metres * units.per_si("length")
+    return (
+        f"{value:.1f} {units.symbol('length')}"
+        if abs(value) >= 1.0
+        else f"{value:.3g} {units.symbol('length')}"
+    )
+
+
+class Ground:
+    """Lengths and directions on the ellipsoid between places of one CRS.
+
+    Parameters
+    ----------
+    crs : object
+        Anything pyproj takes; its horizontal part is used.
+
+    Attributes
+    ----------
+    crs : pyproj.CRS
+    tolerance : float
+        :data:`JOIN_TOLERANCE` in map units.
+    """
+
+    def __init__(self, crs: object) -> None:
+        self.crs = horizontal(crs)
+        self._geod = self.crs.get_geod()
+        factor = self.crs.axis_info[0].unit_conversion_factor if self.crs.axis_info else 1.0
+        if self.crs.is_geographic:
+            # The factor is radians in one map unit; the tolerance needs the equator's radius at most.
+            factor *= self._geod.a
+        self.metres_per_map_unit = factor
+        self.tolerance = JOIN_TOLERANCE / factor
+        geodetic = self.crs.geodetic_crs
+        self._to_geodetic = (
+            None
+            if geodetic is None or self._geod is None
+            else pyproj.Transformer.from_crs(self.crs, geodetic.to_2d(), always_xy=True)
+        )
+        self._degrees = 1.0
+        if geodetic is not None and geodetic.axis_info:
+            self._degrees = np.degrees(geodetic.axis_info[0].unit_conversion_factor)
+
+    def inverse(self, x0, y0, x1, y1) -> tuple[np.ndarray, np.ndarray]:
+        """Return length [m] and azimuth [degrees, clockwise from north] of the way from place to place.
+
+        A CRS without an ellipsoid (a local grid) is taken as flat.
+
+        Parameters
+        ----------
+        x0, y0, x1, y1 : array_like, shape (n,)
+            Map coordinates, x east and y north.
+
+        Returns
+        -------
+        tuple of ndarray, shape (n,)
+        """
+        x0, y0, x1, y1 = (np.atleast_1d(np.asarray(v, dtype=float)) for v in (x0, y0, x1, y1))
+        if self._to_geodetic is None:
+            east, north = x1 - x0, y1 - y0
+            return np.hypot(east, north) * self.metres_per_map_unit, np.degrees(np.arctan2(east, north))
+        lon0, lat0 = self._to_geodetic.transform(x0, y0)
+        lon1, lat1 = self._to_geodetic.transform(x1, y1)
+        azimuth, _, length = self._geod.inv(
+            *(np.asarray(v) * self._degrees for v in (lon0, lat0, lon1, lat1))
+        )
+        return np.asarray(length), np.asarray(azimuth)
+
+
+class StreamNetwork:
+    """The streams of a layer, each one joined from its parts in drawn (downstream) direction.
+
+    Parts of one id that join end to end become one chain. Where the parts of one id branch, stream distance
+    is measured along the longest way from upstream. Parts that lie apart are put in order by the shortest
+    gaps, and distance runs straight over the gap (finding ``stream-gap``).
+
+    Parameters
+    ----------
+    streams : geopandas.GeoDataFrame
+        Lines with a column ``feature_id``; rows that share it are one stream.
+    crs : object
+        The CRS of the layer.
+    units : UnitSystem
+        For lengths in findings.
+
+    Attributes
+    ----------
+    chains : ndarray of LineString, shape (c,)
+    chain_stream : ndarray of str, shape (c,)
+        The stream each chain belongs to.
+    chain_start : ndarray, shape (c,)
+        Stream distance [m] at the first point of each chain.
+    begins, ends : ndarray of bool, shape (c,)
+        Whether nothing of the same stream comes before, or after, a chain.
+    findings : list of Finding
+        Codes ``stream-unusable``, ``stream-gap``, ``stream-parts-oppose``.
+    """
+
+    def __init__(self, streams: geopandas.GeoDataFrame, crs: object, units: UnitSystem = SI) -> None:
+        self.ground = Ground(crs)
+        self.findings: list[Finding] = []
+        self._units = units
+        parts, names = self._parts(streams)
+        self._join(parts, names)
+
+    def __len__(self) -> int:
+        return len(self.chains)
+
+    def _parts(self, streams) -> tuple[np.ndarray, np.ndarray]:
+        shapes = streams.geometry.to_numpy()
+        names = feature_ids(streams)
+        coordinates, owner = shapely.get_coordinates(shapes, return_index=True)
+        broken = np.zeros(len(shapes), dtype=bool)
+        broken[owner[~np.isfinite(coordinates).all(axis=1)]] = True
+        usable = ~broken & ~shapely.is_missing(shapes)
+        usable[usable] = shapely.length(shapes[usable]) > 0.0
+        for row in np.flatnonzero(~usable):
+            what = "coordinates that are not numbers" if broken[row] else "no geometry or no length"
+            self.findings.append(
+                Finding("stream-unusable", f"stream {names[row]} has {what}", "streams", names[row])
+            )
+        parts, owner = shapely.get_parts(shapes[usable], return_index=True)
+        parts = shapely.remove_repeated_points(shapely.force_2d(parts))
+        kept = shapely.length(parts) > 0.0
+        return parts[kept], np.asarray(names, dtype=object)[usable][owner[kept]]
+
+    def _join(self, parts: np.ndarray, names: np.ndarray) -> None:
+        first = shapely.get_coordinates(shapely.get_point(parts, 0))
+        last = shapely.get_coordinates(shapely.get_point(parts, -1))
+        nodes, place = _nodes(np.vstack([first, last]), np.concatenate([names, names]), self.ground.tolerance)
+        start, end = nodes[: len(parts)], nodes[len(parts) :]
+        count = len(place)
+        into, out_of = np.bincount(end, minlength=count), np.bincount(start, minlength=count)
+        for node in np.flatnonzero(((into == 2) & (out_of == 0)) | ((into == 0) & (out_of == 2))):
+            name = names[np.flatnonzero((end if into[node] else start) == node)[0]]
+            way = "end" if into[node] else "begin"
+            message = f"two parts of stream {name} both {way} here, so one of them is drawn upstream"
+            self.findings.append(
+                Finding("stream-parts-oppose", message, "streams", str(name)).at(*place[node])
+            )
+
+        through = (into == 1) & (out_of == 1)
+        leaving = dict(zip(start[through[start]], np.flatnonzero(through[start]), strict=True))
+        used = np.zeros(len(parts), dtype=bool)
+        chains, chain_names, chain_from, chain_to = [], [], [], []
+        # Parts that begin a chain come first; what is left over runs in a circle and begins anywhere.
+        for part in (*np.flatnonzero(~through[start]), *np.flatnonzero(through[start])):
+            if used[part]:
+                continue
+            run, at = [], part
+            while at is not None and not used[at]:
+                used[at] = True
+                run.append(at)
+                at = leaving.get(end[at])
+            points = [shapely.get_coordinates(parts[run[0]])]
+            points += [shapely.get_coordinates(parts[other])[1:] for other in run[1:]]
+            chains.append(shapely.LineString(np.concatenate(points)) if len(run) > 1 else parts[part])
+            chain_names.append(names[part])
+            chain_from.append(start[part])
+            chain_to.append(end[run[-1]])
+
+        self.chains = np.asarray(chains, dtype=object)
+        self.chain_stream = np.asarray(chain_names, dtype=object)
+        self.lengths = shapely.length(self.chains) if len(chains) else np.empty(0)
+        source, target = np.asarray(chain_from, dtype=int), np.asarray(chain_to, dtype=int)
+        self.begins = into[source] == 0
+        self.ends = out_of[target] == 0
+        self._measure()
+        ground = self._ground_at[self._offsets[1:] - 1] - self._ground_at[self._offsets[:-1]]
+        self.chain_start = self._distances(source, target, ground, place)
+
+    def _measure(self) -> None:
+        xy, owner = shapely.get_coordinates(self.chains, return_index=True)
+        self._xy = xy
+        self._offsets = np.concatenate(
+            [[0], np.cumsum(np.bincount(owner, minlength=len(self.chains)))]
+        ).astype(int)
+        self._map_at = np.zeros(len(xy))
+        self._ground_at = np.zeros(len(xy))
+        if len(xy) > 1:
+            same = owner[1:] == owner[:-1]
+            steps = np.where(same, np.hypot(*(xy[1:] - xy[:-1]).T), 0.0)
+            metres = np.zeros(len(xy) - 1)
+            a, b = xy[:-1][same], xy[1:][same]
+            metres[same] = self.ground.inverse(a[:, 0], a[:, 1], b[:, 0], b[:, 1])[0]
+            self._map_at[1:] = np.cumsum(steps)
+            self._ground_at[1:] = np.cumsum(metres)
+
+    def _distances(self, source, target, lengths, place) -> np.ndarray:
+        """Return the stream distance at the start of each chain: the longest way from upstream."""
+        edges = [(int(a), int(b), float(w)) for a, b, w in zip(source, target, lengths, strict=True)]
+        edges += self._bridges(source, target, place)
+        following, waiting = defaultdict(list), defaultdict(int)
+        for a, b, weight in edges:
+            following[a].append((b, weight))
+            waiting[b] += 1
+        distance = defaultdict(float)
+        ready = [node for node in following if not waiting[node]]
+        pending = {node for node in waiting if waiting[node]}
+        while ready or pending:
+            if not ready:
+                # Only circles are left; the walk goes on from where it has come furthest.
+                node = max(sorted(pending), key=lambda n: distance[n])
+                pending.discard(node)
+                ready.append(node)
+            node = ready.pop()
+            for other, weight in following[node]:
+                if other in pending:
+                    distance[other] = max(distance[other], distance[node] + weight)
+                    waiting[other] -= 1
+                    if not waiting[other]:
+                        pending.discard(other)
+                        ready.append(other)
+        return np.array([distance[int(node)] for node in source], dtype=float)
+
+    def _bridges(self, source, target, place) -> list[tuple[int, int, float]]:
+        """Return straight ways over the gaps between parts of one stream that lie apart."""
+        count = len(place)
+        graph = coo_array((np.ones(len(source)), (source, target)), shape=(count, count))
+        group = connected_components(graph, directed=False)[1] if count else np.empty(0, dtype=int)
+        members = defaultdict(list)
+        for chain, name in enumerate(self.chain_stream):
+            members[name].append(chain)
+        bridges = []
+        for name, chains in members.items():
+            chains = np.asarray(chains)
+            groups = np.unique(group[source[chains]])
+            if len(groups) < 2:
+                continue
+            if len(groups) > _MOST_BRIDGED:
+                message = f"stream {name} lies in {len(groups)} parts apart; distance begins anew on each"
+                self.findings.append(Finding("stream-gap", message, "streams", str(name)))
+                continue
+            sinks = np.unique(target[chains[self.ends[chains]]])
+            springs = np.unique(source[chains[self.begins[chains]]])
+            gaps = np.hypot(*(place[sinks][:, None, :] - place[springs][None, :, :]).transpose(2, 0, 1))
+            free_sinks, free_springs = set(sinks.tolist()), set(springs.tolist())
+            merged = {int(g): int(g) for g in groups}
+
+            def top(g, merged=merged):
+                while merged[g] != g:
+                    g = merged[g]
+                return g
+
+            for flat in np.argsort(gaps, axis=None, kind="stable"):
+                sink, spring = (int(v) for v in (sinks[flat // len(springs)], springs[flat % len(springs)]))
+                one, other = top(int(group[sink])), top(int(group[spring]))
+                if one == other or sink not in free_sinks or spring not in free_springs:
+                    continue
+                merged[one] = other
+                free_sinks.discard(sink)
+                free_springs.discard(spring)
+                gap = float(self.ground.inverse(*place[sink], *place[spring])[0][0])
+                bridges.append((sink, spring, gap))
+                message = (
+                    f"stream {name} has a gap of {length_text(gap, self._units)} between two of its parts"
+                )
+                self.findings.append(Finding("stream-gap", message, "streams", str(name)).at(*place[sink]))
+        return bridges
+
+    @cached_property
+    def stream_names(self) -> frozenset[str]:
+        """The ids of the streams."""
+        return frozenset(str(name) for name in self.chain_stream)
+
+    @cached_property
+    def _pieces(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Short pieces of the chains, so that a search touches few points: geometry, chain, map position."""
+        first, chain = [], []
+        for number, (begin, end) in enumerate(zip(self._offsets[:-1], self._offsets[1:], strict=True)):
+            starts = range(begin, end - 1, _PIECE)
+            first += starts
+            chain += [number] * len(starts)
+        first, chain = np.asarray(first, dtype=int), np.asarray(chain, dtype=int)
+        last = np.minimum(first + _PIECE, self._offsets[chain + 1] - 1)
+        sizes = last - first + 1
+        owner = np.repeat(np.arange(len(first)), sizes)
+        within = np.arange(len(owner)) - np.repeat(np.cumsum(sizes) - sizes, sizes)
+        geometry = shapely.linestrings(self._xy[np.repeat(first, sizes) + within], indices=owner)
+        return geometry, chain, self._map_at[first] - self._map_at[self._offsets[chain]]
+
+    @property
+    def pieces(self) -> np.ndarray:
+        """Short pieces of the chains, shape (p,), for searching."""
+        return self._pieces[0]
+
+    @property
+    def piece_chain(self) -> np.ndarray:
+        """The chain of each piece, shape (p,)."""
+        return self._pieces[1]
+
+    @cached_property
+    def tree(self) -> shapely.STRtree:
+        """Search tree over :attr:`pieces`."""
+        return shapely.STRtree(self.pieces)
+
+    def locate(self, pieces: np.ndarray, points: np.ndarray) -> np.ndarray:
+        """Return the map distance along its chain of each place nearest to `points`, shape (n,)."""
+        geometry, chain, begin = self._pieces
+        along = begin[pieces] + shapely.line_locate_point(geometry[pieces], points)
+        return np.clip(along, 0.0, self.lengths[chain[pieces]])
+
+    def distance_at(self, chains: np.ndarray, along: np.ndarray) -> np.ndarray:
+        """Return the stream distance [m ground] at a map distance along a chain.
+
+        Parameters
+        ----------
+        chains : ndarray of int, shape (n,)
+        along : ndarray, shape (n,)
+            Map distance from the chain's first point.
+        """
+        chains, along = np.atleast_1d(chains), np.atleast_1d(along)
+        if not len(chains):
+            return np.empty(0)
+        begin, end = self._offsets[chains], self._offsets[chains + 1]
+        position = self._map_at[begin] + along
+        segment = np.clip(np.searchsorted(self._map_at, position, side="right") - 1, begin, end - 2)
+        step = self._map_at[segment + 1] - self._map_at[segment]
+        share = np.clip((position - self._map_at[segment]) / step, 0.0, 1.0)
+        a = self._xy[segment]
+        b = a + share[:, None] * (self._xy[segment + 1] - a)
+        beyond = self.ground.inverse(a[:, 0], a[:, 1], b[:, 0], b[:, 1])[0]
+        return self.chain_start[chains] + self._ground_at[segment] - self._ground_at[begin] + beyond
+
+    def stretch(self, chains: np.ndarray, low: np.ndarray, high: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return the places at two map distances along a chain, upstream and downstream, each shape (n, 2).
+
+        Distances beyond a chain's end are taken at its end.
+        """
+        lengths = self.lengths[chains]
+        return tuple(
+            shapely.get_coordinates(
+                shapely.line_interpolate_point(self.chains[chains], np.clip(v, 0.0, lengths))
+            )
+            for v in (low, high)
+        )
+
+
+def feature_ids(frame: geopandas.GeoDataFrame) -> list[str]:
+    """Return the ids of a layer's features: the column ``feature_id``, else a running number from 1."""
+    if "feature_id" in frame.columns:
+        return [str(value) for value in frame["feature_id"]]
+    return [str(number) for number in range(1, len(frame) + 1)]
+
+
+def _nodes(xy: np.ndarray, names: np.ndarray, tolerance: float) -> tuple[np.ndarray, np.ndarray]:
+    """Return the node of each end, one for all ends of a stream that meet, and the place of each node."""
+    count = len(xy)
+    if not count:
+        return np.empty(0, dtype=int), np.empty((0, 2))
+    pairs = cKDTree(xy).query_pairs(tolerance, output_type="ndarray")
+    pairs = pairs[names[pairs[:, 0]] == names[pairs[:, 1]]]
+    graph = coo_array((np.ones(len(pairs)), (pairs[:, 0], pairs[:, 1])), shape=(count, count))
+    total, nodes = connected_components(graph, directed=False)
+    place = np.empty((total, 2))
+    place[nodes] = xy
+    return nodes, place
