@@ -91,7 +91,7 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             '`crs = "UTM 15"`, which names neither datum nor hemisphere.',
         ),
         "crs-local": (
-            "The coordinate reference system has no ellipsoid behind it, so a place in it is no place on Earth.",
+            "The coordinate reference system is tied to no ellipsoid; a place in it is no place on Earth.",
             "True distances along the ground, and other layers, cannot be had from it.",
             "A site grid of a survey, with its own origin and its own north.",
         ),
