@@ -13,7 +13,7 @@ if TYPE_CHECKING:
     from terrain2q.ground.terrain import Profile, Terrain
     from terrain2q.hydraulics.banks import Banks, find_banks
     from terrain2q.hydraulics.section import FlowPath, Section, Subarea
-    from terrain2q.jobs.run import Results, run
+    from terrain2q.process import Results, run
 
 __version__ = "0.1.0"
 
@@ -25,8 +25,8 @@ _HOME = {
     "find_banks": "terrain2q.hydraulics.banks",
     "Terrain": "terrain2q.ground.terrain",
     "Profile": "terrain2q.ground.terrain",
-    "Results": "terrain2q.jobs.run",
-    "run": "terrain2q.jobs.run",
+    "Results": "terrain2q.process",
+    "run": "terrain2q.process",
 }
 
 __all__ = [

@@ -288,7 +288,7 @@ def check(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bo
       terrain2q check study.toml --json --strict
     """
     study = _study(ctx, study_path)
-    from terrain2q.jobs.run import check_study
+    from terrain2q.process import check_study
 
     findings = check_study(study)
     counts = {severity: sum(f.severity == severity for f in findings) for severity in SEVERITIES}
@@ -316,7 +316,7 @@ def run(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool
           --land_cover.default_n 0.05 --slope.value 0.002 --flows.events 10-year=850
     """
     study = _study(ctx, study_path)
-    from terrain2q.jobs.run import run_study
+    from terrain2q.process import run_study
 
     with _progress() as progress:
         results = run_study(study, progress=progress)

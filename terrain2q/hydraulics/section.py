@@ -386,6 +386,16 @@ class Section:
         )
         return tuple(float(s) for s in crossed[after > before])
 
+    @cached_property
+    def telling_bank_tops(self) -> tuple[float, ...]:
+        """Those tops of banks where the hollow behind adds more than a hundredth of the discharge."""
+        tops = np.array(self.bank_tops)
+        if not tops.size:
+            return ()
+        before = self._profile.wet(tops).conveyance.sum(axis=1)
+        after = self._profile.wet(tops, passed=True).conveyance.sum(axis=1)
+        return tuple(float(s) for s in tops[after - before > _TELLING_RISE * after])
+
     def reached(self, intervals: Iterable[tuple[float, float]]) -> Section:
         """Return the same section with hollows that water is known to reach from elsewhere.
 
@@ -686,11 +696,7 @@ class Section:
             low = self.lowest_ground
             high = low + top if top is not None else self._rating_top()
             level = low + (high - low) * np.arange(1, count + 1) / count
-            shown = tops[tops <= high]
-            if shown.size:
-                before = self._profile.wet(shown).conveyance.sum(axis=1)
-                after = self._profile.wet(shown, passed=True).conveyance.sum(axis=1)
-                level = np.union1d(level, shown[np.abs(after - before) > _TELLING_RISE * after])
+            level = np.union1d(level, [t for t in self.telling_bank_tops if t <= high])
         else:
             level = np.sort(_finite("stages", stages).ravel())
         twice = np.isin(level, tops)

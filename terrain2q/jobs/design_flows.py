@@ -1,0 +1,291 @@
+"""Ratings, and stages at design flows, of built sections."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from terrain2q.errors import DOUBTFUL, FAILED, Finding, Terrain2qError
+from terrain2q.flows import Flow, event_names, flow_for
+from terrain2q.ground.streams import length_text
+from terrain2q.hydraulics.section import CHANNEL, FlowState, Section, hydraulic_columns
+from terrain2q.jobs.sections import BuiltSection
+from terrain2q.units import UnitSystem
+
+OK = "ok"
+
+HIGH_VELOCITY = 6.0
+"""Mean velocity (m/s) above which a row is doubtful (from memory: floods seldom pass 4 m/s over a reach)."""
+
+HIGH_ALPHA = 2.0
+"""Velocity coefficient above which a row is doubtful (Chow 1959, Table 2-1: up to 2.0 in overflooded valleys)."""
+
+STEEP = 0.04
+"""Slope above which normal depth is seldom trusted (Jarrett 1984, upper end of his range; from memory)."""
+
+_LEAVES = 0.01
+"""Share of the discharge beyond a bank that is worth a finding."""
+
+_LAYER = "design_stages"
+
+SUBAREA_COLUMNS = (
+    "subarea", "stage", "flow_area", "wetted_perimeter", "conveyance", "discharge", "mean_velocity", "share",
+)  # fmt: skip
+
+
+@dataclass(frozen=True)
+class EventAnswer:
+    """One section at one event, in SI.
+
+    Attributes
+    ----------
+    event : str
+    status : str
+        ``ok``, ``doubtful`` or ``failed``.
+    row : dict of float
+        The columns of a rating with `slope`, `critical_stage` and `channel_share`; empty where failed.
+    wetted : tuple of (start, end)
+        Stations of the water's edges, one pair a path.
+    subareas : tuple of dict
+        One for each wet subarea of each path, with `SUBAREA_COLUMNS`.
+    """
+
+    event: str
+    status: str
+    row: dict[str, float] = field(default_factory=dict)
+    wetted: tuple[tuple[float, float], ...] = ()
+    subareas: tuple[dict[str, float], ...] = ()
+
+
+@dataclass(frozen=True)
+class SectionAnswer:
+    """A built section with its rating (arrays by column, SI) and its answers by event."""
+
+    built: BuiltSection
+    rating: dict[str, np.ndarray]
+    events: tuple[EventAnswer, ...]
+    findings: tuple[Finding, ...]
+
+    @property
+    def section_id(self) -> str:
+        """Id of the cut line."""
+        return self.built.section_id
+
+    @property
+    def status(self) -> str:
+        """The section's own status: ``failed`` where it has no section at all."""
+        if self.built.section is None:
+            return FAILED
+        return DOUBTFUL if any(f.severity == DOUBTFUL for f in self.built.findings) else OK
+
+
+def answer_sections(
+    built: Sequence[BuiltSection],
+    flows: Sequence[Flow],
+    stages: int,
+    top: float | None,
+    units: UnitSystem,
+    progress: Callable | None = None,
+) -> list[SectionAnswer]:
+    """Return rating and design stages of every section.
+
+    Parameters
+    ----------
+    built : sequence of BuiltSection
+    flows : sequence of Flow
+        In SI.
+    stages : int
+        Steps of a rating.
+    top : float or None
+        Height of its last stage above the lowest ground, m.
+    units : UnitSystem
+        For messages.
+    progress : callable, optional
+        ``progress(done, total, label)``.
+
+    Returns
+    -------
+    list of SectionAnswer
+        In order; a section without an answer keeps its place.
+    """
+    events = event_names(flows)
+    answers = []
+    for done, one in enumerate(built, 1):
+        answers.append(answer_section(one, flows, events, stages, top, units))
+        if progress is not None and (done % 200 == 0 or done == len(built)):
+            progress(done, len(built), "ratings and stages")
+    return answers
+
+
+def answer_section(
+    built: BuiltSection,
+    flows: Sequence[Flow],
+    events: Sequence[str],
+    stages: int,
+    top: float | None,
+    units: UnitSystem,
+) -> SectionAnswer:
+    """Return the rating and the design stages of one section."""
+    section = built.section
+    failed = tuple(EventAnswer(event, FAILED) for event in events)
+    if section is None or not np.isfinite(built.slope):
+        return SectionAnswer(built, {}, failed, ())
+    notes = _Notes(built, units)
+    try:
+        rating = section.rating_arrays(built.slope, stages, top)
+    except Terrain2qError as error:
+        notes.add("section-failed", error.what)
+        return SectionAnswer(built, {}, failed, notes.findings())
+    doubtful = any(f.severity == DOUBTFUL for f in built.findings)
+    if built.slope > STEEP:
+        notes.add("slope-steep", f"the slope is {built.slope:.3g}")
+    answers = []
+    for event in events:
+        flow = flow_for(flows, event, built.section_id, built.line.stream, built.line.stream_distance)
+        if flow is None:
+            notes.add("flow-missing", "no discharge is given for it", event)
+            answers.append(EventAnswer(event, FAILED))
+            continue
+        answers.append(_answer_event(section, built, flow, doubtful, notes))
+    return SectionAnswer(built, rating, tuple(answers), notes.findings())
+
+
+def _answer_event(section: Section, built: BuiltSection, flow: Flow, doubtful: bool, notes: _Notes) -> EventAnswer:
+    try:
+        state = section.flow_state(flow.discharge, built.slope)
+        critical = float(section.critical_stage(flow.discharge))
+    except Terrain2qError as error:
+        notes.add("section-failed", error.what, flow.event)
+        return EventAnswer(flow.event, FAILED)
+    root = np.sqrt(built.slope)
+    columns = {k: float(v[0]) for k, v in hydraulic_columns(state.parts, root, section.system.gravity).items()}
+    # the discharge that was asked for, not its image after solving
+    columns["discharge"] = flow.discharge
+    share = channel_share(section, state)
+    row = {
+        "stage": state.stage,
+        "depth": state.stage - section.lowest_ground,
+        **columns,
+        "slope": built.slope,
+        "critical_stage": critical,
+        "channel_share": share,
+    }
+    before = notes.doubtful
+    _remark(section, state, row, share, flow.event, notes)
+    status = DOUBTFUL if doubtful or notes.doubtful > before or built.slope > STEEP else OK
+    return EventAnswer(
+        flow.event, status, row, tuple((p.start, p.end) for p in state.paths), _subarea_rows(state, root)
+    )
+
+
+def channel_share(section: Section, state: FlowState) -> float:
+    """Return the share of the discharge that the channel zone carries; NaN where there is no such zone."""
+    mine = [i for i, s in enumerate(section.subareas) if s.zone == CHANNEL]
+    if not mine:
+        return float("nan")
+    carried = sum(float(p.wet.conveyance[0, mine].sum()) for p in state.paths)
+    return carried / sum(p.conveyance for p in state.paths)
+
+
+def _subarea_rows(state: FlowState, root: float) -> tuple[dict[str, float], ...]:
+    rows = []
+    total = sum(p.conveyance for p in state.paths)
+    for path in state.paths:
+        wet = path.wet
+        for i in np.flatnonzero(wet.area[0] > 0):
+            area, conveyance = float(wet.area[0, i]), float(wet.conveyance[0, i])
+            rows.append({
+                "subarea": int(i) + 1,
+                "stage": path.stage,
+                "flow_area": area,
+                "wetted_perimeter": float(wet.perimeter[0, i]),
+                "conveyance": conveyance,
+                "discharge": conveyance * root,
+                "mean_velocity": conveyance * root / area,
+                "share": conveyance / total,
+            })  # fmt: skip
+    return tuple(sorted(rows, key=lambda r: r["subarea"]))
+
+
+def _remark(section: Section, state: FlowState, row: dict, share: float, event: str, notes: _Notes) -> None:
+    """Note what a reviewer must know about one answer."""
+    z, text = section.elevations, notes.length
+    for above, end, height in zip(state.above_ends, ("left", "right"), (z[0], z[-1]), strict=True):
+        if above:
+            level = max(p.stage for p in state.paths if (p.at_left_end if end == "left" else p.at_right_end))
+            notes.add("above-section-ends", f"water stands {text(level - height)} above the {end} end", event)
+    if len(state.stages) > 1:
+        listed = ", ".join(text(s) for s in state.stages)
+        notes.add("several-stages", f"stages {listed} carry the discharge", event)
+    if row["froude"] > 1.0:
+        notes.add(
+            "supercritical",
+            f"Froude number {row['froude']:.2f}, critical stage {text(row['critical_stage'])}",
+            event,
+        )
+    if row["mean_velocity"] > HIGH_VELOCITY:
+        notes.add("velocity-high", f"mean velocity {notes.velocity(row['mean_velocity'])}", event)
+    if row["alpha"] > HIGH_ALPHA:
+        notes.add("alpha-high", f"alpha {row['alpha']:.2f}", event)
+    total = sum(p.conveyance for p in state.paths)
+    for path in state.paths[1:]:
+        part = path.conveyance / total
+        if part >= _LEAVES:
+            notes.add(
+                "bank-passed",
+                f"{100 * part:.0f} % of the discharge leaves the channel and flows behind a bank "
+                f"from station {text(path.start)} to {text(path.end)} at stage {text(path.stage)}, "
+                f"{text(state.stage - path.stage)} below the channel's",
+                event,
+            )
+    passed = [top for top in section.telling_bank_tops if top < state.stage]
+    if len(state.paths) == 1 and passed and np.isfinite(share):
+        notes.add(
+            "bank-passed",
+            f"water has passed a bank of {text(passed[0])} and stands at one level behind it; "
+            f"{100 * (1 - share):.0f} % of the discharge is outside the channel",
+            event,
+        )
+
+
+class _Notes:
+    """Findings about one section, one for each code and text, with the events they hold for."""
+
+    def __init__(self, built: BuiltSection, units: UnitSystem) -> None:
+        self._built, self._units = built, units
+        self._found: dict[tuple[str, str], list[str]] = {}
+        self.doubtful = 0
+
+    def length(self, metres: float) -> str:
+        return length_text(metres, self._units)
+
+    def velocity(self, value: float) -> str:
+        return f"{value * self._units.per_si('velocity'):.1f} {self._units.symbol('velocity')}"
+
+    def add(self, code: str, message: str, event: str = "") -> None:
+        finding = Finding(code, message)
+        self.doubtful += finding.severity != "note"
+        self._found.setdefault((code, message), []).append(event)
+
+    def findings(self) -> tuple[Finding, ...]:
+        profile = self._built.profile
+        low = int(np.argmin(profile.elevations))
+        out = []
+        by_code: dict[str, list[str]] = {}
+        for (code, message), events in self._found.items():
+            named = ", ".join(e for e in events if e)
+            by_code.setdefault(code, []).append(f"{named}: {message}" if named else message)
+        for code, messages in by_code.items():
+            out.append(
+                Finding(
+                    code,
+                    "; ".join(messages),
+                    _LAYER if code != "section-failed" else "sections",
+                    self._built.section_id,
+                    x=float(profile.x[low]),
+                    y=float(profile.y[low]),
+                )
+            )
+        return tuple(out)

@@ -1,0 +1,384 @@
+"""A study from its inputs to its results: reading, the jobs, the layers, the files."""
+
+from __future__ import annotations
+
+import os
+import time
+from collections import Counter
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
+
+import pandas as pd
+import pyproj
+from pyproj.exceptions import CRSError
+
+from terrain2q.columns import CAUTION
+from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError
+from terrain2q.flows import read_flows
+from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
+from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
+from terrain2q.ground.layers import read_layer, require_field
+from terrain2q.ground.terrain import Terrain
+from terrain2q.jobs.design_flows import SectionAnswer, answer_sections
+from terrain2q.jobs.sections import BuiltSection, SectionInputs, Slopes, build_sections
+from terrain2q.output.geopackage import RESULT_NAME, check_output, write_geopackage
+from terrain2q.output.layers import make_layers
+from terrain2q.output.run_record import run_record, write_run_record
+from terrain2q.study import Study, load_study
+from terrain2q.units import UnitSystem
+
+Progress = Callable[[int, int, str], None]
+
+RECORD_NAME = "run.json"
+
+_SHOWN = 8
+"""Sections shown in the table at the end of a run, the doubtful ones apart."""
+
+
+@dataclass(frozen=True)
+class Results:
+    """What a study gives: one table a layer, and the findings.
+
+    Attributes
+    ----------
+    layers : mapping of str to DataFrame or GeoDataFrame
+        By name of the layer; each is an attribute too, such as ``results.design_stages``. Numbers are in
+        the study's units.
+    findings_list : tuple of Finding
+    units : UnitSystem
+    crs : pyproj.CRS
+        Of every geometry.
+    folder : pathlib.Path or None
+        Where the files are.
+    files : tuple of pathlib.Path
+    seconds : float
+        How long it took.
+    name : str
+        Of the study.
+    """
+
+    layers: Mapping[str, pd.DataFrame]
+    findings_list: tuple[Finding, ...]
+    units: UnitSystem
+    crs: pyproj.CRS
+    folder: Path | None = None
+    files: tuple[Path, ...] = ()
+    seconds: float = 0.0
+    name: str = ""
+    failed: frozenset[str] = field(default=frozenset())
+
+    def __getattr__(self, name: str) -> pd.DataFrame:
+        layers = self.__dict__.get("layers", {})
+        if name in layers:
+            return layers[name]
+        raise AttributeError(f"Results have no layer {name!r}; there are {', '.join(layers)}")
+
+    def __dir__(self) -> list[str]:
+        return [*super().__dir__(), *self.layers]
+
+    def __repr__(self) -> str:
+        counts = ", ".join(f"{len(table)} {name}" for name, table in self.layers.items())
+        return f"<Results {self.name!r}: {counts}>"
+
+    @property
+    def failed_sections(self) -> int:
+        """How many sections have no answer at all, or none at some event."""
+        return len(self.failed)
+
+    @property
+    def answered_sections(self) -> int:
+        """How many sections have an answer at every event."""
+        return len(self.layers["sections"]) - len(self.failed)
+
+    def finding_counts(self) -> dict[str, int]:
+        """Return how many findings there are of each severity."""
+        found = Counter(f.severity for f in self.findings_list)
+        return {severity: found[severity] for severity in SEVERITIES}
+
+    def summary(self) -> dict:
+        """Return what a run prints, as plain values for JSON."""
+        stages = self.layers["design_stages"]
+        shown = ["section_id", "event", "discharge", "stage", "depth", "status"]
+        return {
+            "study": self.name,
+            "units": self.units.name,
+            "crs": self.crs.to_string(),
+            "sections": len(self.layers["sections"]),
+            "failed_sections": self.failed_sections,
+            "rows": {name: len(table) for name, table in self.layers.items()},
+            "design_stages": pd.DataFrame(stages[shown]).to_dict("records"),
+            "findings": self.finding_counts(),
+            "worst_findings": [
+                {"severity": f.severity, "code": f.code, "feature_id": f.feature_id, "message": f.message}
+                for f in self.worst_findings(3)
+            ],
+            "folder": None if self.folder is None else str(self.folder),
+            "files": [str(f) for f in self.files],
+            "seconds": round(self.seconds, 2),
+            "caution": CAUTION,
+        }
+
+    def worst_findings(self, count: int) -> list[Finding]:
+        """Return the first findings in order of severity."""
+        return sorted(self.findings_list, key=lambda f: SEVERITIES.index(f.severity))[:count]
+
+    def summary_text(self) -> str:
+        """Return what a run prints: stages by event, findings, files, time and the caution."""
+        sections = len(self.layers["sections"])
+        parts = [f"{self.name or 'Study'}: {sections} sections, {self.failed_sections} without a full answer"]
+        table = self._stage_table()
+        if table:
+            parts += ["", table]
+        counts = self.finding_counts()
+        parts += ["", "Findings: " + ", ".join(f"{n} {severity}" for severity, n in counts.items())]
+        parts += [
+            f"  {f.severity}: {' '.join(filter(None, (f.layer, f.feature_id)))}: {f.message}  [{f.code}]"
+            for f in self.worst_findings(3)
+        ]
+        if self.folder is not None:
+            parts += ["", f"Written to {self.folder}: {', '.join(f.name for f in self.files)}"]
+        parts += [f"Took {self.seconds:.1f} s.", "", CAUTION]
+        return "\n".join(parts)
+
+    def _stage_table(self) -> str:
+        stages = self.layers["design_stages"]
+        if not len(stages):
+            return ""
+        unit = self.units.symbol("length")
+        events = list(dict.fromkeys(stages["event"]))
+        ids = list(dict.fromkeys(stages["section_id"]))
+        status = stages.groupby("section_id", sort=False)["status"].agg(set)
+        first = ids[:_SHOWN]
+        doubtful = [i for i in ids[_SHOWN:] if status[i] != {"ok"}]
+        shown = first + doubtful[:_SHOWN]
+        rows = {(r.section_id, r.event): r for r in stages.itertuples()}
+        head = ["section", *(f"{event} [{unit}]" for event in events), "status"]
+        lines = []
+        for name in shown:
+            cells = []
+            for event in events:
+                row = rows.get((name, event))
+                known = row is not None and row.status != FAILED
+                cells.append(f"{row.stage:.2f} ({row.depth:.2f})" if known else "-")
+            worst = next((s for s in ("failed", "doubtful", "ok") if s in status[name]), "")
+            lines.append([name, *cells, worst])
+        widths = [max(len(str(line[i])) for line in [head, *lines]) for i in range(len(head))]
+        text = ["Stage (depth) by event:"]
+        for line in [head, *lines]:
+            first_cell, *rest = (str(c) for c in line)
+            text.append(
+                "  " + first_cell.ljust(widths[0]) + "  "
+                + "  ".join(c.rjust(w) for c, w in zip(rest, widths[1:], strict=True))
+            )  # fmt: skip
+        left = len(ids) - len(shown)
+        if left:
+            text.append(f"  ... and {left} more in design_stages")
+        return "\n".join(text)
+
+
+@dataclass(frozen=True)
+class _Inputs:
+    """A study's inputs, read and checked."""
+
+    lines: list[CutLine]
+    sections: SectionInputs
+    crs: pyproj.CRS
+    findings: list[Finding]
+
+
+def _silent(done: int, total: int, label: str) -> None:
+    pass
+
+
+def _output_crs(study: Study, terrain: Terrain) -> pyproj.CRS:
+    wanted = study.study.crs
+    if not wanted:
+        return terrain.crs.to_2d() if len(terrain.crs.axis_info) > 2 else terrain.crs
+    try:
+        crs = pyproj.CRS.from_user_input(wanted)
+    except CRSError as error:
+        raise InputError("crs-unknown", f"{wanted!r} is not a CRS: {error}", where="[study] crs") from None
+    if not crs.is_projected:
+        raise InputError(
+            "value-not-allowed",
+            f"{wanted!r} is not a projected CRS",
+            where="[study] crs",
+            fix="name a projected CRS such as EPSG:26915, or leave the key out",
+        )
+    return crs
+
+
+def _read_inputs(study: Study) -> _Inputs:
+    dem = study.terrain.dem
+    terrain = Terrain(
+        list(dem) if len(dem) > 1 else dem[0],
+        elevation_unit=study.terrain.elevation_unit,
+        sampling=study.terrain.sampling,
+    )
+    out_crs = _output_crs(study, terrain)
+    findings = list(terrain.findings)
+    cut_lines = read_layer(
+        study.cut_lines.path,
+        purpose="cut lines",
+        geometry="line",
+        crs=terrain.crs,
+        id_field=study.cut_lines.id_field,
+    )
+    streams = None
+    if study.streams is not None:
+        streams = read_layer(
+            study.streams.path,
+            purpose="streams",
+            geometry="line",
+            crs=terrain.crs,
+            id_field=study.streams.id_field,
+            repeated_ids=True,
+        )
+    slopes = Slopes(study.slope.value, study.slope.field)
+    if slopes.field is not None:
+        require_field(cut_lines, slopes.field, key="[slope] field", where=study.cut_lines.path)
+    cover = _read_cover(study, terrain)
+    channel = None
+    if study.channel.path is not None:
+        polygons = read_layer(study.channel.path, purpose="channel", geometry="polygon", crs=terrain.crs)
+        channel = ChannelPolygons(polygons, study.system)
+        findings += channel.findings
+    findings += cover.findings
+    lines, line_findings = orient_cut_lines(cut_lines, streams, terrain.crs, study.system)
+    findings += line_findings
+    sections = SectionInputs(
+        terrain,
+        cover,
+        channel,
+        study.channel.banks,
+        study.channel.n,
+        slopes,
+        study.in_si("terrain.spacing"),
+        study.system,
+    )
+    return _Inputs(lines, sections, out_crs, findings)
+
+
+def _read_cover(study: Study, terrain: Terrain) -> Cover | UniformCover:
+    table = study.land_cover
+    if table.path is None:
+        return UniformCover(table.default_n)
+    polygons = read_layer(table.path, purpose="land cover", geometry="polygon", crs=terrain.crs)
+    return Cover(
+        polygons, table.class_field, RoughnessTable.from_csv(table.table), table.default_n, study.system
+    )
+
+
+def _all_findings(inputs: _Inputs, built: Sequence[BuiltSection], answers: Sequence[SectionAnswer] = ()):
+    found = [*inputs.findings]
+    found += [f for b in built for f in b.findings]
+    found += [f for a in answers for f in a.findings]
+    return sorted(found, key=lambda f: SEVERITIES.index(f.severity))
+
+
+def check_study(study: Study, progress: Progress | None = None) -> list[Finding]:
+    """Look at every input of a study and return the findings, the worst first; write nothing.
+
+    Raises
+    ------
+    InputError
+        An input is wrong.
+    """
+    read_flows(study)
+    inputs = _read_inputs(study)
+    built = build_sections(inputs.lines, inputs.sections, progress or _silent)
+    return _all_findings(inputs, built)
+
+
+def run_study(study: Study, progress: Progress | None = None) -> Results:
+    """Do everything a study asks for and write it into its output folder.
+
+    Parameters
+    ----------
+    study : Study
+    progress : callable, optional
+        ``progress(done, total, label)``.
+
+    Raises
+    ------
+    InputError, OutputError
+        An input is wrong, or the output cannot be written; nothing was written.
+    """
+    began = time.perf_counter()
+    progress = progress or _silent
+    folder = Path(study.output.folder)
+    check_output(folder, study.output.overwrite)
+    flows = read_flows(study)
+    inputs = _read_inputs(study)
+    built = build_sections(inputs.lines, inputs.sections, progress)
+    answers = answer_sections(built, flows, study.rating.stages, study.in_si("rating.top"), study.system, progress)
+    findings = _all_findings(inputs, built, answers)
+    terrain = inputs.sections.terrain
+    layers = make_layers(answers, findings, study.system, terrain.crs, inputs.crs)
+    failed = frozenset(
+        a.section_id for a in answers if a.built.section is None or any(e.status == FAILED for e in a.events)
+    )
+    progress(0, 1, "writing")
+    package, record = folder / RESULT_NAME, folder / RECORD_NAME
+    folder.mkdir(parents=True, exist_ok=True)
+    write_geopackage(
+        package,
+        layers,
+        units=study.system,
+        crs=inputs.crs,
+        description=f"{study.study.name or 'terrain2q study'}: sections, ratings and stages at design flows",
+        metadata={"settings": study.as_dict()},
+        overwrite=study.output.overwrite,
+    )
+    seconds = time.perf_counter() - began
+    write_run_record(
+        record,
+        run_record(
+            inputs=study.inputs(),
+            settings=study.as_dict(),
+            units=study.system.name,
+            crs=inputs.crs.to_string(),
+            counts={name: len(table) for name, table in layers.items()},
+            findings=findings,
+            seconds=seconds,
+            outputs=[package],
+        ),
+    )
+    progress(1, 1, "writing")
+    return Results(
+        layers,
+        tuple(findings),
+        study.system,
+        inputs.crs,
+        folder,
+        (package, record),
+        time.perf_counter() - began,
+        study.study.name,
+        failed,
+    )
+
+
+def run(study: str | os.PathLike | Study, options: Mapping[str, object] | None = None) -> Results:
+    """Run a study file: everything it asks for, into its output folder.
+
+    Parameters
+    ----------
+    study : path or Study
+        A study file, or a study already loaded.
+    options : mapping, optional
+        Values by ``table.key`` that go before those of the file.
+
+    Returns
+    -------
+    Results
+        One GeoDataFrame or DataFrame a layer, in the study's units.
+
+    Raises
+    ------
+    InputError, OutputError
+        An input is wrong, or the output cannot be written; nothing was written.
+    """
+    if not isinstance(study, Study):
+        study = load_study(Path(study), options or {})
+    return run_study(study)
