@@ -20,16 +20,12 @@ from typing import Any
 import click
 
 from terrain2q import __version__
+from terrain2q.columns import CAUTION
 from terrain2q.errors import CATALOGUE, SEVERITIES, InputErrors, NoAnswerError, Terrain2qError
 from terrain2q.study import TABLES, Key, Study, Table, keys_of, load_study, shown_default
 
 DONE, WRONG_INPUT, NO_ANSWER, INTERRUPTED = 0, 2, 3, 130
 """Exit codes."""
-
-CAUTION = (
-    "Screening estimates; no substitute for a study by a licensed engineer. "
-    "Local codes and the floodplain authority decide."
-)
 
 _METAVARS = {
     "text": "TEXT", "number": "NUMBER", "count": "WHOLE NUMBER", "file": "FILE", "folder": "FOLDER",
@@ -353,6 +349,25 @@ def _findings_text(findings: Sequence[Any], counts: dict[str, int]) -> str:
         return "No findings: every input can be used."
     lines.append(", ".join(f"{counts[severity]} {severity}" for severity in SEVERITIES))
     return "\n".join(lines)
+
+
+def commands_page() -> str:
+    """Return the help of every command as Markdown, for the docs."""
+    parts = [
+        "# Commands",
+        "",
+        "This page is written by "
+        "`python -c 'from terrain2q.commands import *; print(commands_page())' > docs/commands.md`.",
+    ]
+    settings = {**main.context_settings, "terminal_width": 100}
+    with click.Context(main, info_name="terrain2q", **settings) as whole:
+        pages = {"terrain2q": main.get_help(whole)}
+        for name, command in main.commands.items():
+            with click.Context(command, info_name=name, parent=whole, terminal_width=100) as ctx:
+                pages[f"terrain2q {name}"] = command.get_help(ctx)
+    for name, text in pages.items():
+        parts += ["", f"## {name}", "", "```text", text, "```"]
+    return "\n".join(parts)
 
 
 if __name__ == "__main__":

@@ -23,6 +23,7 @@ from rasterio.errors import NotGeoreferencedWarning, RasterioError
 
 from terrain2q.errors import InputError, OutputError
 from terrain2q.ground.layers import clean_texts
+from terrain2q.ground.terrain import Terrain
 from terrain2q.study import DEFAULTED, NEEDED_TO_RUN, TABLES, keys_of, shown_default
 
 STUDY_FILE = "study.toml"
@@ -170,15 +171,15 @@ def look_at(folder: Path) -> Found:
     unused: list[str] = []
     values: dict[str, Value] = {"study.name": Value(folder.resolve().name, "the folder's name")}
     values |= _tables(files, folder, unused)
-    terrain, raster = _terrain(files, folder, unused)
-    values |= _units(None if raster is None else raster.crs)
+    terrain, crs = _terrain(files, folder, unused)
+    values |= _units(crs)
     values |= terrain
     values |= _layers(files, folder, values, unused)
     order = [f"{table}.{name}" for table, cls in TABLES.items() for name in keys_of(cls)]
     values = {name: values[name] for name in order if name in values}
     missing = list(_missing(values))
-    if raster is not None and not raster.says_unit:
-        missing.append(f"terrain.elevation_unit: {raster.path.name} does not say the unit of its elevations")
+    if "terrain.dem" in values:
+        missing += _terrain_lacks(values["terrain.dem"].value, folder)
     return Found(folder / STUDY_FILE, values, tuple(unused), tuple(missing))
 
 
@@ -235,7 +236,6 @@ class _Raster:
     crs: pyproj.CRS | None
     cell: tuple[float, float]
     bounds: tuple[float, float, float, float]
-    says_unit: bool
 
     def same_grid(self, other: _Raster) -> bool:
         """Whether both have one CRS and cell size, and cells that fall on one another."""
@@ -254,7 +254,7 @@ class _Raster:
 
 def _terrain(
     files: Sequence[Path], folder: Path, unused: list[str]
-) -> tuple[dict[str, Value], _Raster | None]:
+) -> tuple[dict[str, Value], pyproj.CRS | None]:
     candidates: list[_Raster] = []
     for path in files:
         if path.suffix.lower() in RASTERS:
@@ -291,7 +291,7 @@ def _terrain(
         note += "; the only likely elevations" if len(groups) == 1 else "; taken among several rasters"
     paths = [_relative(raster.path, folder) for raster in chosen]
     values = {"terrain.dem": Value(paths if len(paths) > 1 else paths[0], note, guess=not named)}
-    return values, first
+    return values, first.crs
 
 
 def _read_raster(path: Path) -> _Raster | str:
@@ -307,11 +307,20 @@ def _read_raster(path: Path) -> _Raster | str:
                 if _has_word(path.stem, NOT_DEM_WORDS) and not _has_word(path.stem, DEM_WORDS):
                     return "by its name not the ground's elevations"
                 crs = None if source.crs is None else pyproj.CRS.from_user_input(source.crs)
-                vertical = crs is not None and len(crs.axis_info) == 3
-                says_unit = vertical or bool(source.units[0])
-                return _Raster(path, crs, source.res, tuple(source.bounds), says_unit)
+                return _Raster(path, crs, source.res, tuple(source.bounds))
     except (RasterioError, pyproj.exceptions.CRSError) as error:
         return f"cannot be read as a raster ({str(error).splitlines()[0]})"
+
+
+def _terrain_lacks(dem: object, folder: Path) -> list[str]:
+    """Return what a run would refuse in the terrain chosen."""
+    paths = [folder / str(path) for path in (dem if isinstance(dem, list) else [dem])]
+    try:
+        Terrain(paths)
+    except InputError as error:
+        name = "elevation_unit" if error.code == "elevation-unit-unknown" else "dem"
+        return [f"terrain.{name}: {error.what}; {error.fix}"]
+    return []
 
 
 def _crs_name(crs: pyproj.CRS | None) -> str:
@@ -324,9 +333,11 @@ def _crs_name(crs: pyproj.CRS | None) -> str:
 def _units(crs: pyproj.CRS | None) -> dict[str, Value]:
     unit = "" if crs is None or crs.is_geographic or not crs.axis_info else crs.axis_info[0].unit_name
     if unit == "metre":
-        return {"study.units": Value("si", "the terrain's map unit is the metre; check", guess=True)}
+        note = "the terrain's map unit is the metre; check: discharges are then m³/s"
+        return {"study.units": Value("si", note, guess=True)}
     if unit in ("foot", "US survey foot"):
-        return {"study.units": Value("us", f"the terrain's map unit is the {unit}; check", guess=True)}
+        note = f"the terrain's map unit is the {unit}; check: discharges are then ft³/s"
+        return {"study.units": Value("us", note, guess=True)}
     return {}
 
 

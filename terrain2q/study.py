@@ -828,7 +828,17 @@ def shown_default(table: type[Table], name: str) -> str:
 
 def keys_page() -> str:
     """Return every table and key as Markdown, for the docs."""
-    parts = []
+    parts = [
+        "# The study file",
+        "",
+        "A TOML file; `terrain2q start FOLDER` writes one. Paths are relative to it; a vector path may",
+        "carry a layer: `data.gpkg|layer=name`. Unknown keys are errors. Every key is also an option of",
+        "the commands, such as `--terrain.dem dem.tif`; options go before the file, and their relative",
+        "paths start at the current folder.",
+        "",
+        "This page is written by `python -m terrain2q.study > docs/study_file.md`.",
+        "",
+    ]
     for table_name, cls in TABLES.items():
         parts += [f"## [{table_name}]", "", (cls.__doc__ or "").splitlines()[0], ""]
         parts += ["| key | meaning | default | example |", "|---|---|---|---|"]
@@ -843,3 +853,7 @@ def keys_page() -> str:
             parts += ["", *(f"Only one of `{a}` and `{b}` may be given." for a, b in cls.either)]
         parts.append("")
     return "\n".join(parts)
+
+
+if __name__ == "__main__":
+    print(keys_page(), end="")

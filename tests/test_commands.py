@@ -13,7 +13,8 @@ import pytest
 
 import terrain2q
 from terrain2q import __version__
-from terrain2q.commands import CAUTION, main
+from terrain2q.columns import CAUTION
+from terrain2q.commands import commands_page, main
 from terrain2q.errors import Finding, InputError, NoAnswerError, OutputError
 from terrain2q.study import TABLES, keys_of
 
@@ -121,6 +122,12 @@ def test_every_key_is_an_option_under_its_table(call, command):
         for name, about in keys_of(cls).items():
             assert f"--{table}.{name} " in section
             assert about.help.split()[-1] in section
+
+
+def test_the_page_of_commands_is_the_help():
+    # Lines are compared without their spaces: releases of click differ in columns.
+    page = (Path(__file__).parents[1] / "docs" / "commands.md").read_text(encoding="utf-8")
+    assert page.split() == commands_page().split()
 
 
 def test_version(call):

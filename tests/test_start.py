@@ -51,7 +51,7 @@ def test_the_file_written_holds_what_was_found_and_help_on_every_key(tmp_path):
         for name, about in keys_of(cls).items():
             assert f"# {about.help} (" in text
             assert f"\n{name} = " in text or f"\n# {name} = " in text
-    assert "(a guess: the terrain's map unit is the metre; check)\nunits" in text
+    assert "(a guess: the terrain's map unit is the metre; check: discharges are then m³/s)\nunits" in text
 
 
 def test_every_commented_line_is_itself_toml(tmp_path):
@@ -72,7 +72,8 @@ def test_an_empty_folder_gives_a_file_to_fill_in(tmp_path):
     found = start_study(tmp_path)
     assert list(found.values) == ["study.name"]
     assert [each.partition(":")[0] for each in found.missing] == [
-        "study.units", "terrain.dem", "cut_lines.path", "land_cover.path", "slope.value", "flows.path or flows.events",
+        "study.units", "terrain.dem", "cut_lines.path", "land_cover.path", "slope.value",
+        "flows.path or flows.events",
     ]  # fmt: skip
     with pytest.raises(InputError) as caught:
         load_study(found.path)
@@ -101,7 +102,7 @@ def test_the_command_prints_what_was_found(tmp_path, capsys):
     assert (left.value.code, err) == (0, "")
     assert out.startswith(f"{folder / 'study.toml'} written\n")
     assert '  terrain.dem             "dem.tif"  (cells of 1 by 1, EPSG:26915)\n' in out
-    assert '"si"  (a guess; the terrain\'s map unit is the metre; check)\n' in out
+    assert '"si"  (a guess; the terrain\'s map unit is the metre; check: discharges are then m³/s)\n' in out
 
     with pytest.raises(SystemExit) as left:
         main(["start", str(folder), "--json"])
@@ -153,6 +154,11 @@ def test_pictures_classes_and_derived_rasters_are_not_elevations(tmp_path):
     assert [each.partition(":")[0] for each in found.unused] == [
         "broken.tif", "hillshade.tif", "nlcd.tif", "photo.tif",
     ]  # fmt: skip
+
+
+def test_a_raster_without_a_crs_is_said(tmp_path):
+    write_raster(tmp_path / "dem.tif", crs=None)
+    assert any(each.startswith("terrain.dem: ") and "CRS" in each for each in look_at(tmp_path).missing)
 
 
 def test_a_raster_without_a_telling_name_is_a_guess(tmp_path):

@@ -504,6 +504,11 @@ def test_the_page_of_keys_has_every_key():
             assert f"| `{name}` | {about.help} |" in section
 
 
+def test_the_page_in_the_docs_is_current():
+    page = Path(__file__).parents[1] / "docs" / "study_file.md"
+    assert page.read_text(encoding="utf-8") == keys_page()
+
+
 def test_both_names_of_a_layer_are_read():
     assert split_layer("a.gpkg|layername=b") == ("a.gpkg", "b")
 
