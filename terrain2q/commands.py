@@ -286,7 +286,8 @@ def check(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bo
     study = _study(ctx, study_path)
     from terrain2q.process import check_study
 
-    findings = check_study(study)
+    with _progress() as progress:
+        findings = check_study(study, progress=progress)
     counts = {severity: sum(f.severity == severity for f in findings) for severity in SEVERITIES}
     if as_json:
         _print_json({"counts": counts, "findings": [_finding(f) for f in findings]})

@@ -85,7 +85,7 @@ def jobs(monkeypatch):
         progress(1, 1, "writing")
         return stand_in.results
 
-    def check_study(study):
+    def check_study(study, *, progress=None):
         stand_in.studies.append(study)
         if stand_in.trouble is not None:
             raise stand_in.trouble
