@@ -45,6 +45,8 @@ CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
     "field-missing": Kind(ERROR, "A layer or table has no such column", "Name one of the columns listed."),
     "crs-missing": Kind(ERROR, "A layer or raster does not say its coordinate reference system", "Assign the CRS with a GIS before running."),
     "crs-unknown": Kind(ERROR, "A coordinate reference system is not recognised", "Give an authority code such as EPSG:26915."),
+    "crs-local": Kind(ERROR, "A coordinate reference system is not tied to the Earth", "Bring the data to a geographic or projected CRS."),
+    "transform-missing": Kind(ERROR, "A raster's cells have no exact place on the map", "Warp the raster to a CRS with a GIS (gdalwarp) before running."),
     "elevation-unit-unknown": Kind(ERROR, "The raster does not say the unit of its elevations", 'Set `elevation_unit = "m"`, `"ft"` or `"us-ft"` under [terrain].'),
     "tiles-differ": Kind(ERROR, "Tiles of the terrain do not fit together", "Bring the tiles to one CRS, unit and cell size."),
     "id-duplicate": Kind(ERROR, "Two features carry the same id", "Make the ids unique, or name another id field."),
