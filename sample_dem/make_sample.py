@@ -644,7 +644,7 @@ FENCES = {
     ),
     "right floodplain": (
         [180, 430, 620, 860, 1150, 1400],
-        ["row crops", "pasture", "row crops", "pasture", "row crops", "brush", "pasture"],
+        ["row crops", "pasture", "row crops", "pasture", "row crops", "pasture", "row crops"],
     ),
     "left terrace": (
         [280, 560, 760, 1010, 1240],
@@ -663,8 +663,8 @@ FENCES = {
     "right upland": ([250, 640, 900, 1200], ["forest", "row crops", "pasture", "row crops", "forest"]),
 }
 RIPARIAN = (
-    [170, 400, 560, 790, 960, 1140, 1360],
-    ["brush", "forest", "pasture", "brush", "forest", "brush", "forest", "brush"],
+    [170, 400, 560, 790, 960, 1360],
+    ["brush", "forest", "pasture", "brush", "forest", "pasture", "brush"],
 )
 FARMSTEADS = [
     [(412, 618), (470, 622), (474, 668), (408, 664)],
@@ -706,7 +706,7 @@ def make_land_cover(plan):
     ]
     wander = 5.0 * np.sin(calm.distance / 61.0)
     bank_strip = strip(calm.offset(30.0 + wander)[::12], calm.offset(-29.0 + wander)[::12])
-    side_strip = strip(calm_side.offset(13.0)[::12], calm_side.offset(-15.0)[::12])
+    side_strip = strip(calm_side.offset(24.0)[::12], calm_side.offset(-26.0)[::12])
     calm_valley = Path2D(gaussian_filter1d(side.points, 110.0, axis=0, mode="nearest"))
     side_slopes = strip(calm_valley.offset(62.0)[::20], calm_valley.offset(-70.0)[::20])
     roads = {
@@ -742,7 +742,7 @@ def make_land_cover(plan):
         if bank_strip.contains(point):
             return RIPARIAN[1][int(np.searchsorted(RIPARIAN[0], east))]
         if side_strip.contains(point):
-            return "brush"
+            return "pasture"
         if zone > 0 and side_slopes.contains(point):
             return "forest"
         place = f"{'left' if sign > 0 else 'right'} {('floodplain', 'terrace', 'side', 'upland')[zone]}"
