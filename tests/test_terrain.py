@@ -323,6 +323,22 @@ def test_every_block_touched_is_read_once_and_no_other(tmp_path, monkeypatch):
     np.testing.assert_allclose(got, independent_bilinear(cells, column, row), atol=1e-6)
 
 
+def test_overlapping_tiles_with_gaps_are_still_read_once_a_block(tmp_path, monkeypatch):
+    cells = rough_ground(160, 150)
+    cells[np.random.default_rng(8).uniform(size=cells.shape) < 0.05] = np.nan
+    terrain = Terrain(write_tiles(tmp_path, cells, PIECES[1], tiled=True, blockxsize=128, blockysize=128))
+    read, plain = [], tiles_module._Readers.read
+
+    def noting(self, tile, row, column, *shape):
+        read.append((tile.path, row // 128, column // 128))
+        return plain(self, tile, row, column, *shape)
+
+    monkeypatch.setattr(tiles_module._Readers, "read", noting)
+    terrain.elevations(*to_map(NORTH_UP, *random_places(20_000, 150, 160)))
+    assert {path for path, _, _ in read} == set(terrain.paths)
+    assert len(read) == len(set(read))
+
+
 # --- units ---------------------------------------------------------------------------------------------
 
 US = units.US_SURVEY_FOOT

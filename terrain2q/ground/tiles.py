@@ -87,7 +87,7 @@ def metres_in(unit: str) -> float | None:
     True
     """
     text = unicodedata.normalize("NFKD", unit).encode("ascii", "ignore").decode().lower()
-    text = re.sub(r"\b(above|a\.?\s*m?\.?\s*s\.?\s*l|navd|ngvd|egm|nap|msl)\b.*", "", text)
+    text = re.sub(r"\b(above|a\.?\s*m?\.?\s*s\.?\s*l|navd\d*|ngvd\d*|egm\d*|nap|msl)\b.*", "", text)
     words = re.findall(r"[a-z]+", text.replace("(s)", "").replace("u.s", "us"))
     found = [word for word in words if word in _UNIT_WORDS]
     if len(found) != 1:
