@@ -660,6 +660,33 @@ class Section:
             )
         return float((share / perimeter[index]) ** (1 / power))
 
+    def required_bench(
+        self,
+        discharge: ArrayLike,
+        stage: ArrayLike,
+        slope: float,
+        base: float,
+        n: float | DepthRoughness,
+        sides: str = "both",
+        side_slope: float = 0.0,
+    ):
+        """Return the narrowest bench with which the section passes a discharge at a stage.
+
+        See :func:`terrain2q.hydraulics.widths.required_bench`; `base` is an elevation.
+        """
+        from terrain2q.hydraulics.widths import required_bench
+
+        return required_bench(self, discharge, stage, slope, base, n, sides, side_slope)
+
+    def required_opening(self, discharge: ArrayLike, stage: ArrayLike, slope: ArrayLike) -> Floats:
+        """Return the least clear width about the channel, between vertical walls, that passes a discharge.
+
+        See :func:`terrain2q.hydraulics.widths.required_opening`.
+        """
+        from terrain2q.hydraulics.widths import required_opening
+
+        return required_opening(self, discharge, stage, slope)
+
     # --- tables ----------------------------------------------------------------------------------
 
     def rating(self, slope: float, stages: ArrayLike | int | None = None):
