@@ -663,7 +663,7 @@ FENCES = {
     "right upland": ([250, 640, 900, 1200], ["forest", "row crops", "pasture", "row crops", "forest"]),
 }
 RIPARIAN = (
-    [170, 400, 560, 790, 960, 1360],
+    [170, 400, 560, 790, 960, 1470],
     ["brush", "forest", "pasture", "brush", "forest", "pasture", "brush"],
 )
 FARMSTEADS = [
