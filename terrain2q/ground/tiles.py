@@ -136,6 +136,8 @@ class Tile:
         In the band's own type; None where there is none that the type can hold.
     scale, offset : float
         Elevation = value * scale + offset.
+    is_virtual : bool
+        The blocks are nominal: the file names others that hold the cells (a VRT).
     masked : bool
         A mask is kept beside the values (a mask file, an inner mask or an alpha band).
     units : tuple of StatedUnit
@@ -157,6 +159,7 @@ class Tile:
     nodata: object
     scale: float
     offset: float
+    is_virtual: bool
     masked: bool
     units: tuple[StatedUnit, ...]
     unit_note: str
@@ -257,6 +260,7 @@ def _describe(name: str, dataset) -> Tile:
         nodata,
         float(dataset.scales[0]),
         float(dataset.offsets[0]),
+        dataset.driver == "VRT",
         MaskFlags.per_dataset in dataset.mask_flag_enums[0],
         tuple(units),
         note,
@@ -680,8 +684,10 @@ class _Gathering:
         if workers == 1:
             serve_all(jobs)
             return
-        # Neighbouring chunks go to one thread, as they may share blocks of a VRT's sources.
-        share = -(-len(jobs) // (workers * 8))
+        # Neighbouring chunks go to one thread, and long runs of them in a VRT, as they share blocks of its
+        # sources, which each thread decodes for itself.
+        runs = workers * (2 if any(tile.is_virtual for tile in mosaic.tiles) else 8)
+        share = -(-len(jobs) // runs)
         with ThreadPoolExecutor(workers) as pool:
             for _ in pool.map(serve_all, [jobs[i : i + share] for i in range(0, len(jobs), share)]):
                 pass
