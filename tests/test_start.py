@@ -2,6 +2,7 @@ from __future__ import annotations
 
 import json
 import tomllib
+from pathlib import Path
 
 import pytest
 from _study_folder import COVER, CRS, CUT_LINES, SOUTH, STREAM, WEST, frame, line, write_folder, write_raster
@@ -39,6 +40,18 @@ def test_a_whole_folder_becomes_a_study_that_loads(tmp_path):
         "data.gpkg|layer=roads: by its name roads, which no key takes",
         "data.gpkg|layer=wells: points, which no key takes",
     )
+
+
+def test_the_demonstration_is_recognised_as_its_study_says():
+    folder = Path(__file__).parents[1] / "sample_dem"
+    study = tomllib.loads((folder / "study.toml").read_text(encoding="utf-8"))
+    found = values_of(folder)
+    for name in (
+        "terrain.dem", "streams.path", "streams.id_field", "cut_lines.path", "cut_lines.id_field", "flows.path",
+        "land_cover.path", "land_cover.class_field", "land_cover.table", "slope.field",
+    ):  # fmt: skip
+        table, _, key = name.partition(".")
+        assert found[name] == study[table][key]
 
 
 def test_the_file_written_holds_what_was_found_and_help_on_every_key(tmp_path):
