@@ -47,8 +47,8 @@ def test_the_demonstration_is_recognised_as_its_study_says():
     study = tomllib.loads((folder / "study.toml").read_text(encoding="utf-8"))
     found = values_of(folder)
     for name in (
-        "terrain.dem", "streams.path", "streams.id_field", "cut_lines.path", "cut_lines.id_field", "flows.path",
-        "land_cover.path", "land_cover.class_field", "land_cover.table", "slope.field",
+        "terrain.dem", "streams.path", "streams.id_field", "cut_lines.path", "cut_lines.id_field",
+        "land_cover.path", "land_cover.class_field", "land_cover.table", "slope.field", "flows.path",
     ):  # fmt: skip
         table, _, key = name.partition(".")
         assert found[name] == study[table][key]
