@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from itertools import pairwise
 
 import geopandas
@@ -23,6 +22,7 @@ from terrain2q.ground.cover import (
     UniformCover,
     split_by_zone,
 )
+from terrain2q.ground.terrain import Profile
 
 UTM = "EPSG:26915"
 X0, Y0 = 500000.0, 4700000.0
@@ -30,12 +30,8 @@ ORIGIN = np.array([X0, Y0])
 NAN = float("nan")
 
 
-@dataclass(frozen=True)
-class PlainProfile:
-    stations: np.ndarray
-    x: np.ndarray
-    y: np.ndarray
-    is_vertex: np.ndarray
+def plain_profile(stations, x, y, is_vertex):
+    return Profile(stations, np.zeros(len(stations)), x, y, is_vertex)
 
 
 def profile(vertices, spacing=1.0, factor=1.0):
@@ -44,7 +40,7 @@ def profile(vertices, spacing=1.0, factor=1.0):
     corners = np.concatenate([[0.0], np.cumsum(np.hypot(*np.diff(line.coords, axis=0).T))])
     at = np.unique(np.concatenate([np.arange(0.0, line.length, spacing), corners]))
     xy = shapely.get_coordinates(shapely.line_interpolate_point(line, at)) + ORIGIN
-    return PlainProfile(at * factor, xy[:, 0], xy[:, 1], np.isin(at, corners))
+    return plain_profile(at * factor, xy[:, 0], xy[:, 1], np.isin(at, corners))
 
 
 def layer(shapes, classes=None, ids=None, crs=UTM):
@@ -153,7 +149,7 @@ def test_stations_are_ground_and_may_stretch_along_the_line(table):
     )
     plain = profile([(0, 0), (40, 0)])
     stations = plain.stations + 0.001 * plain.stations**2  # 144.144 at 12, 13.169 at 13
-    pieces, _ = cover.pieces(PlainProfile(stations, plain.x, plain.y, plain.is_vertex))
+    pieces, _ = cover.pieces(plain_profile(stations, plain.x, plain.y, plain.is_vertex))
     expected = 12.144 + 0.25 * (13.169 - 12.144)
     assert_spans(pieces, [("pasture", 0, expected), ("wood", expected, 41.6)])
 
@@ -284,7 +280,7 @@ def test_slivers_are_nothing(table):
 
 
 def test_profile_without_points_has_no_pieces(table):
-    nothing = PlainProfile(*(np.empty(0),) * 3, np.empty(0, dtype=bool))
+    nothing = plain_profile(*(np.empty(0),) * 3, np.empty(0, dtype=bool))
     cover = Cover(layer([box(-9, -9, 50, 9)], ["wood"]), "class", table)
     (one, two) = cover.pieces_many([nothing, profile([(0, 0), (20, 0)])], ["a", "b"])
     assert one == ([], [])
@@ -298,7 +294,7 @@ def test_profile_that_is_not_straight_between_vertices(table):
     cover = Cover(layer([box(-9, -9, 50, 1), box(-9, 1, 50, 9)], ["wood", "lawn"]), "class", table)
     xy = np.array([(0, 0), (10, 2), (20, 0)], dtype=float) + ORIGIN
     leg = np.hypot(10, 2)
-    bowed = PlainProfile(np.array([0, leg, 2 * leg]), xy[:, 0], xy[:, 1], np.array([True, False, True]))
+    bowed = plain_profile(np.array([0, leg, 2 * leg]), xy[:, 0], xy[:, 1], np.array([True, False, True]))
     pieces, _ = cover.pieces(bowed)
     assert_spans(pieces, [("wood", 0, leg / 2), ("lawn", leg / 2, 1.5 * leg), ("wood", 1.5 * leg, 2 * leg)])
 
@@ -365,7 +361,7 @@ def test_degrees_give_the_same_pieces(table):
         .pipe(lambda points: (points.x.to_numpy(), points.y.to_numpy()))
     )
     cover = Cover(polygons, "class", table)
-    pieces, _ = cover.pieces(PlainProfile(plain.stations, lon, lat, plain.is_vertex))
+    pieces, _ = cover.pieces(plain_profile(plain.stations, lon, lat, plain.is_vertex))
     # Edges of 100 m that are straight in one projection sag by less than 0.2 mm in the other.
     assert_spans(pieces, [("pasture", 0, 12.25), ("wood", 12.25, 40)], 2e-4)
 

@@ -17,7 +17,6 @@ from terrain2q.errors import InputError
 from terrain2q.ground.layers import (
     clean_text,
     clean_texts,
-    horizontal,
     ignored_columns,
     read_layer,
     read_table,
@@ -108,14 +107,6 @@ def test_layer_is_brought_to_the_crs_asked_for(tmp_path):
     assert shapely.get_coordinates(compound.geometry) == pytest.approx(
         shapely.get_coordinates(LINES), abs=1e-6
     )
-
-
-def test_horizontal_part_of_a_crs():
-    assert horizontal("EPSG:26915+5703") == horizontal(UTM)
-    assert horizontal(4979) == horizontal(4326)
-    with pytest.raises(InputError) as caught:
-        horizontal("EPSG:1")
-    assert caught.value.code == "crs-unknown"
 
 
 def test_crs_without_a_way_between(tmp_path):

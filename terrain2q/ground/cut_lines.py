@@ -354,11 +354,10 @@ def _place(lines, names, wanted, network: StreamNetwork, units, findings: list[F
     found = _crossings(lines, network)
     passage = _passages(found, lines, network)
     lengths = shapely.length(lines)
-    xy, owner = shapely.get_coordinates(lines, return_index=True)
-    metres = np.zeros(len(lines))
-    same = owner[1:] == owner[:-1]
-    steps = network.ground.inverse(xy[:-1][same, 0], xy[:-1][same, 1], xy[1:][same, 0], xy[1:][same, 1])[0]
-    np.add.at(metres, owner[1:][same], steps)
+    xy = shapely.get_coordinates(lines)
+    count = shapely.get_num_coordinates(lines)
+    measured = network.ground.distances.measure(xy[:, 0], xy[:, 1], np.cumsum(count) - count)
+    metres = measured.vertex_stations[np.cumsum(count) - 1]
 
     first = np.searchsorted(found.line, np.arange(len(lines)))
     last = np.searchsorted(found.line, np.arange(len(lines)), side="right")

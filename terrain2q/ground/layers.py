@@ -16,6 +16,7 @@ import pyproj
 import shapely
 
 from terrain2q.errors import Finding, InputError
+from terrain2q.ground.distances import horizontal_crs
 
 GEOMETRY_KINDS = {
     "line": ("LineString", "MultiLineString"),
@@ -103,23 +104,6 @@ def split_spec(text: str | Path) -> tuple[Path, str | None]:
             fix="write the layer as data.gpkg|layer=name",
         )
     return Path(path.strip()), layer.strip()
-
-
-def horizontal(crs: object) -> pyproj.CRS:
-    """Return the horizontal part of a coordinate reference system, which plan geometry is in.
-
-    Raises
-    ------
-    InputError
-        The CRS is not recognised (code ``crs-unknown``).
-    """
-    try:
-        crs = pyproj.CRS.from_user_input(crs)
-    except pyproj.exceptions.CRSError as error:
-        raise InputError("crs-unknown", f"{crs} is not a coordinate reference system", where="crs") from error
-    if crs.is_compound:
-        crs = crs.sub_crs_list[0]
-    return crs.to_2d() if len(crs.axis_info) == 3 else crs
 
 
 def read_layer(
@@ -261,8 +245,8 @@ def reproject(frame: geopandas.GeoDataFrame, crs: object, where: str = "") -> ge
     InputError
         The CRS is not recognised, or there is no way from one to the other (code ``crs-unknown``).
     """
-    target = horizontal(crs)
-    source = horizontal(frame.crs)
+    target = horizontal_crs(crs)
+    source = horizontal_crs(frame.crs)
     if source != target:
         try:
             frame = frame.set_crs(source, allow_override=True).to_crs(target)

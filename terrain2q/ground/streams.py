@@ -14,7 +14,7 @@ from scipy.sparse.csgraph import connected_components
 from scipy.spatial import cKDTree
 
 from terrain2q.errors import Finding
-from terrain2q.ground.layers import horizontal
+from terrain2q.ground.distances import GroundDistances
 from terrain2q.units import SI, UnitSystem
 
 JOIN_TOLERANCE = 1e-3
@@ -51,33 +51,32 @@ class Ground:
     Attributes
     ----------
     crs : pyproj.CRS
+    distances : GroundDistances
+        Lengths along lines.
+    metres_per_map_unit : float
+        At most, where the unit is a degree.
     tolerance : float
         :data:`JOIN_TOLERANCE` in map units.
+
+    Raises
+    ------
+    InputError
+        Codes ``crs-unknown``, ``crs-local``.
     """
 
     def __init__(self, crs: object) -> None:
-        self.crs = horizontal(crs)
-        self._geod = self.crs.get_geod()
-        factor = self.crs.axis_info[0].unit_conversion_factor if self.crs.axis_info else 1.0
-        if self.crs.is_geographic:
-            # The factor is radians in one map unit; the tolerance needs the equator's radius at most.
-            factor *= self._geod.a
-        self.metres_per_map_unit = factor
-        self.tolerance = JOIN_TOLERANCE / factor
-        geodetic = self.crs.geodetic_crs
-        self._to_geodetic = (
-            None
-            if geodetic is None or self._geod is None
-            else pyproj.Transformer.from_crs(self.crs, geodetic.to_2d(), always_xy=True)
-        )
-        self._degrees = 1.0
-        if geodetic is not None and geodetic.axis_info:
-            self._degrees = np.degrees(geodetic.axis_info[0].unit_conversion_factor)
+        self.distances = GroundDistances(crs)
+        self.crs = self.distances.crs
+        unit = self.crs.axis_info[0].unit_conversion_factor
+        self.metres_per_map_unit = unit * self.distances.geod.a if self.crs.is_geographic else unit
+        self.tolerance = JOIN_TOLERANCE / self.metres_per_map_unit
+        geographic = self.crs.geodetic_crs.to_2d()
+        self._to_geographic = pyproj.Transformer.from_crs(self.crs, geographic, always_xy=True)
+        # Degrees, or grads in some older systems.
+        self._degrees = np.degrees(geographic.axis_info[0].unit_conversion_factor)
 
     def inverse(self, x0, y0, x1, y1) -> tuple[np.ndarray, np.ndarray]:
         """Return length [m] and azimuth [degrees, clockwise from north] of the way from place to place.
-
-        A CRS without an ellipsoid (a local grid) is taken as flat.
 
         Parameters
         ----------
@@ -88,15 +87,9 @@ class Ground:
         -------
         tuple of ndarray, shape (n,)
         """
-        x0, y0, x1, y1 = (np.atleast_1d(np.asarray(v, dtype=float)) for v in (x0, y0, x1, y1))
-        if self._to_geodetic is None:
-            east, north = x1 - x0, y1 - y0
-            return np.hypot(east, north) * self.metres_per_map_unit, np.degrees(np.arctan2(east, north))
-        lon0, lat0 = self._to_geodetic.transform(x0, y0)
-        lon1, lat1 = self._to_geodetic.transform(x1, y1)
-        azimuth, _, length = self._geod.inv(
-            *(np.asarray(v) * self._degrees for v in (lon0, lat0, lon1, lat1))
-        )
+        ends = [np.atleast_1d(np.asarray(v, dtype=float)) for v in (x0, y0, x1, y1)]
+        degrees = (*self._to_geographic.transform(*ends[:2]), *self._to_geographic.transform(*ends[2:]))
+        azimuth, _, length = self.distances.geod.inv(*(np.asarray(v) * self._degrees for v in degrees))
         return np.asarray(length), np.asarray(azimuth)
 
 
@@ -199,8 +192,7 @@ class StreamNetwork:
         self.begins = into[source] == 0
         self.ends = out_of[target] == 0
         self._measure()
-        ground = self._ground_at[self._offsets[1:] - 1] - self._ground_at[self._offsets[:-1]]
-        self.chain_start = self._distances(source, target, ground, place)
+        self.chain_start = self._distances(source, target, self._ground_length, place)
 
     def _measure(self) -> None:
         xy, owner = shapely.get_coordinates(self.chains, return_index=True)
@@ -208,16 +200,16 @@ class StreamNetwork:
         self._offsets = np.concatenate(
             [[0], np.cumsum(np.bincount(owner, minlength=len(self.chains)))]
         ).astype(int)
-        self._map_at = np.zeros(len(xy))
-        self._ground_at = np.zeros(len(xy))
-        if len(xy) > 1:
-            same = owner[1:] == owner[:-1]
-            steps = np.where(same, np.hypot(*(xy[1:] - xy[:-1]).T), 0.0)
-            metres = np.zeros(len(xy) - 1)
-            a, b = xy[:-1][same], xy[1:][same]
-            metres[same] = self.ground.inverse(a[:, 0], a[:, 1], b[:, 0], b[:, 1])[0]
-            self._map_at[1:] = np.cumsum(steps)
-            self._ground_at[1:] = np.cumsum(metres)
+        steps = np.zeros(len(xy))
+        steps[1:] = np.where(owner[1:] == owner[:-1], np.hypot(*np.diff(xy, axis=0).T), 0.0)
+        # Chain by chain, so that a distance does not depend on the other streams, to the last bit.
+        self._map_at = np.concatenate([np.cumsum(run) for run in np.split(steps, self._offsets[1:-1])])
+        self._base = np.cumsum(self.lengths) - self.lengths
+        self._measured = None
+        self._ground_length = np.zeros(len(self.chains))
+        if len(xy):
+            self._measured = self.ground.distances.measure(xy[:, 0], xy[:, 1], self._offsets[:-1])
+            self._ground_length = self._measured.vertex_stations[self._offsets[1:] - 1]
 
     def _distances(self, source, target, lengths, place) -> np.ndarray:
         """Return the stream distance at the start of each chain: the longest way from upstream."""
@@ -310,7 +302,7 @@ class StreamNetwork:
         owner = np.repeat(np.arange(len(first)), sizes)
         within = np.arange(len(owner)) - np.repeat(np.cumsum(sizes) - sizes, sizes)
         geometry = shapely.linestrings(self._xy[np.repeat(first, sizes) + within], indices=owner)
-        return geometry, chain, self._map_at[first] - self._map_at[self._offsets[chain]]
+        return geometry, chain, self._map_at[first]
 
     @property
     def pieces(self) -> np.ndarray:
@@ -346,14 +338,11 @@ class StreamNetwork:
         if not len(chains):
             return np.empty(0)
         begin, end = self._offsets[chains], self._offsets[chains + 1]
-        position = self._map_at[begin] + along
-        segment = np.clip(np.searchsorted(self._map_at, position, side="right") - 1, begin, end - 2)
+        key = self._map_at + np.repeat(self._base, np.diff(self._offsets))
+        segment = np.clip(np.searchsorted(key, self._base[chains] + along, side="right") - 1, begin, end - 2)
         step = self._map_at[segment + 1] - self._map_at[segment]
-        share = np.clip((position - self._map_at[segment]) / step, 0.0, 1.0)
-        a = self._xy[segment]
-        b = a + share[:, None] * (self._xy[segment + 1] - a)
-        beyond = self.ground.inverse(a[:, 0], a[:, 1], b[:, 0], b[:, 1])[0]
-        return self.chain_start[chains] + self._ground_at[segment] - self._ground_at[begin] + beyond
+        share = np.clip((along - self._map_at[segment]) / step, 0.0, 1.0)
+        return self.chain_start[chains] + self._measured.stations(segment, share)
 
     def stretch(self, chains: np.ndarray, low: np.ndarray, high: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return the places at two map distances along a chain, upstream and downstream, each shape (n, 2).
