@@ -12,7 +12,6 @@ from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import brentq
 
 from terrain2q.hydraulics.conveyance import manning_conveyance
 from terrain2q.hydraulics.wetted import Ground
@@ -21,6 +20,12 @@ Floats = NDArray[np.float64]
 
 _ROUNDING = 1e-12
 """Two conveyances, or two stages above the lowest ground, that differ by less are the same number."""
+
+_HALVINGS = 50
+"""How often an interval in which conveyance turns is halved at most: down to rounding."""
+
+_SAMPLES = 17
+"""Points of an interval at which the slope of specific energy is looked at for turns."""
 
 
 @dataclass(frozen=True)
@@ -237,10 +242,15 @@ class DividedProfile:
         return found
 
     @cached_property
+    def _at_breaks(self) -> tuple[Wet, Wet]:
+        """Hydraulics just above and just below every break."""
+        return self.wet(self.breaks, passed=True), self.wet(self.breaks)
+
+    @cached_property
     def laws(self) -> _Laws:
         """The closed form between all breaks."""
         breaks = self.breaks
-        above, below = self.wet(breaks, passed=True), self.wet(breaks)
+        above, below = self._at_breaks
         span = np.append(np.diff(breaks), np.inf)[:, None]
 
         def rate(start: Floats, end: Floats) -> Floats:
@@ -303,61 +313,84 @@ class DividedProfile:
         return k.sum(axis=1), (k * grows).sum(axis=1)
 
     def _growth(self, index, area: Floats, width: Floats, perimeter: Floats, n: Floats) -> Floats:
-        """Derivative of the logarithm of each subarea's conveyance with stage; 0 where it is dry."""
+        """Return the derivative of each subarea's log conveyance with stage; 0 where it is dry."""
         p_rate, n_rate = self.laws.perimeter_rate[index], self.laws.n_rate[index]
-        wet = area > 0
-
-        def over(top: Floats, bottom: Floats, where) -> Floats:
-            return np.divide(top, bottom, out=np.zeros_like(bottom), where=where)
-
-        widens = over(width, area, wet)
-        grows = 5 / 3 * widens - over(2 / 3 * p_rate, perimeter, wet) - np.where(wet, n_rate / n, 0.0)
+        widens = _over(width, area)
+        grows = 5 / 3 * widens - _over(2 / 3 * p_rate, perimeter)
+        if self.roughness.varies:
+            grows -= n_rate / n
+        grows[area <= 0] = 0.0
         if self.roughness.together:
             c = self.roughness.channel
-            whole, around = area[:, c].sum(axis=1), perimeter[:, c].sum(axis=1)
-            under = whole > 0
             power, share = (1.5, 2 / 3) if self.roughness.composite == "horton" else (2.0, 1 / 2)
             rough = perimeter[:, c] * n[:, c] ** power
             rougher = p_rate[:, c] * n[:, c] ** power + power * rough * n_rate[:, c] / n[:, c]
-            group = 2 / 3 * over(width[:, c].sum(axis=1), whole, under)
-            group -= share * over(rougher.sum(axis=1), rough.sum(axis=1), under)
-            group -= (2 / 3 - share) * over(p_rate[:, c].sum(axis=1), around, under)
+            group = 2 / 3 * _over(width[:, c].sum(axis=1), area[:, c].sum(axis=1))
+            group -= share * _over(rougher.sum(axis=1), rough.sum(axis=1))
+            group -= (2 / 3 - share) * _over(p_rate[:, c].sum(axis=1), perimeter[:, c].sum(axis=1))
             # each carries its share of the area at the velocity of the whole
-            grows[:, c] = np.where(wet[:, c], group[:, None] + widens[:, c], 0.0)
+            grows[:, c] = np.where(area[:, c] > 0, group[:, None] + widens[:, c], 0.0)
         return grows
 
-    def _enclosure(self, index: int, low: float, high: float) -> tuple[float, float]:
-        """Bounds of the conveyance between two offsets: it grows with area and falls with perimeter and n."""
-        a, _, p, n = self._between(np.array([index, index]), np.array([low, high]))
-        least = self.roughness.conveyance(a[:1], p[1:], n.max(axis=0)[None], self.constant)
-        most = self.roughness.conveyance(a[1:], p[:1], n.min(axis=0)[None], self.constant)
-        return float(least.sum()), float(most.sum())
+    def _bounds(self, index, low: Floats, high: Floats) -> tuple[Floats, Floats, NDArray[np.bool_]]:
+        """Bounds of the conveyance between two offsets, and whether it surely only rises or only falls there.
 
-    def _direction(self, index: int, low: float, high: float) -> int:
-        """1 where conveyance surely rises between two offsets, -1 where it surely falls, else 0."""
+        Conveyance grows with area and falls with perimeter and n, each of which is known at both ends.
+        """
+        a_low, t_low, p_low, n_low = self._between(index, low)
+        a_high, t_high, p_high, n_high = self._between(index, high)
+        p_rate, n_rate = self.laws.perimeter_rate[index], self.laws.n_rate[index]
+        least = self.roughness.conveyance(a_low, p_high, n_low, self.constant)
+        most = self.roughness.conveyance(a_high, p_low, n_high, self.constant)
+        # the derivative of each logarithm, at its least and at its most; n only falls with stage
+        slowest = _over(5 / 3 * t_low, a_high) - _over(2 / 3 * p_rate, p_low) - n_rate / n_low
+        fastest = _over(5 / 3 * t_high, a_low) - _over(2 / 3 * p_rate, p_high) - n_rate / n_high
+        fresh = (a_low <= 0) | (p_low <= 0)
+        # where water has only just come conveyance rises, by how much is not bounded
+        slowest, fastest = np.where(fresh, 0.0, slowest), np.where(fresh, np.inf, fastest)
+        parts = [(least, most, slowest, fastest)]
         if self.roughness.together:
-            return 0
-        law = self.laws
-        a, t, p, n = self._between(np.array([index, index]), np.array([low, high]))
-        p_rate, n_rate = law.perimeter_rate[index], law.n_rate[index]
-        k_least = self.roughness.conveyance(a[:1], p[1:], n.max(axis=0)[None], self.constant)[0]
-        k_most = self.roughness.conveyance(a[1:], p[:1], n.min(axis=0)[None], self.constant)[0]
-        least = most = 0.0
-        for i in range(a.shape[1]):
-            if a[1, i] <= 0:
-                continue
-            widen = 5 / 3 * t[:, i]
-            if a[0, i] <= 0 or p[0, i] <= 0:
-                # water has only just come here: it can only rise, by how much is not bounded
-                most = np.inf
-                continue
-            narrow = 2 / 3 * p_rate[i]
-            smooth = -n_rate[i] / n[:, i]
-            slowest = widen[0] / a[1, i] - narrow / p[0, i] + min(smooth)
-            fastest = widen[1] / a[0, i] - narrow / p[1, i] + max(smooth)
-            least += slowest * (k_most[i] if slowest < 0 else k_least[i])
-            most += fastest * (k_most[i] if fastest > 0 else k_least[i])
-        return 1 if least > 0 else -1 if most < 0 else 0
+            c = self.roughness.channel
+            alone = np.setdiff1d(np.arange(a_low.shape[1]), c)
+            group = self._group_growth(
+                *(v[:, c] for v in (a_low, t_low, p_low, n_low, a_high, t_high, p_high, n_high)),
+                p_rate[:, c],
+                n_rate[:, c],
+            )
+            parts = [
+                tuple(v[:, alone] for v in parts[0]),
+                (least[:, c].sum(axis=1)[:, None], most[:, c].sum(axis=1)[:, None], *group),
+            ]
+        lower = upper = 0.0
+        for k_least, k_most, slow, fast in parts:
+            wet = k_most > 0
+            slow, fast = np.where(wet, slow, 0.0), np.where(wet, fast, 0.0)
+            lower = lower + (slow * np.where(slow < 0, k_most, k_least)).sum(axis=1)
+            upper = upper + (fast * np.where(fast > 0, np.where(wet, k_most, 1.0), k_least)).sum(axis=1)
+        return least.sum(axis=1), most.sum(axis=1), (lower > 0) | (upper < 0)
+
+    def _group_growth(self, a_low, t_low, p_low, n_low, a_high, t_high, p_high, n_high, p_rate, n_rate):
+        """Bounds of the derivative of the logarithm of the composite conveyance, each shape (rows, 1)."""
+
+        def whole(values: Floats) -> Floats:
+            return values.sum(axis=1, keepdims=True)
+
+        power, share = (1.5, 2 / 3) if self.roughness.composite == "horton" else (2.0, 1 / 2)
+        # perimeters weighted with roughness: bounds of their sum and of its growth
+        thin, thick = whole(p_low * n_high**power), whole(p_high * n_low**power)
+        grows_most = whole(p_rate * n_low**power + power * p_low * n_high ** (power - 1) * n_rate)
+        grows_least = whole(p_rate * n_high**power + power * p_high * n_low ** (power - 1) * n_rate)
+        slowest = 5 / 3 * _over(whole(t_low), whole(a_high))
+        slowest -= share * _over(grows_most, np.where(grows_most > 0, thin, thick))
+        slowest -= (2 / 3 - share) * _over(whole(p_rate), whole(p_low))
+        fastest = 5 / 3 * _over(whole(t_high), whole(a_low))
+        fastest -= share * _over(grows_least, np.where(grows_least > 0, thick, thin))
+        fastest -= (2 / 3 - share) * _over(whole(p_rate), whole(p_high))
+        fresh = (whole(a_low) <= 0) | (whole(p_low) <= 0)
+        # with n constant it can only rise at first; where n changes that is not proven
+        return np.where(fresh, -np.inf if (n_rate != 0).any() else 0.0, slowest), np.where(
+            fresh, np.inf, fastest
+        )
 
     # --- backward: every stage that carries a conveyance -------------------------------------------
 
@@ -377,27 +410,40 @@ class DividedProfile:
             `at_bank` is True where the stage is a bank's top: the target lies between the conveyance
             just before and just after the hollow behind it has filled.
         """
+        return self.stages_for_each(np.array([target], dtype=float), cap)[0]
+
+    def stages_for_each(self, targets: Floats, cap: float = np.inf) -> list[list[tuple[float, bool]]]:
+        """Return :meth:`stages_for` of each of several conveyances, found together."""
         law = self.laws
-        breaks, above, below = law.breaks, law.above, law.below
-        inside = breaks <= cap
-        found: list[tuple[float, bool]] = []
-        # where conveyance jumps up at a break, the rating is closed by the filling of the hollow
-        for k in np.flatnonzero((below < target) & (target <= above) & inside):
-            found.append((float(breaks[k]), bool(above[k] - below[k] > _ROUNDING * above[k])))
-        reachable = breaks < cap
-        ends = np.append(below[1:], np.inf)
-        simple = np.flatnonzero(law.rising & (above < target) & (target <= ends) & reachable)
-        if simple.size:
-            spans = law.span[simple]
-            if not np.isfinite(spans[-1]):
-                spans = spans.copy()
-                spans[-1] = self._reach_up(target)
-            offsets = self._solve(simple, np.zeros(simple.size), spans, target)
-            found += [(float(breaks[k] + d), False) for k, d in zip(simple, offsets, strict=True)]
-        for k in np.flatnonzero(~law.rising & reachable):
-            span = float(law.span[k]) if np.isfinite(law.span[k]) else self._reach_up(target)
-            found += [(float(breaks[k] + d), False) for d in self._search(int(k), span, target)]
-        return self._distinct([f for f in found if f[0] <= cap])
+        wanted = targets[:, None]
+        # Conveyance is followed through all breaks, just below and just above each, so that every
+        # passage from less than the target to the target or more, or back, lies in one step.
+        short_below, short_above = law.below < wanted, law.above < wanted
+        jump, k = np.nonzero(short_below & ~short_above & (law.breaks <= cap))
+        at_bank = law.above[k] - law.below[k] > _ROUNDING * law.above[k]
+        found = [(jump, law.breaks[k], at_bank)]
+        short_end = np.append(short_below[:, 1:], np.zeros((targets.size, 1), dtype=bool), axis=1)
+        reachable = law.breaks < cap
+        spans = np.broadcast_to(law.span, short_above.shape)
+        if reachable[-1]:
+            spans = spans.copy()
+            spans[:, -1] = self._reach_up(targets.max(initial=0.0))
+        row, k = np.nonzero(short_above & ~short_end & law.rising & reachable)
+        pieces = [(row, k, np.zeros(k.size), spans[row, k], np.zeros(k.size, dtype=bool))]
+        turning = np.flatnonzero(~law.rising & reachable)
+        if turning.size:
+            row, k = (v.ravel() for v in np.meshgrid(np.arange(targets.size), turning, indexing="ij"))
+            pieces += self._search(row, k, spans[row, k], targets)
+        row, k, low, high, falling = (np.concatenate(v) for v in zip(*pieces, strict=True))
+        if row.size:
+            stages = law.breaks[k] + self._solve(k, low, high, targets[row], falling)
+            found.append((row, stages, np.zeros(row.size, dtype=bool)))
+        row, stages, at_bank = (np.concatenate(v) for v in zip(*found, strict=True))
+        out: list[list[tuple[float, bool]]] = [[] for _ in targets]
+        for i, stage, bank in zip(row.tolist(), stages.tolist(), at_bank.tolist(), strict=True):
+            if stage <= cap:
+                out[i].append((stage, bank))
+        return [self._distinct(one) for one in out]
 
     def _distinct(self, found: list[tuple[float, bool]]) -> list[tuple[float, bool]]:
         found.sort()
@@ -405,21 +451,21 @@ class DividedProfile:
         kept: list[tuple[float, bool]] = []
         for stage, at_bank in found:
             if kept and stage - kept[-1][0] <= near:
-                kept[-1] = (kept[-1][0], kept[-1][1]) if kept[-1][1] else (stage, at_bank)
+                if not kept[-1][1]:
+                    kept[-1] = (stage, at_bank)
             else:
                 kept.append((stage, at_bank))
         return kept
 
     def _reach_up(self, target: float) -> float:
-        """An offset above the highest break at which the conveyance is more than `target`."""
+        """Return an offset above the highest break at which the conveyance is not less than `target`."""
         last, step = np.array([self.laws.breaks.size - 1]), max(1.0, float(np.ptp(self.ground.z)))
         while self._total_between(last, np.array([step]))[0][0] < target:
             step *= 2.0
         return step
 
-    def _solve(self, index, low: Floats, high: Floats, target: float, falling: bool = False) -> Floats:
-        """Offsets at which a conveyance that only rises (or falls) meets `target`: Newton within brackets."""
-        low, high = low.astype(float), np.array(high, dtype=float)
+    def _solve(self, index, low: Floats, high: Floats, target: Floats, falling) -> Floats:
+        """Offsets at which conveyances that only rise (or fall) meet `target`: Newton within brackets."""
         x = 0.5 * (low + high)
         for _ in range(200):
             value, slope = self._total_between(index, x)
@@ -436,38 +482,49 @@ class DividedProfile:
             x = np.where(done, x, following)
         return x
 
-    def _search(self, index: int, span: float, target: float) -> list[float]:
-        """Every offset in an interval where conveyance may fall: bisected until each piece is settled."""
-        found: list[float] = []
-        pending = [(0.0, span, 0)]
-        at = np.array([index])
-        while pending:
-            low, high, depth = pending.pop()
-            least, most = self._enclosure(index, low, high)
-            if not least <= target <= most:
-                continue
-            direction = self._direction(index, low, high)
-            if direction or depth >= 50:
-                first, last = (self._total_between(at, np.array([o]))[0][0] - target for o in (low, high))
-                if first == 0:
-                    found.append(low)
-                elif first * last < 0 or last == 0:
-                    found.append(
-                        float(self._solve(at, np.array([low]), np.array([high]), target, last < 0)[0])
-                    )
-                continue
+    def _search(self, row, index, span: Floats, targets: Floats) -> list[tuple]:
+        """Pieces of intervals where conveyance may fall, each with one stage: halved until all are settled.
+
+        Returns
+        -------
+        list of (row, index, low, high, falling)
+            Arrays: row of the target, interval, offsets about the stage, and which way conveyance goes.
+        """
+        law = self.laws
+        low, high = np.zeros(index.size), span
+        first, last = law.above[index], np.append(law.below[1:], np.inf)[index]
+        pieces = []
+        for depth in range(_HALVINGS + 1):
+            least, most, settled = self._bounds(index, low, high)
+            target = targets[row]
+            # the ends count too: they decide to which side of a break a target belongs
+            kept = (np.minimum(least, np.minimum(first, last)) <= target) & (
+                target <= np.maximum(most, np.maximum(first, last))
+            )
+            crosses = (first < target) != (last < target)
+            if depth == _HALVINGS:
+                settled[:] = True
+            take = kept & settled & crosses
+            pieces.append((row[take], index[take], low[take], high[take], last[take] < target[take]))
+            split = kept & ~settled
+            if not split.any():
+                break
+            row, index, low, high, first, last = (v[split] for v in (row, index, low, high, first, last))
             middle = 0.5 * (low + high)
-            pending += [(low, middle, depth + 1), (middle, high, depth + 1)]
-        return found
+            value = self._total_between(index, middle)[0]
+            row, index = np.tile(row, 2), np.tile(index, 2)
+            low, high = np.concatenate([low, middle]), np.concatenate([middle, high])
+            first, last = np.concatenate([first, value]), np.concatenate([value, last])
+        return pieces
 
     # --- critical flow ----------------------------------------------------------------------------
 
-    def critical_stage(self, discharge: float, gravity: float) -> float:
-        r"""Return the stage of least specific energy :math:`y + \alpha Q^2 / (2 g A^2)`.
+    def critical_stages(self, discharge: Floats, gravity: float) -> Floats:
+        r"""Return the stages of least specific energy :math:`y + \alpha Q^2 / (2 g A^2)`.
 
         Parameters
         ----------
-        discharge : float
+        discharge : ndarray, shape (k,)
             > 0.
         gravity : float
 
@@ -477,75 +534,120 @@ class DividedProfile:
         specific energy has several minima (overbank flow) the least of all is taken.
         """
         law = self.laws
-        bottom = float(law.breaks[0])
+        height = law.breaks - law.breaks[0]
         head = discharge * discharge / (2.0 * gravity)
+        # above all ground, as far up as a minimum can be
+        top = np.full(head.size, height.size - 1)
+        reach = self._critical_reach(head)
+        area_top, _, perimeter_top, n_top = self._between(top, reach)
+        spread_top = _energy_spread(
+            area_top, self.roughness.conveyance(area_top, perimeter_top, n_top, self.constant)
+        )[0]
+        just_above, just_below, least = self._energy_at_breaks
+        tried = np.column_stack([
+            height + head[:, None] * just_above,
+            height[1:] + head[:, None] * just_below[1:],
+            height[-1] + reach + head * spread_top,
+        ])  # fmt: skip
+        places = np.column_stack([
+            np.broadcast_to(law.breaks, (head.size, height.size)),
+            np.broadcast_to(law.breaks[1:], (head.size, height.size - 1)),
+            law.breaks[-1] + reach,
+        ])  # fmt: skip
+        # the least inside an interval is sought only where its bound leaves room for it
+        bound = np.column_stack([
+            height[:-1] + head[:, None] * least,
+            height[-1] + head / area_top.sum(axis=1) ** 2,
+        ])  # fmt: skip
+        row, index = np.nonzero(bound < tried.min(axis=1)[:, None])
+        span = np.where(index == height.size - 1, reach[row], law.span[index])
+        part = np.linspace(0.0, 1.0, _SAMPLES)
+        offsets = part * span[:, None]
+        slopes = self._energy_slope(
+            np.repeat(index, _SAMPLES), offsets.ravel(), np.repeat(head[row], _SAMPLES)
+        ).reshape(offsets.shape)
+        inside, j = np.nonzero((slopes[:, :-1] < 0) & (slopes[:, 1:] > 0))
+        if inside.size:
+            row, index = row[inside], index[inside]
+            offset = self._flat_energy(
+                index, offsets[inside, j], offsets[inside, j + 1],
+                slopes[inside, j], slopes[inside, j + 1], head[row],
+            )  # fmt: skip
+            area, _, perimeter, n = self._between(index, offset)
+            conveyance = self.roughness.conveyance(area, perimeter, n, self.constant)
+            energy = height[index] + offset + head[row] * _energy_spread(area, conveyance)[0]
+            found = np.full((head.size, inside.size), np.inf)
+            found[row, np.arange(inside.size)] = energy
+            tried = np.column_stack([tried, found])
+            stages = law.breaks[index] + offset
+            places = np.column_stack([places, np.broadcast_to(stages, found.shape)])
+        return places[np.arange(head.size), tried.argmin(axis=1)]
 
-        def energy(stage: Floats, wet: Wet) -> Floats:
-            spread = _energy_spread(wet.area, wet.conveyance)[0]
-            return stage - bottom + head * spread
-
-        ends = np.append(law.breaks, law.breaks[-1] + self._critical_reach(head))
-        above = self.wet(law.breaks, passed=True)
-        below = self.wet(ends)
-        with np.errstate(invalid="ignore"):
-            tried = np.concatenate([energy(law.breaks, above), energy(ends, below)])
-        places = np.concatenate([law.breaks, ends])
-        k = int(np.nanargmin(tried))
-        best, where = float(tried[k]), float(places[k])
-        # alpha is never below 1, so specific energy in an interval is at least that of its whole area
-        area = below.area[1:].sum(axis=1)
-        bound = (
-            law.breaks - bottom + np.divide(head, area * area, out=np.full(area.size, np.inf), where=area > 0)
+    @cached_property
+    def _energy_at_breaks(self) -> tuple[Floats, Floats, Floats]:
+        """Return alpha / A² just above and below each break, and its lower bound up to the next break."""
+        above, below = self._at_breaks
+        index = np.arange(self.breaks.size - 1)
+        area_low, _, perimeter_low, n_low = self._between(index, np.zeros(index.size))
+        area, _, perimeter, n = self._between(index, self.laws.span[:-1])
+        slow = self.roughness.conveyance(area_low, perimeter, n_low, self.constant)
+        fast = self.roughness.conveyance(area, perimeter_low, n, self.constant).sum(axis=1)[:, None]
+        by_share = _over(_over(slow, np.broadcast_to(fast, slow.shape)) ** 3, area * area).sum(axis=1)
+        whole = area.sum(axis=1)
+        by_area = np.divide(1.0, whole * whole, out=np.full(whole.size, np.inf), where=whole > 0)
+        return (
+            _energy_spread(above.area, above.conveyance)[0],
+            _energy_spread(below.area, below.conveyance)[0],
+            np.maximum(by_share, by_area),  # alpha is never below 1
         )
-        for i in np.flatnonzero(bound < best):
-            span = ends[i + 1] - law.breaks[i]
-            offsets = np.linspace(0.0, span, 17)
-            index = np.full(offsets.size, i)
-            slopes = self._energy_slope(index, offsets, head)
-            for j in np.flatnonzero((slopes[:-1] < 0) & (slopes[1:] > 0)):
-                low, high = float(offsets[j]), float(offsets[j + 1])
-                offset = self._flat_energy(int(i), low, high, head)
-                area_, _, perimeter, n = self._between(np.array([i]), np.array([offset]))
-                conveyance = self.roughness.conveyance(area_, perimeter, n, self.constant)
-                value = law.breaks[i] - bottom + offset + head * _energy_spread(area_, conveyance)[0][0]
-                if value < best:
-                    best, where = float(value), float(law.breaks[i] + offset)
-        return where
 
-    def _critical_reach(self, head: float) -> float:
-        """An offset above the highest ground beyond which specific energy only rises."""
+    def _critical_reach(self, head: Floats) -> Floats:
+        """Offsets above the highest ground beyond which specific energy only rises."""
         width = self.laws.width[-1].sum()
         # above all ground alpha stays within the number of parts squared; critical depth of a
         # rectangle of the whole width with that alpha is further up than any minimum
         parts = max(1, self.ground.count) ** 2
-        return float(max(1.0, np.cbrt(2.0 * head * parts / width**2)) * 2.0)
+        return np.maximum(1.0, np.cbrt(2.0 * head * parts / width**2)) * 2.0
 
-    def _energy_slope(self, index, offset: Floats, head: float) -> Floats:
-        """Derivative of specific energy with stage from the closed form."""
+    def _energy_slope(self, index, offset: Floats, head: Floats) -> Floats:
+        """Return the derivative of specific energy with stage, from the closed form."""
         area, width, perimeter, n = self._between(index, offset)
         k = self.roughness.conveyance(area, perimeter, n, self.constant)
         grows = self._growth(index, area, width, perimeter, n)
-        spread, terms, total = _energy_spread(area, k)
-        widens = np.divide(width, area, out=np.zeros_like(area), where=area > 0)
-        rate = np.divide((k * grows).sum(axis=1), total, out=np.zeros_like(total), where=total > 0)
+        _, terms, total = _energy_spread(area, k)
+        widens = _over(width, area)
+        rate = _over((k * grows).sum(axis=1), total)
         slope = (terms * (3.0 * (grows - rate[:, None]) - 2.0 * widens)).sum(axis=1)
         return np.where(total > 0, 1.0 + head * slope, -np.inf)
 
-    def _flat_energy(self, index: int, low: float, high: float, head: float) -> float:
-        at = np.array([index])
-        if not np.isfinite(self._energy_slope(at, np.array([low]), head)[0]):
-            # at the very bottom the energy is infinite: step off it
-            while high - low > 0 and self._energy_slope(at, np.array([0.5 * (low + high)]), head)[0] > 0:
-                high = 0.5 * (low + high)
-            low = 0.5 * (low + high)
-        return brentq(
-            lambda offset: float(self._energy_slope(at, np.array([offset]), head)[0]),
-            low, high, xtol=1e-15, rtol=8.9e-16,
-        )  # fmt: skip
+    def _flat_energy(self, index, low, high, at_low, at_high, head: Floats) -> Floats:
+        """Offsets at which specific energy turns from falling to rising: secants within brackets."""
+        kept = np.zeros(low.size)  # which end the last step has kept
+        for _ in range(200):
+            with np.errstate(invalid="ignore"):
+                secant = high - at_high * (high - low) / (at_high - at_low)
+            middle = 0.5 * (low + high)
+            # at the very bottom energy falls without bound, and a secant says nothing
+            x = np.where(np.isfinite(at_low) & (secant > low) & (secant < high), secant, middle)
+            value = self._energy_slope(index, x, head)
+            falls = value < 0
+            # an end that stays twice counts half (the Illinois rule), so that both ends close in
+            at_high = np.where(falls, np.where(kept == 1, 0.5 * at_high, at_high), value)
+            at_low = np.where(falls, value, np.where(kept == -1, 0.5 * at_low, at_low))
+            low, high = np.where(falls, x, low), np.where(falls, high, x)
+            kept = np.where(falls, 1, -1)
+            if ((value == 0) | (high - low <= 4e-16 * high)).all():
+                break
+        return x
+
+
+def _over(top: Floats, bottom: Floats) -> Floats:
+    """Return a quotient, 0 where the divisor is not above 0."""
+    return np.divide(top, bottom, out=np.zeros_like(bottom), where=bottom > 0)
 
 
 def _energy_spread(area: Floats, conveyance: Floats) -> tuple[Floats, Floats, Floats]:
-    """alpha / A² = sum(K_i³ / A_i²) / K³, its terms, and K; infinite where there is no water."""
+    """Return alpha / A² = sum(K_i³ / A_i²) / K³, infinite where there is no water, its terms, and K."""
     total = conveyance.sum(axis=1)
     share = np.divide(conveyance, total[:, None], out=np.zeros_like(area), where=total[:, None] > 0)
     terms = np.divide(share**3, area * area, out=np.zeros_like(area), where=area > 0)

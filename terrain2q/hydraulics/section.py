@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from functools import cached_property
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -494,8 +495,10 @@ class Section:
         """
         q, s = np.broadcast_arrays(_not_negative("discharge", discharge), _positives("slope", slope))
         target = (q / np.sqrt(s)).ravel()
-        found = [self._profile.stages_for(t)[-1][0] if t > 0 else self.lowest_ground for t in target]
-        return _like(np.array(found).reshape(q.shape))
+        found = np.full(target.size, self.lowest_ground)
+        flows = target > 0
+        found[flows] = [stages[-1][0] for stages in self._profile.stages_for_each(target[flows])]
+        return _like(found.reshape(q.shape))
 
     def flow_state(self, discharge: float, slope: float) -> FlowState:
         """Return the stage, every path and the hydraulics by subarea of one discharge > 0."""
@@ -534,12 +537,10 @@ class Section:
         for all ground that water has reached.
         """
         q = _not_negative("discharge", discharge)
-        gravity = self.system.gravity
-        found = [
-            self._profile.critical_stage(float(v), gravity) if v > 0 else self.lowest_ground
-            for v in q.ravel()
-        ]
-        return _like(np.array(found).reshape(q.shape))
+        found = np.full(q.size, self.lowest_ground)
+        flows = q.ravel() > 0
+        found[flows] = self._profile.critical_stages(q.ravel()[flows], self.system.gravity)
+        return _like(found.reshape(q.shape))
 
     def slope_for(self, discharge: ArrayLike, stage: ArrayLike) -> Floats:
         """Return the energy slope on which uniform flow carries a discharge > 0 at a stage.
@@ -635,7 +636,7 @@ class Section:
         needed = target - others
         if needed <= 0:
             raise NoAnswerError(
-                f"the other subareas alone carry {others * root:g}, more than {discharge:g}, at stage {stage:g}",
+                f"at stage {stage:g} the other subareas carry {others * root:g}, not less than {discharge:g}",
                 nearest=others * root,
                 where=self.section_id,
                 fix="look at a lower stage, or at the roughness of the others",
@@ -711,7 +712,7 @@ class Section:
         return pd.DataFrame(self.rating_arrays(slope, stages))
 
     def rating_arrays(self, slope: float, stages: ArrayLike | int | None = None, top: float | None = None):
-        """Return the rating as a dict of arrays; `top` is the height of even steps above the lowest ground."""
+        """Return the rating as a dict of arrays; `top` is how high even steps go above the lowest ground."""
         root = np.sqrt(float(_positives("slope", slope)))
         tops = np.array(self.bank_tops)
         if stages is None or isinstance(stages, int | np.integer):
@@ -781,7 +782,7 @@ def _check_cover(subareas: tuple[Subarea, ...], x: Floats) -> tuple[Subarea, ...
             f"the profile from {x[0]:g} to {x[-1]:g}",
             where="Section",
         )
-    for one, following in zip(subareas, subareas[1:], strict=False):
+    for one, following in pairwise(subareas):
         if abs(following.start - one.end) > near:
             word = "a gap" if following.start > one.end else "an overlap"
             raise InputError(
@@ -797,7 +798,7 @@ def _ratio(top: Floats, bottom: Floats) -> Floats:
 
 
 def _like(values: Floats):
-    """A plain float where one number was asked for."""
+    """Return a plain float where one number was asked for."""
     return values if np.ndim(values) else float(values)
 
 

@@ -16,8 +16,8 @@ from terrain2q.errors import ProfileError
 
 Floats = NDArray[np.float64]
 
-# Stages times segments that are worked on at once: keeps the temporaries within a few megabytes.
-_BLOCK = 400_000
+_BLOCK = 30_000
+"""Stages times segments that are worked on at once: the temporaries then stay in the processor's cache."""
 
 
 def check_profile(stations: ArrayLike, elevations: ArrayLike) -> tuple[Floats, Floats]:
@@ -226,7 +226,7 @@ class Ground:
 
     def pool(self, source: int, stage: float, *, passed: bool = False) -> Pool:
         """Return the stretch about point `source` that one level at `stage` covers."""
-        x, z = self.x, self.z
+        z = self.z
         dry = z > stage if passed else z >= stage
         right = np.flatnonzero(dry[source:])
         left = np.flatnonzero(dry[source::-1])
