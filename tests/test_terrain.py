@@ -323,6 +323,21 @@ def test_every_block_touched_is_read_once_and_no_other(tmp_path, monkeypatch):
     np.testing.assert_allclose(got, independent_bilinear(cells, column, row), atol=1e-6)
 
 
+def test_strips_of_single_rows_are_read_many_at_a_time(tmp_path, monkeypatch):
+    terrain = Terrain(write(tmp_path / "a.tif", rough_ground(600, 4_096, dtype=np.float32), blockysize=1))
+    shapes, plain = [], tiles_module._Readers.read
+
+    def noting(self, tile, row, column, rows, columns):
+        shapes.append((rows, columns))
+        return plain(self, tile, row, column, rows, columns)
+
+    monkeypatch.setattr(tiles_module._Readers, "read", noting)
+    terrain.elevations(*to_map(NORTH_UP, *random_places(5_000, 4_096, 600)))
+    # 2^18 cells are 64 rows here.
+    assert len(shapes) == 10
+    assert max(rows for rows, _ in shapes) == 64
+
+
 def test_overlapping_tiles_with_gaps_are_still_read_once_a_block(tmp_path, monkeypatch):
     cells = rough_ground(160, 150)
     cells[np.random.default_rng(8).uniform(size=cells.shape) < 0.05] = np.nan
