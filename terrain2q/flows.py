@@ -56,9 +56,10 @@ def read_flows(study: Study) -> list[Flow]:
     if study.flows is None:
         return []
     flow_factor = 1.0 / study.system.per_si("flow")
-    if study.flows.events is not None:
-        return [Flow(event, discharge * flow_factor) for event, discharge in study.flows.events.items()]
-    return _read_csv(study.flows.path, flow_factor, 1.0 / study.system.per_si("length"))
+    if study.flows.path is not None:
+        return _read_csv(study.flows.path, flow_factor, 1.0 / study.system.per_si("length"))
+    events = study.flows.events or {}
+    return [Flow(event, discharge * flow_factor) for event, discharge in events.items()]
 
 
 def event_names(flows: Sequence[Flow]) -> list[str]:

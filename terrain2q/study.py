@@ -17,7 +17,7 @@ import math
 import os
 import re
 import tomllib
-from collections.abc import Collection, Iterator, Mapping
+from collections.abc import Callable, Collection, Iterator, Mapping
 from dataclasses import MISSING, dataclass, field, fields
 from pathlib import Path
 from typing import Any, ClassVar
@@ -68,6 +68,7 @@ def key(help: str, kind: str, example: str, *, default: object = None, **more: A
     return field(default=default, metadata={"key": Key(help, kind, example, **more)})
 
 
+@dataclass(frozen=True)
 class Table:
     """One table of the study file: a frozen dataclass whose fields are made by :func:`key`."""
 
@@ -366,8 +367,8 @@ def _choice(about: Key, value: object) -> str:
     return value
 
 
-def positive_number(value: object) -> float:
-    """Return `value` as a float above zero, or raise :class:`_Refused`; bool is not a number."""
+def _number(about: Key, value: object) -> float:
+    # To Python true is a number; to a person it is not.
     if isinstance(value, bool) or not isinstance(value, int | float):
         raise _Refused("a number above zero")
     try:
@@ -379,10 +380,6 @@ def positive_number(value: object) -> float:
     if number <= 0.0:
         raise _Refused("a number above zero", "number-not-positive")
     return number
-
-
-def _number(about: Key, value: object) -> float:
-    return positive_number(value)
 
 
 def _count(about: Key, value: object) -> int:
@@ -432,7 +429,7 @@ def _events(about: Key, value: object) -> dict[str, float]:
         if not isinstance(name, str) or not name.strip():
             raise _Refused("a name for each event")
         try:
-            numbers[name] = positive_number(discharge)
+            numbers[name] = _number(about, discharge)
         except _Refused as refused:
             raise _Refused(f'{refused.needed} for "{name}"', refused.code) from None
     return numbers
@@ -534,7 +531,9 @@ def _absent_files(kind: str, value: Any) -> list[str]:
     """Return those of the paths in a placed value that are not there."""
     if kind == "file":
         return [] if value.is_file() else [str(value)]
-    paths = {"layer": lambda: [split_layer(value)[0]], "rasters": lambda: list(value)}.get(kind, list)()
+    if kind not in ("layer", "rasters"):
+        return []
+    paths = [split_layer(value)[0]] if kind == "layer" else value
     return [path for path in paths if not _is_virtual(path) and not os.path.exists(path)]
 
 
@@ -554,7 +553,7 @@ def nearest(word: str, known: Collection[str]) -> str:
 
 
 def _read_table(
-    cls: type[Table], given: Mapping[str, object], place
+    cls: type[Table], given: Mapping[str, object], place: Callable[[str], str]
 ) -> tuple[dict[str, Any], list[InputError]]:
     """Return the checked values of the keys given, and every problem; `place` says where a key stands."""
     table_name, keys = _table_name(cls), keys_of(cls)
@@ -579,7 +578,9 @@ def _read_table(
     meant = {
         close for name in given if name not in keys for close in difflib.get_close_matches(name, keys, n=1)
     }
-    absent = [(name,) for name, about in keys.items() if about.needed and name not in given]
+    absent: list[tuple[str, ...]] = [
+        (name,) for name, about in keys.items() if about.needed and name not in given
+    ]
     absent += cls.missing([name for name in given if name in keys])
     for names in absent:
         if not meant.intersection(names):
@@ -693,6 +694,83 @@ def _line_numbers(text: str) -> dict[tuple[str, str], int]:
     return found
 
 
+class _Given:
+    """What a study file and options give, and every problem met on the way."""
+
+    def __init__(self, path: Path | None) -> None:
+        self.path = path
+        self.here = Path.cwd()
+        self.folder = self.here if path is None else path.absolute().parent
+        self.values: dict[str, dict[str, object]] = {}
+        self.from_options: set[tuple[str, str]] = set()
+        self.problems: list[InputError] = []
+        # A table that was most likely misspelt is reported once, as unknown, not as missing too.
+        self.meant: set[str] = set()
+        self.lines: dict[tuple[str, str], int] = {}
+        if path is not None:
+            self._take_file(path)
+
+    def _take_file(self, path: Path) -> None:
+        tables, text = _read_toml(path)
+        self.lines = _line_numbers(text)
+        for name, value in tables.items():
+            where = self.place(name, "") if (name, "") in self.lines else self.place("", name)
+            if name not in TABLES:
+                self.meant.update(difflib.get_close_matches(name, TABLES, n=1))
+                self.problems.append(_unknown_table(name, value, where))
+            elif isinstance(value, dict):
+                self.values[name] = dict(value)
+            else:
+                self.meant.add(name)
+                what, fix = f"{name} is not a table of keys", f"begin it with [{name}]"
+                self.problems.append(InputError("value-not-allowed", what, where=where, fix=fix))
+
+    def take_options(self, options: Mapping[str, object]) -> None:
+        """Put options before the file; one that excludes a key of the file takes its place."""
+        every = {f"{table}.{name}": (table, name) for table, cls in TABLES.items() for name in keys_of(cls)}
+        for option, value in options.items():
+            if option not in every:
+                what = f'unknown option "{option}"; the nearest known is {nearest(option, every)}'
+                self.problems.append(InputError("key-unknown", what, where=f"--{option}"))
+                continue
+            table, name = every[option]
+            self.from_options.add((table, name))
+            kind = keys_of(TABLES[table])[name].kind
+            self.values.setdefault(table, {})[name] = _from_option(kind, value)
+        for table, name in self.from_options:
+            for pair in TABLES[table].either:
+                if name in pair:
+                    other = pair[1 - pair.index(name)]
+                    if (table, other) not in self.from_options:
+                        self.values[table].pop(other, None)
+
+    def place(self, table: str, name: str) -> str:
+        """Return where a key stands (a table, where `name` is empty), in words."""
+        if (table, name) in self.from_options:
+            return f"--{table}.{name}"
+        if self.path is None:
+            return "the options"
+        line = self.lines.get((table, name), self.lines.get((table, "")))
+        return f"{self.path}" + (f", line {line}" if line else "") + (f", [{table}]" if table else "")
+
+    def table(self, table: str) -> Table | None:
+        """Return a table, checked and with its paths made absolute; None where it has problems."""
+        cls = TABLES[table]
+        values, problems = _read_table(cls, self.values.get(table, {}), lambda name: self.place(table, name))
+        for name, about in keys_of(cls).items():
+            if about.kind == "folder":
+                values.setdefault(name, default_of(cls, name))
+            if name in values:
+                is_option = (table, name) in self.from_options
+                values[name] = _placed(about.kind, values[name], self.here if is_option else self.folder)
+                for absent in _absent_files(about.kind, values[name]):
+                    what = f"{table}.{name}: no file {absent}"
+                    fix = "correct the path; it starts at the current folder" if is_option else ""
+                    problems.append(InputError("file-missing", what, where=self.place(table, name), fix=fix))
+        self.problems += problems
+        return None if problems else cls(**values)
+
+
 def load_study(
     path: str | os.PathLike[str] | None,
     options: Mapping[str, object] | None = None,
@@ -723,95 +801,14 @@ def load_study(
         Codes: ``file-missing``, ``file-unreadable``, ``study-not-toml``, ``key-unknown``,
         ``key-missing``, ``key-conflict``, ``value-not-allowed``, ``number-not-positive``.
     """
-    here = Path.cwd()
-    problems: list[InputError] = []
-    given: dict[str, dict[str, object]] = {}
-    lines: dict[tuple[str, str], int] = {}
-    unknown: list[str] = []
-    study_path = None if path is None else Path(path)
-    if study_path is not None:
-        tables, text = _read_toml(study_path)
-        lines = _line_numbers(text)
-        for name, value in tables.items():
-            if name in TABLES and isinstance(value, dict):
-                given[name] = dict(value)
-                continue
-            where = (
-                _where(study_path, lines, name, "")
-                if (name, "") in lines
-                else _where(study_path, lines, "", name)
-            )
-            if name in TABLES:
-                problems.append(
-                    InputError(
-                        "value-not-allowed",
-                        f"{name} is not a table of keys",
-                        where=where,
-                        fix=f"begin it with [{name}]",
-                    )
-                )
-                given[name] = {}
-            else:
-                unknown.append(name)
-                problems.append(_unknown_table(name, value, where))
-
-    from_options: set[tuple[str, str]] = set()
-    for option, value in (options or {}).items():
-        table_name, _, name = option.partition(".")
-        if table_name not in TABLES or name not in keys_of(TABLES[table_name]):
-            every = [f"{table}.{k}" for table, cls in TABLES.items() for k in keys_of(cls)]
-            what = f'unknown option "{option}"; the nearest known is {nearest(option, every)}'
-            problems.append(InputError("key-unknown", what, where=f"--{option}"))
-            continue
-        from_options.add((table_name, name))
-        values = given.setdefault(table_name, {})
-        values[name] = _from_option(keys_of(TABLES[table_name])[name].kind, value)
-    for table_name, name in from_options:
-        for pair in TABLES[table_name].either:
-            if name in pair:
-                other = pair[1 - pair.index(name)]
-                if (table_name, other) not in from_options:
-                    given[table_name].pop(other, None)
-
-    folder = here if study_path is None else study_path.absolute().parent
-    # A table that was most likely misspelt is reported once, as unknown, not as missing too.
-    meant = {close for name in unknown for close in difflib.get_close_matches(name, TABLES, n=1)}
-    made: dict[str, Table | None] = {}
-    for table_name, cls in TABLES.items():
-        made[table_name] = None
-        asked = table_name in given or (table_name in ("study", *needs) and table_name not in meant)
-        if not asked and table_name not in DEFAULTED:
-            continue
-
-        def place(name: str, table_name: str = table_name) -> str:
-            if (table_name, name) in from_options:
-                return f"--{table_name}.{name}"
-            return _where(study_path, lines, table_name, name)
-
-        values, wrong = _read_table(cls, given.get(table_name, {}), place)
-        for name, about in keys_of(cls).items():
-            if about.kind == "folder":
-                values.setdefault(name, default_of(cls, name))
-            if name in values:
-                start = here if (table_name, name) in from_options else folder
-                values[name] = _placed(about.kind, values[name], start)
-                for absent in _absent_files(about.kind, values[name]):
-                    what = f"{table_name}.{name}: no file {absent}"
-                    fix = "correct the path; it starts at the current folder" if start is here else ""
-                    wrong.append(InputError("file-missing", what, where=place(name), fix=fix))
-        problems += wrong
-        made[table_name] = None if wrong else cls(**values)
-    raise_together(problems)
-    return Study(**made, path=study_path, folder=folder)  # type: ignore[arg-type]
-
-
-def _where(path: Path | None, lines: Mapping[tuple[str, str], int], table: str, name: str) -> str:
-    if path is None:
-        return "the options"
-    line = lines.get((table, name))
-    if line is None:
-        line = lines.get((table, ""))
-    return f"{path}" + (f", line {line}" if line else "") + (f", [{table}]" if table else "")
+    given = _Given(None if path is None else Path(path))
+    given.take_options(options or {})
+    made = {}
+    for name in TABLES:
+        needed = name == "study" or (name in needs and name not in given.meant)
+        made[name] = given.table(name) if needed or name in given.values or name in DEFAULTED else None
+    raise_together(given.problems)
+    return Study(**made, path=given.path, folder=given.folder)  # type: ignore[arg-type]
 
 
 # --------------------------------------------------------------------------------------------------
