@@ -296,15 +296,18 @@ def test_parts_of_one_stream_are_one():
     assert lines[1].stream_distance == pytest.approx(ground_length([(0, -500), (0, 250)]), rel=1e-9)
 
 
-def test_branches_of_one_stream_are_measured_along_the_longest():
+@pytest.mark.parametrize("order", [(0, 1, 2), (0, 2, 1), (2, 1, 0), (1, 2, 0)])
+def test_branches_of_one_stream_are_measured_along_the_longest(order):
     parts = [
         LineString([(0, 0), (0, 500)]),
         LineString([(0, -500), (0, 0)]),
         LineString([(-30, -40), (0, 0)]),
     ]
-    lines, findings = orient_cut_lines(layer([ACROSS]), layer(parts, ["creek"] * 3), UTM)
+    streams = layer([parts[number] for number in order], ["creek"] * 3)
+    lines, findings = orient_cut_lines(layer([ACROSS, LineString([(-50, 70), (50, 70)])]), streams, UTM)
     assert findings == []
     assert lines[0].stream_distance == pytest.approx(ground_length([(0, -500), (0, 0)]), rel=1e-9)
+    assert lines[1].stream_distance == pytest.approx(ground_length([(0, -500), (0, 70)]), rel=1e-9)
 
 
 def test_at_a_confluence_the_stream_that_goes_on_counts():
@@ -373,6 +376,16 @@ def test_gap_between_parts_of_a_stream():
     assert "10.0 m" in findings[0].message
     assert (findings[0].x - X0, findings[0].y - Y0) == pytest.approx((0, -200))
     assert line.stream_distance == pytest.approx(ground_length([(0, -500), (0, 0)]), rel=1e-9)
+
+
+def test_a_stream_in_very_many_parts_apart_is_not_bridged():
+    parts = [LineString([(0, y), (0, y + 1)]) for y in range(0, 600, 2)]
+    (line,), findings = orient_cut_lines(
+        layer([LineString([(-9, 400.5), (9, 400.5)])]), layer(parts, ["x"] * 300), UTM
+    )
+    assert codes(findings) == ["stream-gap"]
+    assert "300 parts" in findings[0].message
+    assert line.stream_distance == pytest.approx(0.5 / 0.9996, rel=1e-5)
 
 
 def test_parts_drawn_against_each_other():
