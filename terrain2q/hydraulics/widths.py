@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.optimize import brentq, minimize_scalar
+from scipy.optimize import brentq
 
 from terrain2q.errors import InputError, NoAnswerError
 from terrain2q.hydraulics.divided import Roughness
@@ -33,8 +33,11 @@ BENCH = "bench"
 _NUDGE = 1e-9
 """How far beyond a jump the width is taken, as a share of the section's length."""
 
-_HALVINGS = 20
-"""An interval in which discharge may turn is halved this often before its ends alone decide."""
+_SPLIT, _LEVELS = 32, 4
+"""An interval in which discharge may turn is split 32-fold, four times over, before its ends alone decide."""
+
+_LOOKED_INTO = 4
+"""Where no width suffices, the greatest discharge is sought inside so many intervals."""
 
 
 @dataclass(frozen=True)
@@ -75,6 +78,9 @@ class Bench:
         ``both``, ``left`` or ``right``.
     stretches : tuple of Stretch
         The bench in plan; empty where there is none.
+    at_jump : bool
+        More width than this by any amount passes clearly more, and less width clearly less: the discharge
+        jumps here. At a width of next to nothing it is the division at the bank that passes the flow.
     """
 
     width: float
@@ -85,6 +91,7 @@ class Bench:
     excavation: float
     side: str
     stretches: tuple[Stretch, ...] = ()
+    at_jump: bool = False
 
     @property
     def ground(self) -> tuple[Floats, Floats]:
@@ -143,7 +150,7 @@ class _Fine:
         return cls(fine_x, np.concatenate(pz)[order], on, owner[segment], segment)
 
     def source(self, section: Section, which: int) -> int:
-        """The fine point at the first (0) or last (-1) low point of the channel."""
+        """Return the fine point at the first (0) or last (-1) low point of the channel."""
         cut = int(section._source[which])
         # a point of the cut profile is where its segment begins, or the very last point
         hit = np.searchsorted(self.segment, cut, side="left")
@@ -242,36 +249,35 @@ class _Question:
         n = np.minimum(one.n, other.n)
         return (1 + 1e-9) * self.carried(_Parts(area, perimeter, n))
 
-    def least(self, target: float) -> float | None:
-        """Return the least width that carries at least `target`, or None."""
+    def least(self, target: float) -> tuple[float, bool] | None:
+        """Return the least width that carries at least `target` and whether it lies at a jump, or None."""
         for i in np.flatnonzero(self.bound >= target):
             if self.from_low[i] >= target:
-                return float(self.low[i])
+                return float(self.low[i]), True
             found = self._first(int(i), target)
             if found is not None:
-                return found
+                return found, False
         return None
 
     def _first(self, i: int, target: float) -> float | None:
-        pending = [
-            (float(self.low[i]), float(self.high[i]), self.at_low.rows([i]), self.at_high.rows([i]), 0)
-        ]
+        """Return the least width in one interval, which is split until only its ends matter."""
+        pending = [(float(self.low[i]), float(self.high[i]), 0)]
         while pending:
-            low, high, one, other, halved = pending.pop()
-            if self.most(one, other)[0] < target:
-                continue
-            middle = 0.5 * (low + high)
-            if halved == _HALVINGS or not low < middle < high:
-                if self.carried(other)[0] >= target:
+            low, high, depth = pending.pop()
+            if depth == _LEVELS or high - low <= 4.0 * _SPLIT * np.spacing(high):
+                if self.conveyance(high) >= target:
                     return self._polish(low, high, target)
                 continue
-            between = self.parts(np.array([middle]))
-            pending.append((middle, high, between, other, halved + 1))
-            pending.append((low, middle, one, between, halved + 1))
+            at = np.linspace(low, high, _SPLIT + 1)
+            parts = self.parts(at)
+            bound = self.most(parts.rows(slice(None, -1)), parts.rows(slice(1, None)))
+            pending += [
+                (float(at[k]), float(at[k + 1]), depth + 1) for k in np.flatnonzero(bound >= target)[::-1]
+            ]
         return None
 
     def _polish(self, low: float, high: float, target: float) -> float:
-        """The width between two, the first too narrow, the second not: on the side that passes."""
+        """Return the root between a width that is too narrow and one that is not, on the side that passes."""
         if self.conveyance(low) >= target:
             return low
         found = brentq(
@@ -286,18 +292,17 @@ class _Question:
         """Return the most that any width carries."""
         if not self.low.size:
             return 0.0
-        ends = np.maximum(self.from_low, self.from_high)
-        best = float(ends.max())
-        for i in np.argsort(-self.bound)[:8]:
+        best = float(max(self.from_low.max(), self.from_high.max()))
+        for i in np.argsort(-self.bound, kind="stable")[:_LOOKED_INTO]:
             if self.bound[i] <= best:
                 break
-            inside = minimize_scalar(
-                lambda w: -self.conveyance(float(w)),
-                bounds=(self.low[i], self.high[i]),
-                method="bounded",
-                options={"xatol": 1e-9 * max(float(self.high[i]), 1e-9)},
-            )
-            best = max(best, -float(inside.fun))
+            low, high = self.low[i], self.high[i]
+            for _ in range(_LEVELS):
+                at = np.linspace(low, high, _SPLIT + 1)
+                carried = self.carried(self.parts(at))
+                k = int(carried.argmax())
+                best = max(best, float(carried[k]))
+                low, high = at[max(k - 1, 0)], at[min(k + 1, _SPLIT)]
         return best
 
 
@@ -398,8 +403,12 @@ class _Side:
         """Return stations and heights from the bank outward with the bench, and its two outer stations."""
         w = np.array([width])
         j, end, top = (a[0] for a in self.meet(w))
-        floor_end = self.bank + self.step * width
-        outer = self.bank + self.step * float(end)
+        # rounding must not put the slope's end behind the floor's, nor beyond the next point
+        nearest = min if self.step > 0 else max
+        outer = nearest(self.bank + self.step * max(float(end), width), float(self.station[j]))
+        floor_end = nearest(self.bank + self.step * width, outer)
+        if self.side_slope == 0.0:
+            floor_end = outer
         inside = np.flatnonzero((self.d < width) & (self.z <= self.base))
         x, z = list(self.station[inside]), list(self.z[inside])
         x.append(floor_end)
@@ -411,8 +420,9 @@ class _Side:
         else:
             outer = floor_end
         beyond = np.flatnonzero(self.given[j:]) + j
+        stations = np.concatenate([x, self.station[beyond]])
         return (
-            np.concatenate([x, self.station[beyond]]),
+            self.step * np.maximum.accumulate(self.step * stations),
             np.concatenate([z, self.z[beyond]]),
             floor_end,
             outer,
@@ -444,7 +454,7 @@ class _Cut:
         self._core = self._core_parts(ground.threshold[fine.segment] < stage, count)
 
     def _bank(self, step: int) -> int:
-        """The fine point on one side beyond which the ground first rises above the base."""
+        """Return the fine point on one side beyond which the ground first rises above the base."""
         z = self.fine.z
         i = self.fine.source(self.section, -1 if step > 0 else 0)
         while 0 <= i + step < z.size and z[i + step] <= self.base:
@@ -452,9 +462,7 @@ class _Cut:
         return i
 
     def _side(self, step: int, side_slope: float, anyway, count: int) -> _Side:
-        return _Side(
-            self.fine, self._bank(step), step, self.stage, self.base, side_slope, anyway, count
-        )
+        return _Side(self.fine, self._bank(step), step, self.stage, self.base, side_slope, anyway, count)
 
     @property
     def used(self) -> list[_Side]:
@@ -694,7 +702,14 @@ def required_bench(
     found = np.empty(q.shape, dtype=object)
     for place in np.ndindex(q.shape):
         found[place] = _one_bench(
-            section, _positive("discharge", q[place], where), float(h[place]), slope, base, n, sides, side_slope
+            section,
+            _positive("discharge", q[place], where),
+            float(h[place]),
+            slope,
+            base,
+            n,
+            sides,
+            side_slope,
         )
     return found if q.ndim else found[()]
 
@@ -707,8 +722,8 @@ def _one_bench(section: Section, discharge, stage, slope, base, n, sides, side_s
     cut = _Cut(section, stage, base, n, sides, side_slope)
     question = cut.question()
     root = float(np.sqrt(slope))
-    width = question.least(discharge / root)
-    if width is None:
+    found = question.least(discharge / root)
+    if found is None:
         most = max(question.greatest() * root, before)
         raise NoAnswerError(
             f"no bench within the section passes {discharge:g} at stage {stage:g}; the most is {most:g}",
@@ -716,10 +731,11 @@ def _one_bench(section: Section, discharge, stage, slope, base, n, sides, side_s
             where=section.section_id,
             fix="raise the stage, lower the base, smooth the bench or lengthen the section",
         )
+    width, at_jump = found
     after, stretches = cut.cut_section(width)
     excavation = _area_over(section, base) - _area_over(after, base)
     passes = float(after.discharge(stage, slope))
-    return Bench(width, after, passes, before, stage, max(excavation, 0.0), sides, stretches)
+    return Bench(width, after, passes, before, stage, max(excavation, 0.0), sides, stretches, at_jump)
 
 
 def _area_over(section: Section, level: float) -> float:
@@ -881,7 +897,9 @@ def required_opening(section: Section, discharge: ArrayLike, stage: ArrayLike, s
     q, h, s = np.broadcast_arrays(*(np.asarray(a, dtype=float) for a in (discharge, stage, slope)))
     for name, values in (("discharge", q), ("stage", h), ("slope", s)):
         if not np.isfinite(values).all():
-            raise InputError("number-not-finite", f"{name} has a value that is not a finite number", where=where)
+            raise InputError(
+                "number-not-finite", f"{name} has a value that is not a finite number", where=where
+            )
     for name, values in (("discharge", q), ("slope", s)):
         if (values <= 0).any():
             raise InputError("number-not-positive", f"{name} is {values[values <= 0].flat[0]:g}", where=where)
@@ -898,8 +916,8 @@ def required_opening(section: Section, discharge: ArrayLike, stage: ArrayLike, s
             )
         if level not in questions:
             questions[level] = _Opening(section, level).question()
-        width = questions[level].least(float(q[place]) / root)
-        if width is None:
+        found = questions[level].least(float(q[place]) / root)
+        if found is None:
             most = questions[level].greatest() * root
             raise NoAnswerError(
                 f"no opening within the section passes {q[place]:g} at stage {level:g}; the most is {most:g}",
@@ -907,5 +925,5 @@ def required_opening(section: Section, discharge: ArrayLike, stage: ArrayLike, s
                 where=where,
                 fix="raise the stage or lengthen the section",
             )
-        out[place] = width
+        out[place] = found[0]
     return out if out.ndim else float(out)
