@@ -120,8 +120,15 @@ class Results:
         }
 
     def worst_findings(self, count: int) -> list[Finding]:
-        """Return the first findings in order of severity."""
-        return sorted(self.findings_list, key=lambda f: SEVERITIES.index(f.severity))[:count]
+        """Return findings in order of severity, at first one for each feature."""
+        ordered = sorted(self.findings_list, key=lambda f: SEVERITIES.index(f.severity))
+        seen: set[tuple[str, str]] = set()
+        first, later = [], []
+        for finding in ordered:
+            feature = (finding.severity, finding.feature_id)
+            (later if feature in seen else first).append(finding)
+            seen.add(feature)
+        return sorted(first + later, key=lambda f: SEVERITIES.index(f.severity))[:count]
 
     def summary_text(self) -> str:
         """Return what a run prints: stages by event, findings, files, time and the caution."""
@@ -312,7 +319,9 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
     flows = read_flows(study)
     inputs = _read_inputs(study)
     built = build_sections(inputs.lines, inputs.sections, progress)
-    answers = answer_sections(built, flows, study.rating.stages, study.in_si("rating.top"), study.system, progress)
+    answers = answer_sections(
+        built, flows, study.rating.stages, study.in_si("rating.top"), study.system, progress
+    )
     findings = _all_findings(inputs, built, answers)
     terrain = inputs.sections.terrain
     layers = make_layers(answers, findings, study.system, terrain.crs, inputs.crs)

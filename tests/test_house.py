@@ -80,6 +80,8 @@ def test_package_imports_nothing_heavy():
 
 def test_every_module_imports():
     for path in ROOT.rglob("*.py"):
-        name = ".".join(["terrain2q", *path.relative_to(ROOT).with_suffix("").parts]).removesuffix(".__init__")
+        name = ".".join(["terrain2q", *path.relative_to(ROOT).with_suffix("").parts]).removesuffix(
+            ".__init__"
+        )
         if not name.endswith("__main__"):
             importlib.import_module(name)

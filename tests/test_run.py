@@ -193,7 +193,10 @@ def test_straight_valley_at_any_azimuth(tmp_path, azimuth):
     for row in results.design_stages.itertuples():
         depth = brentq(lambda y, q=row.discharge: closed_form(y) - q, 0.01, 10, xtol=1e-12)
         station = {"a": -60.0, "b": 0.0, "c": 60.0}[row.section_id]
-        assert row.stage == pytest.approx(100.0 - SLOPE_V * station + depth, abs=0.01), (row.section_id, row.event)
+        assert row.stage == pytest.approx(100.0 - SLOPE_V * station + depth, abs=0.01), (
+            row.section_id,
+            row.event,
+        )
     # the line drawn from right to left has been turned
     assert {f.feature_id for f in results.findings_list if f.code == "line-turned"} == {"b"}
 
@@ -241,7 +244,9 @@ def test_one_bad_line_stops_nothing(tmp_path):
     assert why == {
         "off": "line-off-terrain", "no-length": "line-empty", "none": "line-empty", "hillside": "no-low-ground",
     }  # fmt: skip
-    assert set(results.design_stages.loc[results.design_stages["status"] != "failed", "section_id"]) == set("abc")
+    assert set(results.design_stages.loc[results.design_stages["status"] != "failed", "section_id"]) == set(
+        "abc"
+    )
 
 
 def test_wrong_input_writes_nothing(tmp_path):

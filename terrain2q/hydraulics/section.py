@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import importlib
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from functools import cached_property
@@ -523,6 +524,23 @@ class Section:
             for p in state.paths
         ]
 
+    def water_at(self, stage: float) -> list[FlowPath]:
+        """Return the stretches of water that stand at one stage, the channel's first, without a discharge."""
+        level = float(_finite("stage", stage))
+        ground = self._profile.ground
+        main = ground.pool(int(self._source[0]), level)
+        pools = sorted(ground.pools(level), key=lambda p: (p.first, p.last) != (main.first, main.last))
+        return [
+            FlowPath(
+                p.start,
+                p.end,
+                level,
+                float("nan"),
+                float(ground.wetted_between(p.first, p.last, level)[0].sum()),
+            )
+            for p in pools
+        ]
+
     def critical_stage(self, discharge: ArrayLike) -> Floats:
         """Return the stage of least specific energy for a discharge, alpha included.
 
@@ -704,12 +722,19 @@ class Section:
 
         Returns
         -------
-        pandas.DataFrame
-            Columns of the ``ratings`` layer, in the section's units.
+        Rating
+            A pandas.DataFrame with the columns of the ``ratings`` layer, in the section's units, that
+            draws itself with ``plot()``.
         """
-        import pandas as pd
+        from terrain2q.hydraulics.rating import Rating
 
-        return pd.DataFrame(self.rating_arrays(slope, stages))
+        table = Rating(self.rating_arrays(slope, stages))
+        table.attrs["units"] = self.units
+        return table
+
+    def plot(self, **how):
+        """Draw the section; see :func:`terrain2q.output.plots.plot_section` for what can be given."""
+        return _plots().plot_section(self, **how)
 
     def rating_arrays(self, slope: float, stages: ArrayLike | int | None = None, top: float | None = None):
         """Return the rating as a dict of arrays; `top` is how high even steps go above the lowest ground."""
@@ -768,6 +793,11 @@ def hydraulic_columns(wet: Wet, root: float | Floats, gravity: float) -> dict[st
         "alpha": alpha,
         "beta": beta,
     }
+
+
+def _plots():
+    # Pictures stand above the numbers in the house; a section only hands itself over when asked for one.
+    return importlib.import_module("terrain2q.output.plots")
 
 
 def _check_cover(subareas: tuple[Subarea, ...], x: Floats) -> tuple[Subarea, ...]:

@@ -152,7 +152,9 @@ def answer_section(
     return SectionAnswer(built, rating, tuple(answers), notes.findings())
 
 
-def _answer_event(section: Section, built: BuiltSection, flow: Flow, doubtful: bool, notes: _Notes) -> EventAnswer:
+def _answer_event(
+    section: Section, built: BuiltSection, flow: Flow, doubtful: bool, notes: _Notes
+) -> EventAnswer:
     try:
         state = section.flow_state(flow.discharge, built.slope)
         critical = float(section.critical_stage(flow.discharge))
@@ -160,7 +162,9 @@ def _answer_event(section: Section, built: BuiltSection, flow: Flow, doubtful: b
         notes.add("section-failed", error.what, flow.event)
         return EventAnswer(flow.event, FAILED)
     root = np.sqrt(built.slope)
-    columns = {k: float(v[0]) for k, v in hydraulic_columns(state.parts, root, section.system.gravity).items()}
+    columns = {
+        k: float(v[0]) for k, v in hydraulic_columns(state.parts, root, section.system.gravity).items()
+    }
     # the discharge that was asked for, not its image after solving
     columns["discharge"] = flow.discharge
     share = channel_share(section, state)

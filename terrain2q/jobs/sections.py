@@ -164,7 +164,9 @@ def build_sections(lines: Sequence[CutLine], inputs: SectionInputs, progress=Non
         try:
             built[i] = _build(lines[i], profile, crossing, cover, interval, inputs, notes[i])
         except Terrain2qError as error:
-            notes[i].append(_at(lines[i], profile, Finding("section-failed", error.what, _LAYER, lines[i].section_id)))
+            notes[i].append(
+                _at(lines[i], profile, Finding("section-failed", error.what, _LAYER, lines[i].section_id))
+            )
             built[i] = BuiltSection(lines[i], profile)
         if progress is not None and (done % 200 == 0 or done == len(kept)):
             progress(done, len(kept), "sections")
@@ -179,15 +181,15 @@ def _crossing_station(line: CutLine, profile: Profile) -> float:
     return float(profile.station_at(line.crossing)) if np.isfinite(line.crossing) else float("nan")
 
 
-def _usable_part(line: CutLine, whole: Profile, crossing: float, inputs: SectionInputs, notes) -> Profile | None:
+def _usable_part(
+    line: CutLine, whole: Profile, crossing: float, inputs: SectionInputs, notes
+) -> Profile | None:
     """The ground between gaps that are too wide to bridge; what was done is noted."""
     known = np.isfinite(whole.elevations)
     name = line.section_id
 
     def note(code: str, message: str, index: int) -> None:
-        notes.append(
-            Finding(code, message, _LAYER, name, x=float(whole.x[index]), y=float(whole.y[index]))
-        )
+        notes.append(Finding(code, message, _LAYER, name, x=float(whole.x[index]), y=float(whole.y[index])))
 
     if known.sum() < 2:
         note("line-off-terrain", "there is no ground under the line", whole.x.size // 2)
@@ -224,7 +226,11 @@ def _usable_part(line: CutLine, whole: Profile, crossing: float, inputs: Section
     if np.isfinite(crossing):
         inside = [(a, b) for a, b in parts if station[a] <= crossing <= station[b]]
         if not inside:
-            note("gap-at-stream", f"there is no ground at station {shown(crossing)}", int(np.searchsorted(station, crossing)) - 1)
+            note(
+                "gap-at-stream",
+                f"there is no ground at station {shown(crossing)}",
+                int(np.searchsorted(station, crossing)) - 1,
+            )
             return None
         start, end = inside[0]
     else:
@@ -240,9 +246,7 @@ def _usable_part(line: CutLine, whole: Profile, crossing: float, inputs: Section
     if keep.size < 2:
         note("line-off-terrain", "too little ground under the line", start)
         return None
-    return Profile(
-        station[keep], whole.elevations[keep], whole.x[keep], whole.y[keep], whole.is_vertex[keep]
-    )
+    return Profile(station[keep], whole.elevations[keep], whole.x[keep], whole.y[keep], whole.is_vertex[keep])
 
 
 def _at(line: CutLine, profile: Profile, finding: Finding) -> Finding:

@@ -45,9 +45,14 @@ class _Projected:
         if profile is None:
             return None
         return linestring_zm(
-            np.column_stack([
-                self.x[index], self.y[index], profile.elevations * factor, profile.stations * factor,
-            ])  # fmt: skip
+            np.column_stack(
+                [
+                    self.x[index],
+                    self.y[index],
+                    profile.elevations * factor,
+                    profile.stations * factor,
+                ]
+            )  # fmt: skip
         )
 
 
@@ -108,7 +113,9 @@ def _table(layer: str, columns: dict, units: UnitSystem) -> pd.DataFrame:
 
 
 def _with_geometry(table: pd.DataFrame, geometry: Iterable, crs) -> geopandas.GeoDataFrame:
-    return geopandas.GeoDataFrame(table, geometry=geopandas.GeoSeries(list(geometry), crs=crs, index=table.index))
+    return geopandas.GeoDataFrame(
+        table, geometry=geopandas.GeoSeries(list(geometry), crs=crs, index=table.index)
+    )
 
 
 def _sections(answers, findings, placed: _Projected, units: UnitSystem, crs):

@@ -1,0 +1,23 @@
+"""A rating as a table. The one module of the hydraulics that knows pandas; imported when a table is asked for."""
+
+from __future__ import annotations
+
+import importlib
+
+import pandas as pd
+
+
+class Rating(pd.DataFrame):
+    """A stage-discharge rating: a DataFrame that draws itself.
+
+    ``attrs["units"]`` holds ``si`` or ``us``. Anything taken from it is a plain DataFrame again.
+    """
+
+    @property
+    def _constructor(self):
+        return pd.DataFrame
+
+    def plot(self, **how):
+        """Draw stage against discharge; see :func:`terrain2q.output.plots.plot_rating`."""
+        # pictures stand above the numbers in the house, so that they are fetched only when asked for
+        return importlib.import_module("terrain2q.output.plots").plot_rating(self, **how)

@@ -1,0 +1,303 @@
+"""Pictures of a section and of its rating.
+
+Subareas are told apart by hatching and by their label as well as by tone, water at several events by
+tone, by its line and by its label; every picture can be read in grey.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from itertools import cycle
+
+import matplotlib.pyplot as plt
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.patches import Polygon
+from matplotlib.ticker import MaxNLocator
+
+from terrain2q.columns import column_title
+from terrain2q.errors import InputError
+from terrain2q.hydraulics.section import DepthRoughness, FlowPath, Section
+from terrain2q.units import unit_system
+
+INK = "#2b2622"
+GROUND_EDGE = "#3d3127"
+WALL = "#8c2d19"
+# from pale to deep: the order can be told by lightness alone
+WATERS = ("#cfe6e4", "#93c4cb", "#4f93ab", "#27617f", "#123a56")
+WATER_LINES = ("-", (0, (6, 2)), (0, (2, 1.5)), (0, (7, 2, 1.5, 2)), (0, (1, 1)))
+EARTHS = ("#e9dfcb", "#d9c9ac", "#c8b08c", "#b79a79", "#e3d3b8")
+HATCHES = ("", "////", "....", "\\\\\\\\", "xxx", "----", "oo")
+
+_EXAGGERATIONS = (1, 1.5, 2, 2.5, 3, 4, 5, 6, 8, 10, 12, 15, 20, 25, 30, 40, 50, 60, 80, 100)
+
+
+def plot_section(
+    section: Section,
+    *,
+    slope: float | None = None,
+    discharges: Mapping[str, float] | None = None,
+    stages: Mapping[str, float] | None = None,
+    exaggeration: float | None = None,
+    ax: Axes | None = None,
+    title: str | None = None,
+) -> Axes:
+    """Draw the ground of a section, its subareas with their n, and the water.
+
+    Parameters
+    ----------
+    section : Section
+    slope : float, optional
+        Energy slope; needed with `discharges`.
+    discharges : mapping of str to float, optional
+        Events and their discharges: the water of each stands at its normal stage, in each flow path at
+        that path's own. Hollows that it does not reach stay dry.
+    stages : mapping of str to float, optional
+        Events and their stages, in place of discharges.
+    exaggeration : float, optional
+        How many times the vertical scale is larger than the horizontal one; one that fits is chosen
+        where absent. It is written below the picture.
+    ax : matplotlib.axes.Axes, optional
+        Where to draw; a new figure where absent.
+    title : str, optional
+        The section's id where absent.
+
+    Returns
+    -------
+    matplotlib.axes.Axes
+
+    Raises
+    ------
+    InputError
+        ``key-missing``: discharges without a slope.
+    """
+    waters = _waters(section, slope, discharges, stages)
+    if ax is None:
+        ax = plt.subplots(figsize=(10, 4.6), layout="constrained")[1]
+    x, z = section.stations, section.elevations
+    unit = section.system.symbol("length")
+    level = max([z.max(), *(p.stage for _, paths in waters for p in paths)])
+    low = float(z.min())
+    relief = max(level - low, 1e-6)
+    floor = low - 0.34 * relief
+    _draw_water(ax, section, waters)
+    _draw_subareas(ax, section, floor, relief)
+    ax.plot(x, z, color=GROUND_EDGE, lw=1.8, solid_joinstyle="round", zorder=6)
+    _draw_walls(ax, section, waters)
+    ax.set_xlim(x[0], x[-1])
+    ax.set_ylim(floor, level + 0.08 * relief)
+    ax.set_xlabel(f"Station [{unit}], from left to right looking downstream", color=INK)
+    ax.set_ylabel(f"Elevation [{unit}]", color=INK)
+    ax.yaxis.set_major_locator(MaxNLocator(6))
+    ax.set_title(title if title is not None else section.section_id, loc="left", color=INK)
+    for side in ("top", "right"):
+        ax.spines[side].set_visible(False)
+    _set_exaggeration(ax, exaggeration)
+    if waters:
+        ax.legend(
+            loc="upper left", bbox_to_anchor=(1.0, 1.0), frameon=False, fontsize=8, labelcolor=INK,
+            title="Water surface", title_fontsize=8,
+        )  # fmt: skip
+    return ax
+
+
+def plot_rating(
+    rating,
+    *,
+    events: Mapping[str, float] | None = None,
+    marks: Mapping[str, float] | None = None,
+    units: str | None = None,
+    ax: Axes | None = None,
+    title: str | None = None,
+) -> Axes:
+    """Draw a stage-discharge rating.
+
+    Parameters
+    ----------
+    rating : pandas.DataFrame
+        With columns ``stage`` and ``discharge``, as :meth:`Section.rating` gives it. Between the two
+        rows of a bank's top the line is level and dashed: the hollow behind the bank is filling.
+    events : mapping of str to float, optional
+        Discharges to mark.
+    marks : mapping of str to float, optional
+        Stages to mark, such as the crest of a road.
+    units : str, optional
+        ``si`` or ``us``; as the rating says where absent.
+    ax : matplotlib.axes.Axes, optional
+        Where to draw; a new figure where absent.
+    title : str, optional
+
+    Returns
+    -------
+    matplotlib.axes.Axes
+    """
+    system = unit_system(units or rating.attrs.get("units", "si"))
+    if ax is None:
+        ax = plt.subplots(figsize=(5.6, 4.6), layout="constrained")[1]
+    stage, discharge = rating["stage"].to_numpy(float), rating["discharge"].to_numpy(float)
+    fills = np.flatnonzero(stage[1:] == stage[:-1])
+    edges = [0, *(fills + 1), stage.size]
+    for start, end in zip(edges[:-1], edges[1:], strict=True):
+        ax.plot(discharge[start:end], stage[start:end], color=WATERS[3], lw=2.0, solid_capstyle="round")
+    for number, i in enumerate(fills):
+        ax.plot(
+            discharge[i : i + 2], stage[i : i + 2], color=WATERS[3], lw=1.6, ls=(0, (2.5, 1.5)),
+            label="a hollow behind a bank fills" if number == 0 else None,
+        )  # fmt: skip
+    shown = {name: flow for name, flow in (events or {}).items() if discharge[0] <= flow <= discharge[-1]}
+    if shown:
+        # the whole rating may reach far above any event: show what they need
+        most = 1.35 * max(shown.values())
+        ax.set_xlim(right=most)
+        highest = max([float(np.interp(most, discharge, stage)), *(marks or {}).values()])
+        ax.set_ylim(top=stage[0] + 1.06 * (highest - stage[0]))
+    for number, (name, flow) in enumerate(sorted(shown.items(), key=lambda item: item[1])):
+        at = float(np.interp(flow, discharge, stage))
+        ax.plot([flow], [at], marker="o", ms=5.5, mfc="white", mec=INK, mew=1.3, zorder=5)
+        ax.annotate(
+            name, (flow, at), xytext=(4, -14 - 11 * (number % 2)), textcoords="offset points", fontsize=8,
+            color=INK, arrowprops={"arrowstyle": "-", "color": INK, "lw": 0.5, "shrinkB": 3},
+        )  # fmt: skip
+    for name, level in (marks or {}).items():
+        ax.axhline(level, color=WALL, lw=1.1, ls=(0, (5, 2)))
+        ax.annotate(
+            name, (1.0, level), xycoords=("axes fraction", "data"), xytext=(-4, 3), ha="right",
+            textcoords="offset points", fontsize=8, color=WALL,
+        )  # fmt: skip
+    if fills.size:
+        ax.legend(frameon=False, fontsize=8, loc="lower right", labelcolor=INK)
+    ax.set_xlim(left=0)
+    ax.set_xlabel(column_title("discharge", system), color=INK)
+    ax.set_ylabel(column_title("stage", system), color=INK)
+    ax.set_title(title or "", loc="left", color=INK)
+    ax.grid(color="#ddd6cc", lw=0.6)
+    ax.set_axisbelow(True)
+    for side in ("top", "right"):
+        ax.spines[side].set_visible(False)
+    return ax
+
+
+def _waters(section, slope, discharges, stages) -> list[tuple[str, list[FlowPath]]]:
+    """The paths of each event, the lowest water first."""
+    waters = []
+    if discharges:
+        if slope is None:
+            raise InputError(
+                "key-missing", "discharges are given without a slope", where="plot", fix="give slope="
+            )
+        waters += [(name, section.flow_paths(q, slope)) for name, q in discharges.items()]
+    for name, stage in (stages or {}).items():
+        waters.append((name, section.water_at(stage)))
+    return sorted(waters, key=lambda w: w[1][0].stage if w[1] else -np.inf)
+
+
+def _surface(section: Section, path: FlowPath) -> np.ndarray:
+    """Outline of one path's water, shape (n, 2)."""
+    x, z = section.stations, section.elevations
+    inside = (x > path.start) & (x < path.end)
+    ends = np.interp([path.start, path.end], x, z)
+    ground_x = np.concatenate([[path.start], x[inside], [path.end]])
+    ground_z = np.concatenate([ends[:1], z[inside], ends[1:]])
+    ground_z = np.minimum(ground_z, path.stage)
+    top = np.array([[path.end, path.stage], [path.start, path.stage]])
+    return np.vstack([np.column_stack([ground_x, ground_z]), top])
+
+
+def _draw_water(ax: Axes, section: Section, waters) -> None:
+    tones = np.linspace(0, len(WATERS) - 1, max(len(waters), 2)).round().astype(int)
+    unit = section.system.symbol("length")
+    for order, (name, paths) in reversed(list(enumerate(waters))):
+        style = WATER_LINES[order % len(WATER_LINES)]
+        for number, path in enumerate(paths):
+            ax.add_patch(
+                Polygon(_surface(section, path), closed=True, fc=WATERS[tones[order]], ec="none", zorder=2)
+            )
+            label = f"{name}: {path.stage:.2f} {unit}" if number == 0 else None
+            ax.plot(
+                [path.start, path.end],
+                [path.stage] * 2,
+                color=WATERS[4],
+                lw=1.1,
+                ls=style,
+                label=label,
+                zorder=4,
+            )
+
+
+def _draw_subareas(ax: Axes, section: Section, floor: float, relief: float) -> None:
+    x, z = section.stations, section.elevations
+    looks = {}
+    fresh = cycle(zip(EARTHS, HATCHES[: len(EARTHS)], strict=True))
+    width = x[-1] - x[0]
+    for number, subarea in enumerate(section.subareas):
+        key = (subarea.label, str(subarea.n), subarea.zone)
+        if key not in looks:
+            looks[key] = next(fresh)
+        tone, hatch = looks[key]
+        start, end = max(subarea.start, x[0]), min(subarea.end, x[-1])
+        inside = (x > start) & (x < end)
+        edge = np.column_stack([
+            np.concatenate([[start], x[inside], [end]]),
+            np.concatenate([np.interp([start], x, z), z[inside], np.interp([end], x, z)]),
+        ])  # fmt: skip
+        outline = np.vstack([edge, [[end, floor], [start, floor]]])
+        ax.add_patch(Polygon(outline, closed=True, fc=tone, ec="#9b8a70", hatch=hatch, lw=0.0, zorder=3))
+        if number:
+            ax.plot([start, start], [floor, np.interp(start, x, z)], color=GROUND_EDGE, lw=0.7, zorder=5)
+        share = (end - start) / width
+        text = _n_text(subarea.n)
+        wide = share > 0.085
+        if subarea.label and wide:
+            text = f"{_short(subarea.label, share)}\n{text}"
+        ax.annotate(
+            text,
+            (0.5 * (start + end), floor + 0.03 * relief),
+            ha="center", va="bottom", fontsize=7.5, color=INK, zorder=7,
+            rotation=0 if share > 0.055 else 90,
+            bbox={"boxstyle": "round,pad=0.15", "fc": "white", "ec": "none", "alpha": 0.8},
+        )  # fmt: skip
+
+
+def _short(label: str, share: float) -> str:
+    room = max(8, int(110 * share))
+    return label if len(label) <= room else label[: room - 1].rstrip() + "…"
+
+
+def _n_text(n: float | DepthRoughness) -> str:
+    if isinstance(n, DepthRoughness):
+        return f"n {n.shallow:.3g} to {n.deep:.3g}"
+    return f"n {n:.3g}"
+
+
+def _draw_walls(ax: Axes, section: Section, waters) -> None:
+    """The imagined walls at the ends of the section that water stands against."""
+    x, z = section.stations, section.elevations
+    drawn = False
+    for station, ground in ((x[0], z[0]), (x[-1], z[-1])):
+        tops = [
+            p.stage for _, paths in waters for p in paths if station in (p.start, p.end) and p.stage > ground
+        ]
+        if tops:
+            ax.plot(
+                [station] * 2, [ground, max(tops)], color=WALL, lw=3.2, ls=(0, (1.2, 0.8)), zorder=8, clip_on=False,
+                label=None if drawn else "imagined wall at the end",
+            )  # fmt: skip
+            drawn = True
+
+
+def _set_exaggeration(ax: Axes, exaggeration: float | None) -> None:
+    """Set or find the ratio of the scales, and write it below the picture."""
+    if exaggeration is not None:
+        ax.set_aspect(exaggeration, adjustable="box")
+        shown = exaggeration
+    else:
+        ax.figure.canvas.draw()
+        box = ax.get_window_extent()
+        (left, right), (bottom, top) = ax.get_xlim(), ax.get_ylim()
+        fits = (box.height / (top - bottom)) / (box.width / (right - left))
+        shown = max((e for e in _EXAGGERATIONS if e <= fits), default=float(f"{fits:.1g}"))
+        ax.set_aspect(shown, adjustable="box")
+    ax.annotate(
+        f"vertical scale {shown:g} times the horizontal", (1.0, 1.01), xycoords="axes fraction",
+        ha="right", va="bottom", fontsize=7.5, color=INK,
+    )  # fmt: skip
