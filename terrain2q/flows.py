@@ -111,7 +111,7 @@ def flow_for(
         if flow.section:
             if flow.section != section_id:
                 continue
-            rank = (3, 0.0)
+            rank = (3, float(bool(flow.stream)))
         elif flow.distance is not None:
             if not flow.distance <= stream_distance:
                 continue

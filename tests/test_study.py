@@ -651,6 +651,13 @@ def test_the_most_specific_flow_applies(section, stream, distance, discharge):
         assert flow_for(rows, "e", section, stream, distance).discharge == discharge
 
 
+def test_a_row_for_a_section_and_its_stream_goes_before_one_for_the_section():
+    rows = [Flow("e", 1.0, section="s"), Flow("e", 2.0, section="s", stream="n")]
+    for each in (rows, rows[::-1]):
+        assert flow_for(each, "e", "s", "n", 0.0).discharge == 2.0
+        assert flow_for(each, "e", "s", "m", 0.0).discharge == 1.0
+
+
 def test_no_flow_applies():
     assert flow_for([Flow("e", 1.0, stream="n")], "e", "s", "m", 10.0) is None
     assert flow_for([Flow("e", 1.0, section="s", stream="n")], "e", "s", "m", 10.0) is None
