@@ -88,8 +88,11 @@ class Results:
 
     @property
     def answered_sections(self) -> int:
-        """How many sections have an answer at every event."""
-        return len(self.layers["sections"]) - len(self.failed)
+        """How many sections have a rating, and an answer at one event at least where there are events."""
+        stages = self.layers["design_stages"]
+        if not len(stages):
+            return self.layers["ratings"]["section_id"].nunique()
+        return stages.loc[stages["status"] != FAILED, "section_id"].nunique()
 
     def finding_counts(self) -> dict[str, int]:
         """Return how many findings there are of each severity."""
