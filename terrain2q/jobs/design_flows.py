@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -49,7 +49,9 @@ class EventAnswer:
     wetted : tuple of (start, end)
         Stations of the water's edges, one pair a path.
     subareas : tuple of dict
-        One for each wet subarea of each path, with `SUBAREA_COLUMNS`.
+        One for each wet subarea of each path, with `SUBAREA_COLUMNS` and the number of its `path`.
+    paths : tuple of (start, end, stage)
+        Each stretch of water with one level, the channel's first.
     """
 
     event: str
@@ -57,6 +59,7 @@ class EventAnswer:
     row: dict[str, float] = field(default_factory=dict)
     wetted: tuple[tuple[float, float], ...] = ()
     subareas: tuple[dict[str, float], ...] = ()
+    paths: tuple[tuple[float, float, float], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -126,8 +129,12 @@ def answer_section(
     stages: int,
     top: float | None,
     units: UnitSystem,
+    reached: Mapping[str, Sequence[tuple[float, float]]] | None = None,
 ) -> SectionAnswer:
-    """Return the rating and the design stages of one section."""
+    """Return the rating and the design stages of one section.
+
+    `reached` has, by event, hollows (start, end) that water is known to reach from elsewhere.
+    """
     section = built.section
     failed = tuple(EventAnswer(event, FAILED) for event in events)
     if section is None or not np.isfinite(built.slope):
@@ -148,7 +155,9 @@ def answer_section(
             notes.add("flow-missing", "no discharge is given for it", event)
             answers.append(EventAnswer(event, FAILED))
             continue
-        answers.append(_answer_event(section, built, flow, doubtful, notes))
+        hollows = (reached or {}).get(event)
+        known = section.reached(hollows) if hollows else section
+        answers.append(_answer_event(known, built, flow, doubtful, notes))
     return SectionAnswer(built, rating, tuple(answers), notes.findings())
 
 
@@ -180,7 +189,12 @@ def _answer_event(
     _remark(section, state, row, share, flow.event, notes)
     status = DOUBTFUL if doubtful or notes.doubtful > before or built.slope > STEEP else OK
     return EventAnswer(
-        flow.event, status, row, tuple((p.start, p.end) for p in state.paths), _subarea_rows(state, root)
+        flow.event,
+        status,
+        row,
+        tuple((p.start, p.end) for p in state.paths),
+        _subarea_rows(state, root),
+        tuple((p.start, p.end, p.stage) for p in state.paths),
     )
 
 
@@ -196,7 +210,7 @@ def channel_share(section: Section, state: FlowState) -> float:
 def _subarea_rows(state: FlowState, root: float) -> tuple[dict[str, float], ...]:
     rows = []
     total = sum(p.conveyance for p in state.paths)
-    for path in state.paths:
+    for number, path in enumerate(state.paths):
         wet = path.wet
         for i in np.flatnonzero(wet.area[0] > 0):
             area, conveyance = float(wet.area[0, i]), float(wet.conveyance[0, i])
@@ -209,24 +223,25 @@ def _subarea_rows(state: FlowState, root: float) -> tuple[dict[str, float], ...]
                 "discharge": conveyance * root,
                 "mean_velocity": conveyance * root / area,
                 "share": conveyance / total,
+                "path": number,
             })  # fmt: skip
     return tuple(sorted(rows, key=lambda r: r["subarea"]))
 
 
 def _remark(section: Section, state: FlowState, row: dict, share: float, event: str, notes: _Notes) -> None:
     """Note what a reviewer must know about one answer."""
-    z, text = section.elevations, notes.length
+    z, text, level = section.elevations, notes.length, notes.level
     for above, end, height in zip(state.above_ends, ("left", "right"), (z[0], z[-1]), strict=True):
         if above:
-            level = max(p.stage for p in state.paths if (p.at_left_end if end == "left" else p.at_right_end))
-            notes.add("above-section-ends", f"water stands {text(level - height)} above the {end} end", event)
+            top = max(p.stage for p in state.paths if (p.at_left_end if end == "left" else p.at_right_end))
+            notes.add("above-section-ends", f"water stands {text(top - height)} above the {end} end", event)
     if len(state.stages) > 1:
-        listed = ", ".join(text(s) for s in state.stages)
+        listed = ", ".join(level(s) for s in state.stages)
         notes.add("several-stages", f"stages {listed} carry the discharge", event)
     if row["froude"] > 1.0:
         notes.add(
             "supercritical",
-            f"Froude number {row['froude']:.2f}, critical stage {text(row['critical_stage'])}",
+            f"Froude number {row['froude']:.2f}, critical stage {level(row['critical_stage'])}",
             event,
         )
     if row["mean_velocity"] > HIGH_VELOCITY:
@@ -240,15 +255,15 @@ def _remark(section: Section, state: FlowState, row: dict, share: float, event: 
             notes.add(
                 "bank-passed",
                 f"{100 * part:.0f} % of the discharge leaves the channel and flows behind a bank "
-                f"from station {text(path.start)} to {text(path.end)} at stage {text(path.stage)}, "
+                f"from station {text(path.start)} to {text(path.end)} at stage {level(path.stage)}, "
                 f"{text(state.stage - path.stage)} below the channel's",
                 event,
             )
     passed = [top for top in section.telling_bank_tops if top < state.stage]
-    if len(state.paths) == 1 and passed and np.isfinite(share):
+    if len(state.paths) == 1 and passed and 1.0 - share >= _LEAVES:
         notes.add(
             "bank-passed",
-            f"water has passed a bank of {text(passed[0])} and stands at one level behind it; "
+            f"water has passed a bank's top at {level(passed[0])} and stands at one level behind it; "
             f"{100 * (1 - share):.0f} % of the discharge is outside the channel",
             event,
         )
@@ -264,6 +279,10 @@ class _Notes:
 
     def length(self, metres: float) -> str:
         return length_text(metres, self._units)
+
+    def level(self, metres: float) -> str:
+        """Return an elevation; water is told apart by hundredths."""
+        return f"{metres * self._units.per_si('length'):.2f} {self._units.symbol('length')}"
 
     def velocity(self, value: float) -> str:
         return f"{value * self._units.per_si('velocity'):.1f} {self._units.symbol('velocity')}"
