@@ -326,6 +326,34 @@ def run(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool
     return DONE
 
 
+@main.command(epilog=CAUTION)
+@click.argument("name", required=False)
+@click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of text or CSV.")
+def tables(name: str | None, as_json: bool) -> None:
+    """List the built-in roughness tables, or print the one called NAME as CSV.
+
+    A study takes a table by its name, or a CSV file that was started from one.
+
+    \b
+    Examples:
+      terrain2q tables                            list them
+      terrain2q tables chow1959 > roughness.csv   start a table of your own
+    """
+    from terrain2q.roughness_tables import describe, table_names, table_rows, table_text
+
+    if name is None:
+        about = {each: describe(each) for each in table_names()}
+        if as_json:
+            _print_json({"tables": [{"name": each, "about": line} for each, line in about.items()]})
+        else:
+            width = max(map(len, about))
+            click.echo("\n".join(f"{each:{width}}  {line}" for each, line in about.items()))
+    elif as_json:
+        _print_json({"name": name, "about": describe(name), "rows": table_rows(name)})
+    else:
+        click.echo(table_text(name), nl=False)
+
+
 def _finding(finding: Any) -> dict[str, object]:
     names = ("code", "severity", "layer", "feature_id", "message", "remedy", "x", "y")
     return {name: getattr(finding, name) for name in names}
