@@ -18,18 +18,8 @@ from matplotlib.ticker import MaxNLocator
 from terrain2q.columns import column_title
 from terrain2q.errors import InputError
 from terrain2q.hydraulics.section import DepthRoughness, FlowPath, Section
+from terrain2q.output.looks import EARTHS, EXAGGERATIONS, GROUND_EDGE, HATCHES, INK, WALL, WATER_LINES, WATERS
 from terrain2q.units import unit_system
-
-INK = "#2b2622"
-GROUND_EDGE = "#3d3127"
-WALL = "#8c2d19"
-# from pale to deep: the order can be told by lightness alone
-WATERS = ("#cfe6e4", "#93c4cb", "#4f93ab", "#27617f", "#123a56")
-WATER_LINES = ("-", (0, (6, 2)), (0, (2, 1.5)), (0, (7, 2, 1.5, 2)), (0, (1, 1)))
-EARTHS = ("#e9dfcb", "#d9c9ac", "#c8b08c", "#b79a79", "#e3d3b8")
-HATCHES = ("", "////", "....", "\\\\\\\\", "xxx", "----", "oo")
-
-_EXAGGERATIONS = (1, 1.5, 2, 2.5, 3, 4, 5, 6, 8, 10, 12, 15, 20, 25, 30, 40, 50, 60, 80, 100)
 
 
 def plot_section(
@@ -295,7 +285,7 @@ def _set_exaggeration(ax: Axes, exaggeration: float | None) -> None:
         box = ax.get_window_extent()
         (left, right), (bottom, top) = ax.get_xlim(), ax.get_ylim()
         fits = (box.height / (top - bottom)) / (box.width / (right - left))
-        shown = max((e for e in _EXAGGERATIONS if e <= fits), default=float(f"{fits:.1g}"))
+        shown = max((e for e in EXAGGERATIONS if e <= fits), default=float(f"{fits:.1g}"))
         ax.set_aspect(shown, adjustable="box")
     ax.annotate(
         f"vertical scale {shown:g} times the horizontal", (1.0, 1.01), xycoords="axes fraction",
