@@ -33,22 +33,6 @@ class Path:
         return float(self.wet.conveyance.sum())
 
 
-def _path(profile: DividedProfile, first: int, last: int, stage: float, passed: bool, ends) -> Path:
-    """Water between points `first` and `last`; `ends` are the outermost stations of the section."""
-    ground = profile.ground
-    start = ground._edge(first, first + 1, stage)
-    end = ground._edge(last, last - 1, stage)
-    z = ground.z
-    return Path(
-        start,
-        end,
-        stage,
-        profile.wet_between(first, last, stage, passed=passed),
-        bool(start == ends[0] and stage > z[first]),
-        bool(end == ends[1] and stage > z[last]),
-    )
-
-
 def flow_paths(
     profile: DividedProfile, target: float, stage: float, at_bank: bool, source: int
 ) -> list[Path]:
@@ -69,54 +53,93 @@ def flow_paths(
     list of Path
     """
     ground = profile.ground
-    ends = (ground.x[0], ground.x[-1])
     main = ground.pool(source, stage)
+    stretches = [_Stretch(main.first, main.last)]
     # hollows known to be reached from elsewhere stand at the channel's level beside it
-    beside = [p for p in ground.pools(stage) if (p.first, p.last) != (main.first, main.last)]
-    others = [_path(profile, p.first, p.last, stage, False, ends) for p in beside]
+    stretches += [
+        _Stretch(p.first, p.last) for p in ground.pools(stage) if (p.first, p.last) != (main.first, main.last)
+    ]
+    ends = (float(ground.x[0]), float(ground.x[-1]))
     if not at_bank:
-        return [_path(profile, main.first, main.last, stage, False, ends), *others]
-    rest = target - sum(p.conveyance for p in others)
-    return _spill(profile, main.first, main.last, stage, rest, ends) + others
+        return [s.path(profile, stage, ends) for s in stretches]
+    return _spill(profile, stretches, stage, target, ends)
 
 
-def _spill(profile: DividedProfile, first: int, last: int, level: float, target: float, ends) -> list[Path]:
-    """Water that stands at `level` between points `first` and `last` and spills over one or both of them."""
-    ground = profile.ground
-    z = ground.z
-    grown = False
+@dataclass(frozen=True)
+class _Stretch:
+    """Water between points `first` and `last`; `passed` once it has filled a hollow beside it."""
+
+    first: int
+    last: int
+    passed: bool = False
+
+    def conveyance(self, profile: DividedProfile, level: float) -> float:
+        wet = profile.wet_between(self.first, self.last, level, passed=self.passed)
+        return float(wet.conveyance.sum())
+
+    def path(self, profile: DividedProfile, level: float, ends: tuple[float, float]) -> Path:
+        """Return the water at `level`; `ends` are the outermost stations of the section."""
+        ground, first, last = profile.ground, self.first, self.last
+        start, end = ground.edge(first, first + 1, level), ground.edge(last, last - 1, level)
+        return Path(
+            start,
+            end,
+            level,
+            profile.wet_between(first, last, level, passed=self.passed),
+            bool(start == ends[0] and level > ground.z[first]),
+            bool(end == ends[1] and level > ground.z[last]),
+        )
+
+    def joined(self, other: _Stretch) -> _Stretch:
+        return _Stretch(min(self.first, other.first), max(self.last, other.last), True)
+
+
+def _spill(profile: DividedProfile, stretches: list[_Stretch], level: float, target: float, ends):
+    """Return the paths of water that stands at `level` in some stretches and spills out of them."""
     while True:
-        carried = float(profile.wet_between(first, last, level, passed=grown).conveyance.sum())
-        rest = max(target - carried, 0.0)
-        sides = [
-            side
-            for side in (
-                _Side.beyond(profile, first, -1, level),
-                _Side.beyond(profile, last, 1, level),
-            )
-            if side is not None
-        ]
-        if not sides:
-            return [_path(profile, first, last, level, grown, ends)]
-        share = rest / len(sides)
+        rest = max(target - sum(s.conveyance(profile, level) for s in stretches), 0.0)
+        sides: list[_Side] = []
+        for stretch in stretches:
+            for ridge, step in ((stretch.first, -1), (stretch.last, 1)):
+                side = _Side.beyond(profile, ridge, step, level)
+                known = [*stretches, *(other.whole for other in sides)]
+                if side is not None and not any(side.meets(stretch) for stretch in known):
+                    sides.append(side)
+        share = rest / max(len(sides), 1)
         full = [side for side in sides if share >= side.capacity]
         if not full:
-            main = _path(profile, first, last, level, grown, ends)
-            return [main] + [p for side in sides for p in side.fill(share, ends)]
+            paths = [s.path(profile, level, ends) for s in stretches]
+            return paths + [p for side in sides for p in side.fill(share, ends)]
         for side in full:
             # the hollow stands at the bank's top: from here it is one with the water inside
-            first, last = min(first, side.far), max(last, side.far)
-        grown = True
+            stretches = _joined(stretches, side)
+
+
+def _joined(stretches: list[_Stretch], side: _Side) -> list[_Stretch]:
+    """Return the stretches with a full hollow joined to those it touches; the channel's stays first."""
+    grown, others = side.whole, []
+    position = None
+    for i, stretch in enumerate(stretches):
+        if stretch.first <= grown.last and grown.first <= stretch.last:
+            grown = grown.joined(stretch)
+            position = i if position is None else position
+        else:
+            others.append(stretch)
+    others.insert(position or 0, grown)
+    return others
 
 
 @dataclass(frozen=True)
 class _Side:
-    """Ground beyond a ridge that water has reached, seen from its first hollow."""
+    """Ground beyond a ridge that water has reached, seen from its first hollow.
+
+    `whole` is the hollow when it is full to the ridge, as a stretch of the ground it was seen from.
+    """
 
     profile: DividedProfile
     level: float
     capacity: float
-    far: int
+    whole: _Stretch
 
     @classmethod
     def beyond(cls, profile: DividedProfile, ridge: int, step: int, level: float) -> _Side | None:
@@ -132,28 +155,27 @@ class _Side:
         low = crest + step
         while 0 <= low + step < z.size and z[low + step] <= z[low]:
             low += step
-        if step > 0:
-            part = profile.ground.part(crest, z.size - 1, np.array([low - crest]))
-            shift, bottom = crest, low - crest
-        else:
-            part = profile.ground.part(0, crest, np.array([low]))
-            shift, bottom = 0, low
+        first, last = (crest, z.size - 1) if step > 0 else (0, crest)
+        part = profile.ground.part(first, last, np.array([low - first]))
         hollow = DividedProfile(part, profile.roughness, profile.constant)
-        full = part.pool(bottom, level)
-        far = (full.last if step > 0 else full.first) + shift
+        full = part.pool(low - first, level)
         capacity = float(hollow.wet_between(full.first, full.last, level).conveyance.sum())
-        return cls(hollow, level, capacity, far)
+        reached = sorted((ridge, (full.last if step > 0 else full.first) + first))
+        return cls(hollow, level, capacity, _Stretch(*reached, True))
 
-    def fill(self, target: float, ends) -> list[Path]:
+    def meets(self, other: _Stretch) -> bool:
+        """Whether more than a point of the hollow is water of `other` already."""
+        return self.whole.first < other.last and other.first < self.whole.last
+
+    def fill(self, target: float, ends: tuple[float, float]) -> list[Path]:
         """Return the water beyond the ridge that carries `target`, less than the hollow's capacity."""
         if target <= 0:
             return []
         stages = self.profile.stages_for(target, self.level)
-        if not stages:
-            return []
-        stage, at_bank = stages[-1]
-        if not at_bank:
-            pool = self.profile.ground.pool(int(self.profile.ground.sources[0]), stage)
-            return [_path(self.profile, pool.first, pool.last, stage, False, ends)]
+        # a target within rounding of the capacity fills the hollow
+        stage, at_bank = stages[-1] if stages else (self.level, False)
         pool = self.profile.ground.pool(int(self.profile.ground.sources[0]), stage)
-        return _spill(self.profile, pool.first, pool.last, stage, target, ends)
+        stretch = _Stretch(pool.first, pool.last)
+        if at_bank:
+            return _spill(self.profile, [stretch], stage, target, ends)
+        return [stretch.path(self.profile, stage, ends)]

@@ -16,7 +16,15 @@ from terrain2q.hydraulics.banks import find_banks
 from terrain2q.hydraulics.conveyance import froude_number, velocity_coefficients
 from terrain2q.hydraulics.divided import DividedProfile, Roughness, Wet
 from terrain2q.hydraulics.paths import Path, flow_paths
-from terrain2q.hydraulics.wetted import Ground, check_profile, cut_at, segment_subareas
+from terrain2q.hydraulics.wetted import (
+    Ground,
+    check_profile,
+    cut_at,
+    foot_of,
+    segment_subareas,
+    snapped,
+    without_outer_faces,
+)
 from terrain2q.units import unit_system
 
 Floats = NDArray[np.float64]
@@ -304,8 +312,10 @@ class Section:
 
     @cached_property
     def _cut(self) -> tuple[Floats, Floats, NDArray[np.intp]]:
-        starts = np.array([s.start for s in self.subareas])
-        x, z = cut_at(self.stations, self.elevations, starts[1:])
+        x, z = without_outer_faces(self.stations, self.elevations)
+        # a limit that was worked out may miss a vertical face by rounding, and with it the face's side
+        starts = snapped(np.array([s.start for s in self.subareas]), x)
+        x, z = cut_at(x, z, starts[1:])
         return x, z, segment_subareas(x, z, starts)
 
     @cached_property
@@ -328,14 +338,8 @@ class Section:
         try:
             banks = find_banks(self.stations, self.elevations, origin)
         except (NoAnswerError, ProfileError):
-            at = int(np.argmin(np.abs(x - origin)))
             # no channel to be told apart: downhill from where the stream crosses
-            while True:
-                near = [i for i in (at - 1, at + 1) if 0 <= i < z.size]
-                step = min(near, key=lambda i: z[i])
-                if z[step] >= z[at]:
-                    return np.array([at])
-                at = step
+            return np.array([foot_of(z, int(np.argmin(np.abs(x - origin))))])
         return np.flatnonzero((x >= banks.left) & (x <= banks.right))
 
     @cached_property
@@ -343,13 +347,24 @@ class Section:
         x, z, owner = self._cut
         sources = None
         if self.connected:
-            sources = self._source
-            for start, end in self._reached:
-                inside = np.flatnonzero((x >= start) & (x <= end))
-                sources = np.append(sources, inside[np.argmin(z[inside])])
+            sources = np.append(self._source, self._hollows)
         return DividedProfile(
             Ground(x, z, owner, len(self.subareas), sources), self._roughness, self.system.manning
         )
+
+    @property
+    def _hollows(self) -> NDArray[np.intp]:
+        """Low points of the hollows that water is known to reach from elsewhere."""
+        x, z, _ = self._cut
+        found = []
+        for start, end in self._reached:
+            inside = np.flatnonzero((x >= start) & (x <= end))
+            if not inside.size:
+                # between two points of the profile: water there runs to the lower of the two
+                after = int(np.clip(np.searchsorted(x, start, side="right"), 1, x.size - 1))
+                inside = np.array([after - 1, after])
+            found.append(inside[np.argmin(z[inside])])
+        return np.array(found, dtype=np.intp)
 
     @cached_property
     def _roughness(self) -> Roughness:
@@ -410,13 +425,17 @@ class Section:
         Raises
         ------
         InputError
-            ``station-outside``: no point of the section lies between two stations.
+            ``station-outside``: the section has no ground between two stations.
         """
         wanted = tuple((float(a), float(b)) for a, b in intervals)
         for start, end in wanted:
-            if not ((self._cut[0] >= start) & (self._cut[0] <= end)).any():
+            if not (start <= end and end >= self.stations[0] and start <= self.stations[-1]):
                 raise InputError(
-                    "station-outside", f"no ground between {start:g} and {end:g}", where=self.section_id
+                    "station-outside",
+                    f"there is no ground between {start:g} and {end:g}",
+                    where=self.section_id or "Section",
+                    fix=f"give stations from left to right between {self.stations[0]:g} "
+                    f"and {self.stations[-1]:g}",
                 )
         other = Section.__new__(Section)
         other.__dict__.update(self.__getstate__())
@@ -427,6 +446,9 @@ class Section:
 
     def geometry(self, stage: ArrayLike) -> Geometry:
         """Return the wetted geometry at a stage: all ground that water at this stage has reached.
+
+        At a stage equal to level ground, that ground is still dry; at the top of a bank, the water
+        has not yet passed it.
 
         Parameters
         ----------
@@ -515,6 +537,13 @@ class Section:
 
         Below the top of a bank there is one. At the top the channel stays level while the hollow
         behind fills at its own stage; a hollow may spill outward in turn. The discharges add up.
+
+        Notes
+        -----
+        Where stretches of water share a subarea, or a composite n, or an n that falls with depth, the
+        whole carries more or less than its stretches each by itself: a hollow that is just full then
+        may add more than it carried, and stretches at one level that do not meet count as one. Each
+        then gets its share, so that the discharges still add up to the flow.
         """
         state = self.flow_state(discharge, slope)
         carried = sum(p.conveyance for p in state.paths)
@@ -753,9 +782,10 @@ class Section:
         else:
             level = np.sort(_finite("stages", stages).ravel())
         twice = np.isin(level, tops)
-        level, passed = np.repeat(level, 1 + twice), np.zeros(level.size + twice.sum(), dtype=bool)
-        passed[1:] = level[1:] == level[:-1]
-        passed &= np.isin(level, tops)
+        # the second of two rows is the one after the hollow has filled
+        passed = np.repeat(twice, 1 + twice)
+        passed[np.cumsum(1 + twice) - 1 - twice] = False
+        level = np.repeat(level, 1 + twice)
         wet = self._profile.wet(level)
         if passed.any():
             after = self._profile.wet(level[passed], passed=True)

@@ -79,6 +79,41 @@ def cut_at(x: Floats, z: Floats, limits: Floats) -> tuple[Floats, Floats]:
     return np.insert(x, where, limits), np.insert(z, where, ground)
 
 
+def without_outer_faces(x: Floats, z: Floats) -> tuple[Floats, Floats]:
+    """Return the profile without vertical faces at its ends whose water would stand outside it."""
+    first, last = 0, x.size - 1
+    while x[first + 1] == x[first] and z[first + 1] >= z[first]:
+        first += 1
+    while x[last - 1] == x[last] and z[last - 1] >= z[last]:
+        last -= 1
+    return x[first : last + 1], z[first : last + 1]
+
+
+def snapped(limits: Floats, x: Floats) -> Floats:
+    """Return limits, each moved to the nearest station of the profile where only rounding parts the two."""
+    near = 1e-12 * max(1.0, float(np.abs(x).max()))
+    after = np.clip(np.searchsorted(x, limits), 1, x.size - 1)
+    nearest = np.where(limits - x[after - 1] < x[after] - limits, x[after - 1], x[after])
+    return np.where(np.abs(nearest - limits) <= near, nearest, limits)
+
+
+def foot_of(z: Floats, start: int) -> int:
+    """Return the point where water that runs downhill from point `start` comes to rest."""
+    at = start
+    while True:
+        left = right = at
+        # over level ground to where it falls
+        while left > 0 and z[left - 1] == z[at]:
+            left -= 1
+        while right < z.size - 1 and z[right + 1] == z[at]:
+            right += 1
+        beside = [i for i in (left - 1, right + 1) if 0 <= i < z.size]
+        step = min(beside, key=lambda i: z[i], default=at)
+        if z[step] >= z[at]:
+            return at
+        at = step
+
+
 def segment_subareas(x: Floats, z: Floats, starts: Floats) -> NDArray[np.intp]:
     """Return the subarea of each ground segment of a profile cut at the subareas' limits.
 
@@ -232,9 +267,9 @@ class Ground:
         left = np.flatnonzero(dry[source::-1])
         last = source + int(right[0]) if right.size else z.size - 1
         first = source - int(left[0]) if left.size else 0
-        return Pool(first, last, self._edge(first, first + 1, stage), self._edge(last, last - 1, stage))
+        return Pool(first, last, self.edge(first, first + 1, stage), self.edge(last, last - 1, stage))
 
-    def _edge(self, dry: int, wet: int, stage: float) -> float:
+    def edge(self, dry: int, wet: int, stage: float) -> float:
         """Return the station at which the water's edge lies between a dry point and its wet neighbour."""
         x, z = self.x, self.z
         if not 0 <= wet < z.size or z[dry] <= stage or z[wet] >= stage:

@@ -157,16 +157,6 @@ class _Fine:
         return int(hit) if hit < self.segment.size else self.x.size - 1
 
 
-def _known_hollows(section: Section) -> NDArray[np.intp]:
-    """Low points of the hollows that water is known to reach from elsewhere, in the cut profile."""
-    x, z, _ = section._cut
-    found = []
-    for start, end in section._reached:
-        inside = np.flatnonzero((x >= start) & (x <= end))
-        found.append(inside[np.argmin(z[inside])])
-    return np.array(found, dtype=np.intp)
-
-
 def _sum_by(owner: NDArray[np.intp], count: int, values: Floats) -> Floats:
     """Sum values of shape (widths, segments) over the segments of each subarea."""
     member = np.zeros((owner.size, count))
@@ -437,7 +427,7 @@ class _Cut:
         self.fine = fine = _Fine.of(section, (base, stage))
         ground, rough = section._profile.ground, section._roughness
         count = len(section.subareas)
-        extra = _known_hollows(section)
+        extra = section._hollows
         if not section.connected:
             anyway = np.ones(ground.low.size, dtype=bool)
         elif extra.size:
@@ -600,7 +590,7 @@ class _Cut:
         )
         # a hollow that water is known to reach stays so where the bench has not taken its low point
         kept = []
-        for (start, end), source in zip(own._reached, _known_hollows(own), strict=True):
+        for (start, end), source in zip(own._reached, own._hollows, strict=True):
             at = float(own._cut[0][source])
             if outer_left < at < outer_right and not lowest <= at <= highest:
                 continue
