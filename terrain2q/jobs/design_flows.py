@@ -28,6 +28,9 @@ STEEP = 0.04
 _LEAVES = 0.01
 """Share of the discharge beyond a bank that is worth a finding."""
 
+_APART = 0.01
+"""Stages (m) that are nearer to each other are one stage to a reader; noise in the ground makes many of them."""
+
 _LAYER = "design_stages"
 
 SUBAREA_COLUMNS = (
@@ -235,7 +238,7 @@ def _remark(section: Section, state: FlowState, row: dict, share: float, event: 
         if above:
             top = max(p.stage for p in state.paths if (p.at_left_end if end == "left" else p.at_right_end))
             notes.add("above-section-ends", f"water stands {text(top - height)} above the {end} end", event)
-    if len(state.stages) > 1:
+    if state.stages[-1] - state.stages[0] > _APART:
         listed = ", ".join(level(s) for s in state.stages)
         notes.add("several-stages", f"stages {listed} carry the discharge", event)
     if row["froude"] > 1.0:
