@@ -413,11 +413,65 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "Critical stage and Froude number lean on alpha, and a section like this is hardly one flow.",
             "A fast channel beside a very wide, rough and shallow floodplain.",
         ),
+        "n-outside-range": (
+            "The roughness of a subarea is lower or higher than the range published for its class.",
+            "A reviewer's first question is where n came from; outside the range the table is no answer.",
+            "Pasture with n = 0.06, where Chow (1959) gives 0.025 to 0.05.",
+        ),
+        "n-low-for-slope": (
+            "The channel is steep and its n lies more than two standard errors below the estimate of Jarrett "
+            "(1984, from memory).",
+            "Steep streams lose energy over stones and steps; a low n gives a low stage and a flow that "
+            "is supercritical on paper alone.",
+            "A mountain stream with a slope of 3 % and n = 0.03, where such streams have about 0.09.",
+        ),
+        "shelf-undivided": (
+            "Within one subarea a shelf at least five times as wide as it is deep lies beside water at least "
+            "twice as deep.",
+            "The shelf brings much wetted perimeter and little area, so that the subarea as a whole carries "
+            "too little and the stage comes out too high.",
+            "A floodplain in one subarea with the channel, because both have one land cover.",
+        ),
+        "subarea-sliver": (
+            "A subarea is narrower than 1/200 of the section and holds fewer than two points of the ground.",
+            "It means nothing, and each division adds a little conveyance that is not there.",
+            "A strip of half a metre where the channel polygon and the land cover do not quite meet.",
+        ),
         "surface-tilts": (
             "The water in a hollow of this section stands lower than the water in the channel.",
             "One stage does not describe the section: maps and freeboard behind the bank need the "
             "hollow's own.",
             "Fields behind a levee that fill while the channel is bankfull.",
+        ),
+        "hollow-reached": (
+            "Ground on this section lies lower than the water, and the section's own ridges keep the water out; "
+            "on the map water gets there from up- or downstream. It then counts in the section, at the channel's "
+            "stage, and the stage is solved again.",
+            "A section whose banks hold between two that spill would carry all the flow between its banks and "
+            "stand too high. The message has both answers.",
+            "A levee with a gap: the section crosses it where it is whole.",
+        ),
+        "water-rises-downstream": (
+            "The water's level, as each section gives it, is higher at the lower of two neighbouring sections.",
+            "Each section is worked out by itself, at normal depth. Water does not flow uphill: one of the two is "
+            "out, or the lower one holds the water back and the upper one is really deeper.",
+            "A narrow wooded section below a wide smooth one.",
+        ),
+        "extent-cut-off": (
+            "Between two sections the water reaches the line that joins their ends, and would go on.",
+            "Beyond it nobody has worked out a level, so the map ends there though the water may not. That part "
+            "of the boundary is left out of the boundary's audit.",
+            "A cut line that stops on the floodplain.",
+        ),
+        "extent-without-section": (
+            "A section that has no answer, or that lies on no stream, does not take part in the flood extent.",
+            "The water between its two neighbours is then carried over a longer way.",
+            "A cut line drawn beside the stream.",
+        ),
+        "extent-one-section": (
+            "Water is mapped between sections, and this stream has fewer than two with an answer at the event.",
+            "One section says nothing of the ground up- and downstream of it.",
+            "A tributary with a single cut line.",
         ),
         "elevation-unit-contradicted": (
             "The raster says one unit of elevation, the study another. The study's was used.",
