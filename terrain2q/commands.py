@@ -29,7 +29,7 @@ DONE, WRONG_INPUT, NO_ANSWER, INTERRUPTED = 0, 2, 3, 130
 
 _METAVARS = {
     "text": "TEXT", "number": "NUMBER", "count": "WHOLE NUMBER", "file": "FILE", "folder": "FOLDER",
-    "layer": "FILE[|layer=NAME]", "rasters": "FILE", "events": "EVENT=DISCHARGE",
+    "table": "FILE|NAME", "layer": "FILE[|layer=NAME]", "rasters": "FILE", "events": "EVENT=DISCHARGE",
 }  # fmt: skip
 
 

@@ -23,6 +23,7 @@ from pathlib import Path
 from typing import Any, ClassVar
 
 from terrain2q.errors import InputError, raise_together
+from terrain2q.roughness_tables import table_names, table_path
 from terrain2q.units import ELEVATION_UNITS, SYSTEMS, UnitSystem, unit_system
 
 NEEDED_TO_RUN = ("terrain", "cut_lines", "land_cover", "slope")
@@ -159,8 +160,10 @@ class LandCoverTable(Table):
     path: str | None = key("polygon layer of land cover", "layer", '"data.gpkg|layer=land_cover"')
     class_field: str | None = key("field with the land-cover class", "text", '"class"')
     table: Path | None = key(
-        "CSV with the columns class, n and optionally n_low, n_high, source", "file", '"roughness.csv"'
-    )
+        "CSV with the columns class, n and optionally n_low, n_high, source; or the name of a built-in table "
+        "(`terrain2q tables` lists them)",
+        "table", '"roughness.csv"',
+    )  # fmt: skip
     default_n: float | None = key(
         "roughness n where the cover has a gap; alone, one roughness everywhere",
         "number", "0.05", quantity="roughness",
@@ -308,7 +311,7 @@ class Study:
             table = getattr(self, table_name)
             for name, about in keys_of(cls).items():
                 value = None if table is None else getattr(table, name)
-                if value is not None and about.kind in ("file", "layer", "rasters"):
+                if value is not None and about.kind in ("file", "table", "layer", "rasters"):
                     paths = value if isinstance(value, tuple) else (value,)
                     found[f"{table_name}.{name}"] = tuple(split_layer(str(path))[0] for path in paths)
         return found
@@ -442,6 +445,7 @@ KINDS = {
     "count": _count,
     "flag": _flag,
     "file": _path,
+    "table": _path,
     "folder": _path,
     "layer": _layer,
     "rasters": _rasters,
@@ -517,7 +521,11 @@ def _absolute(path: str, folder: Path) -> str:
 
 def _placed(kind: str, value: Any, folder: Path) -> Any:
     """Return a checked value with its paths made absolute."""
-    if kind in ("file", "folder"):
+    if kind == "table" and str(value) in table_names():
+        # a file of that name beside the study is what its owner means
+        own = Path(_absolute(str(value), folder))
+        return own if own.is_file() else table_path(str(value))
+    if kind in ("file", "table", "folder"):
         return Path(_absolute(str(value), folder))
     if kind == "layer":
         path, layer = split_layer(value)
@@ -529,7 +537,7 @@ def _placed(kind: str, value: Any, folder: Path) -> Any:
 
 def _absent_files(kind: str, value: Any) -> list[str]:
     """Return those of the paths in a placed value that are not there."""
-    if kind == "file":
+    if kind in ("file", "table"):
         return [] if value.is_file() else [str(value)]
     if kind not in ("layer", "rasters"):
         return []
@@ -766,6 +774,8 @@ class _Given:
                 for absent in _absent_files(about.kind, values[name]):
                     what = f"{table}.{name}: no file {absent}"
                     fix = "correct the path; it starts at the current folder" if is_option else ""
+                    if about.kind == "table":
+                        fix = f"correct the path, or name a built-in table: {', '.join(table_names())}"
                     problems.append(InputError("file-missing", what, where=self.place(table, name), fix=fix))
         self.problems += problems
         return None if problems else cls(**values)

@@ -16,7 +16,7 @@ MAY_IMPORT = {
     "units": {"errors"},
     "columns": {"units"},
     "roughness_tables": {"errors"},
-    "study": {"errors", "units"},
+    "study": {"errors", "units", "roughness_tables"},
     "flows": {"errors", "study"},
     "findings_page": {"errors"},
     "start": {"errors", "study", "flows", "ground"},

@@ -13,6 +13,7 @@ from hypothesis import strategies as st
 
 from terrain2q.errors import CATALOGUE, InputError, InputErrors
 from terrain2q.flows import Flow, event_names, flow_for, read_flows
+from terrain2q.roughness_tables import table_path
 from terrain2q.study import (
     DEFAULTED,
     KINDS,
@@ -330,6 +331,25 @@ def test_values_that_are_not_allowed(study_file, old, new, code, said):
     problem = only_problem(study_file(**{old: new}))
     assert problem.code == code
     assert said in problem.what
+
+
+def test_a_built_in_table_by_its_name(study_file, folder):
+    cover = 'path = "cover.gpkg"\nclass_field = "c"\ntable = "chow1959"'
+    study = load_study(study_file(**{"default_n = 0.05": cover}))
+    assert study.land_cover.table == table_path("chow1959")
+    assert str(table_path("chow1959")) in study.inputs()["land_cover.table"]
+    named = load_study(study_file(**{"default_n = 0.05": cover}), {"land_cover.table": "kalyanapu2009"})
+    assert named.land_cover.table == table_path("kalyanapu2009")
+    # a file of that name is the user's own
+    (folder / "chow1959").write_text("class,n\n", encoding="utf-8")
+    assert load_study(study_file(**{"default_n = 0.05": cover})).land_cover.table == folder / "chow1959"
+
+
+def test_a_table_that_is_neither_file_nor_built_in(study_file):
+    cover = 'path = "cover.gpkg"\nclass_field = "c"\ntable = "chow"'
+    problem = only_problem(study_file(**{"default_n = 0.05": cover}))
+    assert problem.code == "file-missing"
+    assert "chow1959" in problem.fix
 
 
 @pytest.mark.parametrize(
