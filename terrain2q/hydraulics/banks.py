@@ -93,7 +93,8 @@ def find_banks(stations: ArrayLike, elevations: ArrayLike, origin: float | None 
          indices in the sense of Riley (1972).
 
        A pair is passed over when the ground outside of a top that is not the section's end climbs at
-       0.8 or more of the slope inside (:math:`c / 0.4 \ge 0.8\, g / 0.2`): that bank has not ended yet.
+       more than 0.8 of the slope inside (:math:`c / 0.4 > 0.8\, g / 0.2`): that bank has not ended yet;
+       and when the ground inside of such a top is no lower than the top (:math:`g \le 0`).
     3. *Score.* The pair with the highest
 
        .. math:: \ln\frac{h_l h_r}{W} - \ln^2\frac{h_l}{h_r} + \sum_{l, r} \left(2 \min(g, 0.7)
@@ -242,7 +243,7 @@ def _side(ground: _Ground, start: int, step: int) -> _Side | None:
 
 def _bench(d: Floats, h: Floats, highest: Floats, k: Floats, share: float) -> Floats:
     """Return how far outward of each top the ground stays below the top and a share of its height."""
-    limit = (1 + share) * h[k]
+    limit = (1 + share) * h[k] * (1 - _SAME)  # ground just as high has been reached, in any unit
     beyond = np.searchsorted(highest, limit)
     last = np.minimum(beyond, d.size - 1)
     climb = h[last] - h[last - 1]
@@ -269,8 +270,12 @@ def _terms(ground: _Ground, pit: tuple[int, int]):
     gain_right = 1 - ((to_right - ground.area(xr - inner)) / inner - base) / hr
     climb_left = ((to_left - ground.area(xl - outer)) / outer - base) / hl - 1
     climb_right = ((ground.area(xr + outer) - to_right) / outer - base) / hr - 1
-    allowed &= (climb_left / _OUTER < _KNEE * gain_left / _INNER) | left.is_end[:, None]
-    allowed &= (climb_right / _OUTER < _KNEE * gain_right / _INNER) | right.is_end[None, :]
+    for gain, climb, is_end in (
+        (gain_left, climb_left, left.is_end[:, None]),
+        (gain_right, climb_right, right.is_end[None, :]),
+    ):
+        # a share of rounding either way, so that a unit of length does not decide an even case
+        allowed &= is_end | ((gain > _SAME) & (climb / _OUTER < _KNEE * gain / _INNER + _SAME))
     terms = (
         np.log(hl * hr / width),
         np.log(hl / hr) ** 2,
