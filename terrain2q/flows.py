@@ -5,15 +5,18 @@ from __future__ import annotations
 import csv
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 from terrain2q.errors import InputError, raise_together
 from terrain2q.study import Study, nearest
 
 NEEDED = ("event", "discharge")
-COLUMNS = (*NEEDED, "probability", "stream", "section", "distance")
+COLUMNS = (*NEEDED, "probability", "stream", "section", "distance", "area")
 """The columns of a table of flows."""
+
+AREA_RATIOS = (0.5, 1.5)
+"""Ratios of drainage areas within which a discharge is usually carried over (common practice)."""
 
 
 @dataclass(frozen=True)
@@ -32,6 +35,11 @@ class Flow:
         The stream or the section it applies to; empty for all.
     distance : float or None
         Stream distance (m) at which it takes effect, downstream of there; None for the whole stream.
+    area : float or None
+        Drainage area of the place the discharge holds for, in the unit of the sections' areas; None where
+        it is not given.
+    exponent : float or None
+        With which the discharge goes with drainage area; None where it is not carried over.
     """
 
     event: str
@@ -40,6 +48,28 @@ class Flow:
     stream: str = ""
     section: str = ""
     distance: float | None = None
+    area: float | None = None
+    exponent: float | None = None
+
+    @property
+    def carried_over(self) -> bool:
+        """Whether the discharge is to be carried over to a section's own drainage area."""
+        return self.area is not None and self.exponent is not None
+
+    def over(self, area: float) -> Flow:
+        """Return the flow carried over to another drainage area: discharge · (area / own area)^exponent.
+
+        Parameters
+        ----------
+        area : float
+            In the unit of :attr:`area`.
+
+        Examples
+        --------
+        >>> Flow("10-year", 100.0, area=20.0, exponent=0.5).over(5.0).discharge
+        50.0
+        """
+        return replace(self, discharge=self.discharge * (area / self.area) ** self.exponent, area=area)
 
 
 def read_flows(study: Study) -> list[Flow]:
@@ -57,7 +87,17 @@ def read_flows(study: Study) -> list[Flow]:
         return []
     flow_factor = 1.0 / study.system.per_si("flow")
     if study.flows.path is not None:
-        return _read_csv(study.flows.path, flow_factor, 1.0 / study.system.per_si("length"))
+        flows = _read_csv(study.flows.path, flow_factor, 1.0 / study.system.per_si("length"))
+        if study.flows.area_field is None:
+            return flows
+        if all(flow.area is None for flow in flows):
+            raise InputError(
+                "field-missing",
+                "flows.area_field is given, and the table of flows has no areas",
+                where=str(study.flows.path),
+                fix="add a column area with the drainage area each discharge holds for",
+            )
+        return [replace(flow, exponent=study.flows.exponent) for flow in flows]
     events = study.flows.events or {}
     return [Flow(event, discharge * flow_factor) for event, discharge in events.items()]
 
@@ -221,7 +261,12 @@ def _read_row(
         if section:
             what = "a distance and a section are both given"
             raise InputError("key-conflict", what, where=where, fix="keep the section or the distance")
-    return Flow(event, discharge * flow_factor, probability, stream, section, distance)
+    area = None
+    if text := row.get("area", ""):
+        area = _number(text, "area", where)
+        if area <= 0.0:
+            raise InputError("number-not-positive", f'area of "{event}" is {text}', where=where)
+    return Flow(event, discharge * flow_factor, probability, stream, section, distance, area)
 
 
 def _number(text: str, name: str, where: str) -> float:

@@ -19,9 +19,13 @@ from terrain2q.flows import read_flows
 from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
 from terrain2q.ground.layers import read_layer, require_field
+from terrain2q.ground.low_line import LowLines, streams_near, turn_streams
+from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
 from terrain2q.jobs.design_flows import SectionAnswer, answer_sections
-from terrain2q.jobs.sections import BuiltSection, SectionInputs, Slopes, build_sections
+from terrain2q.jobs.sections import BuiltSection, SectionInputs, build_sections
+from terrain2q.jobs.slopes import FieldSlopes, OneSlope, Slopes, StreamSlopes
+from terrain2q.jobs.submerged import Submerged
 from terrain2q.output.geopackage import RESULT_NAME, check_output, write_geopackage
 from terrain2q.output.layers import make_layers
 from terrain2q.output.run_record import run_record, write_run_record
@@ -245,9 +249,12 @@ def _read_inputs(study: Study) -> _Inputs:
             id_field=study.streams.id_field,
             repeated_ids=True,
         )
-    slopes = Slopes(study.slope.value, study.slope.field)
-    if slopes.field is not None:
-        require_field(cut_lines, slopes.field, key="[slope] field", where=study.cut_lines.path)
+        streams, turned = turn_streams(
+            streams, terrain, study.in_si("streams.snap"), study.system, streams_near(cut_lines, streams)
+        )
+        findings += turned
+    for key_name, name in _cut_line_fields(study):
+        require_field(cut_lines, name, key=key_name, where=study.cut_lines.path)
     cover = _read_cover(study, terrain)
     channel = None
     if study.channel.path is not None:
@@ -257,6 +264,9 @@ def _read_inputs(study: Study) -> _Inputs:
     findings += cover.findings
     lines, line_findings = orient_cut_lines(cut_lines, streams, terrain.crs, study.system)
     findings += line_findings
+    slopes = _slopes(study, lines, streams, terrain)
+    if isinstance(slopes, StreamSlopes):
+        findings += slopes.findings
     sections = SectionInputs(
         terrain,
         cover,
@@ -266,8 +276,52 @@ def _read_inputs(study: Study) -> _Inputs:
         slopes,
         study.in_si("terrain.spacing"),
         study.system,
+        _submerged(study),
+        None if study.flows is None else study.flows.area_field,
     )
     return _Inputs(lines, sections, out_crs, findings)
+
+
+def _cut_line_fields(study: Study) -> list[tuple[str, str]]:
+    """Return key and name of every field that the cut lines must have."""
+    named = [
+        ("[slope] field", study.slope.field),
+        ("[submerged] area_field", study.submerged and study.submerged.area_field),
+        ("[flows] area_field", study.flows and study.flows.area_field),
+    ]
+    return [(key_name, name) for key_name, name in named if name]
+
+
+def _slopes(study: Study, lines: Sequence[CutLine], streams, terrain: Terrain) -> Slopes:
+    if study.slope.value is not None:
+        return OneSlope(study.slope.value)
+    if study.slope.field is not None:
+        return FieldSlopes(study.slope.field)
+    if streams is None:
+        raise InputError(
+            "key-missing",
+            "a slope from the stream needs stream lines",
+            where="[slope] from",
+            fix="add [streams] with path, or give value or field under [slope]",
+        )
+    network = StreamNetwork(streams, terrain.crs, study.system)
+    low_lines = LowLines(network, terrain, study.in_si("streams.snap"), study.system)
+    cell = max(terrain.cell_size)
+    return StreamSlopes(lines, low_lines, study.in_si("slope.window"), cell, study.system)
+
+
+def _submerged(study: Study) -> Submerged | None:
+    table = study.submerged
+    if table is None:
+        return None
+    return Submerged(
+        table.shape,
+        study.in_si("submerged.depth"),
+        study.in_si("submerged.coefficient"),
+        table.exponent,
+        table.area_field,
+        study.in_si("submerged.survey_flow"),
+    )
 
 
 def _read_cover(study: Study, terrain: Terrain) -> Cover | UniformCover:

@@ -13,6 +13,7 @@ To add a key, add a field. To add a table, add a class and a field of :class:`St
 from __future__ import annotations
 
 import difflib
+import keyword
 import math
 import os
 import re
@@ -77,11 +78,12 @@ class Table:
     """Pairs of keys of which only one may be given."""
 
     def __post_init__(self) -> None:
-        given = {f.name: getattr(self, f.name) for f in fields(self) if getattr(self, f.name) != f.default}
+        given = {_key_name(f.name): getattr(self, f.name) for f in fields(self)}
+        given = {name: value for name, value in given.items() if value != default_of(type(self), name)}
         values, problems = _read_table(type(self), given, lambda name: f"[{_table_name(type(self))}] {name}")
         raise_together(problems)
         for name, value in values.items():
-            object.__setattr__(self, name, value)
+            object.__setattr__(self, attribute_of(name), value)
 
     @classmethod
     def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
@@ -89,14 +91,29 @@ class Table:
         return iter(())
 
 
+def attribute_of(name: str) -> str:
+    """Return the attribute that holds a key: its name, with an underscore where it is a word of Python.
+
+    Examples
+    --------
+    >>> attribute_of("window"), attribute_of("from")
+    ('window', 'from_')
+    """
+    return f"{name}_" if keyword.iskeyword(name) else name
+
+
+def _key_name(attribute: str) -> str:
+    return attribute.removesuffix("_")
+
+
 def keys_of(table: type[Table]) -> dict[str, Key]:
     """Return the keys of a table's class, by name, in order."""
-    return {f.name: f.metadata["key"] for f in fields(table)}
+    return {_key_name(f.name): f.metadata["key"] for f in fields(table)}
 
 
 def default_of(table: type[Table], name: str) -> object:
     """Return the default of a key; None where there is none."""
-    return next(f.default for f in fields(table) if f.name == name)
+    return next(f.default for f in fields(table) if f.name == attribute_of(name))
 
 
 @dataclass(frozen=True)
@@ -143,6 +160,11 @@ class StreamsTable(Table):
 
     path: str = key("line layer of streams", "layer", '"data.gpkg|layer=streams"', needed=True)
     id_field: str | None = key("field with the stream's name or id", "text", '"name"')
+    snap: float | None = key(
+        "how far beside the stream its low line may lie, for the stream's slope and direction; "
+        "5 cells, 50 ft (15 m) at least, where absent",
+        "number", "50.0", quantity="length",
+    )  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -196,41 +218,96 @@ class ChannelTable(Table):
 
 
 @dataclass(frozen=True)
+class SubmergedTable(Table):
+    """What lies below the water that the terrain shows in the channel."""
+
+    either = (("depth", "coefficient"), ("depth", "survey_flow"), ("coefficient", "survey_flow"))
+    depth: float | None = key(
+        "greatest depth of the bed below the water surface", "number", "3.0", quantity="length"
+    )
+    coefficient: float | None = key(
+        "a in depth = a · area^b, for depth in the study's length unit and the drainage area of area_field",
+        "number", "1.2", quantity="length",
+    )  # fmt: skip
+    exponent: float | None = key("b in depth = a · area^b", "number", "0.3", quantity="ratio")
+    area_field: str | None = key("field of the cut lines with the drainage area", "text", '"area"')
+    survey_flow: float | None = key(
+        "discharge on the day the terrain was surveyed; the bed is put where the water below the surface "
+        "carries it at normal depth",
+        "number", "25.0", quantity="flow",
+    )  # fmt: skip
+    shape: str = key(
+        "shape of the bed below the water: rectangle, triangle or parabola",
+        "choice", '"parabola"', choices=("rectangle", "triangle", "parabola"), default="parabola",
+    )  # fmt: skip
+
+    @classmethod
+    def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
+        """Yield what is missing for a depth."""
+        together = ("coefficient", "exponent", "area_field")
+        if any(name in given for name in together):
+            yield from ((name,) for name in together if name not in given)
+        elif not {"depth", "survey_flow"}.intersection(given):
+            yield "depth", "coefficient", "survey_flow"
+
+
+@dataclass(frozen=True)
 class SlopeTable(Table):
     """The energy slope, which normal flow takes as the slope of the stream."""
 
-    either = (("value", "field"),)
+    either = (("value", "field"), ("value", "from"), ("field", "from"))
     value: float | None = key(
         "one slope for every section, fall over run", "number", "0.002", quantity="ratio"
     )
     field: str | None = key("field of the cut lines with the slope", "text", '"slope"')
+    from_: str | None = key(
+        "stream takes the slope from the ground along the stream", "choice", '"stream"', choices=("stream",)
+    )
+    window: float | None = key(
+        "length along the stream over which its slope is taken, in the middle of which the section lies; "
+        "1000 ft (305 m), 60 cells at least, where absent",
+        "number", "1000.0", quantity="length",
+    )  # fmt: skip
 
     @classmethod
     def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
         """Yield what is missing for a slope."""
         if not given:
-            yield "value", "field"
+            yield "value", "field", "from"
+        elif "window" in given and "from" not in given:
+            yield ("from",)
 
 
 @dataclass(frozen=True)
 class FlowsTable(Table):
     """Design flows."""
 
-    either = (("path", "events"),)
+    either = (("path", "events"), ("events", "area_field"))
     path: Path | None = key(
-        "CSV with the columns event, discharge and optionally probability, stream, section, distance",
+        "CSV with the columns event, discharge and optionally probability, stream, section, distance, area",
         "file", '"flows.csv"',
     )  # fmt: skip
     events: Mapping[str, float] | None = key(
         "discharge of each event, the same for every section",
         "events", '{ "10-year" = 850, "100-year" = 2400 }', quantity="flow",
     )  # fmt: skip
+    area_field: str | None = key(
+        "field of the cut lines with the drainage area, in the unit of the flows' column area; discharges of "
+        "rows with an area are carried over to the section",
+        "text", '"area"',
+    )  # fmt: skip
+    exponent: float | None = key(
+        "b in discharge · (area of the section / area of the row)^b", "number", "0.7", quantity="ratio"
+    )
 
     @classmethod
     def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
         """Yield what is missing for a flow."""
-        if not given:
+        if not {"path", "events"}.intersection(given):
             yield "path", "events"
+        together = ("area_field", "exponent")
+        if any(name in given for name in together):
+            yield from ((name,) for name in together if name not in given)
 
 
 @dataclass(frozen=True)
@@ -277,6 +354,7 @@ class Study:
     cut_lines: CutLinesTable | None = _table(CutLinesTable)
     land_cover: LandCoverTable | None = _table(LandCoverTable)
     channel: ChannelTable = _table(ChannelTable, when_absent="defaults")
+    submerged: SubmergedTable | None = _table(SubmergedTable)
     slope: SlopeTable | None = _table(SlopeTable)
     flows: FlowsTable | None = _table(FlowsTable)
     rating: RatingTable = _table(RatingTable, when_absent="defaults")
@@ -299,7 +377,7 @@ class Study:
         """
         table_name, _, key_name = name.partition(".")
         table = getattr(self, table_name)
-        value = None if table is None else getattr(table, key_name)
+        value = None if table is None else getattr(table, attribute_of(key_name))
         if value is None:
             return None
         return float(value) / self.system.per_si(keys_of(TABLES[table_name])[key_name].quantity or "ratio")
@@ -310,7 +388,7 @@ class Study:
         for table_name, cls in TABLES.items():
             table = getattr(self, table_name)
             for name, about in keys_of(cls).items():
-                value = None if table is None else getattr(table, name)
+                value = None if table is None else getattr(table, attribute_of(name))
                 if value is not None and about.kind in ("file", "table", "layer", "rasters"):
                     paths = value if isinstance(value, tuple) else (value,)
                     found[f"{table_name}.{name}"] = tuple(split_layer(str(path))[0] for path in paths)
@@ -322,7 +400,7 @@ class Study:
         for table_name, cls in TABLES.items():
             table = getattr(self, table_name)
             if table is not None:
-                values = {name: getattr(table, name) for name in keys_of(cls)}
+                values = {name: getattr(table, attribute_of(name)) for name in keys_of(cls)}
                 tables[table_name] = {name: _plain(v) for name, v in values.items() if v is not None}
         return tables
 
@@ -778,7 +856,7 @@ class _Given:
                         fix = f"correct the path, or name a built-in table: {', '.join(table_names())}"
                     problems.append(InputError("file-missing", what, where=self.place(table, name), fix=fix))
         self.problems += problems
-        return None if problems else cls(**values)
+        return None if problems else cls(**{attribute_of(name): value for name, value in values.items()})
 
 
 def load_study(

@@ -161,7 +161,7 @@ def test_other_jobs_need_other_tables(study_file):
     assert {p.what for p in problems_of(path)} == {
         "[cut_lines] has no path",
         "[land_cover] has no path and no default_n",
-        "[slope] has no value and no field",
+        "[slope] has no value and no field and no from",
     }
 
 
@@ -240,7 +240,7 @@ def test_a_table_that_is_a_value(study_file):
     assert (problem.code, problem.what) == ("value-not-allowed", "terrain is not a table of keys")
 
 
-@pytest.mark.parametrize("name", ["rmse", "every", "composite", "from", "window", "report", "sheets"])
+@pytest.mark.parametrize("name", ["rmse", "every", "composite", "report", "sheets"])
 def test_what_is_not_built_is_not_offered(name):
     assert not any(name in keys_of(cls) for cls in TABLES.values())
 
@@ -257,7 +257,7 @@ def test_a_needed_key_is_missing(study_file):
 @pytest.mark.parametrize(
     ("table", "keys", "missing"),
     [
-        ("slope", "", "no value and no field"),
+        ("slope", "", "no value and no field and no from"),
         ("land_cover", "", "no path and no default_n"),
         ("land_cover", 'path = "cover.gpkg"\ntable = "n.csv"', "no class_field"),
         ("land_cover", 'path = "cover.gpkg"\nclass_field = "c"\ndefault_n = 0.1', "no table"),

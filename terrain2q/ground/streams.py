@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections import defaultdict
+from collections.abc import Collection
 from functools import cached_property
 
 import geopandas
@@ -191,6 +192,7 @@ class StreamNetwork:
         source, target = np.asarray(chain_from, dtype=int), np.asarray(chain_to, dtype=int)
         self.begins = into[source] == 0
         self.ends = out_of[target] == 0
+        self._source, self._target = source, target
         self._measure()
         self.chain_start = self._distances(source, target, self._ground_length, place)
 
@@ -282,6 +284,28 @@ class StreamNetwork:
                 )
                 self.findings.append(Finding("stream-gap", message, "streams", str(name)).at(*place[sink]))
         return bridges
+
+    def next_chain(self, chain: int, downstream: bool, but: Collection[int] = ()) -> int | None:
+        """Return the chain of the same stream that goes on from one end of a chain, None where it ends.
+
+        Where several do, the one on the longest way: upstream the one whose spring is furthest, downstream
+        the longest.
+
+        Parameters
+        ----------
+        chain : int
+        downstream : bool
+        but : collection of int
+            Chains that do not count.
+        """
+        if downstream:
+            found = np.flatnonzero(self._source == self._target[chain])
+            size = self._ground_length[found]
+        else:
+            found = np.flatnonzero(self._target == self._source[chain])
+            size = self.chain_start[found] + self._ground_length[found]
+        order = found[np.argsort(-size, kind="stable")]
+        return next((int(other) for other in order if other != chain and other not in but), None)
 
     @cached_property
     def stream_names(self) -> frozenset[str]:

@@ -8,7 +8,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from terrain2q.errors import DOUBTFUL, FAILED, Finding, Terrain2qError
-from terrain2q.flows import Flow, event_names, flow_for
+from terrain2q.flows import AREA_RATIOS, Flow, event_names, flow_for
 from terrain2q.ground.streams import length_text
 from terrain2q.hydraulics.section import CHANNEL, FlowState, Section, hydraulic_columns
 from terrain2q.jobs.sections import BuiltSection
@@ -158,10 +158,35 @@ def answer_section(
             notes.add("flow-missing", "no discharge is given for it", event)
             answers.append(EventAnswer(event, FAILED))
             continue
+        before = notes.doubtful
+        flow = _carried_over(flow, built, notes)
         hollows = (reached or {}).get(event)
         known = section.reached(hollows) if hollows else section
-        answers.append(_answer_event(known, built, flow, doubtful, notes))
+        answers.append(_answer_event(known, built, flow, doubtful or notes.doubtful > before, notes))
     return SectionAnswer(built, rating, tuple(answers), notes.findings())
+
+
+def _carried_over(flow: Flow, built: BuiltSection, notes: _Notes) -> Flow:
+    """Return the flow at the section's own drainage area, where both areas are known."""
+    area = built.drainage_area
+    if not flow.carried_over or area is None:
+        return flow
+    if not np.isfinite(area):
+        notes.add(
+            "drainage-area-missing",
+            "the discharge was taken as given, as the section has no area",
+            flow.event,
+        )
+        return flow
+    ratio = area / flow.area
+    if not AREA_RATIOS[0] <= ratio <= AREA_RATIOS[1]:
+        notes.add(
+            "drainage-area-far",
+            f"the discharge was carried over from a drainage area of {flow.area:g} to one of {area:g}, "
+            f"{ratio:.2g} times as large",
+            flow.event,
+        )
+    return flow.over(area)
 
 
 def _answer_event(

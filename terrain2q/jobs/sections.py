@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -14,44 +14,14 @@ from terrain2q.ground.streams import length_text
 from terrain2q.ground.terrain import Profile, Terrain
 from terrain2q.hydraulics.banks import find_banks
 from terrain2q.hydraulics.section import Section, Subarea
+from terrain2q.jobs.slopes import Slopes
+from terrain2q.jobs.submerged import Submerged, drainage_area, with_bed
 from terrain2q.units import UnitSystem
 
 BRIDGED_CELLS = 5
 """A gap in the terrain up to this many cells wide is bridged (common practice: a few cells)."""
 
 _LAYER = "sections"
-
-
-@dataclass(frozen=True)
-class Slopes:
-    """The slope of each section: one value, or a field of the cut lines.
-
-    Attributes
-    ----------
-    value : float or None
-    field : str or None
-    """
-
-    value: float | None = None
-    field: str | None = None
-
-    def of(self, line: CutLine) -> tuple[float, str, Finding | None]:
-        """Return the slope of a cut line (NaN where there is none), its source, and a finding."""
-        if self.field is None:
-            return float(self.value), "slope.value", None
-        source = f"field {self.field}"
-        given = line.attributes.get(self.field)
-        try:
-            slope = float(given)
-        except (TypeError, ValueError):
-            slope = float("nan")
-        if not np.isfinite(slope):
-            message = f"the slope field {self.field!r} holds {given!r}"
-            return float("nan"), source, Finding("slope-missing", message, "cut_lines", line.section_id)
-        if slope <= 0:
-            message = f"the slope field {self.field!r} holds {slope:g}"
-            return float("nan"), source, Finding("slope-not-positive", message, "cut_lines", line.section_id)
-        return slope, source, None
 
 
 @dataclass(frozen=True)
@@ -62,7 +32,8 @@ class BuiltSection:
     ----------
     line : CutLine
     profile : Profile or None
-        The usable part of the sampled ground, without gaps; None where there is none.
+        The usable part of the sampled ground, without gaps, with the bed that was put below water; None
+        where there is none.
     section : Section or None
         None where the section failed.
     specs : tuple of SubareaSpec
@@ -71,6 +42,8 @@ class BuiltSection:
         NaN where there is none.
     findings : tuple of Finding
         About this section.
+    drainage_area : float or None
+        In the unit of its field; NaN where the field holds none, None where no field is named.
     """
 
     line: CutLine
@@ -80,6 +53,7 @@ class BuiltSection:
     slope: float = float("nan")
     slope_source: str = ""
     findings: tuple[Finding, ...] = field(default=())
+    drainage_area: float | None = None
 
     @property
     def section_id(self) -> str:
@@ -105,6 +79,10 @@ class SectionInputs:
         Between stations, m; one cell where None.
     units : UnitSystem
         For lengths in messages.
+    submerged : Submerged or None
+        What lies below water; None where nothing is said about it.
+    area_field : str or None
+        Field of the cut lines with the drainage area to which discharges are carried over.
     """
 
     terrain: Terrain
@@ -115,6 +93,8 @@ class SectionInputs:
     slopes: Slopes
     spacing: float | None
     units: UnitSystem
+    submerged: Submerged | None = None
+    area_field: str | None = None
 
 
 def build_sections(lines: Sequence[CutLine], inputs: SectionInputs, progress=None) -> list[BuiltSection]:
@@ -170,9 +150,10 @@ def build_sections(lines: Sequence[CutLine], inputs: SectionInputs, progress=Non
             built[i] = BuiltSection(lines[i], profile)
         if progress is not None and (done % 200 == 0 or done == len(kept)):
             progress(done, len(kept), "sections")
+    areas = [None if inputs.area_field is None else drainage_area(b.line, inputs.area_field) for b in built]
     return [
-        BuiltSection(b.line, b.profile, b.section, b.specs, b.slope, b.slope_source, tuple(notes[i]))
-        for i, b in enumerate(built)
+        replace(b, findings=tuple(notes[i]), drainage_area=area)
+        for i, (b, area) in enumerate(zip(built, areas, strict=True))
     ]
 
 
@@ -255,9 +236,9 @@ def _at(line: CutLine, profile: Profile, finding: Finding) -> Finding:
 
 
 def _build(line, profile, crossing, cover, interval, inputs: SectionInputs, notes) -> BuiltSection:
-    slope, source, missing = inputs.slopes.of(line)
-    if missing is not None:
-        notes.append(_at(line, profile, missing))
+    answer = inputs.slopes.of(line)
+    slope, source = answer.slope, answer.source
+    notes += [_at(line, profile, finding) for finding in answer.findings]
     failed = any(f.severity == "failed" for f in notes)
     if failed:
         return BuiltSection(line, profile, slope=slope, slope_source=source)
@@ -276,9 +257,11 @@ def _build(line, profile, crossing, cover, interval, inputs: SectionInputs, note
             )
     divided = interval is not None
     specs = split_by_zone(cover, interval, inputs.channel_n if divided else None)
+    profile, found = with_bed(line, profile, interval, specs, slope, inputs.submerged, inputs.units)
+    notes += found
     section = Section(
-        station,
-        z,
+        profile.stations,
+        profile.elevations,
         [Subarea(s.start, s.end, s.n, s.land_class, s.zone if divided else "") for s in specs],
         origin=origin,
         section_id=line.section_id,

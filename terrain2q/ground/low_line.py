@@ -1,0 +1,636 @@
+"""The low line of the ground along a stream: snapped to the lowest path, freed of fills and pits, turned.
+
+A stream line is seldom drawn where the terrain has the channel, and a terrain has things in the channel that
+are not bed: road fills over culverts, pits, noise. Four steps bring out the bed:
+
+1. *Lowest path.* At each cell's length along the line the ground is sampled square to it, out to the snap
+   distance. The path of least cost through these rows is the low line: a place costs what it lies above the
+   lowest place of its row (a metre at most), and a step sideways costs :data:`SIDE_COST`. It serves
+   elevations only; stream distances stay those of the drawn line.
+2. *Humps.* Water never flows uphill, so ground that stands above both what lies upstream and what lies
+   downstream of it is no bed. The opening of the profile (the highest, over all windows of
+   :data:`LONGEST_FILL` that hold a place, of the lowest ground in the window) leaves ground that falls all
+   the way as it is and cuts off every hump shorter than the window. What stands clearly above the opening
+   is a hump, with a margin for its toes. It is taken out, and nothing is put in its place but a straight
+   bridge for plots, so a hump cannot flatten the stretch upstream of it as filling or carving would.
+3. *Pits.* The same upside down, over :data:`LONGEST_PIT`.
+4. *Noise* stays in; :func:`terrain2q.ground.stream_slope.robust_slope` takes account of it.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import geopandas
+import numpy as np
+import shapely
+from scipy.ndimage import maximum_filter1d, median_filter, minimum_filter1d
+
+from terrain2q.errors import Finding
+from terrain2q.ground.stream_slope import robust_slope
+from terrain2q.ground.streams import StreamNetwork, feature_ids, length_text
+from terrain2q.ground.terrain import POINTS_AT_ONCE, Terrain
+from terrain2q.units import SI, UnitSystem
+
+SNAP_CELLS, SNAP_LEAST = 5.0, 15.0
+"""The snap distance where none is given: so many cells, and so many metres at least."""
+
+SIDE_COST = 0.2
+"""Metres of height that the lowest path must gain for each cell sideways: twice usual lidar noise."""
+
+HIGH_COST = 1.0
+"""Metres above the lowest place of its row from which a place is not dearer still."""
+
+LONGEST_FILL = 100.0
+"""Metres along the stream; longer humps are left, as they are more likely a wrong stream line."""
+
+LONGEST_PIT = 30.0
+
+CLEAR = 0.3
+"""Metres above (below) the opening (closing) from which ground may be a hump (pit)."""
+
+NOTABLE_CELLS, NOTABLE_GAIN = 2.0, 0.15
+"""A shift is worth a finding when it is so many cells and the ground is so many metres lower there."""
+
+LEAST_FALL = 0.3
+"""Metres of fall below which the ground does not tell which way a stream flows."""
+
+CLEAR_FALL, AGREEING = 2.0, 0.9
+"""Metres of fall, and share of pairs of points that agree, that tell it even where the profile is bent."""
+
+_LAYER = "streams"
+
+
+@dataclass(frozen=True)
+class Hump:
+    """A stretch that was taken out of a low line: a fill where `height` is above zero, else a pit.
+
+    Attributes
+    ----------
+    start, end : float
+        Stream distances, m.
+    height : float
+        Greatest height above (below, negative) the bridge, m.
+    x, y : float
+        Its highest or lowest place.
+    """
+
+    start: float
+    end: float
+    height: float
+    x: float
+    y: float
+
+
+@dataclass(frozen=True, eq=False)
+class LowLine:
+    """The ground along one chain of a stream, at even distances; arrays of shape (n,).
+
+    Attributes
+    ----------
+    stream : str
+    distance : ndarray
+        Along the drawn line from the stream's upper end, m ground.
+    x, y : ndarray
+        Places on the lowest path, in the terrain's CRS.
+    drawn, low : ndarray
+        Ground under the drawn line and on the lowest path, m; NaN in gaps.
+    bed : ndarray
+        The low line with humps and pits bridged, noise left in; NaN where the ground is not known at all.
+    usable : ndarray of bool
+        Where `bed` is ground and not a bridge.
+    shift : ndarray
+        Ground distance from the drawn line, m, positive to the left.
+    humps : tuple of Hump
+    """
+
+    stream: str
+    distance: np.ndarray
+    x: np.ndarray
+    y: np.ndarray
+    drawn: np.ndarray
+    low: np.ndarray
+    bed: np.ndarray
+    usable: np.ndarray
+    shift: np.ndarray
+    humps: tuple[Hump, ...] = field(default=())
+
+    @property
+    def spacing(self) -> float:
+        """Distance between points, m."""
+        return float(self.distance[1] - self.distance[0]) if self.distance.size > 1 else 0.0
+
+
+# ---- arrays ---------------------------------------------------------------------------------------
+
+
+def lowest_path(rows: np.ndarray, side_cost: float = SIDE_COST) -> np.ndarray:
+    """Return the column of the path of least cost through rows of ground.
+
+    Parameters
+    ----------
+    rows : ndarray, shape (n, m)
+        Ground at m places square to the stream, m odd with the drawn line in the middle; NaN for gaps.
+    side_cost : float
+        Cost of moving by one column from one row to the next, m. A path moves by one column at most.
+
+    Returns
+    -------
+    ndarray of int, shape (n,)
+    """
+    count, places = rows.shape
+    if not count:
+        return np.empty(0, dtype=int)
+    known = np.isfinite(rows)
+    least = np.where(known, rows, np.inf).min(axis=1, keepdims=True)
+    cost = np.where(known, np.minimum(rows - np.where(np.isfinite(least), least, 0.0), HIGH_COST), HIGH_COST)
+    # On level ground the path stays at the drawn line.
+    cost += 1e-3 * np.abs(np.arange(places) - places // 2)
+    came = np.zeros((count, places), dtype=np.int8)
+    total = cost[0]
+    choices = np.full((3, places), np.inf)
+    for row in range(1, count):
+        choices[1] = total
+        choices[0, 1:] = total[:-1] + side_cost
+        choices[2, :-1] = total[1:] + side_cost
+        best = choices.argmin(axis=0)
+        came[row] = best - 1
+        total = cost[row] + choices[best, np.arange(places)]
+    path = np.empty(count, dtype=int)
+    path[-1] = total.argmin()
+    for row in range(count - 1, 0, -1):
+        path[row - 1] = path[row] + came[row, path[row]]
+    return path
+
+
+def opening(values: np.ndarray, window: int) -> np.ndarray:
+    """Return the highest, over all windows that hold a place, of the lowest value in the window.
+
+    Values that never rise, or never fall, stay as they are, to the ends: a window may reach past them.
+
+    Parameters
+    ----------
+    values : ndarray, shape (n,)
+    window : int
+        Number of values.
+
+    Examples
+    --------
+    >>> opening(np.array([5.0, 4.0, 9.0, 3.0, 2.0]), 3)
+    array([5., 4., 4., 3., 2.])
+    """
+    window = 2 * (window // 2) + 1
+    padded = np.pad(values, window, constant_values=np.inf)
+    lowest = minimum_filter1d(padded, window, mode="nearest")
+    lowest[~np.isfinite(lowest)] = -np.inf
+    return maximum_filter1d(lowest, window, mode="nearest")[window:-window]
+
+
+def find_humps(elevations: np.ndarray, spacing: float, longest: float) -> list[tuple[int, int]]:
+    """Return humps of a profile along a stream: ground above what lies on both sides of it.
+
+    Parameters
+    ----------
+    elevations : ndarray, shape (n,)
+        Without NaN, at even distances, m.
+    spacing : float
+        m.
+    longest : float
+        Longest hump, m.
+
+    Returns
+    -------
+    list of (first, last)
+        Points, both included, with the toes.
+    """
+    count = elevations.size
+    if count < 5 or spacing <= 0:
+        return []
+    smooth = median_filter(elevations, 5, mode="nearest")
+    above = smooth - opening(smooth, max(round(longest / spacing), 4))
+    middle = np.median(above)
+    limit = max(CLEAR, middle + 4.0 * 1.4826 * np.median(np.abs(above - middle)))
+    edges = np.flatnonzero(np.diff(np.concatenate([[0], (above > limit).astype(np.int8), [0]])))
+    found: list[tuple[int, int]] = []
+    for first, end in zip(edges[::2].tolist(), edges[1::2].tolist(), strict=True):
+        # The toes lie lower than the limit, and the downstream toe lower than the upstream one.
+        margin = max(2, round(3.0 / spacing), round(0.25 * (end - first)))
+        first, last = max(first - margin, 0), min(end - 1 + margin, count - 1)
+        if found and first <= found[-1][1] + 1:
+            found[-1] = (found[-1][0], last)
+        else:
+            found.append((first, last))
+    return found
+
+
+def free_of_humps(
+    elevations: np.ndarray, spacing: float
+) -> tuple[np.ndarray, np.ndarray, list[tuple[int, int]]]:
+    """Return the profile with fills and pits bridged, where it is ground, and the stretches taken out.
+
+    Parameters
+    ----------
+    elevations : ndarray, shape (n,)
+        m, NaN for gaps.
+    spacing : float
+        m.
+
+    Returns
+    -------
+    bed : ndarray, shape (n,)
+        NaN only before the first and after the last known ground.
+    usable : ndarray of bool, shape (n,)
+    stretches : list of (first, last)
+        Points, both included.
+    """
+    known = np.isfinite(elevations)
+    usable = known.copy()
+    bed = elevations.copy()
+    if known.sum() < 2:
+        return bed, usable, []
+    first, last = np.flatnonzero(known)[[0, -1]]
+    place = np.arange(elevations.size)
+
+    def bridge() -> None:
+        # From the middle of a few points on each side, so that the noise of one point does not tilt it.
+        inside = np.flatnonzero(usable)
+        level = median_filter(elevations[inside], 5, mode="nearest")
+        gone = ~usable & (place >= first) & (place <= last)
+        bed[gone] = np.interp(place[gone], inside, level)
+
+    bridge()
+    stretches: list[tuple[int, int]] = []
+    for sign, longest in ((1.0, LONGEST_FILL), (-1.0, LONGEST_PIT)):
+        found = find_humps(sign * bed[first : last + 1], spacing, longest)
+        for begin, end in found:
+            begin, end = begin + int(first), end + int(first)
+            # A stretch that would leave nothing at one end is no hump between two sides.
+            if usable[:begin].any() and usable[end + 1 :].any():
+                usable[begin : end + 1] = False
+                stretches.append((begin, end))
+        bridge()
+    return bed, usable, sorted(stretches)
+
+
+# ---- on the terrain -------------------------------------------------------------------------------
+
+
+def snap_distance(terrain: Terrain, given: float | None) -> float:
+    """Return the snap distance in metres: as given, else :data:`SNAP_CELLS`, :data:`SNAP_LEAST` at least."""
+    return float(given) if given is not None else max(SNAP_CELLS * max(terrain.cell_size), SNAP_LEAST)
+
+
+def low_line(line, terrain: Terrain, snap: float, stream: str = "", start: float = 0.0) -> LowLine | None:
+    """Return the low line along a stream line.
+
+    Parameters
+    ----------
+    line : shapely.LineString
+        In the terrain's CRS.
+    terrain : Terrain
+    snap : float
+        How far the lowest path may lie from the line, m ground.
+    stream : str
+        Its name.
+    start : float
+        Stream distance of the line's first point, m.
+
+    Returns
+    -------
+    LowLine or None
+        None where the line has no length.
+    """
+    profile = terrain.sample([line])[0]
+    if len(profile) < 2:
+        return None
+    cell = min(terrain.cell_size)
+    length = float(profile.stations[-1])
+    station = np.linspace(0.0, length, max(round(length / cell), 1) + 1)
+    x, y = profile.place_at(station)
+    # Ground metres in a map unit, east and north; a cell is small enough to take them as they are.
+    ones, none = np.ones_like(x), np.zeros_like(x)
+    unit = cell / terrain.distances.step_lengths(x[:1], y[:1], ones[:1], none[:1])[0]
+    east = terrain.distances.step_lengths(x, y, unit * ones, none) / unit
+    north = terrain.distances.step_lengths(x, y, none, unit * ones) / unit
+    # The course over about the snap distance, so that a kink does not swing the row.
+    reach = max(snap, 2.0 * cell)
+    x0, y0 = profile.place_at(np.maximum(station - reach, 0.0))
+    x1, y1 = profile.place_at(np.minimum(station + reach, length))
+    course = np.stack([(x1 - x0) * east, (y1 - y0) * north])
+    size = np.hypot(*course)
+    course = np.where(size > 0.0, course / np.where(size > 0.0, size, 1.0), [[1.0], [0.0]])
+    sides = round(snap / cell)
+    offsets = np.arange(-sides, sides + 1) * cell
+    left_x, left_y = -course[1] / east, course[0] / north
+    rows = np.empty((station.size, offsets.size))
+    batch = max(POINTS_AT_ONCE // (8 * offsets.size), 1)
+    for at in range(0, station.size, batch):
+        part = slice(at, at + batch)
+        at_x = x[part, None] + offsets * left_x[part, None]
+        at_y = y[part, None] + offsets * left_y[part, None]
+        rows[part] = terrain.elevations(at_x.ravel(), at_y.ravel()).reshape(at_x.shape)
+    path = lowest_path(rows)
+    shift = offsets[path]
+    low = rows[np.arange(station.size), path]
+    spacing = length / max(station.size - 1, 1)
+    bed, usable, stretches = free_of_humps(low, spacing)
+    low_x, low_y = x + shift * left_x, y + shift * left_y
+    humps = []
+    for first, last in stretches:
+        over = low[first : last + 1] - bed[first : last + 1]
+        if not np.isfinite(over).any():
+            continue
+        top = first + int(np.nanargmax(np.abs(over)))
+        humps.append(
+            Hump(
+                start + float(station[first]),
+                start + float(station[last]),
+                float(low[top] - bed[top]),
+                float(low_x[top]),
+                float(low_y[top]),
+            )
+        )
+    return LowLine(
+        stream, start + station, low_x, low_y, rows[:, sides], low, bed, usable, shift, tuple(humps)
+    )  # fmt: skip
+
+
+def shift_finding(line: LowLine, snap: float, cell: float, units: UnitSystem) -> Finding | None:
+    """Return a finding where the lowest path lies well beside the drawn line and well below it."""
+    gain = line.drawn - line.low
+    beside = (np.abs(line.shift) >= NOTABLE_CELLS * cell * (1 - 1e-9)) & (gain > NOTABLE_GAIN)
+    # The path leaves a fill by its side, which says nothing about the stream line.
+    for hump in line.humps:
+        beside &= (line.distance < hump.start - snap) | (line.distance > hump.end + snap)
+    if not beside.any():
+        return None
+    far = int(np.argmax(np.where(beside, np.abs(line.shift), 0.0)))
+    at_limit = np.abs(line.shift[far]) > snap - 0.75 * cell
+    message = (
+        f"the low line lies up to {length_text(abs(line.shift[far]), units)} beside stream {line.stream}, "
+        f"{length_text(gain[far], units)} lower than the ground under it there, and is off it over "
+        f"{100 * beside.mean():.0f} % of {length_text(line.distance[-1] - line.distance[0], units)}"
+    )
+    if at_limit:
+        message += f"; that is as far as snap, {length_text(snap, units)}, lets it go"
+    return Finding("stream-shifted", message, _LAYER, line.stream).at(line.x[far], line.y[far])
+
+
+# ---- direction ------------------------------------------------------------------------------------
+
+
+def streams_near(cut_lines: geopandas.GeoDataFrame, streams: geopandas.GeoDataFrame) -> set[str]:
+    """Return the ids of the streams that cut lines touch, and of those nearest to lines that touch none."""
+    names = np.asarray(feature_ids(streams), dtype=object)
+
+    def sound(frame):
+        shapes = frame.geometry.to_numpy()
+        xy, owner = shapely.get_coordinates(shapes, return_index=True)
+        good = ~shapely.is_missing(shapes) & ~shapely.is_empty(shapes)
+        good[owner[~np.isfinite(xy).all(axis=1)]] = False
+        return np.flatnonzero(good), shapes[good]
+
+    rows, shapes = sound(streams)
+    _, lines = sound(cut_lines)
+    if not len(shapes) or not len(lines):
+        return set()
+    tree = shapely.STRtree(shapes)
+    line, touched = tree.query(lines, predicate="intersects")
+    near = set(names[rows[touched]])
+    missing = np.setdiff1d(np.arange(len(lines)), line)
+    if missing.size:
+        near |= set(names[rows[tree.nearest(lines[missing])]])
+    return near
+
+
+def turn_streams(
+    streams: geopandas.GeoDataFrame,
+    terrain: Terrain,
+    snap: float | None = None,
+    units: UnitSystem = SI,
+    names: set[str] | None = None,
+) -> tuple[geopandas.GeoDataFrame, list[Finding]]:
+    """Return the streams with those turned that are drawn upstream, told by the ground.
+
+    Parts of one id that join end to end, whichever way each is drawn, are judged together. They are turned
+    only where the 98 % interval of the slope over their whole length is against the drawn direction, with a
+    fall of :data:`LEAST_FALL` in all, or where the fall is so clear (:data:`CLEAR_FALL`, :data:`AGREEING`)
+    that a bend in the profile cannot hide it. Else the drawn direction stays.
+
+    Parameters
+    ----------
+    streams : geopandas.GeoDataFrame
+        Lines in the terrain's CRS; rows that share an id are one stream.
+    terrain : Terrain
+    snap : float, optional
+        See :func:`snap_distance`, m.
+    units : UnitSystem
+        For lengths in findings.
+    names : set of str, optional
+        The streams to look at; all where None.
+
+    Returns
+    -------
+    streams : geopandas.GeoDataFrame
+        The same rows in the same order.
+    findings : list of Finding
+        Codes ``stream-turned`` and ``stream-direction-uncertain``.
+    """
+    ids = np.asarray(feature_ids(streams), dtype=object)
+    shapes = streams.geometry.to_numpy().copy()
+    reach = snap_distance(terrain, snap)
+    findings: list[Finding] = []
+    turned = False
+    xy, owner = shapely.get_coordinates(shapes, return_index=True)
+    good = ~shapely.is_missing(shapes)
+    good[owner[~np.isfinite(xy).all(axis=1)]] = False
+    for name in dict.fromkeys(ids[good].tolist()):
+        if names is not None and name not in names:
+            continue
+        rows = np.flatnonzero(good & (ids == name))
+        parts, row = shapely.get_parts(shapes[rows], return_index=True)
+        parts = shapely.remove_repeated_points(shapely.force_2d(parts))
+        has_length = shapely.length(parts) > 0.0
+        parts, row = parts[has_length], rows[row[has_length]]
+        if not len(parts):
+            continue
+        wholes = shapely.get_parts(shapely.line_merge(shapely.multilinestrings(parts)))
+        member, along = _members(parts, wholes)
+        for number, whole in enumerate(wholes):
+            mine = np.flatnonzero(member == number)
+            verdict = _fall(whole, terrain, reach, str(name))
+            if not mine.size or verdict is None:
+                continue
+            fall, sure, length = verdict
+            against = mine[along[mine] != np.sign(fall)] if fall else mine[:0]
+            middle = whole.interpolate(0.5, normalized=True)
+            lost = f"{length_text(abs(fall) * length, units)} over {length_text(length, units)}"
+            if not sure:
+                message = f"the ground along stream {name} falls {lost}, which does not tell its direction"
+                findings.append(
+                    Finding("stream-direction-uncertain", message, _LAYER, str(name)).at(middle.x, middle.y)
+                )
+            elif against.size:
+                turned = True
+                for part in against:
+                    parts[part] = shapely.reverse(parts[part])
+                whose = "" if against.size == mine.size else f"{against.size} of {mine.size} parts of "
+                message = f"{whose}stream {name} ran upstream: the ground falls {lost} the other way"
+                findings.append(Finding("stream-turned", message, _LAYER, str(name)).at(middle.x, middle.y))
+        if turned:
+            for one in np.unique(row):
+                own = parts[row == one]
+                shapes[one] = own[0] if own.size == 1 else shapely.multilinestrings(own)
+    if not turned:
+        return streams, findings
+    return streams.set_geometry(geopandas.GeoSeries(shapes, index=streams.index, crs=streams.crs)), findings
+
+
+def _members(parts: np.ndarray, wholes: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return for each part the whole it belongs to, and +1 where it runs as the whole does, else -1."""
+    member = np.full(len(parts), -1)
+    along = np.zeros(len(parts))
+    tree = shapely.STRtree(wholes)
+    for number, part in enumerate(parts):
+        a, b = shapely.get_coordinates(part)[:2]
+        segment = shapely.LineString([a, b])
+        for candidate in np.sort(tree.query(segment)):
+            xy = shapely.get_coordinates(wholes[candidate])
+            one = (xy[:-1] == a).all(axis=1) & (xy[1:] == b).all(axis=1)
+            other = (xy[:-1] == b).all(axis=1) & (xy[1:] == a).all(axis=1)
+            if one.any() or other.any():
+                member[number], along[number] = candidate, 1.0 if one.any() else -1.0
+                break
+    return member, along
+
+
+def _fall(whole, terrain: Terrain, snap: float, name: str) -> tuple[float, bool, float] | None:
+    """Return slope, whether its sign is sure, and length; None where too little ground is known."""
+    line = low_line(whole, terrain, snap, name)
+    if line is None:
+        return None
+    estimate = robust_slope(line.distance[line.usable], line.bed[line.usable], confidence=0.98)
+    if estimate is None:
+        return None
+    fall = abs(estimate.slope) * estimate.length
+    sure = fall >= LEAST_FALL and not estimate.low <= 0.0 <= estimate.high
+    sure |= fall >= CLEAR_FALL and estimate.agreeing >= AGREEING
+    return estimate.slope, bool(sure), estimate.length
+
+
+class LowLines:
+    """The low lines of streams, made chain by chain when first asked for.
+
+    Parameters
+    ----------
+    network : StreamNetwork
+        Turned downstream, in the terrain's CRS.
+    terrain : Terrain
+    snap : float, optional
+        See :func:`snap_distance`, m.
+    units : UnitSystem
+        For lengths in findings.
+
+    Attributes
+    ----------
+    network : StreamNetwork
+    snap : float
+        m.
+    findings : list of Finding
+        Codes ``stream-shifted`` and ``stream-fill``, of the chains made so far.
+    """
+
+    def __init__(
+        self, network: StreamNetwork, terrain: Terrain, snap: float | None = None, units: UnitSystem = SI
+    ) -> None:
+        self.network, self._terrain, self._units = network, terrain, units
+        self.snap = snap_distance(terrain, snap)
+        self.findings: list[Finding] = []
+        self._made: dict[int, LowLine | None] = {}
+
+    def of(self, chain: int) -> LowLine | None:
+        """Return the low line of one chain; None where it has none."""
+        if chain not in self._made:
+            made = low_line(
+                self.network.chains[chain],
+                self._terrain,
+                self.snap,
+                str(self.network.chain_stream[chain]),
+                float(self.network.chain_start[chain]),
+            )
+            self._made[chain] = made
+            if made is not None:
+                self._note(made)
+        return self._made[chain]
+
+    def made(self) -> list[LowLine]:
+        """Return the low lines made so far, by stream and distance."""
+        lines = [line for line in self._made.values() if line is not None]
+        return sorted(lines, key=lambda line: (line.stream, line.distance[0]))
+
+    def _note(self, line: LowLine) -> None:
+        shifted = shift_finding(line, self.snap, min(self._terrain.cell_size), self._units)
+        if shifted is not None:
+            self.findings.append(shifted)
+        for hump in line.humps:
+            if hump.height <= 0.0:
+                continue
+            high, begin, end = (
+                length_text(value, self._units) for value in (hump.height, hump.start, hump.end)
+            )
+            message = (
+                f"a fill {high} high across stream {line.stream} from stream distance {begin} to {end} "
+                "was taken out of its low line"
+            )
+            self.findings.append(Finding("stream-fill", message, _LAYER, line.stream).at(hump.x, hump.y))
+
+    def about(self, chain: int, at: float, window: float) -> tuple[np.ndarray, np.ndarray, float]:
+        """Return the usable bed in a window about a place, over the joins of the stream's parts.
+
+        Parameters
+        ----------
+        chain : int
+        at : float
+            Stream distance on this chain, m.
+        window : float
+            Length, m. A window that would pass an end of the stream is moved inward.
+
+        Returns
+        -------
+        distance, bed : ndarray, shape (n,)
+            Distances run on from those of this chain; none where the ground is not known.
+        length : float
+            Of the window: shorter than asked for where the stream is shorter.
+        """
+        line = self.of(chain)
+        if line is None:
+            return np.empty(0), np.empty(0), 0.0
+        distance, bed = [line.distance[line.usable]], [line.bed[line.usable]]
+        begin, end = float(line.distance[0]), float(line.distance[-1])
+        used = {chain}
+        for downstream in (False, True):
+            here = chain
+            # A window moved inward from one end may need a whole window on the other side.
+            while (end < at + window) if downstream else (begin > at - window):
+                following = self.network.next_chain(here, downstream, used)
+                other = None if following is None else self.of(following)
+                if other is None:
+                    break
+                used.add(following)
+                size = float(other.distance[-1] - other.distance[0])
+                offset = (end if downstream else begin - size) - float(other.distance[0])
+                distance.append(other.distance[other.usable] + offset)
+                bed.append(other.bed[other.usable])
+                begin, end = (begin, end + size) if downstream else (begin - size, end)
+                here = following
+        distance, bed = np.concatenate(distance), np.concatenate(bed)
+        order = np.argsort(distance, kind="stable")
+        distance, bed = distance[order], bed[order]
+        if not distance.size:
+            return distance, bed, 0.0
+        # The stream ends, for this purpose, where its known ground ends.
+        begin, end = max(begin, float(distance[0])), min(end, float(distance[-1]))
+        low = min(max(at - 0.5 * window, begin), max(end - window, begin))
+        high = min(low + window, end)
+        inside = (distance >= low - 1e-6) & (distance <= high + 1e-6)
+        return distance[inside], bed[inside], high - low

@@ -1,0 +1,144 @@
+"""What lies below the water that the terrain shows in a section's channel."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from terrain2q.errors import Finding, NoAnswerError
+from terrain2q.ground.cover import SubareaSpec
+from terrain2q.ground.cut_lines import CutLine
+from terrain2q.ground.streams import length_text
+from terrain2q.ground.terrain import Profile
+from terrain2q.hydraulics.submerged import Water, deepened, depth_for_flow, find_water
+from terrain2q.units import UnitSystem
+
+_LAYER = "sections"
+
+
+@dataclass(frozen=True)
+class Submerged:
+    """How deep the bed lies below the water: one of three ways, in SI.
+
+    Attributes
+    ----------
+    shape : str
+        ``rectangle``, ``triangle`` or ``parabola``.
+    depth : float or None
+        The same everywhere, m.
+    coefficient, exponent : float or None
+        Depth [m] = coefficient · area^exponent.
+    area_field : str or None
+        Field of the cut lines with the area.
+    survey_flow : float or None
+        Discharge on the survey day, m³/s.
+    """
+
+    shape: str = "parabola"
+    depth: float | None = None
+    coefficient: float | None = None
+    exponent: float | None = None
+    area_field: str | None = None
+    survey_flow: float | None = None
+
+    def depth_at(
+        self, line: CutLine, water: Water, n: float, slope: float, units: UnitSystem
+    ) -> tuple[float, str, Finding | None]:
+        """Return the depth below the water [m], how it was had, and a finding; NaN where it cannot be had."""
+        if self.depth is not None:
+            return self.depth, "as stated", None
+        if self.coefficient is not None:
+            area = drainage_area(line, self.area_field)
+            if not np.isfinite(area):
+                given = line.attributes.get(self.area_field)
+                message = f"the field {self.area_field!r} holds {given!r}: the depth below water is not known"
+                return np.nan, "", Finding("drainage-area-missing", message, "cut_lines", line.section_id)
+            return self.coefficient * area**self.exponent, f"by drainage area {area:g}", None
+        try:
+            depth = depth_for_flow(water.width, self.survey_flow, n, slope, self.shape)
+        except NoAnswerError as error:
+            return np.nan, error.what, None
+        flow = f"{self.survey_flow * units.per_si('flow'):.3g} {units.symbol('flow')}"
+        return depth, f"which carries the survey day's {flow} at n {n:.3g}", None
+
+
+def drainage_area(line: CutLine, name: str) -> float:
+    """Return the drainage area of a cut line in the unit of its field; NaN where it holds none above zero."""
+    try:
+        area = float(line.attributes.get(name))
+    except (TypeError, ValueError):
+        return float("nan")
+    return area if np.isfinite(area) and area > 0.0 else float("nan")
+
+
+def with_bed(
+    line: CutLine,
+    profile: Profile,
+    channel: tuple[float, float] | None,
+    specs: Sequence[SubareaSpec],
+    slope: float,
+    submerged: Submerged | None,
+    units: UnitSystem,
+) -> tuple[Profile, list[Finding]]:
+    """Return a section's profile with a bed where the terrain shows water, and what is to know about it.
+
+    Parameters
+    ----------
+    line : CutLine
+    profile : Profile
+        Without gaps.
+    channel : (float, float) or None
+        Tops of bank.
+    specs : sequence of SubareaSpec
+        The subareas, for the roughness below the water.
+    slope : float
+    submerged : Submerged or None
+        None where the study does not say; the profile then stays as it is.
+    units : UnitSystem
+        For messages.
+    """
+    water = find_water(profile.stations, profile.elevations, channel)
+    if water is None:
+        return profile, []
+    middle = int(np.argmin(np.abs(profile.stations - 0.5 * (water.start + water.end))))
+
+    def shown(metres: float) -> str:
+        return length_text(metres, units)
+
+    level = f"{water.surface * units.per_si('length'):.2f} {units.symbol('length')}"
+    where = f"from station {shown(water.start)} to {shown(water.end)} at {level}"
+
+    def found(code: str, message: str) -> Finding:
+        return Finding(code, message, _LAYER, line.section_id).at(profile.x[middle], profile.y[middle])
+
+    unknown = (
+        f"the ground is level within {shown(water.within)} {where}, as water is; it was taken for the bed"
+    )
+    if submerged is None:
+        return profile, [found("water-in-channel", f"{unknown}, so the stage is on the high side")]
+    n = _roughness(specs, water)
+    depth, how, missing = submerged.depth_at(line, water, n, slope, units)
+    if not np.isfinite(depth):
+        why = f" ({how})" if how else ""
+        notes = [found("water-in-channel", f"{unknown}, so the stage is on the high side{why}")]
+        if missing is not None:
+            notes.append(missing.at(profile.x[middle], profile.y[middle]))
+        return profile, notes
+    station, elevation = deepened(profile.stations, profile.elevations, water, depth, submerged.shape)
+    x, y = profile.place_at(station)
+    vertices = profile.stations[profile.is_vertex]
+    bed = Profile(station, elevation, x, y, np.isin(station, vertices))
+    message = (
+        f"water {where}: its bed was put {shown(depth)} below it, {how}, as a {submerged.shape}; "
+        "z of the section is this bed there"
+    )
+    return bed, [found("bed-below-water", message)]
+
+
+def _roughness(specs: Sequence[SubareaSpec], water: Water) -> float:
+    """Mean n between the water's edges, by width."""
+    width = np.array([max(min(s.end, water.end) - max(s.start, water.start), 0.0) for s in specs])
+    n = np.array([s.n for s in specs])
+    return float((width * n).sum() / width.sum())
