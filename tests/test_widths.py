@@ -5,6 +5,7 @@ from itertools import pairwise
 import numpy as np
 import pytest
 from _random_sections import mirrored
+from _random_sections import section as random_section
 from scipy.optimize import brentq
 
 from terrain2q.errors import InputError, NoAnswerError
@@ -157,7 +158,7 @@ def test_bench_passes_and_a_narrower_one_does_not(kind):
     random = np.random.default_rng(7)
     wide = 0
     for section, bench, target, (stage, base, sides, side_slope) in answered(
-        random, 500 if not kind else 60, **kind
+        random, 500 if not kind else 40, **kind
     ):
         assert bench.section.discharge(stage, SLOPE) >= target * (1 - 1e-9)
         if not bench.at_jump:
@@ -169,13 +170,13 @@ def test_bench_passes_and_a_narrower_one_does_not(kind):
         wide += 1
         narrower, _ = _Cut(section, stage, base, 0.045, sides, side_slope).cut_section(0.99 * bench.width)
         assert narrower.discharge(stage, SLOPE) < target
-        if wide % 4:
+        if wide % 6:
             continue
         curve = bench_curve(
             section, bench.width * np.linspace(0, 0.999, 400), stage, SLOPE, base, 0.045, sides, side_slope
         )
         assert (curve < target).all()
-    assert wide > 0.7 * (500 if not kind else 60)
+    assert wide > 0.7 * (500 if not kind else 40)
 
 
 def test_ground_is_cut_as_described():
@@ -255,6 +256,51 @@ def test_hollow_under_the_floor_stays_as_it_is():
     assert z[(x >= 20) & (x <= 25)].min() == 1.0
     cut = (5 - 2) * (bench.width - 5 - 0.6) + 0.5 * 0.6 * 3
     assert bench.excavation == pytest.approx(cut, rel=1e-9)
+
+
+@pytest.mark.parametrize("composite", ["divide", "horton", "pavlovskii"])
+@pytest.mark.parametrize("sides", ["both", "left", "right"])
+def test_base_at_the_lowest_ground_takes_the_channel_over(sides, composite):
+    # the low point is the foot of a vertical face: nothing of the old channel is left on the bench's side
+    section = Section(
+        [0, 20, 30, 40, 40, 50, 60, 90],
+        [6, 4, 3, 0, 1, 2, 4, 6],
+        [
+            Subarea(0, 32, 0.05, zone="left floodplain"),
+            Subarea(32, 40, 0.03, zone="channel"),
+            Subarea(40, 48, 0.04, zone="channel"),
+            Subarea(48, 90, 0.06, zone="right floodplain"),
+        ],
+        composite=composite,
+    )
+    for width in (0.5, 3.0, 12.0, 25.0):
+        curve = bench_curve(section, width, 3.5, SLOPE, 0.0, 0.045, sides, 1.0)
+        made, stretches = _Cut(section, 3.5, 0.0, 0.045, sides, 1.0).cut_section(width)
+        assert made.discharge(3.5, SLOPE) == pytest.approx(float(curve), rel=1e-12)
+        assert made.lowest_ground == 0.0
+        assert {s.start for s in stretches} == {40.0}
+
+
+def test_stages_and_bases_at_points_of_the_ground():
+    # level ground, ridge tops and vertical faces at the very heights asked about
+    random = np.random.default_rng(13)
+    found = 0
+    while found < 60:
+        section = random_section(random, int(random.integers(8, 30)), 4, zones=True, digits=0)
+        heights = np.unique(section.elevations)
+        heights = heights[heights >= section.lowest_ground]
+        slots = (np.diff(section.stations)[1:] == 0) & (np.diff(section.stations)[:-1] == 0)
+        if heights.size < 3 or slots.any():  # a slot without width holds no water and divides nothing
+            continue
+        base, stage = np.sort(random.choice(heights, 2, replace=False))
+        cut = _Cut(section, stage, base, 0.045, "both", float(random.choice([0, 1, 4])))
+        if cut.widest == 0 or section.discharge(stage, SLOPE) == 0:
+            continue
+        found += 1
+        for width in random.uniform(0.01, 0.99, 3) * cut.widest:
+            made, _ = cut.cut_section(width)
+            expected = float(cut.question().conveyance(width)) * SLOPE**0.5
+            assert made.discharge(stage, SLOPE) == pytest.approx(expected, rel=1e-9)
 
 
 def test_enough_already_is_no_bench():
@@ -399,7 +445,7 @@ def between_walls(section: Section, width: float, stage: float) -> Section:
 def test_walls_pass_the_flow_and_narrower_ones_do_not():
     random = np.random.default_rng(23)
     found = 0
-    for trial in range(300):
+    for trial in range(160):
         section = natural(random, connected=False, faces=False, varying=trial % 3 == 0)
         low = section.lowest_ground
         stage = low + random.uniform(1.0, 5.0)
@@ -416,7 +462,7 @@ def test_walls_pass_the_flow_and_narrower_ones_do_not():
         for share in (0.3, 0.6, 0.9):
             assert between_walls(section, share * width, stage).discharge(stage, SLOPE) < target
         found += 1
-    assert found > 200
+    assert found > 120
 
 
 def test_opening_meets_the_discharge_where_it_does_not_jump():

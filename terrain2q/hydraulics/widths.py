@@ -36,8 +36,8 @@ _NUDGE = 1e-9
 _SPLIT, _LEVELS = 32, 4
 """An interval in which discharge may turn is split 32-fold, four times over, before its ends alone decide."""
 
-_LOOKED_INTO = 4
-"""Where no width suffices, the greatest discharge is sought inside so many intervals."""
+_LOOKED_INTO, _ZOOMED_INTO = 256, 4
+"""Where no width suffices, the greatest discharge is sought inside so many intervals, closely in so many."""
 
 
 @dataclass(frozen=True)
@@ -283,16 +283,21 @@ class _Question:
         if not self.low.size:
             return 0.0
         best = float(max(self.from_low.max(), self.from_high.max()))
-        for i in np.argsort(-self.bound, kind="stable")[:_LOOKED_INTO]:
-            if self.bound[i] <= best:
-                break
-            low, high = self.low[i], self.high[i]
+        open_ = np.flatnonzero(self.bound > best)
+        open_ = open_[np.argsort(-self.bound[open_], kind="stable")][:_LOOKED_INTO]
+        if not open_.size:
+            return best
+        at = np.linspace(self.low[open_], self.high[open_], 9, axis=1)
+        tops = self.carried(self.parts(at.ravel())).reshape(at.shape)
+        for i in np.argsort(-tops.max(axis=1), kind="stable")[:_ZOOMED_INTO]:
+            k = int(tops[i].argmax())
+            low, high = at[i, max(k - 1, 0)], at[i, min(k + 1, 8)]
             for _ in range(_LEVELS):
-                at = np.linspace(low, high, _SPLIT + 1)
-                carried = self.carried(self.parts(at))
+                near = np.linspace(low, high, _SPLIT + 1)
+                carried = self.carried(self.parts(near))
                 k = int(carried.argmax())
                 best = max(best, float(carried[k]))
-                low, high = at[max(k - 1, 0)], at[min(k + 1, _SPLIT)]
+                low, high = near[max(k - 1, 0)], near[min(k + 1, _SPLIT)]
         return best
 
 
@@ -383,8 +388,8 @@ class _Side:
         depth = np.zeros(w.size)
         left_depth = np.zeros_like(left_area)
         if varies:
-            lowest = np.where(w[:, None] > self.d[:-1], np.minimum(inner, floor), base).min(axis=1)
-            depth = h - lowest
+            under = np.where(w[:, None] > self.d[:-1], np.minimum(inner, floor), base)
+            depth = h - under.min(axis=1, initial=base)
             deep = np.where(wet, h - np.minimum(start, self.z[1:]), 0.0)
             left_depth = _deepest(self.owner, self.count, deep)
         return (area, perimeter, depth), (left_area, left_perimeter, left_depth)
@@ -396,7 +401,7 @@ class _Side:
         # rounding must not put the slope's end behind the floor's, nor beyond the next point
         nearest = min if self.step > 0 else max
         outer = nearest(self.bank + self.step * max(float(end), width), float(self.station[j]))
-        floor_end = nearest(self.bank + self.step * width, outer)
+        floor_end = nearest(self.bank + self.step * float(width), outer)
         if self.side_slope == 0.0:
             floor_end = outer
         inside = np.flatnonzero((self.d < width) & (self.z <= self.base))
@@ -439,7 +444,19 @@ class _Cut:
         self.right = self._side(1, side_slope, anyway, count) if sides in ("both", "right") else None
         first = self._bank(-1) if sides in ("both", "left") else 0
         last = self._bank(1) if sides in ("both", "right") else fine.x.size - 1
+        # where the bank is the low point itself the bench is the channel there, and the face beyond it is the
+        # bench's: that of the deeper side
+        self.takes_low_point = tuple(
+            bool(side is not None and bank == fine.source(section, which))
+            for side, bank, which in ((self.left, first, 0), (self.right, last, -1))
+        )
         self.core = (first, last)
+        self.inner_face = [0.0, 0.0]
+        if self.takes_low_point[0]:
+            first = self._past_face(0, first, last, 1)
+        if self.takes_low_point[1]:
+            last = self._past_face(1, last, first, -1)
+        self._counted = (first, last)
         self.roughness = self._tiled(rough, count)
         self._core = self._core_parts(ground.threshold[fine.segment] < stage, count)
 
@@ -451,8 +468,21 @@ class _Cut:
             i += step
         return i
 
+    def _past_face(self, side: int, i: int, end: int, step: int) -> int:
+        """Return the point beyond a face that rises inward from the bank, and give the face to the bench."""
+        x, z = self.fine.x, self.fine.z
+        while i != end and x[i + step] == x[i] and z[i + step] > z[i]:
+            self.inner_face[side] += float(min(z[i + step], self.stage) - min(z[i], self.stage))
+            i += step
+        return i
+
     def _side(self, step: int, side_slope: float, anyway, count: int) -> _Side:
         return _Side(self.fine, self._bank(step), step, self.stage, self.base, side_slope, anyway, count)
+
+    @property
+    def _zoned(self) -> bool:
+        """Whether the section tells its channel apart."""
+        return any(s.zone == "channel" for s in self.section.subareas)
 
     @property
     def used(self) -> list[_Side]:
@@ -461,7 +491,8 @@ class _Cut:
     @property
     def widest(self) -> float:
         """The greatest width whose outer slope still meets the ground within the section."""
-        return min(s.widest if s.d.size > 1 else 0.0 for s in self.used)
+        found = min(s.widest if s.d.size > 1 else 0.0 for s in self.used)
+        return found if found > _NUDGE * self.section.length else 0.0
 
     def _tiled(self, rough: Roughness, count: int) -> Roughness:
         from terrain2q.hydraulics.section import DepthRoughness
@@ -472,17 +503,20 @@ class _Cut:
             return np.concatenate([values, values, values, [own, own]])
 
         channel = rough.channel
+        grouped = np.array(self.takes_low_point) & bool(self._zoned and rough.composite != "divide")
         return Roughness(
             tiled(rough.shallow, n.shallow),
             tiled(rough.deep, n.deep),
             tiled(rough.shallow_depth, n.shallow_depth),
             tiled(rough.deep_depth, n.deep_depth),
-            np.concatenate([channel, channel + count, channel + 2 * count]),
+            np.concatenate(
+                [channel, channel + count, channel + 2 * count, 3 * count + np.flatnonzero(grouped)]
+            ).astype(np.intp),
             rough.composite,
         )
 
     def _core_parts(self, reached, count: int):
-        first, last = self.core
+        first, last = self._counted
         f = self.fine
         x, z, owner = f.x[first : last + 1], f.z[first : last + 1], f.owner[first:last]
         h = self.stage
@@ -509,8 +543,8 @@ class _Cut:
                     np.broadcast_to(self._core[i], (w.size, count)),
                     left[1][i],
                     right[1][i],
-                    left[0][i][:, None],
-                    right[0][i][:, None],
+                    left[0][i][:, None] + (self.inner_face[0] if i == 1 else 0.0),
+                    right[0][i][:, None] + (self.inner_face[1] if i == 1 else 0.0),
                 ],
                 axis=1,
             )
@@ -572,6 +606,8 @@ class _Cut:
         subareas = within(lowest, highest)
         for side, (low, high) in zip(self.used, dry, strict=True):
             zone = f"{side.side} floodplain" if zoned else ""
+            if self._zoned and self.takes_low_point[0 if side.step < 0 else 1]:
+                zone = "channel"
             bench = Subarea(low, high, self.n, BENCH, zone)
             if side.step > 0:
                 subareas = [*subareas, bench, *within(outer_right, np.inf)]
