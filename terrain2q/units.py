@@ -56,6 +56,10 @@ class UnitSystem:
         """Standard gravity."""
         return STANDARD_GRAVITY / self.length
 
+    def __reduce__(self):
+        # a system travels by its name: its table of symbols cannot be pickled
+        return (unit_system, (self.name,))
+
     def per_si(self, quantity: str) -> float:
         """Return how many of this system's units make one SI unit of `quantity`.
 
@@ -81,14 +85,28 @@ SI = UnitSystem(
     "si",
     1.0,
     MappingProxyType(
-        {"length": "m", "area": "m²", "flow": "m³/s", "velocity": "m/s", "ratio": "1", "roughness": "s/m^(1/3)"}
+        {
+            "length": "m",
+            "area": "m²",
+            "flow": "m³/s",
+            "velocity": "m/s",
+            "ratio": "1",
+            "roughness": "s/m^(1/3)",
+        }
     ),
 )
 US = UnitSystem(
     "us",
     FOOT,
     MappingProxyType(
-        {"length": "ft", "area": "ft²", "flow": "ft³/s", "velocity": "ft/s", "ratio": "1", "roughness": "s/m^(1/3)"}
+        {
+            "length": "ft",
+            "area": "ft²",
+            "flow": "ft³/s",
+            "velocity": "ft/s",
+            "ratio": "1",
+            "roughness": "s/m^(1/3)",
+        }
     ),
 )
 

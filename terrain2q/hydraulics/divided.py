@@ -211,14 +211,21 @@ class DividedProfile:
 
     def _depth(self, stage: Floats, passed: bool) -> Floats:
         """Depth over the lowest ground that water has reached, by subarea; zeros where n never asks."""
-        ground = self.ground
-        depth = np.zeros((stage.size, ground.count))
-        if self.roughness.varies:
-            for i, s in enumerate(stage):
-                reached = (ground.threshold <= s) if passed else (ground.threshold < s)
-                inside = np.where(reached, np.maximum(s - ground.low, 0.0), 0.0)
-                np.maximum.at(depth[i], ground.owner, inside)
+        depth = np.zeros((stage.size, self.ground.count))
+        for i, (thresholds, lowest) in self._lowest_reached.items():
+            reached = np.searchsorted(thresholds, stage, side="right" if passed else "left")
+            depth[:, i] = np.maximum(stage - np.append(np.inf, lowest)[reached], 0.0)
         return depth
+
+    @cached_property
+    def _lowest_reached(self) -> dict[int, tuple[Floats, Floats]]:
+        """For each subarea whose n asks for depth: stages, and the lowest ground reached from each on."""
+        ground, rough, found = self.ground, self.roughness, {}
+        for i in np.flatnonzero(rough.shallow != rough.deep):
+            mine = np.flatnonzero(ground.owner == i)
+            order = mine[np.argsort(ground.threshold[mine], kind="stable")]
+            found[int(i)] = ground.threshold[order], np.minimum.accumulate(ground.low[order])
+        return found
 
     def total(self, stage: float, *, passed: bool = False) -> float:
         """Return the whole conveyance at one stage."""
@@ -231,13 +238,9 @@ class DividedProfile:
         """Stages between which conveyance has one closed form."""
         found = self.ground.breaks
         if self.roughness.varies:
-            ground, rough = self.ground, self.roughness
-            extra = [found]
-            for i in np.flatnonzero(rough.shallow != rough.deep):
-                mine = np.flatnonzero(ground.owner == i)
-                order = mine[np.argsort(ground.threshold[mine], kind="stable")]
-                lows = np.unique(np.minimum.accumulate(ground.low[order]))
-                extra += [lows + rough.shallow_depth[i], lows + rough.deep_depth[i]]
+            rough, extra = self.roughness, [found]
+            for i, (_, lowest) in self._lowest_reached.items():
+                extra += [np.unique(lowest) + d[i] for d in (rough.shallow_depth, rough.deep_depth)]
             found = np.unique(np.concatenate(extra))
         return found
 
@@ -422,6 +425,12 @@ class DividedProfile:
         jump, k = np.nonzero(short_below & ~short_above & (law.breaks <= cap))
         at_bank = law.above[k] - law.below[k] > _ROUNDING * law.above[k]
         found = [(jump, law.breaks[k], at_bank)]
+        # a target may touch a peak or a trough at a break without passing it, or miss it by rounding
+        near = (np.abs(law.below - wanted) <= _ROUNDING * wanted) & (law.breaks <= cap)
+        peak = ~law.rising | (law.above < law.below * (1.0 - _ROUNDING))
+        trough = np.append(False, ~law.rising[:-1])
+        row, k = np.nonzero(near & ((short_below & short_above & peak) | (~short_below & trough)))
+        found.append((row, law.breaks[k], np.zeros(k.size, dtype=bool)))
         short_end = np.append(short_below[:, 1:], np.zeros((targets.size, 1), dtype=bool), axis=1)
         reachable = law.breaks < cap
         spans = np.broadcast_to(law.span, short_above.shape)
@@ -437,6 +446,9 @@ class DividedProfile:
         row, k, low, high, falling = (np.concatenate(v) for v in zip(*pieces, strict=True))
         if row.size:
             stages = law.breaks[k] + self._solve(k, low, high, targets[row], falling)
+            # rounding must not carry a stage over a break, where conveyance may jump
+            stages = np.maximum(stages, np.nextafter(law.breaks[k], np.inf))
+            stages = np.minimum(stages, np.append(law.breaks[1:], np.inf)[k])
             found.append((row, stages, np.zeros(row.size, dtype=bool)))
         row, stages, at_bank = (np.concatenate(v) for v in zip(*found, strict=True))
         out: list[list[tuple[float, bool]]] = [[] for _ in targets]
@@ -451,7 +463,7 @@ class DividedProfile:
         kept: list[tuple[float, bool]] = []
         for stage, at_bank in found:
             if kept and stage - kept[-1][0] <= near:
-                if not kept[-1][1]:
+                if at_bank:
                     kept[-1] = (stage, at_bank)
             else:
                 kept.append((stage, at_bank))
