@@ -306,6 +306,10 @@ class Section:
         return self.system.name
 
     @property
+    def _where(self) -> str:
+        return self.section_id or "Section"
+
+    @property
     def length(self) -> float:
         """Width of the profile from its first to its last station."""
         return float(self.stations[-1] - self.stations[0])
@@ -433,7 +437,7 @@ class Section:
                 raise InputError(
                     "station-outside",
                     f"there is no ground between {start:g} and {end:g}",
-                    where=self.section_id or "Section",
+                    where=self._where,
                     fix=f"give stations from left to right between {self.stations[0]:g} "
                     f"and {self.stations[-1]:g}",
                 )
@@ -602,7 +606,7 @@ class Section:
             raise NoAnswerError(
                 f"the section is dry at stage {float(np.broadcast_to(stage, k.shape)[k <= 0].flat[0]):g}",
                 nearest=self.lowest_ground,
-                where=self.section_id,
+                where=self._where,
                 fix=f"give a stage above the lowest ground, {self.lowest_ground:g}",
             )
         return _like((q / k) ** 2)
@@ -650,14 +654,14 @@ class Section:
             raise InputError(
                 "value-not-allowed",
                 f"{problem} subarea is labelled {subarea!r}",
-                where=self.section_id or "Section",
+                where=self._where,
                 fix=f"give an index from 0 to {len(labels) - 1}, or one of: {', '.join(map(repr, labels))}",
             )
         if not -len(labels) <= subarea < len(labels):
             raise InputError(
                 "value-not-allowed",
                 f"there is no subarea {subarea}",
-                where=self.section_id or "Section",
+                where=self._where,
                 fix=f"give an index from 0 to {len(labels) - 1}",
             )
         return subarea % len(labels)
@@ -667,7 +671,7 @@ class Section:
         area, perimeter, n, k = wet.area[0], wet.perimeter[0], wet.n[0], wet.conveyance[0]
         target, root = discharge / np.sqrt(slope), np.sqrt(slope)
         if k.sum() <= 0:
-            raise NoAnswerError(f"the section is dry at stage {stage:g}", nearest=0.0, where=self.section_id)
+            raise NoAnswerError(f"the section is dry at stage {stage:g}", nearest=0.0, where=self._where)
         if index is None:
             return float(k.sum() / target)
         label = self.subareas[index].label or str(index)
@@ -675,7 +679,7 @@ class Section:
             raise NoAnswerError(
                 f"subarea {label} is dry at stage {stage:g}",
                 nearest=float(k.sum() * root),
-                where=self.section_id,
+                where=self._where,
             )
         rough = self._profile.roughness
         mates = rough.channel if rough.together and index in rough.channel else np.array([index])
@@ -685,7 +689,7 @@ class Section:
             raise NoAnswerError(
                 f"at stage {stage:g} the other subareas carry {others * root:g}, not less than {discharge:g}",
                 nearest=others * root,
-                where=self.section_id,
+                where=self._where,
                 fix="look at a lower stage, or at the roughness of the others",
             )
         if mates.size == 1:
@@ -703,7 +707,7 @@ class Section:
             raise NoAnswerError(
                 f"no n above zero in subarea {label} passes {discharge:g} at stage {stage:g}",
                 nearest=float((most + others) * root),
-                where=self.section_id,
+                where=self._where,
                 fix="look at a higher stage, or at the roughness of the others",
             )
         return float((share / perimeter[index]) ** (1 / power))
