@@ -102,6 +102,7 @@ def test_two_stage_bench_solves_its_closed_form(sides, factor):
     assert [s.side for s in bench.stretches] == (["left", "right"] if count == 2 else [sides])
     assert [s.label for s in bench.section.subareas].count("bench") == count
     assert bench.section.discharge(stage, SLOPE) == bench.discharge
+    assert bench.section.normal_stage(target, SLOPE) == pytest.approx(stage, rel=1e-9)
     assert not bench.at_jump
 
 
