@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import os
 import time
 from collections import Counter
@@ -26,8 +27,12 @@ from terrain2q.jobs.design_flows import SectionAnswer, answer_sections
 from terrain2q.jobs.sections import BuiltSection, SectionInputs, build_sections
 from terrain2q.jobs.slopes import FieldSlopes, OneSlope, Slopes, StreamSlopes
 from terrain2q.jobs.submerged import Submerged
+from terrain2q.output.folder import OutputFolder
 from terrain2q.output.geopackage import RESULT_NAME, check_output, write_geopackage
 from terrain2q.output.layers import make_layers
+from terrain2q.output.pages import write_pages
+from terrain2q.output.report import Explorer
+from terrain2q.output.report_data import worst_first
 from terrain2q.output.run_record import run_record, write_run_record
 from terrain2q.study import Study, load_study
 from terrain2q.units import UnitSystem
@@ -128,14 +133,25 @@ class Results:
 
     def worst_findings(self, count: int) -> list[Finding]:
         """Return findings in order of severity, at first one for each feature."""
-        ordered = sorted(self.findings_list, key=lambda f: SEVERITIES.index(f.severity))
-        seen: set[tuple[str, str]] = set()
-        first, later = [], []
-        for finding in ordered:
-            feature = (finding.severity, finding.feature_id)
-            (later if feature in seen else first).append(finding)
-            seen.add(feature)
-        return sorted(first + later, key=lambda f: SEVERITIES.index(f.severity))[:count]
+        return worst_first(self.findings_list)[:count]
+
+    def explore(self, height: int = 760) -> Explorer:
+        """Return the map of the report, which shows itself in a notebook.
+
+        Parameters
+        ----------
+        height : int
+            Of its place in the notebook, in pixels.
+        """
+        record = {}
+        if self.folder is not None and (self.folder / RECORD_NAME).is_file():
+            record = json.loads((self.folder / RECORD_NAME).read_text(encoding="utf-8"))
+        return Explorer(OutputFolder(self.layers, self.units, self.crs, record, self.folder), height)
+
+    def _repr_html_(self) -> str:
+        from terrain2q.output.notebook import results_html
+
+        return results_html(self)
 
     def summary_text(self) -> str:
         """Return what a run prints: stages by event, findings, files, time and the caution."""
@@ -411,6 +427,7 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
             outputs=[package],
         ),
     )
+    pages = write_pages(folder, study.as_dict()["output"])
     progress(1, 1, "writing")
     return Results(
         layers,

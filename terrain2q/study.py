@@ -327,6 +327,7 @@ class OutputTable(Table):
 
     folder: Path = key("folder for the results", "folder", '"output"', default=Path("output"))
     overwrite: bool = key("true replaces earlier results in the folder", "flag", "false", default=False)
+    report: bool = key("true writes report.html, a page to read and to print", "flag", "true", default=True)
 
 
 def _table(cls: type[Table], *, when_absent: str = "none") -> Any:

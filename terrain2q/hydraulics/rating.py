@@ -21,3 +21,6 @@ class Rating(pd.DataFrame):
         """Draw stage against discharge; see :func:`terrain2q.output.plots.plot_rating`."""
         # pictures stand above the numbers in the house, so that they are fetched only when asked for
         return importlib.import_module("terrain2q.output.plots").plot_rating(self, **how)
+
+    def _repr_html_(self) -> str:
+        return importlib.import_module("terrain2q.output.notebook").rating_html(self)

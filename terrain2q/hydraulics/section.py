@@ -769,6 +769,9 @@ class Section:
         """Draw the section; see :func:`terrain2q.output.plots.plot_section` for what can be given."""
         return _plots().plot_section(self, **how)
 
+    def _repr_html_(self) -> str:
+        return importlib.import_module("terrain2q.output.notebook").section_html(self)
+
     def rating_arrays(self, slope: float, stages: ArrayLike | int | None = None, top: float | None = None):
         """Return the rating as a dict of arrays; `top` is how high even steps go above the lowest ground."""
         root = np.sqrt(float(_positives("slope", slope)))
