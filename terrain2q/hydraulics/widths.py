@@ -917,8 +917,8 @@ def required_opening(section: Section, discharge: ArrayLike, stage: ArrayLike, s
     (:func:`opening_centre`). Where one stands at an end of the section it stays there and the other goes
     on outward. Each wall is wetted perimeter with the roughness of the subarea it stands in. Water within
     the opening is that of the section at the stage. At the widest the walls stand at the section's ends; they
-    have friction there, which the imagined wall of :meth:`Section.discharge` has not. There is no loss at the entry and none at the exit,
-    and the stage is taken to be level: a first look at a span.
+    have friction there, which the imagined wall of :meth:`Section.discharge` has not. There is no loss at the
+    entry and none at the exit, and the stage is taken to be level: a first look at a span.
     """
     where = section.section_id or "required_opening"
     q, h, s = np.broadcast_arrays(*(np.asarray(a, dtype=float) for a in (discharge, stage, slope)))
