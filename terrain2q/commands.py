@@ -354,6 +354,28 @@ def tables(name: str | None, as_json: bool) -> None:
         click.echo(table_text(name), nl=False)
 
 
+@main.command(epilog=CAUTION)
+@click.argument("folder", type=click.Path(path_type=Path))
+@click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of text.")
+def report(folder: Path, as_json: bool) -> None:
+    """Write the pages of an output folder anew, from its layers.
+
+    Reads results.gpkg and run.json in FOLDER, and the terrain and the streams where they still are, and
+    writes report.html. Results are left as they are.
+
+    \b
+    Example:
+      terrain2q report output
+    """
+    from terrain2q.output.pages import write_pages
+
+    written = write_pages(folder)
+    if as_json:
+        _print_json({"folder": str(folder), "files": written})
+    else:
+        click.echo(f"Written to {folder}: {', '.join(path.name for path in written)}")
+
+
 def _finding(finding: Any) -> dict[str, object]:
     names = ("code", "severity", "layer", "feature_id", "message", "remedy", "x", "y")
     return {name: getattr(finding, name) for name in names}

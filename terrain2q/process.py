@@ -435,7 +435,7 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
         study.system,
         inputs.crs,
         folder,
-        (package, record),
+        (package, record, *pages),
         time.perf_counter() - began,
         study.study.name,
         failed,
