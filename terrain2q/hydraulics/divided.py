@@ -247,7 +247,12 @@ class DividedProfile:
     @cached_property
     def _at_breaks(self) -> tuple[Wet, Wet]:
         """Hydraulics just above and just below every break."""
-        return self.wet(self.breaks, passed=True), self.wet(self.breaks)
+        before = self.ground.wetted(self.breaks)
+        after = self.ground.just_after(self.breaks, before)
+        return (
+            self._with_conveyance(*after, self._depth(self.breaks, True)),
+            self._with_conveyance(*before, self._depth(self.breaks, False)),
+        )
 
     @cached_property
     def laws(self) -> _Laws:
@@ -635,7 +640,9 @@ class DividedProfile:
     def _flat_energy(self, index, low, high, at_low, at_high, head: Floats) -> Floats:
         """Offsets at which specific energy turns from falling to rising: secants within brackets."""
         kept = np.zeros(low.size)  # which end the last step has kept
+        x = low
         for _ in range(200):
+            before = x
             with np.errstate(invalid="ignore"):
                 secant = high - at_high * (high - low) / (at_high - at_low)
             middle = 0.5 * (low + high)
@@ -648,7 +655,7 @@ class DividedProfile:
             at_low = np.where(falls, value, np.where(kept == -1, 0.5 * at_low, at_low))
             low, high = np.where(falls, x, low), np.where(falls, high, x)
             kept = np.where(falls, 1, -1)
-            if ((value == 0) | (high - low <= 4e-16 * high)).all():
+            if ((value == 0) | (np.minimum(high - low, np.abs(x - before)) <= 4e-16 * high)).all():
                 break
         return x
 

@@ -193,19 +193,19 @@ class Ground:
         self.x, self.z, self.owner, self.count, self.sources = x, z, owner, count, sources
         self.low = np.minimum(z[:-1], z[1:])
         self.rise = np.abs(np.diff(z))
-        width = np.diff(x)
+        self.width = np.diff(x)
         with np.errstate(divide="ignore", over="ignore"):
             # A flat segment is wet at once: a rate this large makes min(depth * rate, 1) do that
             # without a special case, and stays finite when multiplied by any depth.
             self.rate = np.minimum(1.0 / self.rise, 1e300)
         self.flat = self.rise == 0
-        length = np.hypot(width, self.rise)
+        self.length = np.hypot(self.width, self.rise)
         self.threshold = self.low if sources is None else reach(z, sources)
         member = np.zeros((owner.size, count))
         member[np.arange(owner.size), owner] = 1.0
-        self._width = member * width[:, None]
-        self._length = member * length[:, None]
-        self._wedge = member * (0.5 * width * self.rise)[:, None]
+        self._width = member * self.width[:, None]
+        self._length = member * self.length[:, None]
+        self._wedge = member * (0.5 * self.width * self.rise)[:, None]
 
     @property
     def breaks(self) -> Floats:
@@ -227,30 +227,42 @@ class Ground:
         area, perimeter, width : ndarray, shape (k, number of subareas)
         """
         step = max(1, _BLOCK // self.low.size)
-        if stage.size <= step:
-            return self._wetted(stage, slice(None), self.threshold, passed)
-        parts = [
-            self._wetted(stage[i : i + step], slice(None), self.threshold, passed)
-            for i in range(0, stage.size, step)
-        ]
-        area, perimeter, width = (np.concatenate(p) for p in zip(*parts, strict=True))
-        return area, perimeter, width
+        parts = [self._wetted(stage[i : i + step], slice(None)) for i in range(0, max(stage.size, 1), step)]
+        before = tuple(np.concatenate(p) for p in zip(*parts, strict=True)) if len(parts) > 1 else parts[0]
+        return self.just_after(stage, before) if passed else before
+
+    def just_after(
+        self, stage: Floats, before: tuple[Floats, Floats, Floats]
+    ) -> tuple[Floats, Floats, Floats]:
+        """Return the same with what gets wet at the stage itself: level ground and ground behind a ridge."""
+        at, segment = np.nonzero(stage[:, None] == self.threshold)
+        depth = stage[at] - self.low[segment]
+        share = np.where(self.flat[segment], 1.0, np.minimum(depth * self.rate[segment], 1.0))
+        owner, width = self.owner[segment], self.width[segment]
+        area, perimeter, top = (v.copy() for v in before)
+        np.add.at(area, (at, owner), share * width * (depth - 0.5 * share * self.rise[segment]))
+        np.add.at(perimeter, (at, owner), share * self.length[segment])
+        np.add.at(top, (at, owner), share * width)
+        return area, perimeter, top
 
     def wetted_between(self, first: int, last: int, stage: float, *, passed: bool = False):
         """Return the same by subarea, shape (number of subareas,), of points `first` to `last` alone."""
-        area, perimeter, width = self._wetted(np.array([stage]), slice(first, last), None, passed)
-        return area[0], perimeter[0], width[0]
+        part = slice(first, last)
+        area, perimeter, width = (v[0] for v in self._wetted(np.array([stage]), part, reached=True))
+        if passed:
+            level = self.flat[part] & (self.low[part] == stage)
+            perimeter, width = perimeter + level @ self._length[part], width + level @ self._width[part]
+        return area, perimeter, width
 
-    def _wetted(self, stage, part, threshold, passed):
+    def _wetted(self, stage: Floats, part: slice, *, reached: bool = False):
+        """Area, perimeter and width by subarea; `reached` says that water is everywhere below the stage."""
         depth = stage[:, None] - self.low[part]
         np.maximum(depth, 0.0, out=depth)
         # share of each segment's length that is under water
         share = depth * self.rate[part]
         np.minimum(share, 1.0, out=share)
-        if passed:
-            share[(depth == 0.0) & self.flat[part] & (stage[:, None] >= self.low[part])] = 1.0
-        if threshold is not None and threshold is not self.low:
-            share[(stage[:, None] < threshold) if passed else (stage[:, None] <= threshold)] = 0.0
+        if not reached and self.threshold is not self.low:
+            share[stage[:, None] <= self.threshold] = 0.0
         depth *= share
         area = depth @ self._width[part]
         perimeter = share @ self._length[part]
