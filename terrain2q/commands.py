@@ -28,7 +28,8 @@ DONE, WRONG_INPUT, NO_ANSWER, INTERRUPTED = 0, 2, 3, 130
 """Exit codes."""
 
 _METAVARS = {
-    "text": "TEXT", "number": "NUMBER", "count": "WHOLE NUMBER", "file": "FILE", "folder": "FOLDER",
+    "text": "TEXT", "number": "NUMBER", "number or zero": "NUMBER", "count": "WHOLE NUMBER",
+    "file": "FILE", "folder": "FOLDER",
     "table": "FILE|NAME", "layer": "FILE[|layer=NAME]", "rasters": "FILE", "events": "EVENT=DISCHARGE",
 }  # fmt: skip
 

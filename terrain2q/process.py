@@ -23,6 +23,7 @@ from terrain2q.ground.layers import read_layer, require_field
 from terrain2q.ground.low_line import LowLines, streams_near, turn_streams
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
+from terrain2q.hydraulics.roughness import roughness_from_parts
 from terrain2q.jobs.design_flows import SectionAnswer, answer_sections
 from terrain2q.jobs.sections import BuiltSection, SectionInputs, build_sections
 from terrain2q.jobs.slopes import FieldSlopes, OneSlope, Slopes, StreamSlopes
@@ -294,6 +295,7 @@ def _read_inputs(study: Study) -> _Inputs:
         study.system,
         _submerged(study),
         None if study.flows is None else study.flows.area_field,
+        study.channel.composite,
     )
     return _Inputs(lines, sections, out_crs, findings)
 
@@ -346,7 +348,11 @@ def _read_cover(study: Study, terrain: Terrain) -> Cover | UniformCover:
         return UniformCover(table.default_n)
     polygons = read_layer(table.path, purpose="land cover", geometry="polygon", crs=terrain.crs)
     return Cover(
-        polygons, table.class_field, RoughnessTable.from_csv(table.table), table.default_n, study.system
+        polygons,
+        table.class_field,
+        RoughnessTable.from_csv(table.table, study.system, roughness_from_parts),
+        table.default_n,
+        study.system,
     )
 
 

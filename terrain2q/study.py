@@ -183,7 +183,8 @@ class LandCoverTable(Table):
     class_field: str | None = key("field with the land-cover class", "text", '"class"')
     table: Path | None = key(
         "CSV with the columns class, n and optionally n_low, n_high, source; or the name of a built-in table "
-        "(`terrain2q tables` lists them)",
+        "(`terrain2q tables` lists them). In place of n a row may give n_shallow, depth_shallow, n_deep, "
+        "depth_deep; or base, irregularity, variation, obstructions, vegetation, meandering",
         "table", '"roughness.csv"',
     )  # fmt: skip
     default_n: float | None = key(
@@ -205,7 +206,7 @@ class LandCoverTable(Table):
 class ChannelTable(Table):
     """The channel: drawn as polygons, or found in each profile."""
 
-    either = (("path", "banks"),)
+    either = (("path", "banks"), ("n", "composite"))
     path: str | None = key("polygon layer of channels", "layer", '"data.gpkg|layer=channel"')
     banks: str = key(
         "auto finds the tops of bank in each profile; none leaves the section undivided",
@@ -214,6 +215,11 @@ class ChannelTable(Table):
     n: float | None = key(
         "roughness n of the channel; that of its land cover where absent",
         "number", "0.035", quantity="roughness",
+    )  # fmt: skip
+    composite: str = key(
+        "how several n of the land cover act together in the channel: divide (each by itself), or one "
+        "composite n by horton, lotter or pavlovskii",
+        "choice", '"horton"', choices=("divide", "horton", "lotter", "pavlovskii"), default="divide",
     )  # fmt: skip
 
 
@@ -322,6 +328,40 @@ class RatingTable(Table):
 
 
 @dataclass(frozen=True)
+class BenchTable(Table):
+    """A bench to be cut beside the channel; `terrain2q size` finds the width required to pass each flow."""
+
+    base: float = key(
+        "height of the bench's floor above the lowest ground",
+        "number", "4.0", needed=True, quantity="length",
+    )  # fmt: skip
+    n: float = key("roughness n of the bench", "number", "0.05", needed=True, quantity="roughness")
+    sides: str = key(
+        "where the bench is cut: both (alike), left or right, looking downstream",
+        "choice", '"both"', choices=("both", "left", "right"), default="both",
+    )  # fmt: skip
+    side_slope: float = key(
+        "run over rise of the bench's outer slope; 0 is a vertical face",
+        "number or zero", "2.0", default=0.0, quantity="ratio",
+    )  # fmt: skip
+    event: str | None = key("the event to be passed; each of them where absent", "text", '"100-year"')
+    stage: float | None = key(
+        "height above the lowest ground that the water may reach; the lower top of bank where absent",
+        "number", "10.0", quantity="length",
+    )  # fmt: skip
+
+
+@dataclass(frozen=True)
+class ObservedTable(Table):
+    """Observed stages; `terrain2q fit` finds the roughness that reproduces them."""
+
+    path: str = key(
+        "CSV or point layer with the columns section, stage (an elevation) and discharge",
+        "layer", '"observed.csv"', needed=True,
+    )  # fmt: skip
+
+
+@dataclass(frozen=True)
 class OutputTable(Table):
     """What is written."""
 
@@ -359,6 +399,8 @@ class Study:
     slope: SlopeTable | None = _table(SlopeTable)
     flows: FlowsTable | None = _table(FlowsTable)
     rating: RatingTable = _table(RatingTable, when_absent="defaults")
+    bench: BenchTable | None = _table(BenchTable)
+    observed: ObservedTable | None = _table(ObservedTable)
     output: OutputTable = _table(OutputTable, when_absent="defaults")
     path: Path | None = None
     folder: Path = field(default_factory=Path.cwd)
@@ -464,6 +506,15 @@ def _number(about: Key, value: object) -> float:
     return number
 
 
+def _number_or_zero(about: Key, value: object) -> float:
+    if not isinstance(value, bool) and isinstance(value, int | float) and value == 0:
+        return 0.0
+    try:
+        return _number(about, value)
+    except _Refused as refused:
+        raise _Refused("zero or a number above zero", refused.code) from None
+
+
 def _count(about: Key, value: object) -> int:
     if isinstance(value, bool) or not isinstance(value, int) or value < about.least:
         raise _Refused(f"a whole number, {about.least} or more")
@@ -521,6 +572,7 @@ KINDS = {
     "text": _text,
     "choice": _choice,
     "number": _number,
+    "number or zero": _number_or_zero,
     "count": _count,
     "flag": _flag,
     "file": _path,
@@ -551,7 +603,7 @@ def _from_option(kind: str, given: object) -> object:
             return given
     if kind == "events":
         return _from_option(kind, given.split(","))
-    if kind == "number":
+    if kind in ("number", "number or zero"):
         return _as_number(given, float)
     if kind == "count":
         return _as_number(given, int)

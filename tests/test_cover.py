@@ -17,12 +17,14 @@ from terrain2q.ground.cover import (
     ChannelPolygons,
     Cover,
     CoverPiece,
+    FallingN,
     Roughness,
     RoughnessTable,
     UniformCover,
     split_by_zone,
 )
 from terrain2q.ground.terrain import Profile
+from terrain2q.hydraulics.roughness import roughness_from_parts
 
 UTM = "EPSG:26915"
 X0, Y0 = 500000.0, 4700000.0
@@ -99,8 +101,23 @@ def test_table_is_read_with_its_ranges_and_sources(table):
         ("class,n\nwood,inf\n", "number-not-positive", "inf"),
         ("class,n\nwood,\n", "number-not-positive", "''"),
         ("class,n\nwood,thick\n", "number-not-positive", "thick"),
-        ("class,n,n_low\nwood,0.1,0.2\n", "value-not-allowed", "n_low = 0.2"),
-        ("class,n,n_high\nwood,0.1,0.05\n", "value-not-allowed", "n_high = 0.05"),
+        ("class,n,n_low,n_high\nwood,0.1,0.2,0.1\n", "value-not-allowed", "n_low = 0.2"),
+        ("class,n,n_shallow\nwood,0.1,0.2\n", "key-conflict", "n and n_shallow"),
+        ("class,n,base\nwood,0.1,0.03\n", "key-conflict", "n and base"),
+        ("class,n_shallow,depth_shallow,n_deep,depth_deep\nwood,0.2,1,0.1,\n", "key-missing", "depth_deep"),
+        (
+            "class,n_shallow,depth_shallow,n_deep,depth_deep\nwood,0.1,1,0.2,3\n",
+            "value-not-allowed",
+            "0.2 at",
+        ),
+        (
+            "class,n_shallow,depth_shallow,n_deep,depth_deep\nwood,0.2,3,0.1,3\n",
+            "value-not-allowed",
+            "depth 3",
+        ),
+        ("class,base,vegetation\nwood,,0.05\n", "key-missing", "without base"),
+        ("class,base,vegetation\nwood,0.03,-0.05\n", "number-not-positive", "vegetation"),
+        ("class,base,vegetation\nwood,0.03,0.5\n", "value-not-allowed", "vegetation is 0.5"),
         ("class,n,n_low\nwood,0.1,x\n", "number-not-positive", "n_low"),
         ("class,n\n,0.1\n", "value-not-allowed", "no class"),
         ("class,n\n41,0.1\n41.0,0.2\nwood,1\nwood,1\n", "class-duplicate", "41, wood"),
@@ -111,10 +128,53 @@ def test_table_that_is_wrong(tmp_path, text, code, word):
     path = tmp_path / "n.csv"
     path.write_text(text)
     with pytest.raises(InputError) as caught:
-        RoughnessTable.from_csv(path)
+        RoughnessTable.from_csv(path, n_from_parts=roughness_from_parts)
     assert caught.value.code == code
     assert word in caught.value.what
-    assert "n.csv" in caught.value.where
+    assert "n.csv, line" in caught.value.where or code in ("class-duplicate", "field-missing")
+
+
+def test_n_outside_its_own_range_is_kept_for_a_finding(tmp_path):
+    path = tmp_path / "n.csv"
+    path.write_text("class,n,n_low,n_high\nwood,0.1,0.02,0.05\n")
+    row = RoughnessTable.from_csv(path)["wood"]
+    assert (row.n, row.n_low, row.n_high) == (0.1, 0.02, 0.05)
+
+
+@pytest.mark.parametrize(("units", "metre"), [("si", 1.0), ("us", 0.3048)])
+def test_n_that_falls_with_depth_is_read_in_the_studys_units(tmp_path, units, metre):
+    path = tmp_path / "n.csv"
+    path.write_text(
+        "class,n,n_shallow,depth_shallow,n_deep,depth_deep,source\n"
+        "reed,,0.2,0.5,0.08,2,a survey\n"
+        "lawn,0.03,,,,,a book\n"
+    )
+    found = RoughnessTable.from_csv(path, units)
+    assert found["reed"].n == 0.08
+    assert found["reed"].falling == FallingN(0.2, 0.5 * metre, 0.08, 2.0 * metre)
+    unit = "m" if units == "si" else "ft"
+    assert found["reed"].source == f"a survey, n 0.2 to a depth of 0.5 {unit}, 0.08 from 2 {unit} on"
+    assert found["lawn"].falling is None
+    assert found["lawn"].source == "a book"
+
+
+def test_n_from_parts_is_the_published_sum(tmp_path):
+    path = tmp_path / "n.csv"
+    path.write_text(
+        "class,base,irregularity,variation,obstructions,vegetation,meandering,source\n"
+        "bed,0.025,0.003,0,0,0.007,1.15,seen on site\n"
+        "wood,0.025,0.005,,0.01,0.1,,seen on site\n"
+    )
+    found = RoughnessTable.from_csv(path, n_from_parts=roughness_from_parts)
+    # a row with meandering is a channel's, and the factor acts on the sum
+    assert found["bed"].n == pytest.approx(1.15 * 0.035, rel=1e-12)
+    assert found["wood"].n == pytest.approx(0.14, rel=1e-12)
+    assert found["wood"].source == (
+        "seen on site, n from parts (floodplain): "
+        "base 0.025, irregularity 0.005, obstructions 0.01, vegetation 0.1"
+    )
+    with pytest.raises(InputError, match="in parts"):
+        RoughnessTable.from_csv(path)
 
 
 def test_misspelled_column_is_named_and_others_are_left_alone(tmp_path):
@@ -584,3 +644,18 @@ def test_subareas_cover_the_section_and_mirror(cuts, kinds, low, width, own):
     assert [(s.start, s.end, s.zone, s.n) for s in subareas] == [
         (100 - m.end, 100 - m.start, swap[m.zone], m.n) for m in mirrored[::-1]
     ]
+
+
+def test_pieces_whose_n_falls_alike_become_one_subarea_and_others_do_not():
+    falling = FallingN(0.2, 0.5, 0.08, 2.0)
+    pieces = [
+        CoverPiece(0.0, 4.0, "reed", 0.08, falling=falling),
+        CoverPiece(4.0, 6.0, "sedge", 0.08, falling=falling),
+        CoverPiece(6.0, 10.0, "lawn", 0.08),
+    ]
+    subareas = split_by_zone(pieces, (9.0, 10.0), 0.03)
+    assert [(s.start, s.end, s.falling) for s in subareas] == [
+        (0.0, 6.0, falling), (6.0, 9.0, None), (9.0, 10.0, None),
+    ]  # fmt: skip
+    assert split_by_zone(pieces, None)[0].falling == falling
+    assert split_by_zone(pieces, (0.0, 5.0), 0.03)[0].falling is None

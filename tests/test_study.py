@@ -240,7 +240,7 @@ def test_a_table_that_is_a_value(study_file):
     assert (problem.code, problem.what) == ("value-not-allowed", "terrain is not a table of keys")
 
 
-@pytest.mark.parametrize("name", ["rmse", "every", "composite", "report", "sheets"])
+@pytest.mark.parametrize("name", ["rmse", "every", "report", "sheets"])
 def test_what_is_not_built_is_not_offered(name):
     assert not any(name in keys_of(cls) for cls in TABLES.values())
 

@@ -14,7 +14,7 @@ Pieces shorter than a micrometre belong to their neighbour.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from types import MappingProxyType
@@ -47,14 +47,43 @@ class _Profile(Protocol):
     is_vertex: np.ndarray
 
 
+PARTS = ("base", "irregularity", "variation", "obstructions", "vegetation", "meandering")
+"""What n is made of where a table gives its parts."""
+
+CHANNEL_PARTS = ("variation", "meandering")
+"""Parts that only a channel has: a row that gives one of them is a channel's, else a flood plain's."""
+
+
+@dataclass(frozen=True)
+class FallingN:
+    """Manning's n that falls with depth: level, then straight between two depths, then level.
+
+    Attributes
+    ----------
+    shallow, deep : float
+        n at and below `shallow_depth`, at and above `deep_depth` [s/m^(1/3)].
+    shallow_depth, deep_depth : float
+        Depth of water over the lowest ground of the subarea, m.
+    """
+
+    shallow: float
+    shallow_depth: float
+    deep: float
+    deep_depth: float
+
+
 @dataclass(frozen=True)
 class Roughness:
-    """Manning's n of one class: the value, its likely low and high (NaN where not stated), its source."""
+    """Manning's n of one class: the value, its likely low and high (NaN where not stated), its source.
+
+    Where n falls with depth, `n` is that of deep water and `falling` holds the rule.
+    """
 
     n: float
     n_low: float = float("nan")
     n_high: float = float("nan")
     source: str = ""
+    falling: FallingN | None = None
 
 
 @dataclass(frozen=True)
@@ -82,23 +111,50 @@ class RoughnessTable:
         return clean_text(land_class) in self.rows
 
     @classmethod
-    def from_csv(cls, path: str | Path) -> RoughnessTable:
-        """Read a table with the columns ``class, n`` and optionally ``n_low, n_high, source``.
+    def from_csv(
+        cls,
+        path: str | Path,
+        units: str | UnitSystem = SI,
+        n_from_parts: Callable[..., float] | None = None,
+    ) -> RoughnessTable:
+        """Read a table with the column ``class`` and, row by row, n in one of three ways.
+
+        - ``n``: one number;
+        - ``n_shallow, depth_shallow, n_deep, depth_deep``: n that falls with depth, straight between two
+          depths of water and level beyond them;
+        - ``base`` and any of ``irregularity, variation, obstructions, vegetation, meandering``: n from its
+          parts. A row with ``variation`` or ``meandering`` is a channel's, any other a flood plain's.
+
+        ``n_low, n_high, source`` are optional. Other columns are ignored.
 
         Parameters
         ----------
         path : str or Path
-            A CSV file. Other columns are ignored.
+            A CSV file.
+        units : str or UnitSystem
+            Of the depths.
+        n_from_parts : callable, optional
+            Returns n from the parts, given by name, and from ``zone`` (``channel`` or ``floodplain``).
+            Without it a table may not give parts.
 
         Raises
         ------
         InputError
             Codes of :func:`~terrain2q.ground.layers.read_table`; ``number-not-positive`` where n is not a
-            number above zero; ``value-not-allowed`` where n does not lie between its low and high;
-            or a row has no class; ``class-duplicate``.
+            number above zero; ``value-not-allowed`` where n_low is above n_high, n rises with depth,
+            a part is outside what is published, or a row has no class; ``key-conflict`` and ``key-missing``
+            where a row gives n in two ways, or in none; ``class-duplicate``.
         """
-        known = ("class", "n", "n_low", "n_high", "source")
-        table = read_table(path, known[:2], "land-cover table", known[2:])
+        known = ("class", "n", *_FALLING, *PARTS, "n_low", "n_high", "source")
+        table = read_table(path, known[:1], "land-cover table", known[1:])
+        if not {"n", "n_shallow", "base"}.intersection(table.columns):
+            raise InputError(
+                "field-missing",
+                f"there is no column 'n'; the columns are {', '.join(map(str, table.columns))}",
+                where=f"land-cover table: {path}",
+                fix=f"add a column n; or {', '.join(_FALLING)}; or base and other parts of n",
+            )
+        units = unit_system(units)
         rows: dict[str, Roughness] = {}
         doubles: list[str] = []
         for line, row in zip(table.index, table.to_dict("records"), strict=True):
@@ -110,17 +166,18 @@ class RoughnessTable:
                 )
             if name in rows:
                 doubles.append(name)
-            n = _number(row["n"], "n", name, where)
+            n, falling, how = _row_n(row, name, where, units, n_from_parts)
             low = _number(row["n_low"], "n_low", name, where) if row.get("n_low") else np.nan
             high = _number(row["n_high"], "n_high", name, where) if row.get("n_high") else np.nan
-            if low > n or n > high:
+            if low > high:
                 raise InputError(
                     "value-not-allowed",
-                    f"class {name}: n = {n:g} does not lie between n_low = {low:g} and n_high = {high:g}",
+                    f"class {name}: n_low = {low:g} is above n_high = {high:g}",
                     where=where,
-                    fix="give n_low <= n <= n_high, or leave n_low and n_high empty",
+                    fix="give n_low <= n_high, or leave both empty",
                 )
-            rows[name] = Roughness(n, float(low), float(high), row.get("source") or Path(path).name)
+            source = ", ".join(filter(None, (row.get("source") or Path(path).name, how)))
+            rows[name] = Roughness(n, float(low), float(high), source, falling)
         if doubles:
             raise InputError(
                 "class-duplicate",
@@ -129,6 +186,87 @@ class RoughnessTable:
             )
         findings = tuple(ignored_columns(table, known, "land_cover"))
         return cls(MappingProxyType(rows), str(path), findings)
+
+
+_FALLING = ("n_shallow", "depth_shallow", "n_deep", "depth_deep")
+
+
+def _row_n(
+    row: Mapping[str, str],
+    name: str,
+    where: str,
+    units: UnitSystem,
+    n_from_parts: Callable[..., float] | None,
+) -> tuple[float, FallingN | None, str]:
+    """Return n of one row, how it falls with depth, and how it was made, in words."""
+    given = {key: [c for c in columns if row.get(c)] for key, columns in _WAYS.items()}
+    ways = [key for key, columns in given.items() if columns]
+    if len(ways) > 1:
+        named = " and ".join(given[way][0] for way in ways)
+        raise InputError(
+            "key-conflict", f"class {name}: {named} are both given", where=where, fix="give n in one way only"
+        )
+    if ways == ["falling"]:
+        return _falling_n(row, name, where, units)
+    if ways == ["parts"]:
+        return _n_of_parts(row, given["parts"], name, where, n_from_parts)
+    return _number(row.get("n", ""), "n", name, where), None, ""
+
+
+_WAYS = MappingProxyType({"n": ("n",), "falling": _FALLING, "parts": PARTS})
+
+
+def _falling_n(row, name: str, where: str, units: UnitSystem) -> tuple[float, FallingN, str]:
+    missing = [column for column in _FALLING if not row.get(column)]
+    if missing:
+        raise InputError(
+            "key-missing",
+            f"class {name}: n falls with depth and {', '.join(missing)} is not given",
+            where=where,
+            fix=f"fill in all of {', '.join(_FALLING)}",
+        )
+    shallow, deep = (_number(row[c], c, name, where) for c in ("n_shallow", "n_deep"))
+    low, high = (_number(row[c], c, name, where) for c in ("depth_shallow", "depth_deep"))
+    if not (deep <= shallow and low < high):
+        raise InputError(
+            "value-not-allowed",
+            f"class {name}: n is {shallow:g} at depth {low:g} and {deep:g} at depth {high:g}",
+            where=where,
+            fix="n falls (or stays) as depth grows: let n_deep <= n_shallow and depth_shallow < depth_deep",
+        )
+    symbol, metres = units.symbol("length"), 1.0 / units.per_si("length")
+    how = f"n {shallow:g} to a depth of {low:g} {symbol}, {deep:g} from {high:g} {symbol} on"
+    return deep, FallingN(shallow, low * metres, deep, high * metres), how
+
+
+def _n_of_parts(row, given: list[str], name: str, where: str, n_from_parts) -> tuple[float, None, str]:
+    if n_from_parts is None:
+        raise InputError("value-not-allowed", f"class {name}: n is given in parts", where=where, fix="give n")
+    if "base" not in given:
+        raise InputError(
+            "key-missing", f"class {name}: {given[0]} is given without base", where=where, fix="fill in base"
+        )
+    zone = "channel" if set(CHANNEL_PARTS).intersection(given) else "floodplain"
+    parts = {c: _part(row[c], c, name, where) for c in given}
+    try:
+        n = n_from_parts(**parts, zone=zone)
+    except InputError as error:
+        raise error.at(f"{where}: class {name}") from None
+    return (
+        n,
+        None,
+        f"n from parts ({zone}): " + ", ".join(f"{part} {value:g}" for part, value in parts.items()),
+    )
+
+
+def _part(text: str, column: str, land_class: str, where: str) -> float:
+    # a part may be zero: what is not there adds nothing
+    try:
+        if float(text) == 0.0:
+            return 0.0
+    except ValueError:
+        pass
+    return _number(text, column, land_class, where)
 
 
 def _number(text: str, column: str, land_class: str, where: str) -> float:
@@ -158,6 +296,8 @@ class CoverPiece:
     n, n_low, n_high : float
         Manning's n [s/m^(1/3)]; NaN where not known.
     n_source : str
+    falling : FallingN or None
+        How n falls with depth, where it does; `n` is then that of deep water.
     """
 
     start: float
@@ -167,6 +307,7 @@ class CoverPiece:
     n_low: float = float("nan")
     n_high: float = float("nan")
     n_source: str = ""
+    falling: FallingN | None = None
 
 
 @dataclass(frozen=True)
@@ -181,6 +322,7 @@ class SubareaSpec:
     n_source: str
     land_class: str
     zone: str
+    falling: FallingN | None = None
 
 
 def _check_default(default_n: float | None) -> None:
@@ -348,7 +490,7 @@ class Cover:
                 else:
                     name = str(self._classes[polygon[first[index]]])
                     row = self.roughness.rows[name]
-                    piece = CoverPiece(*span, name, row.n, row.n_low, row.n_high, row.source)
+                    piece = CoverPiece(*span, name, row.n, row.n_low, row.n_high, row.source, row.falling)
                 for other in classes[1:]:
                     overlaps.setdefault((str(classes[0]), str(other)), []).append(span)
                 if pieces and (
@@ -855,13 +997,14 @@ def split_by_zone(
         ):
             if b <= a:
                 continue
-            n = (piece.n, piece.n_low, piece.n_high, piece.n_source)
+            n, falling = (piece.n, piece.n_low, piece.n_high, piece.n_source), piece.falling
             if zone == CHANNEL and channel_n is not None:
-                n = (float(channel_n), float("nan"), float("nan"), "study")
-            subareas.append(SubareaSpec(a, b, *n, piece.land_class, zone))
+                n, falling = (float(channel_n), float("nan"), float("nan"), "study"), None
+            subareas.append(SubareaSpec(a, b, *n, piece.land_class, zone, falling))
     joined: list[SubareaSpec] = []
     for subarea in subareas:
-        if joined and joined[-1].zone == subarea.zone and joined[-1].n == subarea.n:
+        last = joined[-1] if joined else None
+        if last and (last.zone, last.n, last.falling) == (subarea.zone, subarea.n, subarea.falling):
             joined[-1] = _together(joined[-1], subarea)
         else:
             joined.append(subarea)

@@ -13,7 +13,7 @@ from terrain2q.ground.cut_lines import CutLine
 from terrain2q.ground.streams import length_text
 from terrain2q.ground.terrain import Profile, Terrain
 from terrain2q.hydraulics.banks import find_banks
-from terrain2q.hydraulics.section import Section, Subarea
+from terrain2q.hydraulics.section import DepthRoughness, Section, Subarea
 from terrain2q.jobs.slopes import Slopes
 from terrain2q.jobs.submerged import Submerged, drainage_area, with_bed
 from terrain2q.units import UnitSystem
@@ -83,6 +83,8 @@ class SectionInputs:
         What lies below water; None where nothing is said about it.
     area_field : str or None
         Field of the cut lines with the drainage area to which discharges are carried over.
+    composite : str
+        How several n in the channel act together: ``divide``, ``horton``, ``lotter`` or ``pavlovskii``.
     """
 
     terrain: Terrain
@@ -95,6 +97,7 @@ class SectionInputs:
     units: UnitSystem
     submerged: Submerged | None = None
     area_field: str | None = None
+    composite: str = "divide"
 
 
 def build_sections(lines: Sequence[CutLine], inputs: SectionInputs, progress=None) -> list[BuiltSection]:
@@ -262,13 +265,19 @@ def _build(line, profile, crossing, cover, interval, inputs: SectionInputs, note
     section = Section(
         profile.stations,
         profile.elevations,
-        [Subarea(s.start, s.end, s.n, s.land_class, s.zone if divided else "") for s in specs],
+        [Subarea(s.start, s.end, _n_of(s), s.land_class, s.zone if divided else "") for s in specs],
         origin=origin,
+        composite=inputs.composite,
         section_id=line.section_id,
     )
     if not _has_low_ground(section, line, profile, inputs, notes):
         return BuiltSection(line, profile, None, tuple(specs), slope, source)
     return BuiltSection(line, profile, section, tuple(specs), slope, source)
+
+
+def _n_of(spec: SubareaSpec) -> float | DepthRoughness:
+    f = spec.falling
+    return spec.n if f is None else DepthRoughness(f.shallow, f.shallow_depth, f.deep, f.deep_depth)
 
 
 def _has_low_ground(section: Section, line: CutLine, profile: Profile, inputs: SectionInputs, notes) -> bool:
