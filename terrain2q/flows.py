@@ -12,7 +12,7 @@ from terrain2q.errors import InputError, raise_together
 from terrain2q.study import Study, nearest
 
 NEEDED = ("event", "discharge")
-COLUMNS = (*NEEDED, "probability", "stream", "section", "distance", "area")
+COLUMNS = (*NEEDED, "probability", "stream", "section", "distance", "area", "crossing", "volume")
 """The columns of a table of flows."""
 
 AREA_RATIOS = (0.5, 1.5)
@@ -40,6 +40,10 @@ class Flow:
         it is not given.
     exponent : float or None
         With which the discharge goes with drainage area; None where it is not carried over.
+    crossing : str
+        The crossing it applies to; empty for all.
+    volume : float or None
+        Water of the whole event, m³, against which the room behind a road's fill is weighed.
     """
 
     event: str
@@ -50,6 +54,8 @@ class Flow:
     distance: float | None = None
     area: float | None = None
     exponent: float | None = None
+    crossing: str = ""
+    volume: float | None = None
 
     @property
     def carried_over(self) -> bool:
@@ -114,12 +120,17 @@ def event_names(flows: Sequence[Flow]) -> list[str]:
 
 
 def flow_for(
-    flows: Sequence[Flow], event: str, section_id: str, stream: str = "", stream_distance: float = math.nan
+    flows: Sequence[Flow],
+    event: str,
+    section_id: str,
+    stream: str = "",
+    stream_distance: float = math.nan,
+    crossing: str = "",
 ) -> Flow | None:
-    """Return the flow of an event at a section: that of the most specific row.
+    """Return the flow of an event at a section or crossing: that of the most specific row.
 
-    The section's own row goes first; then the row of its stream with the greatest distance at or
-    upstream of the section; then the row of its stream without a distance; then the row for all.
+    The section's (or crossing's) own row goes first; then the row of its stream with the greatest distance
+    at or upstream of it; then the row of its stream without a distance; then the row for all.
 
     Parameters
     ----------
@@ -131,6 +142,8 @@ def flow_for(
         The section's stream, empty where it has none.
     stream_distance : float
         Distance of the section along its stream, m, downstream positive; NaN where it has none.
+    crossing : str
+        The crossing that is asked about, empty for a section.
 
     Returns
     -------
@@ -148,8 +161,8 @@ def flow_for(
     for flow in flows:
         if flow.event != event or (flow.stream and flow.stream != stream):
             continue
-        if flow.section:
-            if flow.section != section_id:
+        if flow.section or flow.crossing:
+            if (flow.section and flow.section != section_id) or (flow.crossing and flow.crossing != crossing):
                 continue
             rank = (3, float(bool(flow.stream)))
         elif flow.distance is not None:
@@ -186,7 +199,7 @@ def _read_csv(path: Path, flow_factor: float, length_factor: float) -> list[Flow
         except InputError as problem:
             problems.append(problem)
             continue
-        same = (flow.event, flow.stream, flow.section, flow.distance)
+        same = (flow.event, flow.stream, flow.section, flow.distance, flow.crossing)
         if same in first_line:
             what = f'event "{flow.event}" is given twice for the same place, first in line {first_line[same]}'
             problems.append(InputError("id-duplicate", what, where=where, fix="keep one of the two lines"))
@@ -258,15 +271,27 @@ def _read_row(
             raise InputError("value-not-allowed", what, where=where, fix="give a distance of 0 or more")
         if not stream:
             raise InputError("key-missing", "a distance without a stream", where=where, fix="name the stream")
-        if section:
-            what = "a distance and a section are both given"
-            raise InputError("key-conflict", what, where=where, fix="keep the section or the distance")
+        if section or row.get("crossing"):
+            own = "section" if section else "crossing"
+            what = f"a distance and a {own} are both given"
+            raise InputError("key-conflict", what, where=where, fix=f"keep the {own} or the distance")
     area = None
     if text := row.get("area", ""):
         area = _number(text, "area", where)
         if area <= 0.0:
             raise InputError("number-not-positive", f'area of "{event}" is {text}', where=where)
-    return Flow(event, discharge * flow_factor, probability, stream, section, distance, area)
+    volume = None
+    if text := row.get("volume", ""):
+        volume = _number(text, "volume", where) * flow_factor
+        if volume <= 0.0:
+            raise InputError("number-not-positive", f'volume of "{event}" is {text}', where=where)
+    if section and row.get("crossing"):
+        what = "a section and a crossing are both given"
+        raise InputError("key-conflict", what, where=where, fix="give each its own row")
+    return Flow(
+        event, discharge * flow_factor, probability, stream, section, distance, area,
+        crossing=row.get("crossing", ""), volume=volume,
+    )  # fmt: skip
 
 
 def _number(text: str, name: str, where: str) -> float:
