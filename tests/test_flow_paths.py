@@ -11,6 +11,7 @@ from _random_sections import mirrored, section
 from scipy.optimize import brentq
 from test_geometry_oracle import oracle, water_polygons
 
+from terrain2q.hydraulics.paths import flow_paths
 from terrain2q.hydraulics.section import Section, Subarea
 
 SLOPE = 0.0016
@@ -338,7 +339,9 @@ def test_random_sections_with_hollows():
             filling += state.at_bank
             spilling += len(paths) > 2
             # what they carry adds up without being made to
-            assert sum(p.conveyance for p in state.paths) == pytest.approx(k, rel=1e-9)
+            raw = flow_paths(s._profile, k, state.stage, state.at_bank, int(s._source[0]))
+            assert sum(p.conveyance for p in raw) == pytest.approx(k, rel=1e-9)
+            assert state.parts.conveyance.sum() == pytest.approx(k, rel=1e-12)
             assert sum(p.discharge for p in paths) == pytest.approx(q, rel=1e-12)
             channel = paths[0]
             assert channel.stage == state.stage == s.normal_stage(q, SLOPE)
@@ -403,3 +406,27 @@ def test_the_channels_stage_is_continuous_in_discharge_where_a_bank_adds_conveya
             if s.conveyance(top + 1e-6) > high:
                 assert stage[1] == pytest.approx(top, abs=1e-5)
     assert looked_at > 150
+
+
+@pytest.mark.parametrize("kind", ["varying", "horton", "apart", "reached"])
+def test_paths_add_up_where_the_whole_is_not_the_sum_of_its_parts(kind):
+    random = np.random.default_rng(20271)
+    filling = 0
+    for _ in range(60):
+        s = section(
+            random, 20, int(random.integers(1, 5)), zones=True, varying=kind == "varying",
+            composite="horton" if kind == "horton" else "divide", connected=kind != "apart",
+        )  # fmt: skip
+        if kind == "reached":
+            low = np.flatnonzero(
+                (s.elevations[1:-1] < s.elevations[:-2]) & (s.elevations[1:-1] < s.elevations[2:])
+            )
+            s = s.reached([(s.stations[i + 1] - 0.01, s.stations[i + 1] + 0.01) for i in low[:2]])
+        for k in wanted_conveyances(s, random):
+            state, paths = s.flow_state(k * ROOT, SLOPE), s.flow_paths(k * ROOT, SLOPE)
+            filling += state.at_bank
+            assert sum(p.discharge for p in paths) == pytest.approx(k * ROOT, rel=1e-12)
+            assert state.parts.conveyance.sum() == pytest.approx(k, rel=1e-12)
+            assert all(p.stage <= paths[0].stage for p in paths)
+            assert all(p.discharge > 0 for p in paths[1:])
+    assert filling > 10 or kind == "apart"

@@ -9,7 +9,7 @@ that passes is shared equally until one side is full.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -31,6 +31,10 @@ class Path:
     def conveyance(self) -> float:
         """Conveyance of the whole path."""
         return float(self.wet.conveyance.sum())
+
+    def scaled(self, factor: float) -> Path:
+        """Return the same water carrying `factor` times as much."""
+        return replace(self, wet=replace(self.wet, conveyance=self.wet.conveyance * factor))
 
 
 def flow_paths(

@@ -528,13 +528,19 @@ class Section:
         return _like(found.reshape(q.shape))
 
     def flow_state(self, discharge: float, slope: float) -> FlowState:
-        """Return the stage, every path and the hydraulics by subarea of one discharge > 0."""
+        """Return the stage, every path and the hydraulics by subarea of one discharge > 0.
+
+        The conveyances of all paths add up to that of the discharge (see :meth:`flow_paths`).
+        """
         q, s = float(_positives("discharge", discharge)), float(_positives("slope", slope))
         target = q / np.sqrt(s)
         stages = self._profile.stages_for(target)
         stage, at_bank = stages[-1]
         paths = flow_paths(self._profile, target, stage, at_bank, int(self._source[0]))
-        return FlowState(q, s, stage, at_bank, tuple(x for x, _ in stages), tuple(paths))
+        scale = target / sum(p.conveyance for p in paths)
+        return FlowState(
+            q, s, stage, at_bank, tuple(x for x, _ in stages), tuple(p.scaled(scale) for p in paths)
+        )
 
     def flow_paths(self, discharge: float, slope: float) -> list[FlowPath]:
         """Return the stretches of water that together carry a discharge, the channel's first.
@@ -550,10 +556,9 @@ class Section:
         then gets its share, so that the discharges still add up to the flow.
         """
         state = self.flow_state(discharge, slope)
-        carried = sum(p.conveyance for p in state.paths)
-        scale = state.discharge / carried if carried > 0 else 0.0
+        root = np.sqrt(state.slope)
         return [
-            FlowPath(p.start, p.end, p.stage, p.conveyance * scale, float(p.wet.area.sum()))
+            FlowPath(p.start, p.end, p.stage, float(p.conveyance * root), float(p.wet.area.sum()))
             for p in state.paths
         ]
 
