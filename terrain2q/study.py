@@ -21,6 +21,7 @@ import tomllib
 from collections.abc import Callable, Collection, Iterator, Mapping
 from dataclasses import MISSING, dataclass, field, fields
 from pathlib import Path
+from types import MappingProxyType
 from typing import Any, ClassVar
 
 from terrain2q.errors import InputError, raise_together
@@ -76,6 +77,9 @@ class Table:
 
     either: ClassVar[tuple[tuple[str, str], ...]] = ()
     """Pairs of keys of which only one may be given."""
+
+    only_with: ClassVar[Mapping[str, str]] = MappingProxyType({})
+    """Keys that mean something only beside another: an option that takes the other's place removes them."""
 
     def __post_init__(self) -> None:
         given = {_key_name(f.name): getattr(self, f.name) for f in fields(self)}
@@ -228,6 +232,7 @@ class SubmergedTable(Table):
     """What lies below the water that the terrain shows in the channel."""
 
     either = (("depth", "coefficient"), ("depth", "survey_flow"), ("coefficient", "survey_flow"))
+    only_with = MappingProxyType({"exponent": "coefficient", "area_field": "coefficient"})
     depth: float | None = key(
         "greatest depth of the bed below the water surface", "number", "3.0", quantity="length"
     )
@@ -262,6 +267,7 @@ class SlopeTable(Table):
     """The energy slope, which normal flow takes as the slope of the stream."""
 
     either = (("value", "field"), ("value", "from"), ("field", "from"))
+    only_with = MappingProxyType({"window": "from"})
     value: float | None = key(
         "one slope for every section, fall over run", "number", "0.002", quantity="ratio"
     )
@@ -289,6 +295,7 @@ class FlowsTable(Table):
     """Design flows."""
 
     either = (("path", "events"), ("events", "area_field"))
+    only_with = MappingProxyType({"exponent": "area_field"})
     path: Path | None = key(
         "CSV with the columns event, discharge and optionally probability, stream, section, distance, area",
         "file", '"flows.csv"',
@@ -880,8 +887,15 @@ class _Given:
             for pair in TABLES[table].either:
                 if name in pair:
                     other = pair[1 - pair.index(name)]
-                    if (table, other) not in self.from_options:
-                        self.values[table].pop(other, None)
+                    if (table, other) not in self.from_options and other in self.values[table]:
+                        del self.values[table][other]
+                        self._drop_with(table, other)
+
+    def _drop_with(self, table: str, gone: str) -> None:
+        """Take away the file's keys that mean something only beside a key that is gone."""
+        for name, other in TABLES[table].only_with.items():
+            if other == gone and (table, name) not in self.from_options:
+                self.values[table].pop(name, None)
 
     def place(self, table: str, name: str) -> str:
         """Return where a key stands (a table, where `name` is empty), in words."""

@@ -20,6 +20,7 @@ are not bed: road fills over culverts, pits, noise. Four steps bring out the bed
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from functools import cached_property
 
 import geopandas
 import numpy as np
@@ -35,8 +36,8 @@ from terrain2q.units import SI, UnitSystem
 SNAP_CELLS, SNAP_LEAST = 5.0, 15.0
 """The snap distance where none is given: so many cells, and so many metres at least."""
 
-SIDE_COST = 0.2
-"""Metres of height that the lowest path must gain for each cell sideways: twice usual lidar noise."""
+SIDE_COST = 0.3
+"""Metres of height that the lowest path must gain for each cell sideways: three times usual lidar noise."""
 
 HIGH_COST = 1.0
 """Metres above the lowest place of its row from which a place is not dearer still."""
@@ -115,10 +116,16 @@ class LowLine:
     shift: np.ndarray
     humps: tuple[Hump, ...] = field(default=())
 
-    @property
-    def spacing(self) -> float:
-        """Distance between points, m."""
-        return float(self.distance[1] - self.distance[0]) if self.distance.size > 1 else 0.0
+    @cached_property
+    def ground(self) -> tuple[np.ndarray, np.ndarray]:
+        """Distance and bed where the bed is ground and not a bridge, each shape (m,)."""
+        return self.distance[self.usable], self.bed[self.usable]
+
+    def between(self, low: float, high: float) -> tuple[np.ndarray, np.ndarray]:
+        """Return distance and bed of :attr:`ground` from one stream distance to another."""
+        distance, bed = self.ground
+        first, last = np.searchsorted(distance, [low - 1e-6, high + 1e-6])
+        return distance[first:last], bed[first:last]
 
 
 # ---- arrays ---------------------------------------------------------------------------------------
@@ -209,7 +216,7 @@ def find_humps(elevations: np.ndarray, spacing: float, longest: float) -> list[t
     smooth = median_filter(elevations, 5, mode="nearest")
     above = smooth - opening(smooth, max(round(longest / spacing), 4))
     middle = np.median(above)
-    limit = max(CLEAR, middle + 4.0 * 1.4826 * np.median(np.abs(above - middle)))
+    limit = max(CLEAR, middle + 6.0 * 1.4826 * np.median(np.abs(above - middle)))
     edges = np.flatnonzero(np.diff(np.concatenate([[0], (above > limit).astype(np.int8), [0]])))
     found: list[tuple[int, int]] = []
     for first, end in zip(edges[::2].tolist(), edges[1::2].tolist(), strict=True):
@@ -357,7 +364,8 @@ def low_line(line, terrain: Terrain, snap: float, stream: str = "", start: float
 
 def shift_finding(line: LowLine, snap: float, cell: float, units: UnitSystem) -> Finding | None:
     """Return a finding where the lowest path lies well beside the drawn line and well below it."""
-    gain = line.drawn - line.low
+    # Over a few points, as noise alone makes one place lower than another.
+    gain = median_filter(np.nan_to_num(line.drawn - line.low), 11, mode="nearest")
     beside = (np.abs(line.shift) >= NOTABLE_CELLS * cell * (1 - 1e-9)) & (gain > NOTABLE_GAIN)
     # The path leaves a fill by its side, which says nothing about the stream line.
     for hump in line.humps:
@@ -605,7 +613,8 @@ class LowLines:
         line = self.of(chain)
         if line is None:
             return np.empty(0), np.empty(0), 0.0
-        distance, bed = [line.distance[line.usable]], [line.bed[line.usable]]
+        # Each part with the offset of its distances from those of this chain, from upstream to downstream.
+        parts = [(line, 0.0)]
         begin, end = float(line.distance[0]), float(line.distance[-1])
         used = {chain}
         for downstream in (False, True):
@@ -619,18 +628,18 @@ class LowLines:
                 used.add(following)
                 size = float(other.distance[-1] - other.distance[0])
                 offset = (end if downstream else begin - size) - float(other.distance[0])
-                distance.append(other.distance[other.usable] + offset)
-                bed.append(other.bed[other.usable])
+                parts.insert(len(parts) if downstream else 0, (other, offset))
                 begin, end = (begin, end + size) if downstream else (begin - size, end)
                 here = following
-        distance, bed = np.concatenate(distance), np.concatenate(bed)
-        order = np.argsort(distance, kind="stable")
-        distance, bed = distance[order], bed[order]
-        if not distance.size:
-            return distance, bed, 0.0
         # The stream ends, for this purpose, where its known ground ends.
-        begin, end = max(begin, float(distance[0])), min(end, float(distance[-1]))
+        known = [part.ground[0][[0, -1]] + offset for part, offset in parts if part.ground[0].size]
+        if not known:
+            return np.empty(0), np.empty(0), 0.0
+        begin, end = float(known[0][0]), float(known[-1][1])
         low = min(max(at - 0.5 * window, begin), max(end - window, begin))
         high = min(low + window, end)
-        inside = (distance >= low - 1e-6) & (distance <= high + 1e-6)
-        return distance[inside], bed[inside], high - low
+        pieces = [part.between(low - offset, high - offset) for part, offset in parts]
+        distance = np.concatenate(
+            [piece[0] + offset for piece, (_, offset) in zip(pieces, parts, strict=True)]
+        )
+        return distance, np.concatenate([piece[1] for piece in pieces]), high - low

@@ -31,7 +31,7 @@ WAVES = 4
 """Cosine waves from which the size of the long waves is read; also the degrees of freedom."""
 
 LEAST_POINTS = 12
-MOST_POINTS = 400
+MOST_POINTS = 200
 """More points are brought together, as medians of groups, before pairs are made."""
 
 

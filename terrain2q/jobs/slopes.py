@@ -132,6 +132,10 @@ class StreamSlopes:
         self.window = float(window) if window is not None else max(WINDOW, WINDOW_CELLS * cell)
         self.low_lines, self._units = low_lines, units
         self.found: dict[str, StreamSlope] = {}
+        network = low_lines.network
+        self._pieces: dict[str, list[int]] = {}
+        for piece, name in enumerate(network.chain_stream[network.piece_chain] if len(network) else ()):
+            self._pieces.setdefault(str(name), []).append(piece)
         for line in lines:
             place = self._place(line)
             if place is not None:
@@ -145,9 +149,9 @@ class StreamSlopes:
     def _place(self, line: CutLine) -> tuple[int, float] | None:
         """Return chain and stream distance at which a cut line meets its stream."""
         network = self.low_lines.network
-        mine = np.flatnonzero(network.chain_stream[network.piece_chain] == line.stream) if line.stream else ()
-        if not line.usable or not len(mine):
+        if not line.usable or line.stream not in self._pieces:
             return None
+        mine = np.array(self._pieces[line.stream])
         shape = shapely.LineString(np.column_stack([line.x, line.y]))
         target = shape.interpolate(line.crossing) if np.isfinite(line.crossing) else shape
         piece = mine[np.argmin(shapely.distance(network.pieces[mine], target))]
