@@ -514,6 +514,16 @@ def test_where_no_channel_is_found_water_runs_downhill_from_the_origin():
     assert s.lowest_ground == 0.0
 
 
+@pytest.mark.parametrize("foot", [-0.05, -0.2, 1.0])
+def test_the_foot_of_a_face_outside_the_bank_is_not_the_channels_low_point(foot):
+    """The right bank is a wall toward a terrace that lies lower than the channel's bed."""
+    x, z = [0, 5, 12, 15, 20, 20, 60, 80], [6, 3, 0, 0, 3, foot, foot, 6]
+    s = Section(x, z, n=0.03, origin=13)
+    assert s.lowest_ground == 0.0
+    assert s.bank_tops == (3.0,)
+    assert mirrored(s).lowest_ground == 0.0
+
+
 def test_a_rating_asked_twice_at_a_banks_top_shows_before_and_after_each_time():
     s = Section([0, 0, 5, 5, 20, 20], [6, 0, 0, 2, 1, 6], n=0.03)
     assert s.bank_tops == (2.0,)

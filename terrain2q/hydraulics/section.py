@@ -344,7 +344,12 @@ class Section:
         except (NoAnswerError, ProfileError):
             # no channel to be told apart: downhill from where the stream crosses
             return np.array([foot_of(z, int(np.argmin(np.abs(x - origin))))])
-        return np.flatnonzero((x >= banks.left) & (x <= banks.right))
+        inside = np.flatnonzero((x >= banks.left) & (x <= banks.right))
+        # the foot of a vertical face that falls outward from the top of a bank lies outside the channel
+        left, right = (inside[x[inside] == at] for at in (banks.left, banks.right))
+        first = left[np.argmax(z[left])] if left.size else inside[0]
+        last = right[np.argmax(z[right])] if right.size else inside[-1]
+        return np.arange(first, last + 1)
 
     @cached_property
     def _profile(self) -> DividedProfile:
