@@ -451,6 +451,11 @@ class Study:
             table = getattr(self, table_name)
             if table is not None:
                 values = {name: getattr(table, attribute_of(name)) for name in keys_of(cls)}
+                for first, second in cls.either:
+                    # a default beside the key that excludes it would read as a contradiction
+                    for name, other in ((first, second), (second, first)):
+                        if values[other] is not None and values[name] == default_of(cls, name):
+                            values[name] = None
                 tables[table_name] = {name: _plain(v) for name, v in values.items() if v is not None}
         return tables
 
