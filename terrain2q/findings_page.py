@@ -270,6 +270,41 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "A slanted section is wider than the flow is, so discharge is too large and stage too low.",
             "A line along a road that crosses the valley at a slant.",
         ),
+        "line-ends-low": (
+            "A line that was laid out ends on ground lower above the bed than [cut_lines] height asks for: "
+            "it "
+            "has its full width, or the terrain, another line or its own stream stopped it, or a stream's "
+            "valley opens there.",
+            "Water that rises above the line's end stands there against an imagined wall, and the stage "
+            "comes "
+            "out on the high side.",
+            "Lines on a flood plain 2 km wide with a width of 1500 ft.",
+        ),
+        "line-moved": (
+            "At the place asked for, a line square to the stream would have crossed it twice, so it stands a "
+            "little up- or downstream.",
+            "The stream distance of the section is that of the place where it stands.",
+            "A line at the neck of a tight meander loop.",
+        ),
+        "line-left-out": (
+            "No line could be laid out at this place: it lies off the terrain or beyond the stream's end, or "
+            "other lines or streams leave it no room.",
+            "There is no section here; the next ones up- and downstream stand for this reach.",
+            "The last lines of a tributary, within the reach of the main stream's lines.",
+        ),
+        "lines-kept": (
+            "The file already held lines that somebody drew or changed; they stay as they are, and lines "
+            "laid out anew keep clear of them.",
+            "Your work is not overwritten, and it is not corrected either.",
+            "A line bent by hand around a pond, in `cut_lines.gpkg`.",
+        ),
+        "lines-not-used": (
+            "The study asks for laid-out lines by `every`, and beside it lies a file of laid-out lines that "
+            "somebody has edited.",
+            "A run on `every` lays the lines out afresh, without the edits.",
+            "`terrain2q layout study.toml`, an hour in a GIS, then `terrain2q run study.toml` with `every` "
+            "still in the study file.",
+        ),
         "stream-unusable": (
             "A row of the stream layer has no line that could be used, and was left out.",
             "Cut lines on that stream have nothing to tell direction and stream distance from.",
@@ -284,6 +319,29 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "Two parts of one stream both start, or both end, where they meet.",
             "One of them runs upstream, so left and right are exchanged on its cut lines.",
             "A stream digitised from both ends towards a bridge.",
+        ),
+        "stream-turned": (
+            "The ground falls against the direction in which this stream line was drawn, so it was turned.",
+            "Left and right of every section, stream distances and flows that take effect at a distance "
+            "depend on it.",
+            "A river digitised from its mouth upwards.",
+        ),
+        "stream-direction-uncertain": (
+            "Along this stream the ground falls too little, or too unevenly, to tell which way it flows.",
+            "If the line was drawn upstream, left and right of its sections are exchanged.",
+            "A ditch in a marsh, or a short line across a pond.",
+        ),
+        "stream-shifted": (
+            "The lowest path of the ground runs beside the stream line as it was drawn.",
+            "The low line is used for the stream's slope only. Cut lines are still turned and placed by "
+            "the drawn line, and a line that misses the channel may find banks that are not the stream's.",
+            "A stream digitised at 1:24,000 over a lidar terrain.",
+        ),
+        "stream-fill": (
+            "Ground stands across the stream, higher than what lies upstream and downstream of it.",
+            "Water gets through in a culvert or the stream line is wrong; either way it is no bed, and "
+            "was left out of the slope.",
+            "A road on a fill over a culvert.",
         ),
         "no-low-ground": (
             "Nowhere between its ends is the section lower than at its ends.",
@@ -371,10 +429,45 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "Discharge goes with the root of the slope, and on flat reaches backwater rules the stage.",
             "A ditch in a tidal marsh.",
         ),
+        "slope-uncertain": (
+            "The 90 % interval of the slope, taken from the ground along the stream, is wider than half "
+            "the slope.",
+            "Pools, bars and noise hide the fall over so short a stretch; a slope 25 % off moves the "
+            "depth by 7 to 9 %. The interval also spans the slope over twice the window.",
+            "A window of 300 ft on a stream with pools 150 ft long.",
+        ),
+        "water-in-channel": (
+            "The lowest ground of the section is level from side to side, as a water surface is, and "
+            "nothing is known of the bed below it.",
+            "The water surface was taken for the bed. What flows below it is left out, so stages are on "
+            "the high side, most of all at small floods. A dry bed as level as water cannot be told from "
+            "it.",
+            "A lidar terrain of a river, without [submerged] in the study file.",
+        ),
+        "bed-below-water": (
+            "A bed was put below the level water of the section, as [submerged] says.",
+            "Lowest ground and depth count from that bed, and z of the section there is not what the "
+            "terrain shows. The message has the water's edges and level, from which the terrain's ground "
+            "can be had back.",
+            "A river 80 ft wide with `depth = 3.0` under [submerged].",
+        ),
         "flow-missing": (
             "No row of the flows applies to this section, its stream and its stream distance.",
             "There is no discharge to find a stage for. The section keeps its row with empty numbers.",
             "Flows given for `Mill Creek` and a section on `Mill Creek tributary`.",
+        ),
+        "drainage-area-missing": (
+            "The field with the drainage area is empty for this cut line, or holds no number above zero.",
+            "A discharge is then taken as it is given, and a depth below water by drainage area cannot be"
+            " had.",
+            "A cut line added after the areas were filled in.",
+        ),
+        "drainage-area-far": (
+            "The discharge was carried over from a place whose drainage area is less than half, or more "
+            "than one and a half times, that of the section.",
+            "The power law between discharge and area holds along one stream over a limited range (common"
+            " practice: a ratio from 0.5 to 1.5).",
+            "A gauge far down the river used for a headwater section.",
         ),
         "above-section-ends": (
             "The water stands higher than the ground at an end of the section.",
@@ -444,32 +537,40 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "Fields behind a levee that fill while the channel is bankfull.",
         ),
         "hollow-reached": (
-            "Ground on this section lies lower than the water, and the section's own ridges keep the water out; "
-            "on the map water gets there from up- or downstream. It then counts in the section, at the channel's "
+            "Ground on this section lies lower than the water, and the section's own ridges keep the water "
+            "out; "
+            "on the map water gets there from up- or downstream. It then counts in the section, at the "
+            "channel's "
             "stage, and the stage is solved again.",
-            "A section whose banks hold between two that spill would carry all the flow between its banks and "
+            "A section whose banks hold between two that spill would carry all the flow between its banks "
+            "and "
             "stand too high. The message has both answers.",
             "A levee with a gap: the section crosses it where it is whole.",
         ),
         "water-rises-downstream": (
-            "The water's level, as each section gives it, is higher at the lower of two neighbouring sections.",
-            "Each section is worked out by itself, at normal depth. Water does not flow uphill: one of the two is "
+            "The water's level, as each section gives it, is higher at the lower of two neighbouring "
+            "sections.",
+            "Each section is worked out by itself, at normal depth. Water does not flow uphill: one of the "
+            "two is "
             "out, or the lower one holds the water back and the upper one is really deeper.",
             "A narrow wooded section below a wide smooth one.",
         ),
         "extent-cut-off": (
             "Between two sections the water reaches the line that joins their ends, and would go on.",
-            "Beyond it nobody has worked out a level, so the map ends there though the water may not. That part "
+            "Beyond it nobody has worked out a level, so the map ends there though the water may not. That "
+            "part "
             "of the boundary is left out of the boundary's audit.",
             "A cut line that stops on the floodplain.",
         ),
         "extent-without-section": (
-            "A section that has no answer, or that lies on no stream, does not take part in the flood extent.",
+            "A section that has no answer, or that lies on no stream, does not take part in the flood "
+            "extent.",
             "The water between its two neighbours is then carried over a longer way.",
             "A cut line drawn beside the stream.",
         ),
         "extent-one-section": (
-            "Water is mapped between sections, and this stream has fewer than two with an answer at the event.",
+            "Water is mapped between sections, and this stream has fewer than two with an answer at the "
+            "event.",
             "One section says nothing of the ground up- and downstream of it.",
             "A tributary with a single cut line.",
         ),
@@ -477,6 +578,114 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "The raster says one unit of elevation, the study another. The study's was used.",
             "If the study is wrong, every depth is out by a factor of 3.28.",
             '`elevation_unit = "ft"` on a raster whose band says metres.',
+        ),
+        "crossing-off-stream": (
+            "The point of a crossing is further from every stream than the distance within which one is "
+            "looked for.",
+            "Without its stream there is no flow and no direction, and the nearest stream may be another "
+            "valley's.",
+            "A culvert of a field ditch that the stream layer does not hold.",
+        ),
+        "crossings-merged": (
+            "Crossings lie nearer to each other than the merge distance and are counted as one.",
+            "A divided road has one opening under two carriageways; two rows would count it twice.",
+            "The two carriageways of a highway, 18 m apart.",
+        ),
+        "road-grazes-stream": (
+            "A road meets a stream several times without getting away from it in between, or at a very "
+            "small angle.",
+            "Lines drawn a few metres off make ten crossings of a road that only runs beside the stream.",
+            "A valley road that touches the outside of three bends.",
+        ),
+        "road-in-tunnel": (
+            "A field says that the road is in a tunnel where its line meets the stream.",
+            "There is no crest there that water could pass. A crossing that comes from a point keeps its "
+            "row, without "
+            "an answer.",
+            "`tunnel = yes` on a road line under a canal.",
+        ),
+        "road-line-missing": (
+            "Only the point of the crossing is known. The road was taken to run straight along the highest "
+            "ground "
+            "across the stream.",
+            "Where the ground shows no fill, the direction is a guess, and the crest with it.",
+            "A list of culverts with coordinates, and no road layer.",
+        ),
+        "deck-bridged": (
+            "Along the road the ground dips at the stream with sides steeper than a road's: the deck was "
+            "taken out of "
+            "the ground model. The road's height was taken straight between the tops of the abutments.",
+            "The ground under the deck is metres lower than the road. Taken for the crest, it would flood "
+            "every bridge.",
+            "A bridge of 24 m whose deck is missing, with a dip of 2.6 m. A ford between steep banks looks "
+            "the same.",
+        ),
+        "crest-doubtful": (
+            "The road does not stand out well: it is uneven, slopes across, is narrower than the cells, or "
+            "lies hardly "
+            "above the bed.",
+            "The discharge that reaches the crest goes with more than its square; a foot of error decides "
+            "the verdict.",
+            "A farm track on 3 m cells.",
+        ),
+        "crest-at-end": (
+            "The lowest point of the road within reach is where the search ends, and the road falls "
+            "towards it.",
+            "The water may pass the road beyond, at a lower level than the one given.",
+            "A road that runs down the valley after it has crossed the stream.",
+        ),
+        "crest-survey-differs": (
+            "The surveyed crest and the road in the ground are more than 0.3 m (1 ft) apart.",
+            "Most such differences are a datum or a unit; some are a road rebuilt since the flight.",
+            "A crest surveyed in the datum of 1929 beside a terrain in that of 1988.",
+        ),
+        "overflow-aside": (
+            "The road's low point that water can get to is not at the stream.",
+            "The road is closed there first, and the water leaves its valley there.",
+            "A road 1.3 m lower 120 m from its bridge.",
+        ),
+        "section-cut-by-road": (
+            "No line square to the stream within the search is clear of the fill over the width it needs, "
+            "so that the "
+            "section ends at the fill.",
+            "The section is narrower than the valley and its stage too high.",
+            "A road that crosses a wide floodplain at a small angle.",
+        ),
+        "no-opening-passes": (
+            "Even the whole width of the approach section does not pass the event with the stage below the "
+            "crest less "
+            "the freeboard.",
+            "The road, not its opening, is too low for the event.",
+            "A lane half a metre above the floodplain.",
+        ),
+        "weir-drowned": (
+            "The stage of uniform flow below the road stands above its crest too.",
+            "A drowned weir passes less than C L H^1.5, down to nothing when both sides stand alike.",
+            "A low road across a flat floodplain at the 100-year flow.",
+        ),
+        "backwater": (
+            "Downstream the ground is level as only water is, at a height that matters here, or a larger "
+            "stream is "
+            "joined nearby and hardly lower.",
+            "Uniform flow knows nothing of it; the true stage is higher.",
+            "A road 200 m above a lake.",
+        ),
+        "culvert-ponds": (
+            "The fill is whole and high, and there is room behind it below its crest.",
+            "A culvert too small for the flow ponds water up to the crest; with much room behind it, the "
+            "flood's peak "
+            "passes before the crest is reached.",
+            "A fill 6 m high over a pipe of 1.2 m.",
+        ),
+        "tidal": (
+            "The field named by `tide_field` says that the tide reaches the crossing.",
+            "At high tide the stage is the sea's.",
+            "A road over a creek behind a beach.",
+        ),
+        "crossing-failed": (
+            "No answer was found for this crossing; the message says what was missing. It keeps its row.",
+            "One bad crossing stops nothing else.",
+            "A crossing outside the terrain.",
         ),
         "section-failed": (
             "Something unforeseen went wrong on this section; the message says what.",
