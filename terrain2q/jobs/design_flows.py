@@ -11,6 +11,7 @@ from terrain2q.errors import DOUBTFUL, FAILED, Finding, Terrain2qError
 from terrain2q.flows import AREA_RATIOS, Flow, event_names, flow_for
 from terrain2q.ground.streams import length_text
 from terrain2q.hydraulics.section import CHANNEL, FlowState, Section, hydraulic_columns
+from terrain2q.jobs.remarks import Remark, section_remarks, state_remarks
 from terrain2q.jobs.sections import BuiltSection
 from terrain2q.units import UnitSystem
 
@@ -151,6 +152,9 @@ def answer_section(
     doubtful = any(f.severity == DOUBTFUL for f in built.findings)
     if built.slope > STEEP:
         notes.add("slope-steep", f"the slope is {built.slope:.3g}")
+    for remark in section_remarks(built.specs, section, units):
+        notes.remark(remark)
+    doubtful = doubtful or notes.doubtful > 0
     answers = []
     for event in events:
         flow = flow_for(flows, event, built.section_id, built.line.stream, built.line.stream_distance)
@@ -276,6 +280,8 @@ def _remark(section: Section, state: FlowState, row: dict, share: float, event: 
         notes.add("velocity-high", f"mean velocity {notes.velocity(row['mean_velocity'])}", event)
     if row["alpha"] > HIGH_ALPHA:
         notes.add("alpha-high", f"alpha {row['alpha']:.2f}", event)
+    for remark in state_remarks(section, state, notes.units):
+        notes.remark(remark, event)
     total = sum(p.conveyance for p in state.paths)
     for path in state.paths[1:]:
         part = path.conveyance / total
@@ -301,26 +307,36 @@ class _Notes:
     """Findings about one section, one for each code and text, with the events they hold for."""
 
     def __init__(self, built: BuiltSection, units: UnitSystem) -> None:
-        self._built, self._units = built, units
+        self._built, self.units = built, units
         self._found: dict[tuple[str, str], list[str]] = {}
+        self._worst: dict[tuple[str, str], tuple[Remark, list[str]]] = {}
         self.doubtful = 0
 
     def length(self, metres: float) -> str:
-        return length_text(metres, self._units)
+        return length_text(metres, self.units)
 
     def level(self, metres: float) -> str:
         """Return an elevation; water is told apart by hundredths."""
-        return f"{metres * self._units.per_si('length'):.2f} {self._units.symbol('length')}"
+        return f"{metres * self.units.per_si('length'):.2f} {self.units.symbol('length')}"
 
     def velocity(self, value: float) -> str:
-        return f"{value * self._units.per_si('velocity'):.1f} {self._units.symbol('velocity')}"
+        return f"{value * self.units.per_si('velocity'):.1f} {self.units.symbol('velocity')}"
 
     def add(self, code: str, message: str, event: str = "") -> None:
         finding = Finding(code, message)
         self.doubtful += finding.severity != "note"
         self._found.setdefault((code, message), []).append(event)
 
+    def remark(self, remark: Remark, event: str = "") -> None:
+        """Take up a remark; of those on one place the worst is told, with the events they hold for."""
+        self.doubtful += Finding(remark.code, remark.message).severity != "note"
+        worst, events = self._worst.get((remark.code, remark.place), (remark, []))
+        self._worst[remark.code, remark.place] = (max(worst, remark, key=lambda r: r.weight), [*events, event])
+
     def findings(self) -> tuple[Finding, ...]:
+        for remark, events in self._worst.values():
+            self._found.setdefault((remark.code, remark.message), []).extend(events)
+        self._worst.clear()
         profile = self._built.profile
         low = int(np.argmin(profile.elevations))
         out = []
