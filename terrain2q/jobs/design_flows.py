@@ -331,7 +331,10 @@ class _Notes:
         """Take up a remark; of those on one place the worst is told, with the events they hold for."""
         self.doubtful += Finding(remark.code, remark.message).severity != "note"
         worst, events = self._worst.get((remark.code, remark.place), (remark, []))
-        self._worst[remark.code, remark.place] = (max(worst, remark, key=lambda r: r.weight), [*events, event])
+        self._worst[remark.code, remark.place] = (
+            max(worst, remark, key=lambda r: r.weight),
+            [*events, event],
+        )
 
     def findings(self) -> tuple[Finding, ...]:
         for remark, events in self._worst.values():
