@@ -128,6 +128,14 @@ LAYERS: MappingProxyType[str, Layer] = _by_name(
         ),
     ),
     Layer(
+        "required_widths",
+        "LineString",
+        "Required widths",
+        "One row for each side of a section at an event; only from `terrain2q size`.",
+        ("section_id", "event", "discharge", "stage", "side", "width", "discharge_before", "status"),
+        "The bench in plan, from the channel bank to the top of its outer slope; empty where none is needed.",
+    ),
+    Layer(
         "findings",
         "Point",
         "Findings",
@@ -253,7 +261,8 @@ COLUMNS: MappingProxyType[str, Column] = _by_name(
         float,
         "length",
         "Stage",
-        "Elevation of the water surface in the channel; in subarea_flows, of the water over that subarea.",
+        "Elevation of the water surface in the channel; in subarea_flows, of the water over that subarea; in "
+        "required_widths, the stage that is allowed.",
     ),
     Column("depth", float, "length", "Depth", "Stage minus the lowest ground of the channel."),
     Column(
@@ -342,6 +351,28 @@ COLUMNS: MappingProxyType[str, Column] = _by_name(
         "ratio",
         "Share",
         "Part of the section's discharge that flows in this subarea, from 0 to 1.",
+    ),
+    # --- a bench -----------------------------------------------------------------------------------
+    Column(
+        "side",
+        str,
+        "text",
+        "Side",
+        "Side of the channel on which the bench is cut: left or right, looking downstream.",
+    ),
+    Column(
+        "width",
+        float,
+        "length",
+        "Width",
+        "Width of the bench's level floor on this side; 0 where the section passes the flow as it is.",
+    ),
+    Column(
+        "discharge_before",
+        float,
+        "flow",
+        "Discharge before",
+        "Flow that passes at the allowed stage without the bench.",
     ),
     # --- findings ----------------------------------------------------------------------------------
     Column("code", str, "text", "Code", "Code of the finding; each has its heading on the page of findings."),

@@ -53,6 +53,7 @@ CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
     "id-missing": Kind(ERROR, "A feature has no id", "Fill in the id, or name another id field."),
     "class-missing": Kind(ERROR, "Land-cover classes are not in the roughness table", "Add a row for each class listed."),
     "class-duplicate": Kind(ERROR, "A class stands twice in the roughness table", "Keep one row for each class."),
+    "section-unknown": Kind(ERROR, "No cut line has the id that a table names", "Correct the id, or take the row away."),
     "table-unknown": Kind(ERROR, "No built-in table has this name", "`terrain2q tables` lists them."),
     "number-not-positive": Kind(ERROR, "A roughness, slope or discharge is not above zero", "Give a number above zero."),
     "station-decreases": Kind(ERROR, "Stations of a section decrease", "Give the points from left to right; two equal stations make a vertical face."),
@@ -150,6 +151,10 @@ CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
     "culvert-ponds": Kind(DOUBTFUL, "Water ponds behind a high fill, which normal depth does not know", "Route the event's water through the room behind the fill and the culvert."),
     "tidal": Kind(DOUBTFUL, "The tide reaches a crossing", "Find the stage of the tide and take the higher one."),
     "crossing-failed": Kind(FAILED, "A crossing could not be worked out", "See the message; please report it if the inputs look right."),
+    "bench-not-possible": Kind(FAILED, "A bench cannot be cut as the study asks", "Set `base` below the allowed stage, or give `stage` under [bench]."),
+    "width-not-enough": Kind(FAILED, "No bench within the section passes the flow", "Raise `stage`, lower `base`, smooth the bench, or draw the cut line longer."),
+    "width-at-jump": Kind(NOTE, "The required width lies where the discharge jumps", "Look at the curve of width and discharge; a little less width passes clearly less."),
+    "observation-no-answer": Kind(FAILED, "No roughness reproduces an observation", "Check its stage, discharge and section; the message gives the nearest discharge that can be had."),
     "section-failed": Kind(FAILED, "A section could not be worked out", "See the message; please report it if the inputs look right."),
 })  # fmt: skip
 

@@ -131,6 +131,11 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "The rows may hold different values; which one counts would depend on their order.",
             "Two tables were pasted into one, and `pasture` is in both, with 0.035 and 0.040.",
         ),
+        "section-unknown": (
+            "A row of observed stages names a section that the layer of cut lines does not have.",
+            "A misspelt id would leave an observation out without a word.",
+            "`R-14` in the table where the cut line is called `R-014`.",
+        ),
         "table-unknown": (
             "The name given is neither a file nor one of the built-in roughness tables.",
             "Without the table there is no roughness.",
@@ -686,6 +691,30 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "No answer was found for this crossing; the message says what was missing. It keeps its row.",
             "One bad crossing stops nothing else.",
             "A crossing outside the terrain.",
+        ),
+        "bench-not-possible": (
+            "At this section the bench's base is not below the stage that the water may reach, or no top of "
+            "bank is known to stay below.",
+            "A bench above the water carries nothing, so there is no width to find.",
+            "`base = 6.0` where the lower top of bank is 5.2 ft above the lowest ground.",
+        ),
+        "width-not-enough": (
+            "Even the widest bench whose outer slope still meets the ground within the section does not pass "
+            "the flow at the allowed stage.",
+            "The section as drawn cannot be widened enough. The message has the most that can pass.",
+            "A cut line that ends 30 m from the channel, with a flow that needs a bench of 60 m.",
+        ),
+        "width-at-jump": (
+            "The discharge at the allowed stage jumps as the bench grows past this width: it opens a hollow, "
+            "passes a vertical face, or, at a width of next to nothing, divides the section at the bank.",
+            "The width has no room for error: a little less passes clearly less.",
+            "A bench that breaks through a levee into low ground behind it.",
+        ),
+        "observation-no-answer": (
+            "At the observed stage no roughness above zero gives the observed discharge.",
+            "The observation and the section contradict each other: the stage lies below the ground, the "
+            "floodplain alone carries more, or the place is wrong.",
+            "A high-water mark below the channel's lowest ground.",
         ),
         "section-failed": (
             "Something unforeseen went wrong on this section; the message says what.",
