@@ -66,9 +66,23 @@ class Valley:
     def centre(self) -> float:
         return WEST + WIDE * (self.number + 0.5)
 
+    def top(self, s):
+        """Return the height of the road's surface, as it was built."""
+        return self.bed + self.crest + self.curve * (s - self.sag) ** 2
+
     @property
     def crest_height(self) -> float:
-        return self.bed + self.crest
+        """The lowest point of the road; where the deck is missing, of what is left with a straight deck."""
+        if not self.opening:
+            return self.bed + self.crest
+        s = np.arange(-60.0, 60.0, 0.01)
+        angle = np.radians(self.slant)
+        x, y = self.centre - s * np.cos(angle), NORTH - ROAD_AT + s * np.sin(angle)
+        whole = self.ground(x, y) > self.top(s) - 1e-6
+        left, right = s[whole & (s < 0)].max(), s[whole & (s > 0)].min()
+        return float(
+            min(self.top(np.array([left, right])).min(), self.top(s[(s < left) | (s > right)]).min())
+        )
 
     @property
     def upper_edge(self) -> float:
@@ -94,7 +108,7 @@ class Valley:
 
     @property
     def crest_discharge(self) -> float:
-        return self.discharge(self.crest - self.slope * self.upper_edge)
+        return self.discharge(self.crest_height - self.bed - self.slope * self.upper_edge)
 
     def along_and_across(self, x, y):
         """Return distance along the road from the stream, and off its middle, upstream positive."""
@@ -110,8 +124,7 @@ class Valley:
         bed = self.bed + self.slope * (ROAD_AT - down)
         natural = bed + np.maximum(np.abs(x - self.centre) - self.half_bed, 0.0) / self.side
         s, t = self.along_and_across(x, y)
-        top = self.crest_height + self.curve * (s - self.sag) ** 2
-        fill = top - np.maximum(np.abs(t) - HALF_TOP, 0.0) / 2.0
+        fill = self.top(s) - np.maximum(np.abs(t) - HALF_TOP, 0.0) / 2.0
         if self.opening:
             fill = np.minimum(fill, natural + 2.0 * np.maximum(np.abs(s) - self.opening, 0.0))
         return np.maximum(natural, fill)

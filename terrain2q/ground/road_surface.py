@@ -33,7 +33,7 @@ STEEPEST = 0.2
 """Grade above which the sides of a dip are no road (common practice: public roads stay below 12 to 15 %)."""
 
 FACE = 0.3
-"""Least slope of an abutment's face, over three metres and across the road's width (built at 1:2 or steeper)."""
+"""Least slope of an abutment's face over three metres, across the whole road (built at 1:2 or steeper)."""
 
 DIP = 0.3
 """Metres a dip must be deep, beyond the noise, to be one."""
