@@ -60,11 +60,11 @@ class OutputFolder:
         """The study as it was run, by table."""
         return self.record.get("settings", {})
 
-    @property
+    @cached_property
     def events(self) -> list[str]:
         """Names of the events, in the order of the study."""
         stages = self.layers.get("design_stages")
-        return [] if stages is None else list(dict.fromkeys(stages["event"]))
+        return [] if stages is None else list(stages["event"].unique())
 
     @cached_property
     def is_of_record(self) -> bool:

@@ -18,7 +18,6 @@ from markupsafe import Markup
 
 from terrain2q.output.folder import OutputFolder, read_folder
 from terrain2q.output.report_data import report_data
-from terrain2q.output.run_record import plain
 from terrain2q.output.whole_file import not_writable, whole_file
 
 REPORT_NAME = "report.html"
@@ -136,5 +135,5 @@ def _part(name: str) -> Markup:
 
 def _script_safe(value: Any) -> Markup:
     """Return JSON that no text in it can end the script it stands in."""
-    text = json.dumps(plain(value), ensure_ascii=False, allow_nan=False, separators=(",", ":"))
+    text = json.dumps(value, ensure_ascii=False, allow_nan=False, separators=(",", ":"))
     return Markup(text.replace("<", "\\u003c"))

@@ -47,8 +47,9 @@ _LEVELS = frozenset(
     {"stage", "stage_low", "stage_high", "depth", "critical_stage", "lowest_ground", "crest", "freeboard"}
 )
 _SECTION_LAYERS = frozenset(
-    {"cut_lines", "sections", "subareas", "ratings", "design_stages", "subarea_flows", "required_widths"}
-)
+    {"cut_lines", "sections", "subareas", "ratings", "design_stages", "subarea_flows", "required_widths",
+     "flood_extent", "low_not_joined"}
+)  # fmt: skip
 _SHOWN_OF_A_CODE = 200
 
 
@@ -502,7 +503,7 @@ def _came_out(source: OutputFolder) -> list[str]:
     extent = layers.get("flood_extent")
     if extent is not None and len(extent):
         unit = source.units.symbol("area")
-        texts = [f"{r.event} {r.area:.4g} {unit}" for r in extent.itertuples() if np.isfinite(r.area)]
+        texts = [f"{r.event} {_large(r.area)} {unit}" for r in extent.itertuples() if np.isfinite(r.area)]
         lines.append("Area under water: " + "; ".join(texts) + ".")
     crossings = layers.get("crossings")
     if crossings is not None and len(crossings):
@@ -511,6 +512,11 @@ def _came_out(source: OutputFolder) -> list[str]:
                                 group["verdict"].value_counts().items())  # fmt: skip
             lines.append(f"Crossings at {event}: {counted}.")
     return lines
+
+
+def _large(number: float) -> str:
+    """Return a number of four figures, thousands apart."""
+    return f"{float(f'{number:.4g}'):,.0f}".replace(",", "\u202f")
 
 
 def _inputs(source: OutputFolder) -> list[dict]:

@@ -358,6 +358,9 @@ function paintMap() {
   if (events.length) byId("map-title").textContent = `Map, at ${events[event].name}`;
   const extent = data.map.extents[event] || "";
   mapExtent.setAttribute("d", extent);
+  const note = byId("map-note");
+  note.hidden = !data.map.extents.length || Boolean(extent);
+  if (!note.hidden) note.textContent = `No flood extent was mapped at ${events[event].name}.`;
   if (events.length) mapExtent.setAttribute("fill", events[event].tone);
   mapLow.setAttribute("d", data.map.low[event] || "");
   mapLines.forEach(({ group, wet, line }, i) => {
@@ -401,6 +404,7 @@ function paintEvents(section) {
   const table = byId("panel-events");
   table.replaceChildren();
   if (!events.length) return;
+  table.classList.toggle("tight", events.length > 3);
   const head = add(add(table, "thead"), "tr");
   add(head, "th", { scope: "col" }, "At the event");
   const order = events.map((_, i) => i);
@@ -662,6 +666,7 @@ function drawLong() {
     { stroke: DEEP, "stroke-width": e === state.event ? 2.2 : 1.1, "stroke-dasharray": e === state.event ? null : DASHES[1 + (e % 4)], bold: e === state.event ? 1 : null }, event.name));
   ends.sort((a, b) => a.y - b.y);
   ends.forEach((label, k) => { if (k) label.y = Math.max(label.y, ends[k - 1].y + 13); });
+  for (let k = ends.length - 1, limit = height - 22; k >= 0; k -= 1, limit -= 13) ends[k].y = Math.min(ends[k].y, limit);
   for (const label of ends) add(svg, "text", { x: box.right + 5, y: label.y + 4, "font-size": 11.5, fill: INK, "font-weight": label.bold ? 700 : 400 }, label.name);
   for (const { s, i } of mine) {
     const shown = i === state.shown;
@@ -671,7 +676,7 @@ function drawLong() {
       add(svg, "text", { x: x(s.distance) + (left ? -5 : 5), y: box.bottom - 6, "text-anchor": left ? "end" : "start", "font-size": 11.5,
         "font-weight": 700, fill: INK, stroke: "#fff", "stroke-width": 3, "paint-order": "stroke" }, s.id);
     }
-    const dot = add(svg, "circle", { cx: x(s.distance), cy: y(s.lowest), r: shown ? 5 : 3.2, fill: shown ? "#ffd24d" : "#3d3127", stroke: "#3d3127", cursor: "pointer" });
+    const dot = add(svg, "circle", { cx: x(s.distance), cy: y(s.lowest), r: shown ? 5 : mine.length > 60 ? 1.6 : 3.2, fill: shown ? "#ffd24d" : "#3d3127", stroke: "#3d3127", cursor: "pointer" });
     dot.addEventListener("click", () => choose(i));
   }
   byId("long-caption").textContent = `Lowest ground at ${mine.length} sections of ${stream}` + (events.length ? " and the water at each event" : "") + ", straight between sections.";
