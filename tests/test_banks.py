@@ -286,3 +286,9 @@ def test_surveyed_tops(name, left, right, points):
     found = tops(x, z)
     # within 15 % of the surveyed width, the measure of tests/benchmarks/bank_tops.py
     assert found == pytest.approx((left, right), abs=0.15 * (right - left))
+
+
+def test_a_stream_on_its_bed_is_not_taken_for_the_hollow_behind_the_bank():
+    x, z = [0, 5, 12, 15, 20, 20, 45, 50], [6, 3, 0, 0, 3, -1, -1, 6]
+    assert tops(x, z, 13.0) == (0.0, 20.0)
+    assert tops(x, z, 30.0)[0] == 20.0
