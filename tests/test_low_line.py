@@ -99,6 +99,27 @@ def test_two_fills_close_to_each_other_and_a_pit():
     assert len(stretches) in (2, 3)
 
 
+def test_a_hill_that_a_stream_cannot_run_over_goes_whole():
+    distance = np.arange(0.0, 1200.0, 5.0)
+    line = 80.0 - 0.01 * distance
+    hill = np.maximum(6.0 * (1.0 - ((distance - 600.0) / 150.0) ** 2), 0.0)
+    bed, usable, stretches = free_of_humps(line + hill, 5.0)
+    assert len(stretches) == 1
+    # its feet, and what lies lower than the ground upstream of it, fall as a stream may
+    assert not usable[(distance > 480.0) & (distance < 710.0)].any()
+    # at 735 m the hill is 6 (1 - 0.9²) = 1.14 m high and its ground already below that at its upper foot
+    assert np.abs(bed - line).max() < 1.15
+    assert robust_slope(distance[usable], bed[usable]).slope == pytest.approx(0.01, rel=0.02)
+
+
+def test_a_waterfall_is_no_hump_and_no_pit():
+    distance = np.arange(0.0, 400.0)
+    z = 80.0 - 0.01 * distance - np.where(distance > 200.0, 10.0, 0.0)
+    _, usable, stretches = free_of_humps(z, 1.0)
+    assert usable.all()
+    assert stretches == []
+
+
 def test_gaps_are_bridged_inside_and_left_at_the_ends():
     z = 30.0 - 0.01 * np.arange(100.0)
     z[:5] = z[40:60] = z[97:] = np.nan

@@ -14,7 +14,6 @@ from terrain2q.errors import InputError, NoAnswerError
 from terrain2q.hydraulics.submerged import (
     LEAST_POINTS,
     SHAPES,
-    Water,
     bed_below,
     deepened,
     depth_for_flow,

@@ -8,17 +8,19 @@ are not bed: road fills over culverts, pits, noise. Four steps bring out the bed
    lowest place of its row (a metre at most), and a step sideways costs :data:`SIDE_COST`. It serves
    elevations only; stream distances stay those of the drawn line.
 2. *Humps.* Water never flows uphill, so ground that stands above both what lies upstream and what lies
-   downstream of it is no bed. The opening of the profile (the highest, over all windows of
-   :data:`LONGEST_FILL` that hold a place, of the lowest ground in the window) leaves ground that falls all
-   the way as it is and cuts off every hump shorter than the window. What stands clearly above the opening
-   is a hump, with a margin for its toes. It is taken out, and nothing is put in its place but a straight
-   bridge for plots, so a hump cannot flatten the stretch upstream of it as filling or carving would.
+   downstream of it is no bed. The opening of the profile (the highest, over all windows that hold a place, of
+   the lowest ground in the window) leaves ground that falls all the way as it is and cuts off every hump
+   shorter than the window: :data:`LONGEST_FILL` for fills, and at last :data:`LONGEST_HILL` for what stands
+   out by a metre. What stands clearly above the opening is a hump, with a margin for its toes. It is taken
+   out, and nothing is put in its place but a straight bridge for plots, so a hump cannot flatten the stretch
+   upstream of it as filling or carving would.
 3. *Pits.* The same upside down, over :data:`LONGEST_PIT`.
 4. *Noise* stays in; :func:`terrain2q.ground.stream_slope.robust_slope` takes account of it.
 """
 
 from __future__ import annotations
 
+from collections.abc import Collection
 from dataclasses import dataclass, field
 from functools import cached_property
 
@@ -42,13 +44,11 @@ SIDE_COST = 0.3
 HIGH_COST = 1.0
 """Metres above the lowest place of its row from which a place is not dearer still."""
 
-LONGEST_FILL = 100.0
-"""Metres along the stream; longer humps are left, as they are more likely a wrong stream line."""
+LONGEST_PIT, LONGEST_FILL, LONGEST_HILL = 30.0, 100.0, 500.0
+"""Metres along the stream. A hill that a stream runs over is a tunnel, or a wrong line or terrain."""
 
-LONGEST_PIT = 30.0
-
-CLEAR = 0.3
-"""Metres above (below) the opening (closing) from which ground may be a hump (pit)."""
+CLEAR, CLEAR_HILL = 0.3, 1.0
+"""Metres above (below) the opening (closing) from which ground may be a fill or a hill (a pit)."""
 
 NOTABLE_CELLS, NOTABLE_GAIN = 2.0, 0.15
 """A shift is worth a finding when it is so many cells and the ground is so many metres lower there."""
@@ -193,7 +193,9 @@ def opening(values: np.ndarray, window: int) -> np.ndarray:
     return maximum_filter1d(lowest, window, mode="nearest")[window:-window]
 
 
-def find_humps(elevations: np.ndarray, spacing: float, longest: float) -> list[tuple[int, int]]:
+def find_humps(
+    elevations: np.ndarray, spacing: float, longest: float, clear: float = CLEAR
+) -> list[tuple[int, int]]:
     """Return humps of a profile along a stream: ground above what lies on both sides of it.
 
     Parameters
@@ -204,6 +206,8 @@ def find_humps(elevations: np.ndarray, spacing: float, longest: float) -> list[t
         m.
     longest : float
         Longest hump, m.
+    clear : float
+        Least height, m; more where the whole profile is rough.
 
     Returns
     -------
@@ -216,12 +220,17 @@ def find_humps(elevations: np.ndarray, spacing: float, longest: float) -> list[t
     smooth = median_filter(elevations, 5, mode="nearest")
     above = smooth - opening(smooth, max(round(longest / spacing), 4))
     middle = np.median(above)
-    limit = max(CLEAR, middle + 6.0 * 1.4826 * np.median(np.abs(above - middle)))
-    edges = np.flatnonzero(np.diff(np.concatenate([[0], (above > limit).astype(np.int8), [0]])))
+    rough = 1.4826 * np.median(np.abs(above - middle))
+    limit = max(clear, middle + 6.0 * rough)
+    # A hump is told by its height, and reaches as far as the ground stays above the usual.
+    standing = above > min(limit, max(CLEAR, middle + 2.0 * rough))
+    edges = np.flatnonzero(np.diff(np.concatenate([[0], standing.astype(np.int8), [0]])))
     found: list[tuple[int, int]] = []
     for first, end in zip(edges[::2].tolist(), edges[1::2].tolist(), strict=True):
-        # The toes lie lower than the limit, and the downstream toe lower than the upstream one.
-        margin = max(2, round(3.0 / spacing), round(0.25 * (end - first)))
+        if not (above[first:end] > limit).any():
+            continue
+        # The toes lie lower than that, and the downstream toe lower than the upstream one.
+        margin = max(2, round(3.0 / spacing), round(0.25 * min(end - first, LONGEST_FILL / spacing)))
         first, last = max(first - margin, 0), min(end - 1 + margin, count - 1)
         if found and first <= found[-1][1] + 1:
             found[-1] = (found[-1][0], last)
@@ -267,8 +276,12 @@ def free_of_humps(
 
     bridge()
     stretches: list[tuple[int, int]] = []
-    for sign, longest in ((1.0, LONGEST_FILL), (-1.0, LONGEST_PIT)):
-        found = find_humps(sign * bed[first : last + 1], spacing, longest)
+    for sign, longest, clear in (
+        (1.0, LONGEST_FILL, CLEAR),
+        (-1.0, LONGEST_PIT, CLEAR),
+        (1.0, LONGEST_HILL, CLEAR_HILL),
+    ):
+        found = find_humps(sign * bed[first : last + 1], spacing, longest, clear)
         for begin, end in found:
             begin, end = begin + int(first), end + int(first)
             # A stretch that would leave nothing at one end is no hump between two sides.
@@ -276,7 +289,13 @@ def free_of_humps(
                 usable[begin : end + 1] = False
                 stretches.append((begin, end))
         bridge()
-    return bed, usable, sorted(stretches)
+    joined: list[tuple[int, int]] = []
+    for begin, end in sorted(stretches):
+        if joined and begin <= joined[-1][1] + 1:
+            joined[-1] = (joined[-1][0], max(end, joined[-1][1]))
+        else:
+            joined.append((begin, end))
+    return bed, usable, joined
 
 
 # ---- on the terrain -------------------------------------------------------------------------------
@@ -586,11 +605,30 @@ class LowLines:
             high, begin, end = (
                 length_text(value, self._units) for value in (hump.height, hump.start, hump.end)
             )
+            what = (
+                "fill" if hump.end - hump.start <= 1.5 * LONGEST_FILL else "hill, too long for a road fill,"
+            )
             message = (
-                f"a fill {high} high across stream {line.stream} from stream distance {begin} to {end} "
+                f"a {what} {high} high across stream {line.stream} from stream distance {begin} to {end} "
                 "was taken out of its low line"
             )
             self.findings.append(Finding("stream-fill", message, _LAYER, line.stream).at(hump.x, hump.y))
+
+    def ways(self, streams: Collection[str]) -> list[list[int]]:
+        """Return the chains of streams in ways from a spring down: the longest first, then what joins it."""
+        network = self.network
+        ways, used = [], set()
+        size = network.chain_start + network.ground_length
+        for last in np.argsort(-size, kind="stable").tolist():
+            if last in used or str(network.chain_stream[last]) not in streams:
+                continue
+            way = [last]
+            used.add(last)
+            while (above := network.next_chain(way[0], False, used)) is not None:
+                way.insert(0, above)
+                used.add(above)
+            ways.append(way)
+        return ways
 
     def about(self, chain: int, at: float, window: float) -> tuple[np.ndarray, np.ndarray, float]:
         """Return the usable bed in a window about a place, over the joins of the stream's parts.

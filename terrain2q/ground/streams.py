@@ -285,6 +285,11 @@ class StreamNetwork:
                 self.findings.append(Finding("stream-gap", message, "streams", str(name)).at(*place[sink]))
         return bridges
 
+    @property
+    def ground_length(self) -> np.ndarray:
+        """Length of each chain, m ground, shape (c,)."""
+        return self._ground_length
+
     def next_chain(self, chain: int, downstream: bool, but: Collection[int] = ()) -> int | None:
         """Return the chain of the same stream that goes on from one end of a chain, None where it ends.
 

@@ -13,6 +13,7 @@ from terrain2q.errors import Finding
 from terrain2q.ground.cut_lines import CutLine
 from terrain2q.ground.low_line import LowLine, LowLines
 from terrain2q.ground.stream_slope import SlopeEstimate, robust_slope
+from terrain2q.ground.streams import StreamNetwork
 from terrain2q.units import SI, UnitSystem
 
 WINDOW, WINDOW_CELLS = 304.8, 60.0
@@ -98,6 +99,34 @@ class StreamSlope:
     window: float
 
 
+class StreamPlaces:
+    """Where cut lines meet the chains of their streams.
+
+    Parameters
+    ----------
+    network : StreamNetwork
+    """
+
+    def __init__(self, network: StreamNetwork) -> None:
+        self._network = network
+        self._pieces: dict[str, list[int]] = {}
+        for piece, name in enumerate(network.chain_stream[network.piece_chain] if len(network) else ()):
+            self._pieces.setdefault(str(name), []).append(piece)
+
+    def of(self, line: CutLine) -> tuple[int, float] | None:
+        """Return chain and stream distance [m] where a cut line meets its stream; None where it has none."""
+        if not line.usable or line.stream not in self._pieces:
+            return None
+        network, mine = self._network, np.array(self._pieces[line.stream])
+        shape = shapely.LineString(np.column_stack([line.x, line.y]))
+        target = shape.interpolate(line.crossing) if np.isfinite(line.crossing) else shape
+        piece = mine[np.argmin(shapely.distance(network.pieces[mine], target))]
+        nearest = shapely.get_point(shapely.shortest_line(network.pieces[piece], target), 0)
+        chain = int(network.piece_chain[piece])
+        along = network.locate(np.array([piece]), np.array([nearest]))
+        return chain, float(network.distance_at(np.array([chain]), along)[0])
+
+
 class StreamSlopes:
     """The slope of the ground along the stream, over a window with the section in its middle.
 
@@ -132,12 +161,9 @@ class StreamSlopes:
         self.window = float(window) if window is not None else max(WINDOW, WINDOW_CELLS * cell)
         self.low_lines, self._units = low_lines, units
         self.found: dict[str, StreamSlope] = {}
-        network = low_lines.network
-        self._pieces: dict[str, list[int]] = {}
-        for piece, name in enumerate(network.chain_stream[network.piece_chain] if len(network) else ()):
-            self._pieces.setdefault(str(name), []).append(piece)
+        places = StreamPlaces(low_lines.network)
         for line in lines:
-            place = self._place(line)
+            place = places.of(line)
             if place is not None:
                 self.found[line.section_id] = self._estimate(*place)
 
@@ -145,20 +171,6 @@ class StreamSlopes:
     def findings(self) -> list[Finding]:
         """What is to know about the streams themselves."""
         return list(self.low_lines.findings)
-
-    def _place(self, line: CutLine) -> tuple[int, float] | None:
-        """Return chain and stream distance at which a cut line meets its stream."""
-        network = self.low_lines.network
-        if not line.usable or line.stream not in self._pieces:
-            return None
-        mine = np.array(self._pieces[line.stream])
-        shape = shapely.LineString(np.column_stack([line.x, line.y]))
-        target = shape.interpolate(line.crossing) if np.isfinite(line.crossing) else shape
-        piece = mine[np.argmin(shapely.distance(network.pieces[mine], target))]
-        nearest = shapely.get_point(shapely.shortest_line(network.pieces[piece], target), 0)
-        chain = int(network.piece_chain[piece])
-        along = network.locate(np.array([piece]), np.array([nearest]))
-        return chain, float(network.distance_at(np.array([chain]), along)[0])
 
     def _estimate(self, chain: int, distance: float) -> StreamSlope:
         along, bed, length = self.low_lines.about(chain, distance, self.window)
