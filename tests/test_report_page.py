@@ -297,8 +297,9 @@ def test_nothing_runs_off_the_side(open_page, results, width):
     cut = opened.page.evaluate(
         """() => [...document.querySelectorAll('p, li, h1, h2, h3, summary, figure, dl')]
             .filter(e => e.getClientRects().length && !e.closest('.scroll') && !e.matches('.skip'))
-            .filter(e => { const b = e.getBoundingClientRect(); return b.left < -1 || b.right > innerWidth + 1; })
-            .map(e => e.outerHTML.slice(0, 80))"""
+            .map(e => [e, e.getBoundingClientRect()])
+            .filter(([, box]) => box.left < -1 || box.right > innerWidth + 1)
+            .map(([e]) => e.outerHTML.slice(0, 80))"""
     )
     assert cut == []
 

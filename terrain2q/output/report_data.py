@@ -217,6 +217,7 @@ def _sections(source: OutputFolder) -> tuple[list[dict], list[str]]:
     parts = _fields(source, SUBAREA_NUMBERS, "subarea_flows")
     table = layers["sections"]
     distance_decimals = decimals_for("stream_distance", table["stream_distance"])
+    slope_decimals = decimals_for("slope", table["slope"])
     roughness_decimals = decimals_for("n", layers["subareas"]["n"])
     thin = 0.4 * max(1.0, math.sqrt(len(table) / 50.0))
     out = []
@@ -229,7 +230,7 @@ def _sections(source: OutputFolder) -> tuple[list[dict], list[str]]:
             "stream": row["stream"],
             "distance": _number(row["stream_distance"], distance_decimals),
             "lowest": _number(row["lowest_ground"], 2),
-            "slope": shown(row["slope"], decimals_for("slope", table["slope"])),
+            "slope": shown(row["slope"], slope_decimals),
             "slope_source": row["slope_source"],
             "length": _number(row["length"], 1),
             "findings": int(row["findings"]),

@@ -227,6 +227,7 @@ function setView() {
   view.y = Math.min(Math.max(view.y, 0), data.map.height - view.height);
   map.setAttribute("viewBox", `${view.x} ${view.y} ${view.width} ${view.height}`);
   map.classList.toggle("large", view.width < data.map.width - 1);
+  for (const place of data.map.crossings) paintCrossing(place);
   drawLabels();
   drawFurniture();
 }
@@ -296,23 +297,48 @@ function niceBar(bar, room) {
   return { units: length / each, text: `${+length.toPrecision(3)} ${unit}` };
 }
 
-function crossingVerdict(id) {
+// the mark of each verdict: pale, middle and dark, so that they differ in grey too
+const VERDICTS = { "crest not reached": "#ffffff", "within freeboard": "#d9a441", "over the crest": WALL };
+const UNJUDGED = "#b9b2a8";
+
+function verdictOf(id) {
   const entry = data.crossings.find((c) => c.id === id);
   const row = entry && entry.rows[state.event];
-  const names = data.tables.crossings.map((c) => c.name);
-  return row ? { verdict: row[names.indexOf("verdict")] || "", over: (row[names.indexOf("freeboard")] ?? 1) < 0 } : { verdict: "", over: false };
+  const at = data.tables.crossings.findIndex((c) => c.name === "verdict");
+  return (row && at >= 0 && row[at]) || "";
 }
 
 function drawCrossing(place) {
-  const node = add(map, "path", { class: "crossing", d: `M${place.x} ${place.y}m0 -130l130 130 -130 130 -130 -130z` });
-  add(node, "title", {}, place.id);
-  node.addEventListener("click", () => goToCrossing(place.id));
-  place.node = node;
+  place.node = add(map, "path", { class: "crossing", "aria-hidden": "true" });
+  place.title = add(place.node, "title");
+  place.node.addEventListener("click", () => goToCrossing(place.id));
+}
+
+function paintCrossing(place) {
+  const r = 8 * perPixel(), verdict = verdictOf(place.id);
+  place.node.setAttribute("d", `M${place.x} ${place.y - r}l${r} ${r} ${-r} ${r} ${-r} ${-r}z`);
+  place.node.setAttribute("fill", VERDICTS[verdict] || UNJUDGED);
+  place.title.textContent = `Crossing ${place.id}: ${verdict || "no verdict"}`;
 }
 
 function goToCrossing(id) {
   const row = document.querySelector(`#crossings-table [data-crossing="${CSS.escape(id)}"]`);
-  if (row) row.scrollIntoView({ block: "center" });
+  if (!row) return;
+  for (const other of row.parentNode.children) other.classList.toggle("chosen", other === row);
+  row.scrollIntoView({ block: "center" });
+}
+
+/** Bring a crossing to the middle of the map. */
+function toCrossing(id) {
+  const place = data.map.crossings.find((c) => c.id === id);
+  if (!place) return;
+  const width = Math.min(view.width, data.map.width / 4);
+  Object.assign(view, { width, height: (width * data.map.height) / data.map.width });
+  view.x = place.x - view.width / 2;
+  view.y = place.y - view.height / 2;
+  setView();
+  for (const one of data.map.crossings) one.node.classList.toggle("chosen", one === place);
+  map.scrollIntoView({ block: "center" });
 }
 
 function mapKey() {
@@ -332,8 +358,8 @@ function mapKey() {
   if (data.map.extents.length) entry({ d: "M1 2H29V12H1Z", fill: looks.waters[2], "fill-opacity": 0.7, stroke: DEEP }, "flood extent");
   if (data.map.low.some(Boolean)) entry({ d: "M1 2H29V12H1Z", fill: looks.waters[0], stroke: DEEP, "stroke-dasharray": "2 2" }, "low ground the stream does not reach");
   if (data.map.crossings.length) {
-    entry({ d: "M15 1l6 6-6 6-6-6z", fill: "#fff", stroke: INK }, "crossing");
-    entry({ d: "M15 1l6 6-6 6-6-6z", fill: WALL, stroke: INK }, "crossing, water above its crest");
+    const diamond = "M15 1l6 6-6 6-6-6z";
+    for (const [verdict, fill] of Object.entries(VERDICTS)) entry({ d: diamond, fill, stroke: INK }, `crossing: ${verdict}`);
   }
 }
 
@@ -374,7 +400,7 @@ function paintMap() {
     const words = at ? `${events[event].name}: stage ${told(section, event, "stage")} ${units.length}, ${at.status}` : "";
     group.setAttribute("aria-label", `Section ${section.id}${words ? `, ${words}` : ""}`);
   });
-  for (const place of data.map.crossings) place.node.classList.toggle("bad", crossingVerdict(place.id).over);
+  for (const place of data.map.crossings) paintCrossing(place);
   drawLabels();
 }
 
@@ -777,7 +803,7 @@ const paintSections = makeTable("sections", data.tables.sections, () => sections
 })), { filter: "status", key: "section_id", word: "section", words: "sections", after: markRow });
 
 const paintCrossings = makeTable("crossings", data.tables.crossings, () => data.crossings
-  .filter((c) => c.rows[state.event]).map((c) => ({ id: c.id, cells: c.rows[state.event] })),
+  .filter((c) => c.rows[state.event]).map((c) => ({ id: c.id, cells: c.rows[state.event], open: () => toCrossing(c.id) })),
   { filter: "verdict", key: "crossing_id", word: "crossing", words: "crossings", after: () => {} });
 
 // ------------------------------------------------------------------------------------------------
