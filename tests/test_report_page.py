@@ -321,7 +321,7 @@ def test_print_has_every_section_finding_and_input(report, results, tmp_path):
     _must(shutil.which("pdftotext") is not None, "there is no pdftotext on this machine")
     path = tmp_path / "page.pdf"
     report.page.pdf(path=path, format="A4", prefer_css_page_size=True)
-    text = subprocess.run(["pdftotext", path, "-"], capture_output=True, text=True, check=True).stdout
+    text = subprocess.run(["pdftotext", "-raw", path, "-"], capture_output=True, text=True, check=True).stdout
     words = re.sub(r"\s+", "", text)
     for finding in results.findings_list:
         assert re.sub(r"\s+", "", finding.message) in words
