@@ -7,19 +7,29 @@ tone, by its line and by its label; every picture can be read in grey.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from itertools import cycle
+from itertools import cycle, pairwise
+from types import MappingProxyType
 
 import matplotlib.pyplot as plt
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.patches import Polygon
 from matplotlib.ticker import MaxNLocator
+from scipy.optimize import isotonic_regression
 
 from terrain2q.columns import column_title
 from terrain2q.errors import InputError
 from terrain2q.hydraulics.section import DepthRoughness, FlowPath, Section
 from terrain2q.output.looks import EARTHS, EXAGGERATIONS, GROUND_EDGE, HATCHES, INK, WALL, WATER_LINES, WATERS
 from terrain2q.units import unit_system
+
+_NARROW = 0.055
+"""A subarea narrower than this share of the section has its n written upright."""
+
+_UPRIGHT = 0.024
+"""Room for an upright label, as a share of the section's width."""
+
+_PAPER = MappingProxyType({"boxstyle": "round,pad=0.15", "fc": "white", "ec": "none", "alpha": 0.8})
 
 
 def plot_section(
@@ -69,12 +79,13 @@ def plot_section(
     level = max([z.max(), *(p.stage for _, paths in waters for p in paths)])
     low = float(z.min())
     relief = max(level - low, 1e-6)
-    floor = low - 0.34 * relief
+    floor = low - 0.42 * relief
     _draw_water(ax, section, waters)
     _draw_subareas(ax, section, floor, relief)
     ax.plot(x, z, color=GROUND_EDGE, lw=1.8, solid_joinstyle="round", zorder=6)
     _draw_walls(ax, section, waters)
-    ax.set_xlim(x[0], x[-1])
+    beside = 0.006 * (x[-1] - x[0])
+    ax.set_xlim(x[0] - beside, x[-1] + beside)
     ax.set_ylim(floor, level + 0.08 * relief)
     ax.set_xlabel(f"Station [{unit}], from left to right looking downstream", color=INK)
     ax.set_ylabel(f"Elevation [{unit}]", color=INK)
@@ -127,7 +138,7 @@ def plot_rating(
     stage, discharge = rating["stage"].to_numpy(float), rating["discharge"].to_numpy(float)
     fills = np.flatnonzero(stage[1:] == stage[:-1])
     edges = [0, *(fills + 1), stage.size]
-    for start, end in zip(edges[:-1], edges[1:], strict=True):
+    for start, end in pairwise(edges):
         ax.plot(discharge[start:end], stage[start:end], color=WATERS[3], lw=2.0, solid_capstyle="round")
     for number, i in enumerate(fills):
         ax.plot(
@@ -168,7 +179,7 @@ def plot_rating(
 
 
 def _waters(section, slope, discharges, stages) -> list[tuple[str, list[FlowPath]]]:
-    """The paths of each event, the lowest water first."""
+    """Return the paths of each event, the lowest water first."""
     waters = []
     if discharges:
         if slope is None:
@@ -183,14 +194,22 @@ def _waters(section, slope, discharges, stages) -> list[tuple[str, list[FlowPath
 
 def _surface(section: Section, path: FlowPath) -> np.ndarray:
     """Outline of one path's water, shape (n, 2)."""
-    x, z = section.stations, section.elevations
-    inside = (x > path.start) & (x < path.end)
-    ends = np.interp([path.start, path.end], x, z)
-    ground_x = np.concatenate([[path.start], x[inside], [path.end]])
-    ground_z = np.concatenate([ends[:1], z[inside], ends[1:]])
-    ground_z = np.minimum(ground_z, path.stage)
+    ground = _ground_between(section, path.start, path.end)
+    ground[:, 1] = np.minimum(ground[:, 1], path.stage)
     top = np.array([[path.end, path.stage], [path.start, path.stage]])
-    return np.vstack([np.column_stack([ground_x, ground_z]), top])
+    return np.vstack([ground, top])
+
+
+def _ground_between(section: Section, start: float, end: float) -> np.ndarray:
+    """Ground from one station to another with vertical faces at both, shape (n, 2)."""
+    x, z = section.stations, section.elevations
+    inside = (x >= start) & (x <= end)
+    ground = np.column_stack([x[inside], z[inside]])
+    if not (x == start).any():
+        ground = np.vstack([[start, np.interp(start, x, z)], ground])
+    if not (x == end).any():
+        ground = np.vstack([ground, [end, np.interp(end, x, z)]])
+    return ground
 
 
 def _draw_water(ax: Axes, section: Section, waters) -> None:
@@ -215,36 +234,61 @@ def _draw_water(ax: Axes, section: Section, waters) -> None:
 
 
 def _draw_subareas(ax: Axes, section: Section, floor: float, relief: float) -> None:
-    x, z = section.stations, section.elevations
+    x = section.stations
     looks = {}
-    fresh = cycle(zip(EARTHS, HATCHES[: len(EARTHS)], strict=True))
+    # the two cycles have no common length, so that a pair of tone and hatching comes back late
+    fresh = zip(cycle(EARTHS), cycle(HATCHES), strict=False)
     width = x[-1] - x[0]
+    narrow = []
     for number, subarea in enumerate(section.subareas):
         key = (subarea.label, str(subarea.n), subarea.zone)
         if key not in looks:
             looks[key] = next(fresh)
         tone, hatch = looks[key]
         start, end = max(subarea.start, x[0]), min(subarea.end, x[-1])
-        inside = (x > start) & (x < end)
-        edge = np.column_stack([
-            np.concatenate([[start], x[inside], [end]]),
-            np.concatenate([np.interp([start], x, z), z[inside], np.interp([end], x, z)]),
-        ])  # fmt: skip
+        edge = _ground_between(section, start, end)
         outline = np.vstack([edge, [[end, floor], [start, floor]]])
         ax.add_patch(Polygon(outline, closed=True, fc=tone, ec="#9b8a70", hatch=hatch, lw=0.0, zorder=3))
         if number:
-            ax.plot([start, start], [floor, np.interp(start, x, z)], color=GROUND_EDGE, lw=0.7, zorder=5)
+            ax.plot(
+                [start, start],
+                [floor, edge[edge[:, 0] == start, 1].min()],
+                color=GROUND_EDGE,
+                lw=0.7,
+                zorder=5,
+            )
         share = (end - start) / width
         text = _n_text(subarea.n)
+        if share < _NARROW:
+            narrow.append((0.5 * (start + end), text))
+            continue
         wide = share > 0.085
         if subarea.label and wide:
             text = f"{_short(subarea.label, share)}\n{text}"
         ax.annotate(
             text,
             (0.5 * (start + end), floor + 0.03 * relief),
-            ha="center", va="bottom", fontsize=7.5, color=INK, zorder=7,
-            rotation=0 if share > 0.055 else 90,
-            bbox={"boxstyle": "round,pad=0.15", "fc": "white", "ec": "none", "alpha": 0.8},
+            ha="center", va="bottom", fontsize=7.5, color=INK, zorder=7, bbox=_PAPER,
+        )  # fmt: skip
+    _label_narrow(ax, narrow, floor, relief, x[0], width)
+
+
+def _label_narrow(ax: Axes, narrow, floor: float, relief: float, left: float, width: float) -> None:
+    """Write the n of narrow subareas upright, moved apart where they would meet, a line to each place."""
+    if not narrow:
+        return
+    gap = _UPRIGHT * width
+    places = np.array([place for place, _ in narrow])
+    apart = gap * np.arange(places.size)
+    # the least moves that keep every two a gap apart: rising values nearest to these
+    moved = isotonic_regression(places - apart).x + apart
+    moved += min(0.0, left + width - 0.5 * gap - moved[-1])
+    moved += max(0.0, left + 0.5 * gap - moved[0])
+    for (place, text), at in zip(narrow, moved, strict=True):
+        ax.annotate(
+            text, (place, floor + 0.36 * relief), (at, floor + 0.05 * relief), ha="center", va="bottom",
+            fontsize=7.5, color=INK, zorder=7, rotation=90, bbox=_PAPER,
+            arrowprops={"arrowstyle": "-", "color": INK, "lw": 0.5, "shrinkA": 0, "shrinkB": 0},
         )  # fmt: skip
 
 
@@ -260,7 +304,7 @@ def _n_text(n: float | DepthRoughness) -> str:
 
 
 def _draw_walls(ax: Axes, section: Section, waters) -> None:
-    """The imagined walls at the ends of the section that water stands against."""
+    """Draw the imagined walls at the ends of the section that water stands against."""
     x, z = section.stations, section.elevations
     drawn = False
     for station, ground in ((x[0], z[0]), (x[-1], z[-1])):
@@ -269,8 +313,8 @@ def _draw_walls(ax: Axes, section: Section, waters) -> None:
         ]
         if tops:
             ax.plot(
-                [station] * 2, [ground, max(tops)], color=WALL, lw=3.2, ls=(0, (1.2, 0.8)), zorder=8, clip_on=False,
-                label=None if drawn else "imagined wall at the end",
+                [station] * 2, [ground, max(tops)], color=WALL, lw=3.2, ls=(0, (1.2, 0.8)), zorder=8,
+                clip_on=False, label=None if drawn else "imagined wall at the end",
             )  # fmt: skip
             drawn = True
 
