@@ -93,7 +93,11 @@ class Page:
         )
 
     def line(
-        self, points: Iterable[Sequence[float]], width: float = 0.6, colour: str = "#000000", dash: Sequence = ()
+        self,
+        points: Iterable[Sequence[float]],
+        width: float = 0.6,
+        colour: str = "#000000",
+        dash: Sequence = (),
     ) -> None:
         """Draw a line through points."""
         pattern = " ".join(f"{d:g}" for d in dash)
@@ -104,19 +108,24 @@ class Page:
         width: float = 0.5,
     ) -> None:  # fmt: skip
         """Fill the area within points with a colour, under a hatch of the kinds that pictures have."""
-        paint = "b" if fill and edge else "f" if fill else "s"
-        inside = ""
+        path = _path(points)
         if fill:
-            inside = f"{_colour(fill)} rg "
-            if hatch:
-                inside = f"/Pattern cs /{self._writer.pattern(fill, hatch)} scn "
-        outline = f"{_colour(edge)} RG {width:.2f} w [] 0 d " if edge else ""
-        self._parts.append(f"{inside}{outline}{_path(points)} {paint}")
+            self._parts.append(f"{_colour(fill)} rg {path} f")
+        if hatch:
+            self._parts.append(f"/Pattern cs /{self._writer.pattern(hatch)} scn {path} f")
+        if edge:
+            self._parts.append(f"{_colour(edge)} RG {width:.2f} w [] 0 d {path} s")
 
     def box(
-        self, x: float, y: float, width: float, height: float, fill: str | None = None, edge: str | None = None,
+        self,
+        x: float,
+        y: float,
+        width: float,
+        height: float,
+        fill: str | None = None,
+        edge: str | None = None,
         line: float = 0.5,
-    ) -> None:  # fmt: skip
+    ) -> None:
         """Draw a rectangle from its lower left corner."""
         self.area(
             [(x, y), (x + width, y), (x + width, y + height), (x, y + height)], fill, edge=edge, width=line
@@ -167,7 +176,7 @@ class PdfWriter:
         self._bookmarks: tuple[list[tuple], list[tuple]] = ([], [])
         self._used: dict[str, dict[int, int]] = {name: {} for name in _FACES}
         self._known: dict[tuple[str, str], str] = {}
-        self._patterns: dict[tuple[str, str], str] = {}
+        self._patterns: dict[str, str] = {}
         self._info = {"Title": title, "Producer": producer}, created
         self._at = 0
         self._write(b"%PDF-1.7\n%\xe2\xe3\xcf\xd3\n")
@@ -207,7 +216,7 @@ class PdfWriter:
         self._object(self._tree, f"<</Type/Pages/Count {len(pages)}/Kids[{kids}]>>")
         fonts = "".join(f"/{_FACES[name][1]} {self._font(name)} 0 R" for name in _FACES)
         patterns = "".join(
-            f"/{name} {self._pattern(*look)} 0 R" for look, name in self._patterns.items()
+            f"/{name} {self._pattern(hatch)} 0 R" for hatch, name in self._patterns.items()
         )  # fmt: skip
         self._object(self._resources, f"<</Font<<{fonts}>>/Pattern<<{patterns}>>>>")
         names = "".join(
@@ -259,9 +268,9 @@ class PdfWriter:
         known = self._known[face, text] = "".join(out)
         return known
 
-    def pattern(self, fill: str, hatch: str) -> str:
-        """Return the name of a hatch on a colour."""
-        return self._patterns.setdefault((fill, hatch), f"P{len(self._patterns)}")
+    def pattern(self, hatch: str) -> str:
+        """Return the name of a hatch."""
+        return self._patterns.setdefault(hatch, f"P{len(self._patterns)}")
 
     # --- objects ---------------------------------------------------------------------------------
 
@@ -294,7 +303,8 @@ class PdfWriter:
         root = self._reserve()
         numbers = [self._reserve() for _ in bookmarks]
         tops = [i for i, (_, level, *_) in enumerate(bookmarks) if level == 0 or i == 0]
-        below = {top: list(range(top + 1, end)) for top, end in zip(tops, [*tops[1:], len(bookmarks)], strict=True)}  # fmt: skip
+        ends = [*tops[1:], len(bookmarks)]
+        below = {top: list(range(top + 1, end)) for top, end in zip(tops, ends, strict=True)}
 
         def family(members: list[int], parent: int) -> None:
             for place, i in enumerate(members):
@@ -363,9 +373,9 @@ class PdfWriter:
         )
         return outer
 
-    def _pattern(self, fill: str, hatch: str) -> int:
+    def _pattern(self, hatch: str) -> int:
         size, strokes = _HATCHES[hatch]
-        drawing = f"{_colour(fill)} rg 0 0 {size} {size} re f {_colour(_HATCH_INK)} RG 0.4 w {strokes}"
+        drawing = f"{_colour(_HATCH_INK)} RG 0.4 w {strokes}"
         return self._stream(
             f"/Type/Pattern/PatternType 1/PaintType 1/TilingType 2/BBox[0 0 {size} {size}]"
             f"/XStep {size}/YStep {size}/Resources<<>>",
@@ -373,7 +383,7 @@ class PdfWriter:
         )
 
 
-_HATCH_INK = "#8f7d63"
+_HATCH_INK = "#a08f76"
 
 # Size of a tile and what is drawn in it, by the hatches of the pictures. Strokes reach over the edge so
 # that they join from tile to tile.

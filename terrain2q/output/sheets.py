@@ -1,0 +1,721 @@
+"""``calculation_sheets.pdf``: a sheet a section or crossing, to be followed with a calculator and signed.
+
+Everything on a sheet comes from the layers and the record of an output folder, so that sheets can be made
+long after the run. A sheet shows every event in full, that of most discharge first.
+"""
+
+from __future__ import annotations
+
+import math
+import os
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass, field
+from functools import cached_property
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import shapely
+
+from terrain2q.columns import CAUTION
+from terrain2q.errors import FAILED, InputError
+from terrain2q.ground.layers import read_layer
+from terrain2q.output.calculation import Calculation, Part, area_below, calculate, stretches
+from terrain2q.output.folder import OutputFolder, read_folder
+from terrain2q.output.geopackage import RESULT_NAME
+from terrain2q.output.looks import INK, WATERS, water_tones
+from terrain2q.output.pdf import PdfWriter
+from terrain2q.output.run_record import sha256_of
+from terrain2q.output.sheet_drawings import Plan, Water, draw_plan, draw_section, stroke
+from terrain2q.output.sheet_layout import GREY, SIZES, Sheet, TableColumn, figures, fitted, roughness_text
+from terrain2q.output.whole_file import not_writable, whole_file
+
+SHEETS_NAME = "calculation_sheets.pdf"
+
+FLAGGED, ALL, NONE = "flagged", "all", "none"
+SHEET_CHOICES = (FLAGGED, ALL, NONE)
+"""Which sections get a sheet: those with findings or crossings, every one, or none."""
+
+_SUM_TOLERANCE = 0.005
+"""Sums that differ from the design flow by less hold: three figures."""
+
+_HIGH_ALPHA = 2.0
+"""As for the finding alpha-high (Chow 1959, Table 2-1)."""
+
+_HOLDS, _LOOK = "holds", "look here"
+
+_WORKED = 12
+"""Subareas worked out line by line below the table; the table has all."""
+
+_SECTION_LAYERS = frozenset(
+    {"cut_lines", "sections", "subareas", "ratings", "design_stages", "subarea_flows", "required_widths"}
+)
+
+_INDEX_FIRST, _INDEX_NEXT, _INDEX_SIZE = 30, 56, 7.0
+
+
+def write_sheets(
+    source: OutputFolder | str | os.PathLike, which: str = FLAGGED, path: str | os.PathLike | None = None
+) -> Path:
+    """Write the calculation sheets of an output folder, whole or not at all.
+
+    Parameters
+    ----------
+    source : OutputFolder or path
+        The folder, or what was read from it.
+    which : str
+        ``flagged``: sections with findings, and crossings; ``all``: every section, and crossings.
+    path : path, optional
+        ``calculation_sheets.pdf`` in the folder where absent.
+
+    Returns
+    -------
+    pathlib.Path
+        The file written: an index, then one sheet after another. Where no section is flagged the index
+        says so and stands alone.
+
+    Raises
+    ------
+    InputError
+        The folder has no results (codes ``file-missing``, ``file-unreadable``).
+    OutputError
+        The file cannot be written (code ``output-not-writable``).
+    """
+    if which not in (FLAGGED, ALL):
+        raise ValueError(f"no sheets are called {which!r}")
+    if not isinstance(source, OutputFolder):
+        source = read_folder(source)
+    if path is None:
+        if source.folder is None:
+            raise ValueError("results that are in no folder need a path")
+        path = source.folder / SHEETS_NAME
+    path = Path(path)
+    with whole_file(path) as temporary:
+        try:
+            with temporary.open("wb") as file:
+                _Sheets(source, which).write(file)
+        except OSError as error:
+            raise not_writable(path, error) from error
+    return path
+
+
+@dataclass
+class _Entry:
+    """A line of the index."""
+
+    title: str
+    about: str
+    status: str
+    stage: str
+    findings: int
+    anchor: str
+    page: int = 0
+
+
+@dataclass
+class _Rows:
+    """Rows of the layers by section."""
+
+    by_layer: dict[str, dict[str, list[dict]]] = field(default_factory=dict)
+
+    def take(self, layer: str, table, key: str = "section_id") -> None:
+        grouped: dict[str, list[dict]] = {}
+        if table is not None:
+            for row in table.to_dict("records"):
+                grouped.setdefault(row[key], []).append(row)
+        self.by_layer[layer] = grouped
+
+    def of(self, layer: str, name: str) -> list[dict]:
+        return self.by_layer[layer].get(name, [])
+
+
+class _Sheets:
+    """All sheets of an output folder."""
+
+    def __init__(self, source: OutputFolder, which: str) -> None:
+        self.source, self.units = source, source.units
+        layers = source.layers
+        self.length, self.area, self.flow, self.velocity = (
+            source.units.symbol(q) for q in ("length", "area", "flow", "velocity")
+        )
+        self.size = SIZES[source.units.name]
+        self.rows = _Rows()
+        for layer in ("subareas", "design_stages", "subarea_flows"):
+            self.rows.take(layer, layers.get(layer))
+        self.rows.take("crossings", layers.get("crossings"), "crossing_id")
+        self.findings: dict[tuple[bool, str], list[dict]] = {}
+        for row in () if "findings" not in layers else layers["findings"].to_dict("records"):
+            known = row["layer"] in _SECTION_LAYERS
+            self.findings.setdefault((known, row["feature_id"]), []).append(row)
+        self.sections = {row["section_id"]: row for row in layers["sections"].to_dict("records")}
+        self.crossings = list(self.rows.by_layer["crossings"])
+        self.chosen = [
+            name
+            for name in self.sections
+            if which == ALL or self.findings.get((True, name)) or name in self.rows.by_layer["crossings"]
+        ]
+        self.which = which
+        self.composite = source.settings.get("channel", {}).get("composite", "divide")
+        self.entries: list[_Entry] = []
+
+    def write(self, file) -> None:
+        """Write all pages into an open file."""
+        source = self.source
+        name = source.name or "terrain2q study"
+        version = source.record.get("versions", {}).get("terrain2q", "")
+        writer = PdfWriter(
+            file,
+            title=f"Calculation sheets: {name}",
+            producer=f"terrain2q {version}".strip(),
+            created=source.record.get("finished") or "",
+        )
+        count = len(self.chosen) + len(self.crossings)
+        number = 1 + (1 if count <= _INDEX_FIRST else 1 + math.ceil((count - _INDEX_FIRST) / _INDEX_NEXT))
+        for group, names, make in (
+            ("Sections", self.chosen, self._section_sheet),
+            ("Crossings", self.crossings, self._crossing_sheet),
+        ):
+            for i, one in enumerate(names):
+                sheet, entry = make(writer, one, f"{'s' if group == 'Sections' else 'c'}{i}")
+                if i == 0:
+                    sheet.pages[0].bookmarks.insert(0, (group, 0, self.size[1]))
+                entry.page = number
+                number = sheet.finish(number)
+                self.entries.append(entry)
+        self._index(writer, name)
+        writer.close()
+
+    # --- what stands around -----------------------------------------------------------------------
+
+    @cached_property
+    def plan(self) -> Plan:
+        """Cut lines and streams, for the pieces of map."""
+        lines = [shapely.force_2d(r["geometry"]) for r in self.sections.values() if _is_line(r["geometry"])]
+        streams = []
+        asked = self.source.settings.get("streams")
+        if asked:
+            try:
+                table = read_layer(
+                    asked["path"], purpose="streams", geometry="line", crs=self.source.crs,
+                    id_field=asked.get("id_field"), repeated_ids=True,
+                )  # fmt: skip
+                streams = [shapely.force_2d(g) for g in table.geometry if _is_line(g)]
+            except InputError:
+                pass  # a plan without streams: the inputs have moved since the run
+        return Plan(shapely.STRtree(lines), shapely.STRtree(streams), self.source.crs.is_geographic)
+
+    @cached_property
+    def tones(self) -> dict[str, tuple[str, int]]:
+        """Tone and place in order of each event, the more discharge the deeper."""
+        stages = self.source.layers.get("design_stages")
+        if stages is None or not len(stages):
+            return {}
+        typical = stages.groupby("event")["discharge"].median()
+        order = sorted(typical.index, key=lambda e: (not np.isfinite(typical[e]), typical[e]))
+        return {e: (tone, i) for i, (e, tone) in enumerate(zip(order, water_tones(len(order)), strict=True))}
+
+    def _calculations(self, name: str) -> list[Calculation]:
+        """Return every event of a section, that of most discharge first."""
+        flows: dict[str, list[dict]] = {}
+        for row in self.rows.of("subarea_flows", name):
+            flows.setdefault(row["event"], []).append(row)
+        subareas = self.rows.of("subareas", name)
+        found = [
+            calculate(row, subareas, flows.get(row["event"], ()), self.units, self.composite)
+            for row in self.rows.of("design_stages", name)
+        ]
+        return sorted(found, key=lambda c: (not c.answered, -c.row["discharge"] if c.answered else 0.0))
+
+    def _length(self, value: float, decimals: int = 2) -> str:
+        return f"{value:.{decimals}f} {self.length}" if math.isfinite(value) else "–"
+
+    # --- a section --------------------------------------------------------------------------------
+
+    def _section_sheet(self, writer: PdfWriter, name: str, anchor: str) -> tuple[Sheet, _Entry]:
+        sheet = Sheet(writer, self.size, f"Section {name}", fitted(self.source.name, 260, 8), CAUTION, anchor)
+        found = self._calculations(name)
+        findings = self.findings.get((True, name), [])
+        self._section_part(sheet, name, found)
+        self._findings(sheet, findings)
+        sheet.sign()
+        return sheet, self._entry(f"Section {name}", self.sections[name]["stream"], found, findings, anchor)
+
+    def _entry(self, title, about, found: Sequence[Calculation], findings, anchor: str) -> _Entry:
+        statuses = {c.row["status"] for c in found}
+        status = next((s for s in ("failed", "doubtful", "ok") if s in statuses), "–")
+        stage = f"{found[0].row['stage']:.2f}" if found and found[0].answered else "–"
+        return _Entry(title, about, status, stage, len(findings), anchor)
+
+    def _section_part(
+        self, sheet: Sheet, name: str, found: Sequence[Calculation], marks: Mapping[str, float] | None = None,
+        point: Any = None,
+    ) -> None:  # fmt: skip
+        """Draw all that a sheet has about a section; a crossing's sheet has it too."""
+        row = self.sections[name]
+        profile = _profile(row["geometry"])
+        waters = [self._water(c, profile) for c in found if c.answered]
+        self._facts(sheet, row, found, point)
+        if len(profile) > 1:
+            sheet.need(160)
+            waters.sort(key=lambda w: (w.stage, w.area))
+            used = draw_section(
+                sheet.page, sheet.left, sheet.y, sheet.width, min(190.0, sheet.room), profile,
+                self.rows.of("subareas", name), waters, self.length, marks,
+            )  # fmt: skip
+            sheet.space(used + 4)
+        else:
+            sheet.title("No section")
+            sheet.lines("The cut line gave no profile; the findings say why.")
+        for place, one in enumerate(found):
+            self._event(sheet, one, profile, first=place == 0)
+        if not found:
+            sheet.title("No design flow")
+            sheet.lines("The study has no design flows; the layer ratings has this section's rating.")
+
+    def _water(self, one: Calculation, profile: np.ndarray) -> Water:
+        tone, order = self.tones.get(one.event, (WATERS[2], 0))
+        pieces = tuple(stretches(one.row, profile, one.levels))
+        area = one.total("area")
+        return Water(one.event, float(one.row["stage"]), pieces, area, tone, stroke(order))
+
+    def _facts(self, sheet: Sheet, row: Mapping, found: Sequence[Calculation], point: Any) -> None:
+        height, plan_width = 128.0, 190.0
+        sheet.need(height)
+        top, page = sheet.y, sheet.page
+        subareas = self.rows.of("subareas", row["section_id"])
+        crs = self.source.crs
+        authority = crs.to_authority()
+        slope = figures(row["slope"], 4)
+        facts = [
+            ("Stream", row["stream"] or "not known"),
+            ("Stream distance", self._length(row["stream_distance"], 1) + " from its upstream end"
+             if math.isfinite(row["stream_distance"]) else "not known"),
+            ("Length", f"{self._length(row['length'], 1)}, {int(row['points'])} points"),
+            ("Lowest ground", self._length(row["lowest_ground"])),
+            ("Friction slope S", f"{slope} ({row['slope_source']})" if row["slope_source"] else slope),
+            ("Subareas", f"{len(subareas)}, " + (
+                "divided at the banks" if any(s["zone"] == "channel" for s in subareas) else "not divided"
+            )),
+            ("Method", "normal depth; Manning’s equation in each subarea"),
+            ("Units", f"{self.length}, {self.area}, {self.flow}; n in s/m^(1/3), k = {self._k}"),
+            ("Map", f"{crs.name}" + (f" ({':'.join(authority)})" if authority else "")),
+        ]  # fmt: skip
+        if self.composite != "divide":
+            facts.insert(6, ("n in the channel", f"one composite n, {self.composite}"))
+        y, room = top - 2, sheet.width - plan_width - 94
+        for word, text in facts:
+            y -= 12.4
+            page.text(sheet.left, y, word, 7.2, colour=GREY)
+            page.text(sheet.left + 80, y, fitted(text, room, 7.4), 7.4, colour=INK)
+        if _is_line(row["geometry"]):
+            wet = found[0].row.get("geometry") if found and found[0].answered else None
+            tone = self.tones.get(found[0].event, (WATERS[2], 0))[0] if found else WATERS[2]
+            draw_plan(
+                page, sheet.left + sheet.width - plan_width, top, plan_width, height - 6, self.plan,
+                shapely.force_2d(row["geometry"]), float(row["length"]), self.length, wet=wet,
+                tone=max(tone, WATERS[1], key=WATERS.index), point=point,
+            )  # fmt: skip
+        sheet.space(height)
+
+    @property
+    def _k(self) -> str:
+        return "1" if self.units.manning == 1.0 else f"{self.units.manning:.4g}"
+
+    # --- an event ---------------------------------------------------------------------------------
+
+    def _event(self, sheet: Sheet, one: Calculation, profile: np.ndarray, *, first: bool) -> None:
+        row = one.row
+        if not one.answered:
+            sheet.title(f"{one.event}: no answer", row["status"])
+            sheet.lines("There is no stage at this event; the findings say why.")
+            return
+        sheet.title(
+            f"{one.event}: Q = {figures(row['discharge'])} {self.flow}, stage found "
+            f"{self._length(row['stage'])}, depth {self._length(row['depth'])}",
+            f"status: {row['status']}",
+            keep=60 if first else 45,
+        )
+        sources = self._table(sheet, one, first)
+        if first:
+            for number, source in enumerate(sources, 1):
+                sheet.lines(f"[{number}] {source}", 6.6, colour=GREY, hang=12)
+        self._remarks(sheet, one)
+        if first:
+            self._worked(sheet, one)
+        self._whole(sheet, one)
+        self._checks(sheet, one, profile, whole=first)
+
+    def _table(self, sheet: Sheet, one: Calculation, first: bool) -> list[str]:
+        """Draw the table by subarea; return the sources of n in the order of their numbers."""
+        area, length, flow, velocity = self.area, self.length, self.flow, self.velocity
+        several = len(one.levels) > 1
+        sources: list[str] = []
+        columns = [
+            TableColumn("no.", "", 16),
+            TableColumn("zone", "", 60, words=True),
+            TableColumn("land class", "", 66 if several else 84, words=True),
+            TableColumn("from", length, 36),
+            TableColumn("to", length, 36),
+            *([TableColumn("water", length, 40)] if several else []),
+            TableColumn("n", "", 35),
+            *([TableColumn("source", "", 33)] if first else []),
+            TableColumn("A", area, 44),
+            TableColumn("P", length, 42),
+            TableColumn("R = A/P", length, 40),
+            TableColumn("K", flow, 46),
+            TableColumn("Q", flow, 42),
+            TableColumn("v = Q/A", velocity, 40),
+        ]
+        rows = []
+        for part in one.parts:
+            source = ": ".join(text for text in (part.land_class, part.n_source) if text)
+            if source and source not in sources:
+                sources.append(source)
+            mark = f"[{sources.index(source) + 1}]" if source else ""
+            rows.append([
+                str(part.number), part.zone or "–", part.land_class or "–",
+                f"{part.start:.1f}", f"{part.end:.1f}", *([f"{part.stage:.2f}"] if several else []),
+                _roughness(part), *([mark] if first else []),
+                figures(part.area, 5), figures(part.perimeter, 5), figures(part.radius, 5),
+                figures(part.conveyance, 5), figures(part.discharge, 5), figures(part.velocity, 4),
+            ])  # fmt: skip
+        total, around = one.total("area"), one.total("perimeter")
+        carried = one.total("discharge")
+        rows_last = [
+            "", "sum", "", "", "", *([""] if several else []), "", *([""] if first else []),
+            figures(total, 5), figures(around, 5), figures(total / around, 5),
+            figures(one.total("conveyance"), 5), figures(carried, 5), figures(carried / total, 4),
+        ]  # fmt: skip
+        sheet.table(columns, rows, rows_last)
+        return sources
+
+    def _remarks(self, sheet: Sheet, one: Calculation) -> None:
+        """Say where n or K is not what the plain equation gives."""
+        for group in one.together:
+            numbers = ", ".join(str(n) for n in group.numbers)
+            n, area, perimeter, radius, conveyance = (
+                figures(value, 4 if value is group.n else 5)
+                for value in (
+                    group.n, group.area, group.perimeter, group.area / group.perimeter, group.conveyance
+                )
+            )  # fmt: skip
+            sheet.lines(
+                f"† Subareas {numbers} are taken together under one composite n ({group.rule}): n = {n}, "
+                f"A = {area}, P = {perimeter}, R = {radius}, K = {self._k}/{n} × {area} × {radius}^(2/3) = "
+                f"{conveyance}; each carries its share by area.",
+                6.8,
+                hang=10,
+            )
+        differing = [p for p in one.parts if p.n_differs and not p.together]
+        if differing:
+            listed = ", ".join(f"{p.number}: {figures(p.n_table, 3)}" for p in differing)
+            sheet.lines(
+                f"* n at this depth of water, where it falls with depth; as stated, in the table’s {listed}.",
+                6.8,
+                hang=10,
+            )
+        if one.factor != 1.0:
+            sheet.lines(
+                f"Stretches of water here share a subarea: each K is {figures(one.factor, 5)} times what its "
+                "own A and P give, so that together they carry what the whole carries.",
+                6.8,
+            )
+
+    def _worked(self, sheet: Sheet, one: Calculation) -> None:
+        """Put the numbers into the equation, subarea by subarea."""
+        slope = figures(one.row["slope"], 4)
+        factor = "" if one.factor == 1.0 else f" × {figures(one.factor, 5)}"
+        sheet.space(2)
+        sheet.need(40)
+        sheet.lines(
+            f"In each subarea   K = (k/n) · A · R^(2/3),   Q = K · √S,   k = {self._k},   S = {slope}:",
+            7.3,
+            face="bold",
+        )
+        parts = [p for p in one.parts if not p.together]
+        shown = sorted(sorted(parts, key=lambda p: -p.conveyance)[:_WORKED], key=lambda p: p.number)
+        for part in shown:
+            sheet.lines(
+                f"{part.number}:  K = {self._k}/{roughness_text(part.n)} × {figures(part.area, 5)} × "
+                f"{figures(part.radius, 5)}^(2/3){factor} = {figures(part.conveyance, 5)};   "
+                f"Q = {figures(part.conveyance, 5)} × √{slope} = {figures(part.discharge, 5)} {self.flow}",
+                7.2,
+                indent=8,
+                hang=12,
+            )
+        left = len(parts) - len(shown)
+        if left:
+            sheet.lines(f"and {left} more, the same way from the table", 7.2, indent=8)
+
+    def _whole(self, sheet: Sheet, one: Calculation) -> None:
+        """Put the numbers into the equations of the whole section."""
+        row, slope = one.row, figures(one.row["slope"], 4)
+        conveyance, area = one.total("conveyance"), one.total("area")
+        width, alpha = float(row["top_width"]), float(row["alpha"])
+        velocity = float(row["mean_velocity"])
+        gravity = f"{self.units.gravity:.4g}"
+        cubes = math.fsum(p.conveyance**3 / p.area**2 for p in one.parts)
+        sheet.need(34)
+        k, a, q = figures(conveyance, 5), figures(area, 5), figures(float(row["discharge"]), 5)
+        v = figures(velocity)
+        sheet.lines(
+            f"Q = ΣK · √S = {k} × √{slope} = {figures(one.total('discharge'), 5)} {self.flow};   "
+            f"V = Q/A = {q} / {a} = {v} {self.velocity}",
+            7.3,
+        )
+        power = math.floor(math.log10(cubes))
+        sheet.lines(
+            f"α = A² · Σ(K³/A²) / (ΣK)³ = {a}² × {cubes / 10.0**power:.4f} × 10^{power} / {k}³ "
+            f"= {figures(alpha, 4)}   (Chow 1959, section 2-7)",
+            7.3,
+        )
+        sheet.lines(
+            f"Fr = V · √α / √(g · A/T) = {v} × √{figures(alpha, 4)} / √({gravity} × "
+            f"{a} / {figures(width, 5)}) = {figures(row['froude'], 3)};   "
+            f"top width T = {figures(width, 5)} {self.length}",
+            7.3,
+        )
+        sheet.space(3)
+
+    def _checks(self, sheet: Sheet, one: Calculation, profile: np.ndarray, *, whole: bool) -> None:
+        """Draw all checks as a table, or in one paragraph the numbers of those that ask for a look."""
+        rows = list(self._check_rows(one, profile))
+        if whole:
+            columns = [
+                TableColumn("check", "", 140, words=True),
+                TableColumn("numbers", "", 350, words=True),
+                TableColumn("", "", 40, words=True),
+            ]
+            sheet.need(60)
+            sheet.table(columns, rows)
+            return
+        holding = [name for name, _, verdict in rows if verdict == _HOLDS]
+        sheet.lines(f"Checks that hold: {'; '.join(holding) or 'none'}.", 7.0)
+        for name, numbers, verdict in rows:
+            if verdict == _LOOK:
+                sheet.lines(f"Look here: {name}: {numbers}.", 7.0)
+        sheet.space(4)
+
+    def _check_rows(self, one: Calculation, profile: np.ndarray) -> Iterator[list[str]]:
+        row, unit = one.row, self.length
+
+        def verdict(holds: bool) -> str:
+            return _HOLDS if holds else _LOOK
+
+        asked, carried = float(row["discharge"]), one.total("discharge")
+        off = abs(carried / asked - 1.0)
+        yield [
+            "Sum of subareas, design flow",
+            f"{figures(carried, 5)} against {figures(asked, 5)} {self.flow}: {100 * off:.2f} % apart",
+            verdict(off < _SUM_TOLERANCE),
+        ]
+        water = stretches(row, profile, one.levels)
+        if water:
+            total, again = one.total("area"), area_below(profile, water)
+            off = abs(again / total - 1.0)
+            yield [
+                "Area measured again from the profile",
+                f"{figures(again, 5)} against {figures(total, 5)} {self.area}: {100 * off:.2f} % apart",
+                verdict(off < _SUM_TOLERANCE),
+            ]
+        lowest = float(self.sections[row["section_id"]]["lowest_ground"])
+        depth = row["stage"] - lowest
+        yield [
+            "Depth above the lowest ground",
+            f"{row['stage']:.2f} − {lowest:.2f} = {depth:.2f} {unit}",
+            verdict(depth > 0 and abs(depth - row["depth"]) < 0.005),
+        ]
+        if len(profile) > 1 and water:
+            texts, holds = [], True
+            for word, ground, at in (
+                ("left", profile[0, 2], profile[0, 3]),
+                ("right", profile[-1, 2], profile[-1, 3]),
+            ):
+                stands = [s.stage for s in water if s.start - 1e-6 <= at <= s.end + 1e-6 and s.stage > ground]
+                level = max(stands, default=float(row["stage"]))
+                above = level - ground
+                if stands:
+                    texts.append(f"water {above:.2f} {unit} above the {word} end, {ground:.2f}")
+                    holds = False
+                elif above > 0:
+                    texts.append(f"{word} end, {ground:.2f}, dry behind higher ground")
+                else:
+                    texts.append(f"{word} end, {ground:.2f}, {-above:.2f} {unit} above the water")
+            yield ["Ends of the section", "; ".join(texts), verdict(holds)]
+        critical = float(row["critical_stage"])
+        if math.isfinite(critical):
+            # at the top of a bank both stand at the bank
+            apart = critical - row["stage"]
+            side = "at" if abs(apart) < 0.01 else "below" if apart < 0 else "above"
+            yield [
+                "Critical stage and Froude number",
+                f"{critical:.2f}, {side} the stage found; Fr = {figures(row['froude'], 3)}",
+                verdict(apart < 0.01 and row["froude"] <= 1.0),
+            ]
+        yield [
+            "Velocity-head coefficient α",
+            f"{figures(row['alpha'], 4)}; above {_HIGH_ALPHA:g} the division asks for a look",
+            verdict(row["alpha"] <= _HIGH_ALPHA),
+        ]
+        share = float(row["channel_share"])
+        if math.isfinite(share):
+            yield ["Share in the channel", f"{100 * share:.0f} % of the discharge", ""]
+
+    # --- findings ---------------------------------------------------------------------------------
+
+    def _findings(self, sheet: Sheet, findings: Sequence[Mapping]) -> None:
+        sheet.title("Findings", keep=14)
+        if not findings:
+            sheet.lines("None.")
+        for one in findings:
+            sheet.lines(f"{one['severity']}: {one['message']}  [{one['code']}]", 7.2, hang=10)
+            sheet.lines(one["remedy"], 6.8, colour=GREY, indent=10)
+        sheet.space(4)
+
+    # --- a crossing -------------------------------------------------------------------------------
+
+    def _crossing_sheet(self, writer: PdfWriter, name: str, anchor: str) -> tuple[Sheet, _Entry]:
+        rows = self.rows.of("crossings", name)
+        sheet = Sheet(
+            writer, self.size, f"Crossing {name}", fitted(self.source.name, 260, 8), CAUTION, anchor
+        )
+        first = max(rows, key=lambda r: r["discharge"] if math.isfinite(r["discharge"]) else -math.inf)
+        sheet.lines(
+            f"Road {first['road'] or 'not named'}, stream {first['stream'] or 'not named'}. "
+            f"Crest (the lowest point of the road over which water would first pass): "
+            f"{self._length(first['crest'])}.",
+            7.6,
+        )
+        sheet.title("Verdict by event", keep=50)
+        columns = [
+            TableColumn("event", "", 80, words=True),
+            TableColumn("Q", self.flow, 50),
+            TableColumn("stage", self.length, 50),
+            TableColumn("crest − stage = freeboard", self.length, 130),
+            TableColumn("over the crest from", self.flow, 82),
+            TableColumn("verdict", "", 110, words=True),
+            TableColumn("status", "", 50, words=True),
+        ]
+        sheet.table(columns, [self._crossing_row(r) for r in rows])
+        over = first.get("first_event_over")
+        if over:
+            sheet.lines(f"First event over the road: {over}.", 7.3)
+        opening = first.get("required_opening", float("nan"))
+        if isinstance(opening, float) and math.isfinite(opening):
+            sheet.lines(f"Clear width required about the channel: {self._length(opening, 1)}.", 7.3)
+        section = self._section_of(name, first)
+        found: list[Calculation] = []
+        if section is not None:
+            sheet.title(f"Section {section}", keep=120)
+            found = self._calculations(section)
+            self._section_part(
+                sheet, section, found, {"crest of the road": float(first["crest"])}, first.get("geometry")
+            )
+        else:
+            sheet.lines("The results have no section of this crossing's name; see the findings.", 7.3)
+        findings = self.findings.get((False, name), [])
+        self._findings(sheet, findings)
+        sheet.sign()
+        entry = self._entry(f"Crossing {name}", first["road"], found, findings, anchor)
+        statuses = {r["status"] for r in rows}
+        entry.status = next((s for s in ("failed", "doubtful", "ok") if s in statuses), entry.status)
+        return sheet, entry
+
+    def _section_of(self, name: str, row: Mapping) -> str | None:
+        wanted = row.get("section_id") or name
+        return wanted if wanted in self.sections else None
+
+    def _crossing_row(self, row: Mapping) -> list[str]:
+        crest, stage, free = (float(row[n]) for n in ("crest", "stage", "freeboard"))
+        numbers = "–"
+        if row["status"] != FAILED and all(math.isfinite(v) for v in (crest, stage, free)):
+            numbers = f"{crest:.2f} − {stage:.2f} = {free:.2f}"
+        return [
+            row["event"], figures(float(row["discharge"])), f"{stage:.2f}" if math.isfinite(stage) else "–",
+            numbers, figures(float(row["crest_discharge"])), row["verdict"] or "–", row["status"],
+        ]  # fmt: skip
+
+    # --- the index --------------------------------------------------------------------------------
+
+    def _index(self, writer: PdfWriter, name: str) -> None:
+        sheet = Sheet(writer, self.size, "Calculation sheets", "", CAUTION)
+        sheet.pages[0].bookmark("Index")
+        record = self.source.record
+        sheet.lines(name, 11, face="bold")
+        sheet.space(3)
+        chosen = {
+            FLAGGED: "those with findings or a crossing; sheets = \"all\" under [output] gives every one",
+            ALL: "all",
+        }[self.which]  # fmt: skip
+        finished = (record.get("finished") or "").replace("T", " ").replace("+00:00", " UTC")
+        facts = [
+            f"{len(self.chosen)} of {len(self.sections)} sections ({chosen})"
+            + (f"; {len(self.crossings)} crossings" if self.crossings else "") + ".",
+            f"Run finished {finished}, terrain2q {record.get('versions', {}).get('terrain2q', '')}."
+            if finished else "",
+            f"SHA-256 of {RESULT_NAME}: {sha256_of(self.source.folder / RESULT_NAME)}"
+            if self.source.folder is not None else "",
+            "" if self.source.is_of_record or not record or self.source.folder is None
+            else f"{RESULT_NAME} has changed since the run that run.json speaks of; numbers are the file’s.",
+        ]  # fmt: skip
+        for text in facts:
+            if text:
+                sheet.lines(text, 7.4)
+        sheet.space(3)
+        sheet.lines(
+            "How to follow a sheet: in each subarea under water K = (k/n) · A · R^(2/3) with R = A/P, "
+            f"k = {self._k}; the sum of all K times √S is the discharge that the stage found carries, "
+            "which is the design flow. Numbers are rounded only for print. Where water stands at several "
+            "levels, the table has the level over each subarea.",
+            7.4,
+        )
+        sheet.space(3)
+        sheet.lines(CAUTION, 7.4, face="bold")
+        sheet.space(6)
+        if not self.entries:
+            sheet.lines("No section has a finding or a crossing, so that there are no sheets.", 8)
+        columns = [
+            TableColumn("sheet", "", 130, words=True),
+            TableColumn("stream or road", "", 130, words=True),
+            TableColumn("status", "", 60, words=True),
+            TableColumn("findings", "", 50),
+            TableColumn(f"stage of the largest event [{self.length}]", "", 120),
+            TableColumn("page", "", 40),
+        ]
+        first, rest = self.entries[:_INDEX_FIRST], self.entries[_INDEX_FIRST:]
+        blocks = [first, *(rest[i : i + _INDEX_NEXT] for i in range(0, len(rest), _INDEX_NEXT))]
+        for number, block in enumerate(blocks):
+            if number:
+                sheet.need(self.size[1])  # a page of its own
+            if block:
+                self._index_table(sheet, columns, block)
+        if len(sheet.pages) != len(blocks):
+            raise AssertionError("the index has another number of pages than was reckoned with")
+        sheet.finish(1, front=True)
+
+    def _index_table(self, sheet: Sheet, columns, entries: Sequence[_Entry]) -> None:
+        def link(page, number: int, bottom: float, height: float) -> None:
+            page.link(sheet.left, bottom, sheet.width, height, entries[number].anchor)
+
+        rows = [[e.title, e.about, e.status, str(e.findings), e.stage, str(e.page)] for e in entries]
+        sheet.table(columns, rows, size=_INDEX_SIZE, on_row=link)
+
+
+def _is_line(geometry: Any) -> bool:
+    return (
+        geometry is not None
+        and not shapely.is_empty(geometry)
+        and bool(np.isfinite(shapely.bounds(geometry)).all())
+    )
+
+
+def _profile(geometry: Any) -> np.ndarray:
+    """Return x, y, z, m of the points that have an elevation, shape (n, 4)."""
+    if geometry is None:
+        return np.zeros((0, 4))
+    points = shapely.get_coordinates(geometry, include_z=True, include_m=True)
+    return points[np.isfinite(points[:, 2]) & np.isfinite(points[:, 3])]
+
+
+def _roughness(part: Part) -> str:
+    return roughness_text(part.n) + ("†" if part.together else "*" if part.n_differs else "")
