@@ -114,6 +114,7 @@ CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
     "slope-uncertain": Kind(DOUBTFUL, "The slope from the ground is uncertain", "Lengthen `window` under [slope], or give a surveyed slope."),
     "water-in-channel": Kind(NOTE, "The terrain seems to show water, not the bed, in the channel", "Say what lies below it under [submerged]; without, the stage is on the high side."),
     "bed-below-water": Kind(NOTE, "The channel was deepened below the water that the terrain shows", "Check the depth against a survey."),
+    "water-not-found": Kind(NOTE, "No level water was found in a channel that was to be deepened", "Look at the section; where the channel is narrower than about four stations, lower its bed in the terrain or give a smaller `spacing`."),
     "flow-missing": Kind(FAILED, "No design flow applies to a section", "Add a row for this stream or section to the flows."),
     "drainage-area-missing": Kind(DOUBTFUL, "A section has no drainage area where one is needed", "Fill in the field of the cut lines."),
     "drainage-area-far": Kind(DOUBTFUL, "A discharge was carried over to a very different drainage area", "Use a flow estimate nearer to the section; a ratio of areas from 0.5 to 1.5 is common practice."),

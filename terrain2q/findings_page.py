@@ -456,6 +456,13 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "can be had back.",
             "A river 80 ft wide with `depth = 3.0` under [submerged].",
         ),
+        "water-not-found": (
+            "The study says what lies below the water, and the lowest ground of this section is not "
+            "level over at least four points, as water would be.",
+            "The section was left as the terrain shows it. If there was water on the survey day, its "
+            "stages are on the high side.",
+            "A brook 8 ft wide on a terrain of cells of 3 ft.",
+        ),
         "flow-missing": (
             "No row of the flows applies to this section, its stream and its stream distance.",
             "There is no discharge to find a stage for. The section keeps its row with empty numbers.",

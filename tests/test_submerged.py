@@ -300,6 +300,21 @@ def test_a_field_that_the_cut_lines_do_not_have(folder):
     assert wrong.value.code == "field-missing"
 
 
+def test_a_section_without_water_stays_and_says_so(folder):
+    with rasterio.open(folder / "dem.tif") as source:
+        ground, profile = source.read(1), source.profile
+    # a V in place of the water
+    rows = np.abs(np.arange(ground.shape[0]) + 0.5 - 80.0)
+    with rasterio.open(folder / "dry.tif", "w", **profile) as out:
+        out.write(ground + np.where(rows < WIDTH / 2, -0.2 * (WIDTH / 2 - rows), 0.0)[:, None], 1)
+        out.units = ("m",)
+    dry = {"terrain.dem": str(folder / "dry.tif")}
+    left, stated = answers(folder, **dry), answers(folder, **dry, **{"submerged.depth": "1.0"})
+    assert not {"water-in-channel", "water-not-found"} & codes(left, "a")
+    assert "water-not-found" in codes(stated, "a")
+    assert stated.design_stages["stage"].equals(left.design_stages["stage"])
+
+
 # --- discharges by drainage area ---------------------------------------------------------------------
 
 

@@ -101,7 +101,12 @@ def with_bed(
     """
     water = find_water(profile.stations, profile.elevations, channel)
     if water is None:
-        return profile, []
+        if submerged is None:
+            return profile, []
+        low = int(np.argmin(profile.elevations))
+        message = "the lowest ground is not level, as water would be, so no bed was put below it"
+        finding = Finding("water-not-found", message, _LAYER, line.section_id)
+        return profile, [finding.at(profile.x[low], profile.y[low])]
     middle = int(np.argmin(np.abs(profile.stations - 0.5 * (water.start + water.end))))
 
     def shown(metres: float) -> str:
