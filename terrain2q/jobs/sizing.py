@@ -16,6 +16,9 @@ from terrain2q.units import UnitSystem
 
 _LAYER = "required_widths"
 
+_NOTHING = 1e-3
+"""A width (m) that is none: what passes the flow is the division of the section at the bank."""
+
 
 @dataclass(frozen=True)
 class BenchWish:
@@ -175,13 +178,17 @@ def size_section(answer: SectionAnswer, wish: BenchWish, units: UnitSystem) -> S
         if bench.at_jump:
             notes.add(
                 "width-at-jump",
-                f"at a width of {length_text(bench.width, units)} the discharge jumps "
+                f"at a width of {_width_text(bench.width, units)} the discharge jumps "
                 f"to {notes.flow(bench.discharge)}",
                 event.event,
             )
         status = DOUBTFUL if doubtful else OK
         events.append(SizedEvent(event.event, status, discharge, stage, before, bench))
     return SizedSection(answer, wish, tuple(events), notes.findings())
+
+
+def _width_text(width: float, units: UnitSystem) -> str:
+    return "next to nothing" if width < _NOTHING else length_text(width, units)
 
 
 def allowed_stage(section: Section, wish: BenchWish) -> float:
@@ -227,7 +234,12 @@ class _Notes:
         self._found: dict[str, list[str]] = {}
 
     def flow(self, discharge: float) -> str:
-        return f"{discharge * self._units.per_si('flow'):,.4g} {self._units.symbol('flow')}"
+        value = discharge * self._units.per_si("flow")
+        return (
+            f"{value:,.0f} {self._units.symbol('flow')}"
+            if value >= 1000
+            else (f"{value:.4g} {self._units.symbol('flow')}")
+        )
 
     def add(self, code: str, message: str, event: str = "") -> None:
         self._found.setdefault(code, []).append(f"{event}: {message}" if event else message)

@@ -325,7 +325,7 @@ def _set_exaggeration(ax: Axes, exaggeration: float | None) -> None:
         ax.set_aspect(exaggeration, adjustable="box")
         shown = exaggeration
     else:
-        ax.figure.canvas.draw()
+        ax.get_figure(root=True).draw_without_rendering()
         box = ax.get_window_extent()
         (left, right), (bottom, top) = ax.get_xlim(), ax.get_ylim()
         fits = (box.height / (top - bottom)) / (box.width / (right - left))
