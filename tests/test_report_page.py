@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import importlib.util
 import itertools
 import json
 import os
@@ -640,3 +641,26 @@ def test_results_section_and_rating_show_themselves(results):
     html = section.rating(0.002)._repr_html_()
     assert "data:image/svg+xml" in html
     assert "discharge" in html
+
+
+# --------------------------------------------------------------------------------------------------
+# The gallery
+
+
+def test_pictures_of_the_gallery_can_be_made_and_are_small(browser, results):
+    docs = Path(__file__).parents[1] / "docs"
+    page = (docs / "gallery.md").read_text(encoding="utf-8")
+    shown = dict(re.findall(r"!\[([^\]]+)\]\(([^)]+\.png)\)", page))
+    assert len(shown) == 3
+    assert sum((docs / name).stat().st_size for name in shown.values()) < 400_000
+    spec = importlib.util.spec_from_file_location("make_pictures", docs / "make_pictures.py")
+    pictures = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(pictures)
+    made = {"section.png": pictures.section_picture(read_folder(results.folder))}
+    made |= pictures.report_pictures(results.folder / "report.html", browser)
+    assert set(made) == set(shown.values())
+    for name, png in made.items():
+        width, height = (int.from_bytes(png[i : i + 4], "big") for i in (16, 20))
+        kept = (docs / name).read_bytes()
+        assert width == int.from_bytes(kept[16:20], "big")
+        assert height > 300

@@ -291,7 +291,7 @@ def _subareas(rows: Sequence[Mapping], decimals: int) -> list[list]:
     out = []
     for row in rows:
         # the same look for the same ground, as in the pictures made for print
-        look = looks.setdefault((row["land_class"], row["n"], row["zone"]), len(looks) % len(EARTHS))
+        look = looks.setdefault((row["land_class"], row["n"], row["zone"]), len(looks))
         out.append([
             _number(row["start_station"], 1), _number(row["end_station"], 1), row["zone"], row["land_class"],
             _number(row["n"], decimals), row["n_source"], look,

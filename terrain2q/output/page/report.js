@@ -472,7 +472,8 @@ function stretch({ xs, zs }, start, end) {
 }
 
 const PATTERNS = [
-  null, "M0 8L8 0M-2 2L2 -2M6 10L10 6", "M2 2h1.2M6 6h1.2", "M0 0L8 8M-2 6L2 10M6 -2L10 2", "M0 8L8 0M0 0L8 8",
+  null, "M0 8L8 0M-2 2L2 -2M6 10L10 6", "M2 2h1.2M6 6h1.2", "M0 0L8 8M-2 6L2 10M6 -2L10 2", "M0 8L8 0M0 0L8 8", "M0 2H8M0 6H8",
+  "M4 2.4a1.6 1.6 0 1 0 .01 0z",
 ];
 
 /** The event shown and those with less water, the highest first. */
@@ -517,11 +518,12 @@ function drawSection(section) {
   section.subareas.forEach(([from, to, , , , , look], i) => {
     const ground = stretch(profile, Math.max(from, start), Math.min(to, end));
     const d = `${line([[ground[0][0], floor], ...ground, [ground[ground.length - 1][0], floor]])}Z`;
-    add(svg, "path", { d, fill: looks.earths[look] });
-    if (PATTERNS[look]) {
+    add(svg, "path", { d, fill: looks.earths[look % looks.earths.length] });
+    const hatch = PATTERNS[look % PATTERNS.length];
+    if (hatch) {
       patternsMade += 1;
       const pattern = add(defs, "pattern", { id: `earth-${patternsMade}`, width: 8, height: 8, patternUnits: "userSpaceOnUse" });
-      add(pattern, "path", { d: PATTERNS[look], stroke: "#9b8a70", "stroke-width": look === 2 ? 1.6 : 0.8, fill: "none" });
+      add(pattern, "path", { d: hatch, stroke: "#9b8a70", "stroke-width": hatch.includes("h1") ? 1.6 : 0.8, fill: "none" });
       add(svg, "path", { d, fill: `url(#earth-${patternsMade})` });
     }
     if (i) add(svg, "path", { d: `M${x(from)} ${y(floor)}V${y(ground[0][1])}`, stroke: "#3d3127", "stroke-width": 0.7 });
