@@ -359,10 +359,10 @@ def tables(name: str | None, as_json: bool) -> None:
 @click.argument("folder", type=click.Path(path_type=Path))
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of text.")
 def report(folder: Path, as_json: bool) -> None:
-    """Write the pages of an output folder anew, from its layers.
+    """Write the report page and the calculation sheets of an output folder anew.
 
     Reads results.gpkg and run.json in FOLDER, and the terrain and the streams where they still are, and
-    writes report.html. Results are left as they are.
+    writes report.html and calculation_sheets.pdf. Results are left as they are.
 
     \b
     Example:

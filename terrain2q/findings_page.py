@@ -141,6 +141,11 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "Without the table there is no roughness.",
             "A built-in table's name with a letter missing.",
         ),
+        "library-missing": (
+            "A key asks for a kind of file that needs a library which does not come with the package.",
+            "It is found before any work, so that no long run ends without its files.",
+            '`tables = "parquet"` under [output] where pyarrow is not installed.',
+        ),
         "number-not-positive": (
             "A roughness, a slope or a discharge is zero or negative where the equation needs a number "
             "above zero.",

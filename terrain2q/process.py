@@ -35,6 +35,7 @@ from terrain2q.output.pages import write_pages
 from terrain2q.output.report import Explorer
 from terrain2q.output.report_data import worst_first
 from terrain2q.output.run_record import run_record, write_run_record
+from terrain2q.output.tables import check_tables
 from terrain2q.study import Study, load_study
 from terrain2q.units import UnitSystem
 
@@ -395,6 +396,7 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
     progress = progress or _silent
     folder = Path(study.output.folder)
     check_output(folder, study.output.overwrite)
+    check_tables(study.output.tables)
     flows = read_flows(study)
     inputs = _read_inputs(study)
     built = build_sections(inputs.lines, inputs.sections, progress)

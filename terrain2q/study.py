@@ -375,6 +375,15 @@ class OutputTable(Table):
     folder: Path = key("folder for the results", "folder", '"output"', default=Path("output"))
     overwrite: bool = key("true replaces earlier results in the folder", "flag", "false", default=False)
     report: bool = key("true writes report.html, a page to read and to print", "flag", "true", default=True)
+    sheets: str = key(
+        "calculation_sheets.pdf: flagged gives a sheet to sections with findings and to crossings, all to "
+        "every section, none writes no file",
+        "choice", '"all"', choices=("flagged", "all", "none"), default="flagged",
+    )  # fmt: skip
+    tables: str = key(
+        "the layers also as tables beside results.gpkg: csv, parquet (needs pyarrow), both or none",
+        "choice", '"csv"', choices=("none", "csv", "parquet", "both"), default="none",
+    )  # fmt: skip
 
 
 def _table(cls: type[Table], *, when_absent: str = "none") -> Any:

@@ -1,4 +1,4 @@
-"""The pages made from an output folder: what a run writes last, and what `terrain2q report` makes anew."""
+"""What is made from an output folder: what a run writes last, and what `terrain2q report` makes anew."""
 
 from __future__ import annotations
 
@@ -9,18 +9,20 @@ from typing import Any
 
 from terrain2q.output.folder import read_folder
 from terrain2q.output.report import write_report
+from terrain2q.output.sheets import FLAGGED, NONE, write_sheets
+from terrain2q.output.tables import write_tables
 
 
 def write_pages(folder: str | os.PathLike, asked: Mapping[str, Any] | None = None) -> list[Path]:
-    """Write the pages of an output folder from its layers and its record.
+    """Write the pages and tables of an output folder from its layers and its record.
 
     Parameters
     ----------
     folder : path
         An output folder with ``results.gpkg``.
     asked : mapping, optional
-        The keys of [output] that say which pages; as the folder's own run asked, and the report in any
-        case, where absent.
+        The keys of [output] that say which; where absent, the report, and the sheets that the folder's
+        own run asked for (those that are flagged where it asked for none).
 
     Returns
     -------
@@ -36,8 +38,13 @@ def write_pages(folder: str | os.PathLike, asked: Mapping[str, Any] | None = Non
     """
     source = read_folder(folder)
     if asked is None:
-        asked = {**source.settings.get("output", {}), "report": True}
+        sheets = source.settings.get("output", {}).get("sheets", NONE)
+        asked = {"report": True, "sheets": FLAGGED if sheets == NONE else sheets}
     written = []
     if asked.get("report", True):
         written.append(write_report(source))
+    if (sheets := asked.get("sheets", FLAGGED)) != NONE:
+        written.append(write_sheets(source, sheets))
+    if (tables := asked.get("tables", NONE)) != NONE:
+        written += write_tables(source, tables)
     return written
