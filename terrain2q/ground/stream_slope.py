@@ -21,6 +21,7 @@ long waves too, so the interval also says how much the slope depends on the wind
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cache
 
 import numpy as np
 from scipy.stats import t as student
@@ -119,9 +120,14 @@ def robust_slope(distance, elevation, confidence: float = CONFIDENCE) -> SlopeEs
     waves += [np.cos(np.pi * number * share) for number in range(2, WAVES + 2)]
     size = (np.linalg.qr(np.column_stack(waves))[0][:, 2:].T @ rest) ** 2
     long_waves = max(size.mean(), size[: WAVES // 2].mean())
-    half = student.ppf(0.5 + 0.5 * confidence, WAVES) * np.sqrt(long_waves / np.sum((s - middle) ** 2))
+    half = _critical(confidence) * np.sqrt(long_waves / np.sum((s - middle) ** 2))
     half = float(half)
     return SlopeEstimate(-rise, -rise - half, -rise + half, level, middle, length, count, agreeing)
+
+
+@cache
+def _critical(confidence: float) -> float:
+    return float(student.ppf(0.5 + 0.5 * confidence, WAVES))
 
 
 def _grouped(s: np.ndarray, z: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
