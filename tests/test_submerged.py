@@ -11,6 +11,9 @@ from shapely import LineString
 
 from terrain2q import Section, Subarea, run
 from terrain2q.errors import InputError, NoAnswerError
+from terrain2q.ground.cover import FallingN, SubareaSpec
+from terrain2q.ground.cut_lines import CutLine
+from terrain2q.hydraulics.section import DepthRoughness
 from terrain2q.hydraulics.submerged import (
     LEAST_POINTS,
     SHAPES,
@@ -20,7 +23,9 @@ from terrain2q.hydraulics.submerged import (
     discharge_below,
     find_water,
 )
+from terrain2q.jobs.submerged import Submerged
 from terrain2q.study import load_study
+from terrain2q.units import SI
 
 
 def channel(noise=0.0, half=6.0, seed=1, tilt=0.0, spacing=1.0):
@@ -156,6 +161,23 @@ def test_the_section_carries_the_survey_flow_at_the_surveyed_surface(shape):
         assert high > right
         # more than the survey flow passes below the surface, so it lies below the stage for the rest alone
         assert right < bare.normal_stage(discharge - flow, slope) + 1e-9 < high
+
+
+def test_a_roughness_that_falls_with_depth_is_met_at_the_depth():
+    x, z = channel()
+    water, slope, flow = find_water(x, z), 0.002, 9.0
+    # so steep that going to and fro between depth and n would never end
+    falls = FallingN(0.08, 0.8, 0.03, 1.1)
+    specs = [SubareaSpec(0.0, 100.0, 0.03, 0.03, 0.08, "table", "reeds", "", falls)]
+    line = CutLine("a", x, x)
+    depth, how, missing = Submerged("rectangle", survey_flow=flow).depth_at(line, water, specs, slope, SI)
+    n = np.interp(depth, [0.8, 1.1], [0.08, 0.03])
+    assert discharge_below(water.width, depth, n, slope, "rectangle") == pytest.approx(flow, rel=1e-6)
+    assert f"n {n:.3g}" in how
+    assert missing is None
+    roughness = DepthRoughness(0.08, 0.8, 0.03, 1.1)
+    section = Section(*deepened(x, z, water, depth, "rectangle"), [Subarea(0.0, 100.0, roughness)])
+    assert section.discharge(water.surface, slope) == pytest.approx(flow, rel=1e-6)
 
 
 # --- in a study --------------------------------------------------------------------------------------

@@ -6,6 +6,7 @@ day, a section's lowest ground is the water surface, level from side to side wit
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -181,7 +182,9 @@ def discharge_below(width: float, depth: float, n: float, slope: float, shape: s
     return float(manning_conveyance(area, perimeter, np.array(n))) * float(np.sqrt(slope))
 
 
-def depth_for_flow(width: float, discharge: float, n: float, slope: float, shape: str) -> float:
+def depth_for_flow(
+    width: float, discharge: float, n: float | Callable[[float], float], slope: float, shape: str
+) -> float:
     """Return the depth of water of a known width that carries a discharge at normal depth.
 
     Parameters
@@ -190,7 +193,9 @@ def depth_for_flow(width: float, discharge: float, n: float, slope: float, shape
         Of the water surface, m.
     discharge : float
         m³/s.
-    n, slope : float
+    n : float or callable
+        Manning's n, or a function of the depth that does not rise with it.
+    slope : float
     shape : {"rectangle", "triangle", "parabola"}
 
     Returns
@@ -210,8 +215,12 @@ def depth_for_flow(width: float, discharge: float, n: float, slope: float, shape
     >>> round(depth_for_flow(5.0, 9.5508, 0.015, 0.0025, "rectangle"), 3)
     0.8
     """
+
+    def carried(depth: float) -> float:
+        return discharge_below(width, depth, n(depth) if callable(n) else n, slope, shape)
+
     deepest = 0.5 * width
-    most = discharge_below(width, deepest, n, slope, shape)
+    most = carried(deepest)
     if discharge > most:
         raise NoAnswerError(
             f"water {width:.3g} m wide would be deeper than half its width",
@@ -220,8 +229,6 @@ def depth_for_flow(width: float, discharge: float, n: float, slope: float, shape
             fix="check the survey flow, the slope and n",
         )
     least = 1e-6 * width
-    if discharge <= discharge_below(width, least, n, slope, shape):
+    if discharge <= carried(least):
         return least
-    return float(
-        brentq(lambda d: discharge_below(width, d, n, slope, shape) - discharge, least, deepest, xtol=1e-9)
-    )
+    return float(brentq(lambda depth: carried(depth) - discharge, least, deepest, xtol=1e-9))

@@ -44,7 +44,7 @@ class Submerged:
     survey_flow: float | None = None
 
     def depth_at(
-        self, line: CutLine, water: Water, n: float, slope: float, units: UnitSystem
+        self, line: CutLine, water: Water, specs: Sequence[SubareaSpec], slope: float, units: UnitSystem
     ) -> tuple[float, str, Finding | None]:
         """Return the depth below the water [m], how it was had, and a finding; NaN where it cannot be had."""
         if self.depth is not None:
@@ -57,10 +57,13 @@ class Submerged:
                 return np.nan, "", Finding("drainage-area-missing", message, "cut_lines", line.section_id)
             return self.coefficient * area**self.exponent, f"by drainage area {area:g}", None
         try:
-            depth = depth_for_flow(water.width, self.survey_flow, n, slope, self.shape)
+            depth = depth_for_flow(
+                water.width, self.survey_flow, lambda d: _roughness(specs, water, d), slope, self.shape
+            )
         except NoAnswerError as error:
             return np.nan, error.what, None
         flow = f"{self.survey_flow * units.per_si('flow'):.3g} {units.symbol('flow')}"
+        n = _roughness(specs, water, depth)
         return depth, f"which carries the survey day's {flow} at n {n:.3g}", None
 
 
@@ -123,8 +126,7 @@ def with_bed(
     )
     if submerged is None:
         return profile, [found("water-in-channel", f"{unknown}, so the stage is on the high side")]
-    n = _roughness(specs, water)
-    depth, how, missing = submerged.depth_at(line, water, n, slope, units)
+    depth, how, missing = submerged.depth_at(line, water, specs, slope, units)
     if not np.isfinite(depth):
         why = f" ({how})" if how else ""
         notes = [found("water-in-channel", f"{unknown}, so the stage is on the high side{why}")]
@@ -142,8 +144,15 @@ def with_bed(
     return bed, [found("bed-below-water", message)]
 
 
-def _roughness(specs: Sequence[SubareaSpec], water: Water) -> float:
-    """Mean n between the water's edges, by width."""
+def _roughness(specs: Sequence[SubareaSpec], water: Water, depth: float) -> float:
+    """Return the mean n between the water's edges, by width, where the water has a depth."""
     width = np.array([max(min(s.end, water.end) - max(s.start, water.start), 0.0) for s in specs])
-    n = np.array([s.n for s in specs])
+    n = np.array([_n_at(s, depth) for s in specs])
     return float((width * n).sum() / width.sum())
+
+
+def _n_at(spec: SubareaSpec, depth: float) -> float:
+    falls = spec.falling
+    if falls is None:
+        return spec.n
+    return float(np.interp(depth, [falls.shallow_depth, falls.deep_depth], [falls.shallow, falls.deep]))
