@@ -1,7 +1,7 @@
 """Results as one GeoPackage: every layer in the order of the registry, written whole or not at all.
 
 Layers are written by GDAL through pyogrio's raw interface from ISO WKB, the route that keeps M; the
-column descriptions and the data set's own description are added with sqlite3. Standard: OGC
+column descriptions, the data set's own description and the styles are added with sqlite3. Standard: OGC
 GeoPackage 1.3 (12-128r17) with its extensions Schema, Metadata and RTree Spatial Indexes.
 """
 
@@ -27,6 +27,7 @@ from pyproj import CRS
 from terrain2q.columns import CAUTION, COLUMNS, FID, LAYERS, Column, Layer, column_description, column_title
 from terrain2q.errors import OutputError
 from terrain2q.output.run_record import plain
+from terrain2q.output.styles import STYLES_TABLE, write_styles
 from terrain2q.output.whole_file import not_writable, whole_file
 from terrain2q.units import UnitSystem, unit_system
 
@@ -165,8 +166,9 @@ def write_geopackage(
             with _gdal_options(OGR_CURRENT_DATE=date, OGR_SQLITE_SYNCHRONOUS="OFF"):
                 for layer, fields, geometry, _ in prepared:
                     _write_layer(temporary, layer, fields, geometry, units, crs)
-            _describe(temporary, [layer for layer, *_ in prepared], units, about, date)
-            _check(temporary, {layer.name: count for layer, _, _, count in prepared})
+            counts = {layer.name: count for layer, _, _, count in prepared}
+            counts |= _describe(temporary, layers, units, about, date)
+            _check(temporary, counts)
         except (RuntimeError, sqlite3.Error, OSError) as error:  # pyogrio's own are RuntimeErrors
             raise not_writable(target, error) from error
         check_output(target.parent, overwrite, target.name)
@@ -321,10 +323,18 @@ _EXTENSIONS = [
 ]
 
 
-def _describe(path: Path, layers: list[Layer], units: UnitSystem, about: str, date: str) -> None:
-    """Add the column descriptions (extension Schema) and the data set's own (extension Metadata)."""
+def _describe(
+    path: Path, layers: Mapping[str, pd.DataFrame], units: UnitSystem, about: str, date: str
+) -> dict[str, int]:
+    """Add the column descriptions (extension Schema), the data set's own (extension Metadata) and styles.
+
+    Returns
+    -------
+    dict of str to int
+        Rows of each table that was added to the contents of the file.
+    """
     rows = []
-    for layer in layers:
+    for layer in (layer for name, layer in LAYERS.items() if name in layers):
         described = [(column.name, column_title(column, units), column_description(column, units))
                      for column in (FID, *(COLUMNS[name] for name in layer.columns))]  # fmt: skip
         if layer.geometry:
@@ -349,7 +359,9 @@ def _describe(path: Path, layers: list[Layer], units: UnitSystem, about: str, da
         database.execute(
             "INSERT INTO gpkg_metadata_reference VALUES ('geopackage', NULL, NULL, NULL, ?, 1, NULL)", (date,)
         )
+        styles = write_styles(database, layers, units, date)
         database.commit()
+    return {STYLES_TABLE: styles}
 
 
 def _check(path: Path, counts: dict[str, int]) -> None:
