@@ -22,7 +22,7 @@ import click
 from terrain2q import __version__
 from terrain2q.columns import CAUTION
 from terrain2q.errors import CATALOGUE, SEVERITIES, InputErrors, NoAnswerError, Terrain2qError
-from terrain2q.study import TABLES, Key, Study, Table, keys_of, load_study, shown_default
+from terrain2q.study import NEEDED_TO_RUN, TABLES, Key, Study, Table, keys_of, load_study, shown_default
 
 DONE, WRONG_INPUT, NO_ANSWER, INTERRUPTED = 0, 2, 3, 130
 """Exit codes."""
@@ -155,11 +155,11 @@ def _takes_study(command: Callable[..., Any]) -> Callable[..., Any]:
     return command
 
 
-def _study(ctx: click.Context, study_path: Path | None) -> Study:
+def _study(ctx: click.Context, study_path: Path | None, needs: Sequence[str] = NEEDED_TO_RUN) -> Study:
     options = ctx.obj or {}
     if study_path is None and not options:
         raise click.UsageError("give a study file, or its keys as options", ctx)
-    return load_study(study_path, options)
+    return load_study(study_path, options, needs=needs)
 
 
 def _usage_error(error: click.ClickException) -> dict[str, str]:
@@ -241,6 +241,7 @@ def main() -> None:
     Examples:
       terrain2q start .                 write study.toml from the data found here
       terrain2q check study.toml        look at every input
+      terrain2q layout study.toml       cut lines along the streams, to edit
       terrain2q run study.toml          sections, ratings and design stages
 
     Results go to stdout, progress and errors to stderr. Exit codes: 0 done; 2 the inputs are wrong and
@@ -295,6 +296,43 @@ def check(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bo
     else:
         click.echo(_findings_text(findings, counts))
     return NO_ANSWER if strict and counts["failed"] else DONE
+
+
+@main.command(cls=_StudyCommand, epilog=CAUTION)
+@click.option(
+    "--to",
+    metavar="FILE",
+    type=click.Path(path_type=Path),
+    help="GeoPackage to write (default cut_lines.gpkg beside the study file).",
+)
+@_takes_study
+@click.pass_context
+def layout(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool, to: Path | None) -> int:
+    """Lay out cut lines along the streams, into a GeoPackage to edit.
+
+    Lines stand square to the smoothed stream at every so many feet or metres ([cut_lines] every), reach up to
+    ground that is `height` above the bed or half the `width` to each side, and never meet. Lines in the file
+    that a person drew or edited are kept when lines are laid out again. --strict also counts places where no
+    line could be laid out.
+
+    \b
+    Examples:
+      terrain2q layout study.toml
+      terrain2q layout study.toml --cut_lines.every 250 --cut_lines.width 1500 --to lines.gpkg
+    """
+    study = _study(ctx, study_path, ("terrain", "streams", "cut_lines"))
+    from terrain2q.laying_out import lay_out_study
+
+    with _progress() as progress:
+        laid_out = lay_out_study(study, to, progress)
+    findings = laid_out.findings
+    if as_json:
+        _print_json({**laid_out.summary(), "found": [_finding(f) for f in findings]})
+    else:
+        counts = {severity: sum(f.severity == severity for f in findings) for severity in SEVERITIES}
+        click.echo(laid_out.summary_text() + "\n\n" + _findings_text(findings, counts))
+    missing = any(f.code == "line-left-out" for f in findings)
+    return NO_ANSWER if not len(laid_out.lines) or (strict and missing) else DONE
 
 
 @main.command(cls=_StudyCommand, epilog=CAUTION)

@@ -28,6 +28,7 @@ from terrain2q.jobs.design_flows import SectionAnswer, answer_sections
 from terrain2q.jobs.sections import BuiltSection, SectionInputs, build_sections
 from terrain2q.jobs.slopes import FieldSlopes, OneSlope, Slopes, StreamSlopes
 from terrain2q.jobs.submerged import Submerged
+from terrain2q.laying_out import lines_for_run
 from terrain2q.output.folder import OutputFolder
 from terrain2q.output.geopackage import RESULT_NAME, check_output, write_geopackage
 from terrain2q.output.layers import make_layers
@@ -250,13 +251,15 @@ def _read_inputs(study: Study) -> _Inputs:
     )
     out_crs = _output_crs(study, terrain)
     findings = list(terrain.findings)
-    cut_lines = read_layer(
-        study.cut_lines.path,
-        purpose="cut lines",
-        geometry="line",
-        crs=terrain.crs,
-        id_field=study.cut_lines.id_field,
-    )
+    cut_lines = None
+    if study.cut_lines.path is not None:
+        cut_lines = read_layer(
+            study.cut_lines.path,
+            purpose="cut lines",
+            geometry="line",
+            crs=terrain.crs,
+            id_field=study.cut_lines.id_field,
+        )
     streams = None
     if study.streams is not None:
         streams = read_layer(
@@ -267,12 +270,16 @@ def _read_inputs(study: Study) -> _Inputs:
             id_field=study.streams.id_field,
             repeated_ids=True,
         )
-        streams, turned = turn_streams(
-            streams, terrain, study.in_si("streams.snap"), study.system, streams_near(cut_lines, streams)
-        )
+        near = None if cut_lines is None else streams_near(cut_lines, streams)
+        streams, turned = turn_streams(streams, terrain, study.in_si("streams.snap"), study.system, near)
         findings += turned
-    for key_name, name in _cut_line_fields(study):
-        require_field(cut_lines, name, key=key_name, where=study.cut_lines.path)
+    if cut_lines is None:
+        lines, line_findings = lines_for_run(study, terrain, streams)
+    else:
+        for key_name, name in _cut_line_fields(study):
+            require_field(cut_lines, name, key=key_name, where=study.cut_lines.path)
+        lines, line_findings = orient_cut_lines(cut_lines, streams, terrain.crs, study.system)
+    findings += line_findings
     cover = _read_cover(study, terrain)
     channel = None
     if study.channel.path is not None:
@@ -280,8 +287,6 @@ def _read_inputs(study: Study) -> _Inputs:
         channel = ChannelPolygons(polygons, study.system)
         findings += channel.findings
     findings += cover.findings
-    lines, line_findings = orient_cut_lines(cut_lines, streams, terrain.crs, study.system)
-    findings += line_findings
     slopes = _slopes(study, lines, streams, terrain)
     if isinstance(slopes, StreamSlopes):
         findings += slopes.findings

@@ -173,10 +173,30 @@ class StreamsTable(Table):
 
 @dataclass(frozen=True)
 class CutLinesTable(Table):
-    """Cut lines: lines drawn across the stream from high ground to high ground."""
+    """Cut lines, drawn across the stream from high ground to high ground, or laid out along the streams."""
 
-    path: str = key("line layer of cut lines", "layer", '"data.gpkg|layer=cut_lines"', needed=True)
+    either = (("path", "every"), ("path", "width"), ("path", "height"), ("id_field", "every"))
+    path: str | None = key("line layer of cut lines", "layer", '"data.gpkg|layer=cut_lines"')
     id_field: str | None = key("field with the cut line's id", "text", '"section_id"')
+    every: float | None = key(
+        "lay lines out at this distance along the streams, in the study's length unit",
+        "number", "250.0", quantity="length",
+    )  # fmt: skip
+    width: float | None = key(
+        "greatest length of a laid-out line, half of it to each side", "number", "1500.0", quantity="length"
+    )
+    height: float | None = key(
+        "height above the bed on which a laid-out line ends; 6 m (20 ft) where absent",
+        "number", "20.0", quantity="length",
+    )  # fmt: skip
+
+    @classmethod
+    def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
+        """Yield what is missing for lines."""
+        if "path" not in given and "every" not in given:
+            yield ("every",) if {"width", "height"}.intersection(given) else ("path", "every")
+        if "every" in given and "width" not in given:
+            yield ("width",)
 
 
 @dataclass(frozen=True)

@@ -24,10 +24,12 @@ MAY_IMPORT = {
     "ground": {"errors", "units"},
     "jobs": {"errors", "units", "flows", "ground", "hydraulics"},
     "output": {"errors", "units", "columns", "ground", "hydraulics", "jobs"},
+    "laying_out": {"errors", "units", "study", "ground", "output"},
+    "screening": {"errors", "flows", "study", "ground", "hydraulics", "jobs", "output"},
     "process": {"errors", "units", "columns", "flows", "study", "ground", "hydraulics", "jobs", "output",
-                "roughness_tables"},
+                "roughness_tables", "laying_out", "screening"},
     "commands": {"errors", "units", "columns", "study", "flows", "start", "process", "roughness_tables",
-                 "output"},
+                 "output", "laying_out"},
 }  # fmt: skip
 
 PURE = {"hydraulics": {"rasterio", "geopandas", "shapely", "pyproj", "pyogrio", "click"}}

@@ -159,7 +159,7 @@ def test_other_jobs_need_other_tables(study_file):
     path = study_file('[study]\nunits = "si"\n[terrain]\ndem = "dem.tif"\n')
     assert load_study(path, needs=("terrain",)).slope is None
     assert {p.what for p in problems_of(path)} == {
-        "[cut_lines] has no path",
+        "[cut_lines] has no path and no every",
         "[land_cover] has no path and no default_n",
         "[slope] has no value and no field and no from",
     }
@@ -240,7 +240,7 @@ def test_a_table_that_is_a_value(study_file):
     assert (problem.code, problem.what) == ("value-not-allowed", "terrain is not a table of keys")
 
 
-@pytest.mark.parametrize("name", ["rmse", "every", "report", "sheets"])
+@pytest.mark.parametrize("name", ["rmse"])
 def test_what_is_not_built_is_not_offered(name):
     assert not any(name in keys_of(cls) for cls in TABLES.values())
 
