@@ -73,7 +73,7 @@ class Style:
     order : str
         The column by which features are drawn, the least first; empty where it does not matter.
     largest_first : bool
-        Draw the greatest first instead.
+        Draw the greatest first instead; the symbols stand in the order of the least first.
     label : str
         The column that is written beside each feature; empty for none.
     words : dict of str to str
@@ -212,7 +212,8 @@ def write_styles(
         ))  # fmt: skip
     database.execute(
         f"CREATE TABLE {STYLES_TABLE} (id INTEGER PRIMARY KEY AUTOINCREMENT NOT NULL, "
-        "f_table_catalog TEXT(256), f_table_schema TEXT(256), f_table_name TEXT(256), f_geometry_column TEXT(256), styleName TEXT(30), "
+        "f_table_catalog TEXT(256), f_table_schema TEXT(256), f_table_name TEXT(256), "
+        "f_geometry_column TEXT(256), styleName TEXT(30), "
         "styleQML TEXT, styleSLD TEXT, useAsDefault BOOLEAN, description TEXT, owner TEXT(30), ui TEXT(30), "
         "update_time DATETIME DEFAULT CURRENT_TIMESTAMP)"
     )
@@ -384,7 +385,10 @@ def sld(layer: Layer, style: Style) -> str:
     user = ET.SubElement(named, "UserStyle")
     ET.SubElement(user, "se:Name").text = layer.title
     drawn = ET.SubElement(user, "se:FeatureTypeStyle")
-    for value, symbol in style.symbols.items():
+    looks = list(style.symbols.items())
+    for number, (value, symbol) in enumerate(reversed(looks) if style.largest_first else looks):
+        if number and style.largest_first:  # each is painted over all of the one before
+            drawn = ET.SubElement(user, "se:FeatureTypeStyle")
         rule = ET.SubElement(drawn, "se:Rule")
         ET.SubElement(rule, "se:Name").text = style.words.get(value, value) or layer.title
         if style.by:
