@@ -252,6 +252,17 @@ class GroundDistances:
         """
         return self.measure(x, y, [0]).vertex_stations if len(x) else np.zeros(0)
 
+    def ring_area(self, x, y) -> float:
+        """Return the area in m² inside a ring; ways between its vertices are geodesics, so let them be short.
+
+        Parameters
+        ----------
+        x, y : array_like, shape (n,)
+            The first vertex may be given again as the last. The way round does not matter.
+        """
+        longitude, latitude = self._longitude_latitude(np.asarray(x, dtype=float), np.asarray(y, dtype=float))
+        return abs(self.geod.polygon_area_perimeter(longitude, latitude, radians=True)[0])
+
     def step_lengths(self, x, y, step_x, step_y) -> np.ndarray:
         """Return the ground lengths of short map steps.
 
