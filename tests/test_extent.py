@@ -1,6 +1,7 @@
 """The flood on the map: extent, low ground not joined, boundary audit and depth grids."""
 
 import json
+from itertools import pairwise
 
 import geopandas
 import numpy as np
@@ -673,7 +674,7 @@ def test_strips_cover_the_rows_once_and_end_with_blocks(monkeypatch):
     made = strips(1000, 50, first=13, block=16)
     assert made[0][0] == 0
     assert made[-1][1] == 1000
-    assert all(a[1] == b[0] for a, b in zip(made, made[1:], strict=False))
+    assert all(a[1] == b[0] for a, b in pairwise(made))
     assert all((13 + end) % 16 == 0 for _, end in made[:-1])
 
 
@@ -728,8 +729,8 @@ def test_real_ground(tmp_path, capsys):
         out.units = ("m",)
     # a valley that leaves the DEM over its western edge
     around = z[200:270, 100:160]
-    start = np.array(np.unravel_index(np.argmin(around), around.shape)) + (200, 100)
-    course = _lowest_way(z, tuple(start), (slice(90, 170), 0))
+    row, column = np.unravel_index(np.argmin(around), around.shape)
+    course = _lowest_way(z, (row + 200, column + 100), (slice(90, 170), 0))
     x, y = west + (course[:, 1] + 0.5) * dx, north - (course[:, 0] + 0.5) * dy
     smooth = [ndimage.gaussian_filter1d(v, 2.0, mode="nearest") for v in (x, y)]
     stream = LineString(np.column_stack(smooth))

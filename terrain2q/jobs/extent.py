@@ -9,8 +9,8 @@ stream, or a section's own water, over the ground (:mod:`terrain2q.ground.water_
 Nothing is mapped above the first and below the last section of a stream, nor beyond the lines that join
 the sections' ends: there is no level there that anybody has worked out. A tributary is mapped down to
 its mouth, on ground that narrows from its last section to the mouth: its water falls from that section's
-stage with that section's slope, as uniform flow does, until it meets the level of the stream that it
-joins. Where mapped grounds overlap, the higher level holds.
+stage with that section's slope, as uniform flow does. The level of the stream that it joins backs up into
+it as far as it is the higher one. Where mapped grounds overlap, the higher level holds.
 """
 
 from __future__ import annotations
@@ -333,9 +333,10 @@ class _Job:
                     reach = self._reach(upper, lower)
                     if reach is not None:
                         bounds.append(reach)
-                reach = self._reach(stations[-1], None) if len(stations) > 1 else None
-                if reach is not None and self._joins_another(stations[-1].stream, event):
-                    bounds.append(reach)
+                if self._joins_another(stations[-1].stream, event):
+                    reach = self._reach(stations[-1], None)
+                    if reach is not None:
+                        bounds.append(reach)
         if not bounds:
             return MapCells(self.terrain, (0, 0, 0, 0))
         return MapCells(
@@ -368,30 +369,38 @@ class _Job:
             for s in group
         }
         pieces = []
-        for group in streams.values():
+        for stream, group in streams.items():
+            least = self._joined_level(stream, event, waters)
             for upper, lower in pairwise(group):
                 reach = self._reach(upper, lower)
                 if reach is not None:
-                    pieces.append(FloodReach(reach, upper, lower, (waters[upper.index], waters[lower.index])))
-        for stream, group in streams.items():
-            into = self._joins_another(stream, event)
-            reach = self._reach(group[-1], None) if into is not None else None
-            if reach is None:
-                continue
-            main = self._reach(*into)
-            share = float(main.shares_at(self._mouth(stream)[0][None, :])[0])
-            a, b = (waters[s.index].stage for s in into)
-            water = waters[group[-1].index]
-            way = self._mouth(stream)[1] - group[-1].distance
-            mouth = replace(
-                water, channel=(*water.channel[:2], water.stage - water.slope * way), left=(), right=()
-            )
-            pieces.append(FloodReach(reach, group[-1], None, (water, mouth), least=a + share * (b - a)))
+                    both = waters[upper.index], waters[lower.index]
+                    pieces.append(FloodReach(reach, upper, lower, both, least))
+            reach = self._reach(group[-1], None) if least is not None else None
+            if reach is not None:
+                water = waters[group[-1].index]
+                way = self._mouth(stream)[1] - group[-1].distance
+                end = (*water.channel[:2], water.stage - water.slope * way)
+                mouth = replace(water, channel=end, left=(), right=())
+                pieces.append(FloodReach(reach, group[-1], None, (water, mouth), least))
+        # a stream that others join comes first: on its own ground its own level counts
+        pieces.sort(key=lambda piece: piece.least is not None)
         if pieces:
             whole = shapely.union_all([p.reach.polygon for p in pieces])
             for piece in pieces:
                 piece.margin = piece.reach.polygon.buffer(MARGIN, quad_segs=2).difference(whole)
         return pieces
+
+    def _joined_level(self, stream: str, event: str, waters, seen: tuple[str, ...] = ()) -> float | None:
+        """Return the level, at this stream's mouth, of the stream it joins; None where it joins none."""
+        into = self._joins_another(stream, event)
+        if into is None or stream in seen:
+            return None
+        share = float(self._reach(*into).shares_at(self._mouth(stream)[0][None, :])[0])
+        a, b = (waters[s.index].stage for s in into)
+        further = self._joined_level(into[0].stream, event, waters, (*seen, stream))
+        level = a + share * (b - a)
+        return level if further is None else max(level, further)
 
     def _share_out(self, piece: FloodReach) -> None:
         """Give the cells of a reach their labels where a hollow on a line has a stage of its own."""
@@ -473,7 +482,7 @@ class _Job:
             sweep.close()
         self._remark_surface(event, pieces)
         for stream, stations in self._answered(event).items():
-            if len(stations) < 2:
+            if len(stations) < 2 and not self._joins_another(stream, event):
                 self.findings.append(
                     Finding(
                         "extent-one-section",
@@ -559,6 +568,8 @@ class _Job:
                 rise = lower.level(label) - upper.level(label)
                 if rise > RISE and upper.path(label) is not None:
                     rises.append((rise, label))
+            if piece.lower is None and piece.least > upper.stage + RISE:
+                rises.append((piece.least - upper.stage, 0))
             if not rises:
                 continue
             rise, label = max(rises)

@@ -240,8 +240,8 @@ def cut_off_hollows(station: PlacedSection, water: SectionWater) -> list[Hollow]
 class FloodReach:
     """A reach at an event: its two waters, its margin, and its cells' labels where levels differ by side.
 
-    `least` is the level below which the water does not stand where no other reach is: that of the stream a
-    tributary joins.
+    `least` is the level below which the water does not stand, where no other reach is: that of the stream
+    which a tributary joins.
     """
 
     reach: Reach
