@@ -288,12 +288,19 @@ def place_section(
     shapely.prepare(closed)
     t = np.arange(-np.floor(half_width / step), np.floor(half_width / step) + 1) * step
     best: tuple[float, SectionPlace] | None = None
+    outside = False
     stride = max(2.0, step)
     for k in range(int(farthest / stride) + 1):
         at = start + sign * (clear + k * stride)
         if not 0.0 < at < stream.length:
             break
         point, way = (v[0] for v in along_line(stream, np.array([at])))
+        if shapely.contains_xy(closed, *point):
+            # beyond another road the stream has another crossing's water
+            if outside:
+                break
+            continue
+        outside = True
         # from left to right looking downstream
         across = np.array([way[1], -way[0]])
         z = ground.at(point + across * t[:, None])
@@ -302,8 +309,6 @@ def place_section(
             continue
         level = top - slope * (at - start)
         left, right = _high_ends(z, middle, level)
-        if shapely.contains_xy(closed, *point):
-            continue
         ends = [point + across * t[left], point + across * t[right]]
         line = shapely.LineString([ends[0], point, ends[1]])
         if not closed.intersects(line):

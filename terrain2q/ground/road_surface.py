@@ -250,14 +250,14 @@ def find_crest(surface: RoadSurface, ground: LocalGround, reach: float) -> Crest
     middle = int(np.argmin(np.abs(s)))
     for run in (slice(middle, None), slice(middle, None, -1)):
         passed[run] = np.maximum.accumulate(np.where(np.isfinite(way[run]), way[run], -np.inf))
-    # a gap in the terrain is no way
     level = np.where(np.isfinite(road), np.maximum(road, passed), np.nan)
     near = np.flatnonzero((np.abs(s) <= reach) & np.isfinite(level))
     if not near.size:
         return None
     lowest = float(level[near].min())
-    # a level road has many lowest points: the nearest to the stream is named
+    # where the way there decides, several stations are passed together: the road is lowest at one of them
     least = near[level[near] <= lowest + 1e-9]
+    least = least[road[least] <= road[least].min() + 1e-9]
     best = int(least[np.argmin(np.abs(s[least]))])
     ends = (near[0], near[-1])
     step = s[1] - s[0]

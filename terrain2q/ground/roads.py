@@ -152,6 +152,10 @@ class RoadNetwork:
         """Return the joined line nearest to a point."""
         return int(self._line_tree.nearest(point))
 
+    def near(self, area: shapely.Geometry) -> np.ndarray:
+        """Return the numbers of the joined lines that come into an area."""
+        return self._line_tree.query(area, predicate="intersects")
+
     def meetings(self, network: StreamNetwork) -> dict[tuple[int, int], list[tuple[float, float, float]]]:
         """Return where lines meet streams: by line and chain, positions along both and the part's number.
 

@@ -32,7 +32,7 @@ from terrain2q.ground.cut_lines import CutLine
 from terrain2q.ground.layers import clean_text
 from terrain2q.ground.local_ground import LocalGround
 from terrain2q.ground.road_surface import Crest, RoadSurface, find_crest, find_road_surface
-from terrain2q.ground.roads import BRIDGE, Crossing
+from terrain2q.ground.roads import BRIDGE, Crossing, RoadNetwork
 from terrain2q.ground.stream_slope import robust_slope
 from terrain2q.ground.streams import StreamNetwork, length_text
 from terrain2q.ground.terrain import Profile, Terrain
@@ -56,6 +56,9 @@ ROAD_WIDTH = 6.0
 SEARCH = 12.0
 """Metres to each side of the drawn line within which the road lies, where nothing is said."""
 
+SNAP = 30.0
+"""Metres from a point within which its stream and its road lie, where nothing is said."""
+
 MERGE = 30.0
 """Metres within which crossings are one, where nothing is said: a divided road's two carriageways."""
 
@@ -65,14 +68,17 @@ SLOPE_WINDOW = 600.0
 FARTHEST = 200.0
 """Metres from the fill within which a place for a section is looked for."""
 
+ALONG_ROADS = 350.0
+"""Metres along roads for which their fills are kept out of sections: as far as a section can be."""
+
 HALF_SECTION = 300.0
 """Metres to each side of the stream that a section may reach."""
 
 CLEAR_ABOVE = 2.0
 """Metres above the crest to which sections reach, or the crest's height above the bed if that is more."""
 
-HIGH_FILL = 2.0
-"""Metres of fill over the bed above which water ponds behind a culvert rather than flows past."""
+DEEP_POND = 1.0
+"""Mean depth, m, of water held back to the crest above which ponding is worth a finding."""
 
 SMALL_STORAGE = 0.05
 """Share of the event's volume below which the room behind a fill does not matter."""
@@ -118,6 +124,8 @@ class CrossingInputs:
     crest_field, opening_field, tide_field : str or None
         Fields of the crossings or roads: the surveyed crest and the opening's width, in the study's units,
         and whether the tide reaches the crossing.
+    roads : RoadNetwork or None
+        Every road, so that no section runs over the fill of another one.
     rank : sequence of str
         What decides the rank, in order: ``probability``, ``freeboard``, or a field, the larger first;
         with a minus before it the smaller first.
@@ -138,6 +146,7 @@ class CrossingInputs:
     crest_field: str | None = None
     opening_field: str | None = None
     tide_field: str | None = None
+    roads: RoadNetwork | None = None
     rank: Sequence[str] = DEFAULT_RANK
 
     @property
@@ -155,8 +164,8 @@ class CrossingEvent:
     event, status, verdict : str
         `verdict` is empty where `status` is ``failed``.
     values : mapping of str to float
-        ``discharge, stage, freeboard, probability, required_opening, opening_share, road_width_under_water,
-        largest_depth_on_road, weir_discharge, tailwater_stage``.
+        ``discharge, stage, freeboard, probability, required_opening, opening_share,
+        road_width_under_water, largest_depth_on_road, weir_discharge, tailwater_stage``.
     """
 
     event: str
@@ -431,10 +440,11 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     crest = find_crest(surface, ground, inputs.reach)
     if crest is None:
         raise NoAnswerError("the terrain has no road here", where=crossing.crossing_id)
-    fills = shapely.union_all([surface.footprint, *(s.footprint for s in lines)])
+    own = shapely.union_all([surface.footprint, *(s.footprint for s in lines)])
+    fills = shapely.union_all([own, *_fills_beside(crossing, inputs, ground)])
     middle = _strip(surface)
     edges_at = _leaves(stream, at, middle, ground.cell)
-    fill_at = _leaves(stream, at, fills, ground.cell)
+    fill_at = _leaves(stream, at, own, ground.cell)
     bed = bed.without(fill_at[0] - 3.0, fill_at[1] + 3.0)
     slope, source = _slope(crossing, inputs, bed, fill_at, findings)
     crest, surface = _surveyed(crossing, inputs, crest, surface, findings)
@@ -472,13 +482,11 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
         if place is not None
     ]
     storage = None
-    if surface.deck is None and crossing.structure != BRIDGE and crest.height - low > HIGH_FILL:
+    if surface.deck is None and crossing.structure != BRIDGE and crest.height - low > DEEP_POND:
         up, down = (
             stream.interpolate(a + d * 3.0 * ground.cell) for a, d in zip(fill_at, (-1, 1), strict=True)
         )
-        storage = storage_below(
-            ground, crest.height, np.array([up.x, up.y]), fills, np.array([down.x, down.y])
-        )
+        storage = storage_below(ground, crest.height, np.array([up.x, up.y]), own, np.array([down.x, down.y]))
     water = standing_water(bed, fill_at[1], min(fill_at[1] + LOOKS_DOWNSTREAM, stream.length))
     joins = None
     if np.isfinite(course.joins):
@@ -489,7 +497,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     road = Road(
         surface.stations, surface.heights, surface.ground, xy[:, 0], xy[:, 1], surface.deck, surface.edges,
         float(np.interp(0.0, surface.stations, surface.offsets)), surface.noise,
-        shapely.transform(fills, ground.to_map),
+        shapely.transform(own, ground.to_map),
     )  # fmt: skip
     return _Ready(
         crossing, surface, road, crest, crest_xy, slope, source, bed, edges_at, places, made, storage, water,
@@ -520,7 +528,7 @@ def _read(crossing: Crossing, inputs: CrossingInputs, course):
 
 def _surface(crossing, inputs: CrossingInputs, ground, stream, at, downstream, findings):
     """Return the road's surface, and those of the roads merged into the crossing."""
-    reach = max(inputs.reach, FARTHEST)
+    reach = max(inputs.reach, ALONG_ROADS)
     options = {"reach": reach, "width": inputs.road_width, "search": inputs.search}
     if crossing.line is None:
         line, place, azimuth = _line_through(ground, downstream, inputs)
@@ -552,6 +560,30 @@ def _surface(crossing, inputs: CrossingInputs, ground, stream, at, downstream, f
     crests = [find_crest(s, ground, inputs.reach) for s in every]
     best = max(range(len(every)), key=lambda i: -np.inf if crests[i] is None else crests[i].height)
     return every[best], [s for i, s in enumerate(every) if i != best]
+
+
+def _fills_beside(crossing, inputs: CrossingInputs, ground: LocalGround) -> list[shapely.Geometry]:
+    """Return the fills of other roads near a crossing, local metres."""
+    if inputs.roads is None:
+        return []
+    box = shapely.box(*ground.to_map([[-ALONG_ROADS] * 2, [ALONG_ROADS] * 2]).ravel())
+    known = [crossing.line, *crossing.others]
+    fills = []
+    for k in np.sort(inputs.roads.near(box)):
+        line = inputs.roads.lines[k]
+        if any(line.equals(other) for other in known if other is not None):
+            continue
+        local = shapely.LineString(ground.to_local(shapely.get_coordinates(line)))
+        for part in shapely.get_parts(shapely.clip_by_rect(local, *[-ALONG_ROADS] * 2, *[ALONG_ROADS] * 2)):
+            if part.geom_type != "LineString" or part.length < 4.0 * ground.cell:
+                continue
+            found = find_road_surface(
+                ground, part, 0.5 * part.length, np.array([0.0, -1.0]), reach=0.5 * part.length,
+                width=inputs.road_width, search=inputs.search,
+            )  # fmt: skip
+            if found is not None:
+                fills.append(found.footprint)
+    return fills
 
 
 def _clipped(line: shapely.LineString, reach: float) -> shapely.LineString:
@@ -826,7 +858,14 @@ def _row(
         if opening > 0:
             row["opening_share"] = opening / row["required_opening"]
     except NoAnswerError as error:
-        notes.add("no-opening-passes", error.what, event)
+        most = error.nearest * inputs.units.per_si("flow")
+        level = length_text(allowed - slope * to_road, inputs.units)
+        notes.add(
+            "no-opening-passes",
+            f"at {level} at the road the whole section passes {most:.4g} "
+            f"{inputs.units.symbol('flow')} at the most",
+            event,
+        )
     froude = _froude(section, state)
     if froude > 1.0:
         notes.add("supercritical", f"Froude number {froude:.2f} in the approach section", event)
@@ -887,7 +926,7 @@ def _wrong_question(ready: _Ready, inputs: CrossingInputs, row, flow: Flow | Non
                 )
             )
     fill = ready.crest.height - low
-    if ready.storage is not None:
+    if ready.storage is not None and ready.storage[0] > DEEP_POND * ready.storage[1]:
         volume, _, whole = ready.storage
         factor = inputs.units.per_si("flow")
         unit = inputs.units.symbol("length") + "³"

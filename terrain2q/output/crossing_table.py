@@ -1,0 +1,88 @@
+"""Screened crossings as a layer, and as a CSV beside it."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from pathlib import Path
+
+import geopandas
+import numpy as np
+import shapely
+
+from terrain2q.columns import COLUMNS, LAYERS
+from terrain2q.jobs.crossings import CrossingAnswer
+from terrain2q.output.layers import table_in_units, to_crs
+from terrain2q.output.whole_file import whole_file
+from terrain2q.units import UnitSystem
+
+CSV_NAME = "crossings.csv"
+
+
+def crossings_layer(
+    answers: Sequence[CrossingAnswer], units: UnitSystem, terrain_crs, crs
+) -> geopandas.GeoDataFrame:
+    """Return the layer ``crossings``: a row for each crossing at each event, in order of rank.
+
+    Parameters
+    ----------
+    answers : sequence of CrossingAnswer
+        In SI, in the terrain's CRS.
+    units : UnitSystem
+        The study's.
+    terrain_crs, crs : pyproj.CRS
+        Of the answers' coordinates, and of the layer.
+    """
+    names = LAYERS["crossings"].columns
+    rows: dict[str, list] = {name: [] for name in names}
+    owners = []
+    for answer in sorted(answers, key=lambda a: a.rank):
+        for event in answer.events:
+            known = {
+                "crossing_id": answer.crossing.crossing_id,
+                "road": answer.crossing.road,
+                "stream": answer.crossing.stream,
+                "event": event.event,
+                "crest": answer.crest,
+                "crest_discharge": answer.crest_discharge,
+                "first_event_over": answer.first_event_over,
+                "verdict": event.verdict,
+                "rank": answer.rank,
+                "status": event.status,
+                "probability": answer.crest_probability,
+                "overflow_station": answer.crest_station,
+                "slope": answer.slope,
+                "approach_distance": answer.to_road,
+            }
+            for name in names:
+                rows[name].append(known[name] if name in known else event.values.get(name, np.nan))
+            owners.append(answer.crossing)
+    table = table_in_units("crossings", rows, units)
+    x, y = (np.array([getattr(c, k) for c in owners], dtype=float) for k in "xy")
+    placed = np.isfinite(x) & np.isfinite(y)
+    points = np.full(len(owners), None, dtype=object)
+    if placed.any():
+        points[placed] = shapely.points(*to_crs(x[placed], y[placed], terrain_crs, crs))
+    return geopandas.GeoDataFrame(
+        table, geometry=geopandas.GeoSeries(list(points), crs=crs, index=table.index)
+    )
+
+
+def write_crossings_csv(folder: Path, layer: geopandas.GeoDataFrame) -> Path:
+    """Write the layer as ``crossings.csv``: its columns, and x and y in its CRS; return the file.
+
+    Numbers have the digits that a reader can use; the layer has them all.
+    """
+    target = Path(folder) / CSV_NAME
+    table = layer.drop(columns=layer.geometry.name)
+    for name in table.columns:
+        if COLUMNS[name].dtype is float:
+            digits = 6 if COLUMNS[name].quantity in ("ratio", "probability") else 3
+            table[name] = table[name].round(digits)
+    known = ~(layer.geometry.isna() | layer.geometry.is_empty)
+    for axis in ("x", "y"):
+        values = np.full(len(layer), np.nan)
+        values[known.to_numpy()] = getattr(layer.geometry[known], axis)
+        table[axis] = np.round(values, 2)
+    with whole_file(target) as temporary:
+        table.to_csv(temporary, index=False, encoding="utf-8", lineterminator="\n")
+    return target
