@@ -15,8 +15,8 @@ What is made, and why it is there:
 ``valley.gpkg``
     ``streams`` (digitised downstream), ``cut_lines``, ``land_cover`` (touching polygons without gaps
     or overlaps), ``channel`` (between the tops of bank), ``roads`` and ``crossings``.
-``flows.csv``, ``roughness.csv``
-    Design flows in ft³/s by stream; Manning's n by land class.
+``flows.csv``, ``roughness.csv``, ``observed.csv``
+    Design flows in ft³/s by stream; Manning's n by land class; high-water marks with their discharge.
 
 The cut lines ``M-100`` to ``M-800`` and ``T-100``, ``T-200`` are sound; ``M-300`` and ``T-200`` are drawn
 right to left and have to be turned. Three lines are wrong on purpose: ``M-050`` crosses the stream twice,
@@ -92,6 +92,18 @@ farmstead,0.05,0.035,0.07,"Chow (1959), Table 5-6, flood plains: scattered brush
 road,0.016,0.016,0.016,"Chow (1959), Table 5-6, lined channels: asphalt, rough"
 """  # noqa: E501
 
+OBSERVED = """\
+section,stage,discharge,note
+M-100,833.3,5200,invented high-water mark on a fence post
+M-200,832.5,5200,invented high-water mark on a tree
+M-300,830.3,5200,invented high-water mark on a barn
+M-600,825.4,5200,invented high-water mark on a tree
+M-700,823.8,5200,invented high-water mark on a bridge rail
+M-800,821.3,5200,invented high-water mark on a shed
+T-100,829.5,610,invented high-water mark on a tree
+T-200,827.2,610,invented high-water mark on a culvert
+"""
+
 STUDY = """\
 # The demonstration study of terrain2q. Everything in it is invented: ground, streams, roads, flows and names.
 # All data beside this file are made by make_sample.py. Paths are relative to this file.
@@ -129,6 +141,15 @@ path = "flows.csv"              # event,discharge,probability,stream; discharge 
 
 [rating]
 stages = 60
+
+[bench]                         # `terrain2q size` finds the widths that pass each flow within the stage
+base = 1.5                      # feet above the lowest ground
+n = 0.035                       # as for pasture
+side_slope = 3.0                # 3 along, 1 up
+stage = 8.5                     # feet above the lowest ground that the water may reach
+
+[observed]                      # `terrain2q fit` finds the roughness that reproduces the marks
+path = "observed.csv"           # section,stage,discharge; invented high-water marks
 
 [output]
 folder = "output"
@@ -844,7 +865,8 @@ def make_sample(folder):
             )
     finally:
         pyogrio.set_gdal_config_options({"OGR_CURRENT_DATE": None})
-    for name, text in [("flows.csv", FLOWS), ("roughness.csv", ROUGHNESS), ("study.toml", STUDY)]:
+    texts = {"flows.csv": FLOWS, "roughness.csv": ROUGHNESS, "observed.csv": OBSERVED, "study.toml": STUDY}
+    for name, text in texts.items():
         (folder / name).write_text(text, encoding="utf-8", newline="\n")
 
 

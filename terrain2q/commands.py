@@ -365,6 +365,34 @@ def run(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool
     return DONE
 
 
+@main.command(cls=_StudyCommand, epilog=CAUTION)
+@_takes_study
+@click.pass_context
+def fit(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool) -> int:
+    """Find the roughness that reproduces observed stages and discharges.
+
+    For each row of [observed]: the one factor on every n of the section, and the n of the channel alone,
+    with which uniform flow carries the observed discharge at the observed stage; and the best for all.
+    Writes fitted_roughness.csv into the output folder.
+
+    \b
+    Examples:
+      terrain2q fit study.toml
+      terrain2q fit study.toml --observed.path high_water_marks.csv --json
+    """
+    study = _study(ctx, study_path, (*NEEDED_TO_RUN, "observed"))
+    from terrain2q.output.fitted import fit_summary, fit_text
+    from terrain2q.process import fit_study
+
+    with _progress() as progress:
+        found, file = fit_study(study, progress=progress)
+    if as_json:
+        _print_json(fit_summary(found, study.system, file))
+    else:
+        click.echo(fit_text(found, study.system, file))
+    return NO_ANSWER if not found.answered or (strict and found.answered < len(found.fitted)) else DONE
+
+
 @main.command(epilog=CAUTION)
 @click.argument("name", required=False)
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of text or CSV.")

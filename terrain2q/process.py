@@ -7,7 +7,7 @@ import os
 import time
 from collections import Counter
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import pandas as pd
@@ -21,14 +21,17 @@ from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, Unifo
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
 from terrain2q.ground.layers import read_layer, require_field
 from terrain2q.ground.low_line import LowLines, streams_near, turn_streams
+from terrain2q.ground.observed import read_observations
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
 from terrain2q.hydraulics.roughness import roughness_from_parts
 from terrain2q.jobs.design_flows import SectionAnswer, answer_sections
+from terrain2q.jobs.fitting import Fit, fit_observations
 from terrain2q.jobs.sections import BuiltSection, SectionInputs, build_sections
 from terrain2q.jobs.slopes import FieldSlopes, OneSlope, Slopes, StreamSlopes
 from terrain2q.jobs.submerged import Submerged
 from terrain2q.laying_out import lines_for_run
+from terrain2q.output.fitted import check_table, write_table
 from terrain2q.output.folder import OutputFolder
 from terrain2q.output.geopackage import RESULT_NAME, check_output, write_geopackage
 from terrain2q.output.layers import make_layers
@@ -367,6 +370,31 @@ def _all_findings(inputs: _Inputs, built: Sequence[BuiltSection], answers: Seque
     found += [f for b in built for f in b.findings]
     found += [f for a in answers for f in a.findings]
     return sorted(found, key=lambda f: SEVERITIES.index(f.severity))
+
+
+def fit_study(study: Study, progress: Progress | None = None) -> tuple[Fit, Path]:
+    """Return the roughness that reproduces a study's observed stages, and the table that was written.
+
+    Raises
+    ------
+    InputError, OutputError
+        An input is wrong, or the output cannot be written; nothing was written.
+    """
+    progress = progress or _silent
+    folder = Path(study.output.folder)
+    check_table(folder, study.output.overwrite)
+    inputs = _read_inputs(study)
+    ids = [line.section_id for line in inputs.lines]
+    observations, findings = read_observations(
+        study.observed.path, study.system, ids, inputs.sections.terrain.crs
+    )
+    seen = {o.section_id for o in observations}
+    built = build_sections([line for line in inputs.lines if line.section_id in seen], inputs.sections, progress)
+    fit = fit_observations(observations, {b.section_id: b for b in built}, study.system, progress)
+    about = [f for f in inputs.findings if not f.feature_id or f.feature_id in seen]
+    about += [*findings, *(f for b in built for f in b.findings)]
+    fit = replace(fit, findings=tuple(worst_first([*about, *fit.findings])))
+    return fit, write_table(folder, fit, study.system)
 
 
 def check_study(study: Study, progress: Progress | None = None) -> list[Finding]:

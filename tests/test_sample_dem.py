@@ -17,7 +17,7 @@ import shapely
 
 FOLDER = Path(__file__).resolve().parents[1] / "sample_dem"
 LAYERS = ("streams", "cut_lines", "land_cover", "channel", "roads", "crossings")
-FILES = ("valley.tif", "valley.gpkg", "flows.csv", "roughness.csv", "study.toml")
+FILES = ("valley.tif", "valley.gpkg", "flows.csv", "roughness.csv", "observed.csv", "study.toml")
 SOUND = [f"M-{k}00" for k in range(1, 9)] + ["T-100", "T-200"]
 WRONG = ["M-050", "M-350", "M-550"]
 
@@ -88,7 +88,7 @@ def test_script_makes_the_same_data_again(tmp_path):
         assert shapely.equals_identical(
             kept.geometry.normalize().values, made.geometry.normalize().values
         ).all(), name
-    for name in ("flows.csv", "roughness.csv", "study.toml"):
+    for name in ("flows.csv", "roughness.csv", "observed.csv", "study.toml"):
         assert (FOLDER / name).read_bytes() == (tmp_path / name).read_bytes()
 
 

@@ -82,7 +82,7 @@ def section_remarks(specs: tuple[SubareaSpec, ...], section: Section, units: Uni
                 continue
             told.add((n, what))
             found.append(
-                Remark(N_OUTSIDE_RANGE, f"n {n:.3g} of {what} lies outside {_span(low, high)}", what)
+                Remark(N_OUTSIDE_RANGE, f"n {n:.3g} of {what} lies outside {span_text(low, high)}", what)
             )
     limits = [section.subareas[0].start, *(s.end for s in section.subareas)]
     for sliver in sliver_subareas(limits, section.stations):
@@ -95,7 +95,8 @@ def section_remarks(specs: tuple[SubareaSpec, ...], section: Section, units: Uni
     return found
 
 
-def _span(low: float, high: float) -> str:
+def span_text(low: float, high: float) -> str:
+    """Return a published range in words; a limit that is not a number does not bound."""
     if np.isfinite(low) and np.isfinite(high):
         return f"{low:.3g} to {high:.3g}"
     return f"what is at most {high:.3g}" if np.isfinite(high) else f"what is at least {low:.3g}"
