@@ -151,6 +151,14 @@ stage = 8.5                     # feet above the lowest ground that the water ma
 [observed]                      # `terrain2q fit` finds the roughness that reproduces the marks
 path = "observed.csv"           # section,stage,discharge; invented high-water marks
 
+[crossings]                     # roads against the floods: layer crossings, crossings.csv, crossings.pdf
+path = "valley.gpkg|layer=crossings"
+id_field = "crossing_id"
+roads = "valley.gpkg|layer=roads"
+freeboard = 1.0                 # ft between stage and crest
+opening_width_field = "opening_width"
+crest_field = "crest"           # surveyed at C-3; found in the ground elsewhere
+
 [output]
 folder = "output"
 overwrite = true

@@ -128,6 +128,20 @@ LAYERS: MappingProxyType[str, Layer] = _by_name(
         ),
     ),
     Layer(
+        "crossings",
+        "Point",
+        "Crossings",
+        "One row for each crossing of a road and a stream at an event; only where crossings were asked for. "
+        "A row of status failed keeps its place with empty numbers.",
+        (
+            "crossing_id", "road", "stream", "event", "discharge", "stage", "crest", "freeboard",
+            "crest_discharge", "first_event_over", "required_opening", "verdict", "rank", "status",
+            "probability", "opening_share", "road_width_under_water", "largest_depth_on_road",
+            "weir_discharge", "tailwater_stage", "overflow_station", "slope", "approach_distance",
+        ),
+        "Where the road meets the stream.",
+    ),
+    Layer(
         "required_widths",
         "LineString",
         "Required widths",
@@ -262,7 +276,7 @@ COLUMNS: MappingProxyType[str, Column] = _by_name(
         "length",
         "Stage",
         "Elevation of the water surface in the channel; in subarea_flows, of the water over that subarea; in "
-        "required_widths, the stage that is allowed.",
+        "required_widths, the stage that is allowed; in crossings, at the road's upstream edge.",
     ),
     Column("depth", float, "length", "Depth", "Stage minus the lowest ground of the channel."),
     Column(
@@ -351,6 +365,112 @@ COLUMNS: MappingProxyType[str, Column] = _by_name(
         "ratio",
         "Share",
         "Part of the section's discharge that flows in this subarea, from 0 to 1.",
+    ),
+    # --- a crossing --------------------------------------------------------------------------------
+    Column(
+        "crossing_id",
+        str,
+        "text",
+        "Crossing",
+        "Id of the crossing, as its layer gives it, else road and stream.",
+    ),
+    Column("road", str, "text", "Road", "Name of the road; empty where none is known."),
+    Column(
+        "crest",
+        float,
+        "length",
+        "Crest",
+        "Elevation of the lowest point of the road over which water would first pass, surveyed or found in "
+        "the ground.",
+    ),
+    Column(
+        "freeboard",
+        float,
+        "length",
+        "Freeboard",
+        "Crest minus stage at the road; below 0 where the stage is above the crest.",
+    ),
+    Column(
+        "crest_discharge",
+        float,
+        "flow",
+        "Discharge at crest",
+        "Discharge at which the stage at the road is the crest.",
+    ),
+    Column(
+        "first_event_over",
+        str,
+        "text",
+        "First event over",
+        "Smallest event whose stage is at or above the crest; empty where none is.",
+    ),
+    Column(
+        "required_opening",
+        float,
+        "length",
+        "Required opening",
+        "Least clear width about the channel that passes the event with the stage at the crest less the "
+        "freeboard asked for; empty where no width does.",
+    ),
+    Column(
+        "verdict",
+        str,
+        "text",
+        "Verdict",
+        "crest not reached, within freeboard or over the crest; empty where status is failed.",
+    ),
+    Column("rank", int, "count", "Rank", "Place of the crossing among all, 1 for the first to look at."),
+    Column(
+        "probability",
+        float,
+        "probability",
+        "Probability at crest",
+        "Annual exceedance probability of the discharge at the crest, between events; empty beyond them and "
+        "where no probabilities are given.",
+    ),
+    Column(
+        "opening_share",
+        float,
+        "ratio",
+        "Share of required opening",
+        "Width of the existing opening over the required one.",
+    ),
+    Column(
+        "road_width_under_water",
+        float,
+        "length",
+        "Road under water",
+        "Length of the road, within the reach that was searched, below the stage at the road.",
+    ),
+    Column("largest_depth_on_road", float, "length", "Depth on road", "Greatest depth of water on the road."),
+    Column(
+        "weir_discharge",
+        float,
+        "flow",
+        "Flow over road",
+        "Flow over the road as over a broad-crested weir under the stage at the road: a first estimate, too "
+        "high where the tailwater stands above the crest.",
+    ),
+    Column(
+        "tailwater_stage",
+        float,
+        "length",
+        "Tailwater stage",
+        "Stage of uniform flow below the road, carried up to the road's downstream edge.",
+    ),
+    Column(
+        "overflow_station",
+        float,
+        "length",
+        "Station of crest",
+        "Where the crest is, along the road from the stream; positive to the right looking downstream.",
+    ),
+    Column(
+        "approach_distance",
+        float,
+        "length",
+        "Distance to approach section",
+        "Along the stream from the approach section to the road's upstream edge.",
     ),
     # --- a bench -----------------------------------------------------------------------------------
     Column(

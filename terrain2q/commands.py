@@ -360,7 +360,8 @@ def run(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool
         _print_json(results.summary())
     else:
         click.echo(results.summary_text())
-    if not results.answered_sections or (strict and results.failed_sections):
+    answered = results.answered_sections + results.answered_crossings
+    if not answered or (strict and results.failed_sections + results.failed_crossings):
         return NO_ANSWER
     return DONE
 

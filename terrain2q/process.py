@@ -10,13 +10,14 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 
+import geopandas
 import pandas as pd
 import pyproj
 from pyproj.exceptions import CRSError
 
 from terrain2q.columns import CAUTION
 from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError
-from terrain2q.flows import read_flows
+from terrain2q.flows import Flow, read_flows
 from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
 from terrain2q.ground.layers import read_layer, require_field
@@ -31,6 +32,7 @@ from terrain2q.jobs.sections import BuiltSection, SectionInputs, build_sections
 from terrain2q.jobs.slopes import FieldSlopes, OneSlope, Slopes, StreamSlopes
 from terrain2q.jobs.submerged import Submerged
 from terrain2q.laying_out import lines_for_run
+from terrain2q.output.crossing_table import crossings_layer
 from terrain2q.output.fitted import check_table, write_table
 from terrain2q.output.folder import OutputFolder
 from terrain2q.output.geopackage import RESULT_NAME, check_output, write_geopackage
@@ -40,6 +42,7 @@ from terrain2q.output.report import Explorer
 from terrain2q.output.report_data import worst_first
 from terrain2q.output.run_record import run_record, write_run_record
 from terrain2q.output.tables import check_tables
+from terrain2q.screening import Screened, crossing_layers, find_crossings, screen_study, write_crossings
 from terrain2q.study import Study, load_study
 from terrain2q.units import UnitSystem
 
@@ -109,6 +112,22 @@ class Results:
             return self.layers["ratings"]["section_id"].nunique()
         return stages.loc[stages["status"] != FAILED, "section_id"].nunique()
 
+    @property
+    def failed_crossings(self) -> int:
+        """How many crossings have no answer at all, or none at some event."""
+        crossings = self.layers.get("crossings")
+        if crossings is None:
+            return 0
+        return crossings.loc[crossings["status"] == FAILED, "crossing_id"].nunique()
+
+    @property
+    def answered_crossings(self) -> int:
+        """How many crossings have an answer at one event at least."""
+        crossings = self.layers.get("crossings")
+        if crossings is None:
+            return 0
+        return crossings.loc[crossings["status"] != FAILED, "crossing_id"].nunique()
+
     def finding_counts(self) -> dict[str, int]:
         """Return how many findings there are of each severity."""
         found = Counter(f.severity for f in self.findings_list)
@@ -126,6 +145,7 @@ class Results:
             "failed_sections": self.failed_sections,
             "rows": {name: len(table) for name, table in self.layers.items()},
             "design_stages": pd.DataFrame(stages[shown]).to_dict("records"),
+            **self._crossing_summary(),
             "findings": self.finding_counts(),
             "worst_findings": [
                 {"severity": f.severity, "code": f.code, "feature_id": f.feature_id, "message": f.message}
@@ -135,6 +155,26 @@ class Results:
             "files": [str(f) for f in self.files],
             "seconds": round(self.seconds, 2),
             "caution": CAUTION,
+        }
+
+    def _crossing_summary(self) -> dict:
+        if "crossings" not in self.layers:
+            return {}
+        table = self.layers["crossings"]
+        shown = [
+            "crossing_id",
+            "event",
+            "discharge",
+            "stage",
+            "crest",
+            "freeboard",
+            "verdict",
+            "rank",
+            "status",
+        ]
+        return {
+            "failed_crossings": self.failed_crossings,
+            "crossings": pd.DataFrame(table[shown]).to_dict("records"),
         }
 
     def worst_findings(self, count: int) -> list[Finding]:
@@ -166,6 +206,8 @@ class Results:
         table = self._stage_table()
         if table:
             parts += ["", table]
+        if "crossings" in self.layers:
+            parts += ["", *self._crossing_lines()]
         counts = self.finding_counts()
         parts += ["", "Findings: " + ", ".join(f"{n} {severity}" for severity, n in counts.items())]
         parts += [
@@ -176,6 +218,21 @@ class Results:
             parts += ["", f"Written to {self.folder}: {', '.join(f.name for f in self.files)}"]
         parts += [f"Took {self.seconds:.1f} s.", "", CAUTION]
         return "\n".join(parts)
+
+    def _crossing_lines(self) -> list[str]:
+        """Return the first crossings by rank, a line each."""
+        table = self.layers["crossings"]
+        count = table["crossing_id"].nunique()
+        unit, flow = self.units.symbol("length"), self.units.symbol("flow")
+        lines = [f"{count} crossings, {self.failed_crossings} without a full answer; the first by rank:"]
+        for _, rows in list(table.groupby("rank"))[:_SHOWN]:
+            one = rows.iloc[0]
+            verdicts = ", ".join(f"{r.event} {r.verdict or '-'}" for r in rows.itertuples())
+            crest = f"crest {one.crest:.2f} {unit} at {one.crest_discharge:.4g} {flow}"
+            lines.append(f"  {one['rank']}. {one.crossing_id} {one.road}: {crest}; {verdicts}")
+        if count > _SHOWN:
+            lines.append(f"  ... and {count - _SHOWN} more in crossings")
+        return lines
 
     def _stage_table(self) -> str:
         stages = self.layers["design_stages"]
@@ -221,6 +278,7 @@ class _Inputs:
     sections: SectionInputs
     crs: pyproj.CRS
     findings: list[Finding]
+    streams: geopandas.GeoDataFrame | None
 
 
 def _silent(done: int, total: int, label: str) -> None:
@@ -255,7 +313,7 @@ def _read_inputs(study: Study) -> _Inputs:
     out_crs = _output_crs(study, terrain)
     findings = list(terrain.findings)
     cut_lines = None
-    if study.cut_lines.path is not None:
+    if study.cut_lines is not None and study.cut_lines.path is not None:
         cut_lines = read_layer(
             study.cut_lines.path,
             purpose="cut lines",
@@ -276,7 +334,10 @@ def _read_inputs(study: Study) -> _Inputs:
         near = None if cut_lines is None else streams_near(cut_lines, streams)
         streams, turned = turn_streams(streams, terrain, study.in_si("streams.snap"), study.system, near)
         findings += turned
-    if cut_lines is None:
+    if study.cut_lines is None:
+        # crossings lay out their own sections
+        lines, line_findings = [], []
+    elif cut_lines is None:
         lines, line_findings = lines_for_run(study, terrain, streams)
     else:
         for key_name, name in _cut_line_fields(study):
@@ -290,7 +351,9 @@ def _read_inputs(study: Study) -> _Inputs:
         channel = ChannelPolygons(polygons, study.system)
         findings += channel.findings
     findings += cover.findings
-    slopes = _slopes(study, lines, streams, terrain)
+    slopes = (
+        _slopes(study, lines, streams, terrain) if study.cut_lines is not None else OneSlope(float("nan"))
+    )
     if isinstance(slopes, StreamSlopes):
         findings += slopes.findings
     sections = SectionInputs(
@@ -306,7 +369,7 @@ def _read_inputs(study: Study) -> _Inputs:
         None if study.flows is None else study.flows.area_field,
         study.channel.composite,
     )
-    return _Inputs(lines, sections, out_crs, findings)
+    return _Inputs(lines, sections, out_crs, findings, streams)
 
 
 def _cut_line_fields(study: Study) -> list[tuple[str, str]]:
@@ -365,8 +428,13 @@ def _read_cover(study: Study, terrain: Terrain) -> Cover | UniformCover:
     )
 
 
-def _all_findings(inputs: _Inputs, built: Sequence[BuiltSection], answers: Sequence[SectionAnswer] = ()):
-    found = [*inputs.findings]
+def _all_findings(
+    inputs: _Inputs,
+    built: Sequence[BuiltSection],
+    answers: Sequence[SectionAnswer] = (),
+    others: Sequence[Finding] = (),
+):
+    found = [*inputs.findings, *others]
     found += [f for b in built for f in b.findings]
     found += [f for a in answers for f in a.findings]
     return sorted(found, key=lambda f: SEVERITIES.index(f.severity))
@@ -389,12 +457,31 @@ def fit_study(study: Study, progress: Progress | None = None) -> tuple[Fit, Path
         study.observed.path, study.system, ids, inputs.sections.terrain.crs
     )
     seen = {o.section_id for o in observations}
-    built = build_sections([line for line in inputs.lines if line.section_id in seen], inputs.sections, progress)
+    built = build_sections(
+        [line for line in inputs.lines if line.section_id in seen], inputs.sections, progress
+    )
     fit = fit_observations(observations, {b.section_id: b for b in built}, study.system, progress)
     about = [f for f in inputs.findings if not f.feature_id or f.feature_id in seen]
     about += [*findings, *(f for b in built for f in b.findings)]
     fit = replace(fit, findings=tuple(worst_first([*about, *fit.findings])))
     return fit, write_table(folder, fit, study.system)
+
+
+def _screen(study: Study, inputs: _Inputs, flows: Sequence[Flow], progress) -> Screened | None:
+    if study.crossings is None:
+        return None
+    return screen_study(study, inputs.sections, inputs.streams, flows, progress)
+
+
+def _check_crossings(study: Study, inputs: _Inputs) -> list[Finding]:
+    """Return what is to know about the places of crossings, before any of them is screened."""
+    if study.crossings is None:
+        return []
+    crs = inputs.sections.terrain.crs
+    points, roads = crossing_layers(study, crs)
+    network = StreamNetwork(inputs.streams, crs, study.system)
+    crossings, findings = find_crossings(study, points, roads, network)
+    return [*findings, *(f for c in crossings for f in c.findings)]
 
 
 def check_study(study: Study, progress: Progress | None = None) -> list[Finding]:
@@ -408,7 +495,7 @@ def check_study(study: Study, progress: Progress | None = None) -> list[Finding]
     read_flows(study)
     inputs = _read_inputs(study)
     built = build_sections(inputs.lines, inputs.sections, progress or _silent)
-    return _all_findings(inputs, built)
+    return _all_findings(inputs, built, others=_check_crossings(study, inputs))
 
 
 def run_study(study: Study, progress: Progress | None = None) -> Results:
@@ -436,9 +523,12 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
     answers = answer_sections(
         built, flows, study.rating.stages, study.in_si("rating.top"), study.system, progress
     )
-    findings = _all_findings(inputs, built, answers)
+    screened = _screen(study, inputs, flows, progress)
+    findings = _all_findings(inputs, built, answers, () if screened is None else screened.findings)
     terrain = inputs.sections.terrain
     layers = make_layers(answers, findings, study.system, terrain.crs, inputs.crs)
+    if screened is not None:
+        layers["crossings"] = crossings_layer(screened.answers, study.system, terrain.crs, inputs.crs)
     failed = frozenset(
         a.section_id for a in answers if a.built.section is None or any(e.status == FAILED for e in a.events)
     )
@@ -454,6 +544,9 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
         metadata={"settings": study.as_dict()},
         overwrite=study.output.overwrite,
     )
+    about_crossings = []
+    if screened is not None:
+        about_crossings = write_crossings(screened, layers["crossings"], study, folder)
     seconds = time.perf_counter() - began
     write_run_record(
         record,
@@ -465,7 +558,7 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
             counts={name: len(table) for name, table in layers.items()},
             findings=findings,
             seconds=seconds,
-            outputs=[package],
+            outputs=[package, *about_crossings],
         ),
     )
     pages = write_pages(folder, study.as_dict()["output"])
@@ -476,7 +569,7 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
         study.system,
         inputs.crs,
         folder,
-        (package, record, *pages),
+        (package, *about_crossings, record, *pages),
         time.perf_counter() - began,
         study.study.name,
         failed,

@@ -355,6 +355,77 @@ class RatingTable(Table):
 
 
 @dataclass(frozen=True)
+class CrossingsTable(Table):
+    """Crossings of roads and streams to screen; the page on crossings has the rules."""
+
+    path: str | None = key(
+        "point layer of crossings; roads alone give the places where they meet streams",
+        "layer", '"data.gpkg|layer=crossings"',
+    )  # fmt: skip
+    id_field: str | None = key("field with the crossing's id", "text", '"crossing_id"')
+    roads: str | None = key(
+        "line layer of roads; fields bridge and tunnel are respected", "layer", '"data.gpkg|layer=roads"'
+    )
+    freeboard: float | None = key(
+        "height asked for between stage and crest, in the study's length unit; 1 ft (0.3048 m) where absent",
+        "number or zero", "1.0", quantity="length",
+    )  # fmt: skip
+    opening_width_field: str | None = key(
+        "field of the crossings or roads with the clear width of the opening, in the study's length unit",
+        "text", '"opening_width"',
+    )  # fmt: skip
+    crest_field: str | None = key(
+        "field of the crossings or roads with the surveyed crest, in the study's length unit; empty where "
+        "there is none",
+        "text", '"crest"',
+    )  # fmt: skip
+    tide_field: str | None = key(
+        "field of the crossings or roads that says whether the tide reaches it", "text", '"tidal"'
+    )
+    reach: float | None = key(
+        "length of road to each side of the stream on which the crest is looked for; 150 m (492 ft) where "
+        "absent",
+        "number", "500.0", quantity="length",
+    )  # fmt: skip
+    road_width: float | None = key(
+        "least width of a road; 6 m (20 ft) where absent", "number", "20.0", quantity="length"
+    )
+    search: float | None = key(
+        "distance to each side of a drawn road within which the road lies; 12 m (39 ft) where absent",
+        "number", "40.0", quantity="length",
+    )  # fmt: skip
+    snap: float | None = key(
+        "distance from a point within which its stream and its road lie; 30 m (98 ft) where absent",
+        "number", "100.0", quantity="length",
+    )  # fmt: skip
+    merge: float | None = key(
+        "distance within which crossings are one; 30 m (98 ft) where absent",
+        "number",
+        "100.0",
+        quantity="length",
+    )
+    weir_coefficient: float | None = key(
+        "C of the flow over the road, C L H^1.5, in the study's units; 1.6 m^(1/2)/s (2.90 ft^(1/2)/s) "
+        "where absent",
+        "number", "2.9", quantity="weir_coefficient",
+    )  # fmt: skip
+    rank: tuple[str, ...] = key(
+        "what decides the rank, in order: probability, freeboard, or a field, the larger first; with a minus "
+        "before it, the smaller first",
+        "names", '["probability", "freeboard", "traffic"]', default=("probability", "freeboard"),
+    )  # fmt: skip
+    panels: int = key(
+        "how many crossings get a page of pictures, by rank", "count", "100", default=100, least=0
+    )
+
+    @classmethod
+    def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
+        """Yield what is missing for crossings."""
+        if "path" not in given and "roads" not in given:
+            yield "path", "roads"
+
+
+@dataclass(frozen=True)
 class BenchTable(Table):
     """A bench to be cut beside the channel; `terrain2q size` finds the width required to pass each flow."""
 
@@ -435,6 +506,7 @@ class Study:
     slope: SlopeTable | None = _table(SlopeTable)
     flows: FlowsTable | None = _table(FlowsTable)
     rating: RatingTable = _table(RatingTable, when_absent="defaults")
+    crossings: CrossingsTable | None = _table(CrossingsTable)
     bench: BenchTable | None = _table(BenchTable)
     observed: ObservedTable | None = _table(ObservedTable)
     output: OutputTable = _table(OutputTable, when_absent="defaults")
@@ -595,6 +667,13 @@ def _rasters(about: Key, value: object) -> tuple[str, ...]:
     return tuple(_path_text(about, v) for v in values)
 
 
+def _names(about: Key, value: object) -> tuple[str, ...]:
+    values = value if isinstance(value, list | tuple) else [value]
+    if not values or not all(isinstance(v, str) and v.strip() for v in values):
+        raise _Refused("a name in quotes, or a list of names")
+    return tuple(dict.fromkeys(values))
+
+
 def _events(about: Key, value: object) -> dict[str, float]:
     if not isinstance(value, Mapping) or not value:
         raise _Refused("a table of events and discharges", fix='write events = { "10-year" = 850 }')
@@ -622,14 +701,15 @@ KINDS = {
     "layer": _layer,
     "rasters": _rasters,
     "events": _events,
+    "names": _names,
 }
 """The kinds of key: each a function that returns the checked value or refuses."""
 
 
 def _from_option(kind: str, given: object) -> object:
     """Return the value that an option's text (or texts) stands for; what cannot be read stays text."""
-    if kind in ("rasters", "events") and isinstance(given, list | tuple):
-        if kind == "rasters" or not all(isinstance(part, str) for part in given):
+    if kind in ("rasters", "events", "names") and isinstance(given, list | tuple):
+        if kind != "events" or not all(isinstance(part, str) for part in given):
             return list(given)
         pairs = [part.rpartition("=") for part in given]
         if len(pairs) == 1 and given[0].lstrip().startswith("{"):
@@ -637,7 +717,9 @@ def _from_option(kind: str, given: object) -> object:
         return {name.strip(): _as_number(value, float) for name, _, value in pairs}
     if not isinstance(given, str):
         return given
-    if (kind == "rasters" and given.startswith("[")) or (kind == "events" and given.lstrip().startswith("{")):
+    if (kind in ("rasters", "names") and given.startswith("[")) or (
+        kind == "events" and given.lstrip().startswith("{")
+    ):
         try:
             return tomllib.loads(f"value = {given}")["value"]
         except tomllib.TOMLDecodeError:
@@ -993,6 +1075,9 @@ def load_study(
     given = _Given(None if path is None else Path(path))
     given.take_options(options or {})
     made = {}
+    if "crossings" in given.values and "cut_lines" not in given.values:
+        # crossings lay out their own sections and take the slope from the ground
+        needs = [name for name in needs if name not in ("cut_lines", "slope")]
     for name in TABLES:
         needed = name == "study" or (name in needs and name not in given.meant)
         made[name] = given.table(name) if needed or name in given.values or name in DEFAULTED else None

@@ -78,7 +78,7 @@ class UnitSystem:
 
 _LENGTH_POWER = MappingProxyType(
     {"length": 1, "area": 2, "flow": 3, "velocity": 1, "ratio": 0, "roughness": 0, "count": 0,
-     "text": 0, "probability": 0}
+     "text": 0, "probability": 0, "weir_coefficient": 0.5}
 )  # fmt: skip
 
 SI = UnitSystem(
@@ -92,6 +92,7 @@ SI = UnitSystem(
             "velocity": "m/s",
             "ratio": "1",
             "roughness": "s/m^(1/3)",
+            "weir_coefficient": "m^(1/2)/s",
         }
     ),
 )
@@ -106,6 +107,7 @@ US = UnitSystem(
             "velocity": "ft/s",
             "ratio": "1",
             "roughness": "s/m^(1/3)",
+            "weir_coefficient": "ft^(1/2)/s",
         }
     ),
 )

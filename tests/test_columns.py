@@ -36,6 +36,11 @@ PROMISED = {
     "subarea_flows": (
         "section_id event subarea stage flow_area wetted_perimeter conveyance discharge mean_velocity share"
     ),
+    "crossings": (
+        "crossing_id road stream event discharge stage crest freeboard crest_discharge first_event_over "
+        "required_opening verdict rank status probability opening_share road_width_under_water "
+        "largest_depth_on_road weir_discharge tailwater_stage overflow_station slope approach_distance"
+    ),
     "findings": "code severity layer feature_id message remedy",
 }
 GEOMETRY = {
@@ -44,6 +49,7 @@ GEOMETRY = {
     "ratings": "",
     "design_stages": "MultiLineString",
     "subarea_flows": "",
+    "crossings": "Point",
     "findings": "Point",
 }
 

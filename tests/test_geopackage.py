@@ -122,6 +122,7 @@ def test_geometry_is_declared_as_registered(written):
         ("sections", "geom", "LINESTRING", CRS, 1, 1),
         ("subareas", "geom", "LINESTRING", CRS, 0, 0),
         ("design_stages", "geom", "MULTILINESTRING", CRS, 0, 0),
+        ("crossings", "geom", "POINT", CRS, 0, 0),
         ("findings", "geom", "POINT", CRS, 0, 0),
     ]
     kinds = dict(query(written, "SELECT table_name, data_type FROM gpkg_contents"))

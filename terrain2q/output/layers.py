@@ -96,8 +96,8 @@ def make_layers(
     }
 
 
-def _table(layer: str, columns: dict, units: UnitSystem) -> pd.DataFrame:
-    """A table with the layer's columns in order, numbers turned into the study's units."""
+def table_in_units(layer: str, columns: dict, units: UnitSystem) -> pd.DataFrame:
+    """Return a table with the layer's columns in order, numbers turned into the study's units."""
     out = {}
     for name in LAYERS[layer].columns:
         column = COLUMNS[name]
@@ -137,7 +137,7 @@ def _sections(answers, findings, placed: _Projected, units: UnitSystem, crs):
     }
     factor = units.per_si("length")
     lines = [placed.section(i, factor) for i in range(len(answers))]
-    return _with_geometry(_table("sections", rows, units), lines, crs)
+    return _with_geometry(table_in_units("sections", rows, units), lines, crs)
 
 
 def _subareas(answers, placed: _Projected, units: UnitSystem, crs):
@@ -158,7 +158,7 @@ def _subareas(answers, placed: _Projected, units: UnitSystem, crs):
             rows["start_station"].append(spec.start)
             rows["end_station"].append(spec.end)
             pieces.append(placed.piece(i, spec.start, spec.end))
-    return _with_geometry(_table("subareas", rows, units), _lines(pieces), crs)
+    return _with_geometry(table_in_units("subareas", rows, units), _lines(pieces), crs)
 
 
 def _lines(pieces: list[np.ndarray]) -> list:
@@ -172,8 +172,8 @@ def _ratings(answers, units: UnitSystem):
     rated = [a.rating for a in answers if a.rating]
     names = LAYERS["ratings"].columns
     if not rated:
-        return _table("ratings", {name: [] for name in names}, units)
-    return _table("ratings", {name: np.concatenate([r[name] for r in rated]) for name in names}, units)
+        return table_in_units("ratings", {name: [] for name in names}, units)
+    return table_in_units("ratings", {name: np.concatenate([r[name] for r in rated]) for name in names}, units)
 
 
 def _design_stages(answers, placed: _Projected, units: UnitSystem, crs):
@@ -187,7 +187,7 @@ def _design_stages(answers, placed: _Projected, units: UnitSystem, crs):
                 rows[name].append(known[name] if name in known else event.row.get(name, np.nan))
             parts = [placed.piece(i, start, end) for start, end in event.wetted if end > start]
             geometry.append(shapely.multilinestrings(_lines(parts)) if parts else None)
-    return _with_geometry(_table("design_stages", rows, units), geometry, crs)
+    return _with_geometry(table_in_units("design_stages", rows, units), geometry, crs)
 
 
 def _subarea_flows(answers, units: UnitSystem):
@@ -199,7 +199,7 @@ def _subarea_flows(answers, units: UnitSystem):
                 rows["event"].append(event.event)
                 for name in SUBAREA_COLUMNS:
                     rows[name].append(row[name])
-    return _table("subarea_flows", rows, units)
+    return table_in_units("subarea_flows", rows, units)
 
 
 def _findings(findings: Sequence[Finding], terrain_crs, crs):
