@@ -335,10 +335,11 @@ class _Cells:
     values: np.ndarray
     mask: np.ndarray | None
 
-    def elevations(self, index=slice(None)) -> np.ndarray:
+    def elevations(self, index=slice(None), dtype=np.float64) -> np.ndarray:
         """Return elevations in the raster's unit, NaN for gaps."""
         tile, values = self.tile, self.values[index]
-        elevations = values.astype(np.float64)
+        with np.errstate(over="ignore"):  # marks of gaps may be beyond a smaller type
+            elevations = values.astype(dtype)
         gap = None
         if tile.dtype.kind == "f":
             gap = ~(np.abs(elevations) < IMPOSSIBLE)  # catches NaN and infinities too
@@ -532,7 +533,7 @@ class Mosaic:
                         cells = readers.read(
                             tile, begin - tile.row, left - tile.column, end - begin, right - left
                         )
-                        target[empty] = cells.elevations().reshape(target.shape)[empty]
+                        np.copyto(target, cells.elevations(dtype=dtype).reshape(target.shape), where=empty)
                     begin = end
         return out
 

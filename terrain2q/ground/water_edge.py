@@ -146,7 +146,7 @@ def edge_field(depth: np.ndarray, state: np.ndarray, wanted: int, beside: int) -
     depth : ndarray, shape (rows, columns)
         Level less ground; ``-inf`` where either is not known.
     state : ndarray of uint8, shape (rows, columns)
-        What each cell is.
+        What each cell is; 0 where it does not matter.
     wanted, beside : int
         The state of the water wanted, and that of cells beyond the boundary, where the water is
         continued so that its edge can be cut at the boundary.
@@ -156,16 +156,21 @@ def edge_field(depth: np.ndarray, state: np.ndarray, wanted: int, beside: int) -
     ndarray of float64, shape (rows, columns)
     """
     mine = state == wanted
-    near = (state == beside) & (depth > 0)
-    if near.any():
-        square = np.ones((3, 3), dtype=bool)
-        mine = mine | (near & ndimage.binary_dilation(mine, square, iterations=2, mask=mine | near))
+    near = np.argwhere((state == beside) & (depth > 0))
+    for _ in range(2):
+        # the water goes on into the few cells beyond the boundary that touch it, two cells far
+        around = [near + np.array([i, j]) for i in (-1, 0, 1) for j in (-1, 0, 1)]
+        inside = [((a >= 0) & (a < mine.shape)).all(axis=1) for a in around]
+        touched = np.zeros(len(near), dtype=bool)
+        for a, ok in zip(around, inside, strict=True):
+            touched[ok] |= mine[tuple(a[ok].T)]
+        mine[tuple(near[touched].T)] = True
     field = np.abs(depth, dtype=np.float64)
     unknown = ~np.isfinite(field)
     field[unknown] = 1.0
-    around = (
-        unknown & ndimage.binary_dilation(mine, np.ones((3, 3), dtype=bool)) if unknown.any() else unknown
-    )
+    around = unknown & (state != 0)
+    if around.any():
+        around &= ndimage.binary_dilation(mine, np.ones((3, 3), dtype=bool))
     if around.any():
         # water at a gap ends at the sides of the gap's cells: half way between the centres
         highest = ndimage.maximum_filter(np.where(mine, field, 0.0), size=3)
@@ -200,10 +205,16 @@ def outlines(field: np.ndarray, row: int, column: int) -> np.ndarray:
     rings = np.concatenate([[0], *(o[1:].astype(np.int64) + s for o, s in zip(offsets, start, strict=False))])
     polygons = np.cumsum([0, *(len(o) - 1 for o in offsets)])
     made = shapely.from_ragged_array(shapely.GeometryType.POLYGON, coordinates, (rings, polygons))
-    bad = ~shapely.is_valid(made)
-    if bad.any():
-        made[bad] = shapely.make_valid(made[bad])
     return made
+
+
+def made_valid(polygons: np.ndarray) -> np.ndarray:
+    """Return polygons, those that touch themselves cut into valid ones."""
+    sound = shapely.is_valid(polygons)
+    if sound.all():
+        return polygons
+    mended = np.array(polygons_of(shapely.make_valid(polygons[~sound])), dtype=object)
+    return np.concatenate([polygons[sound], mended])
 
 
 def polygons_of(geometry) -> list[shapely.Polygon]:

@@ -26,7 +26,7 @@ from scipy.spatial import cKDTree
 NODES_BETWEEN = 32
 """At least so many nodes lie between two lines, where the cells allow it."""
 
-LARGEST_STEP = 8
+LARGEST_STEP = 12
 """Most cells between two nodes: a stream's bends must still be seen."""
 
 FEW_SEGMENTS = 8

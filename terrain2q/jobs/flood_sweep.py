@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+import os
+from collections import deque
+from concurrent.futures import ThreadPoolExecutor
+
 import numpy as np
 import shapely
 
@@ -10,6 +14,7 @@ from terrain2q.ground.water_edge import (
     Joins,
     edge_field,
     fill_small_holes,
+    made_valid,
     outlines,
     polygons_of,
     tidy,
@@ -19,6 +24,9 @@ from terrain2q.jobs.flood_water import FloodReach, MapCells
 
 JOINED, LOW = 3, 4
 """State of a cell under water that joins a stream, and of one below the water's level that does not."""
+
+MADE_AHEAD = 2
+"""Strips made at once; more would take more memory."""
 
 
 class Sweep:
@@ -48,8 +56,7 @@ class Sweep:
         inside = ((asked >= 0) & (asked < (frame.rows, frame.columns))).all(axis=1)
         patches = []
         asked_patch = np.full(len(asked), -1, dtype=np.int64)
-        for row, end in frame.strips():
-            depth, speed, state = self._strip(row, end)
+        for (row, end), (depth, speed, state) in self._ahead(frame.strips()):
             wet = (state == INSIDE) & (depth > 0)
             labels, first = self.joins.add(wet)
             self.depth.write(row, depth)
@@ -66,6 +73,20 @@ class Sweep:
         known = asked_patch >= 0
         self.asked_is_joined = np.zeros(len(asked), dtype=bool)
         self.asked_is_joined[known] = self.joined[self.joins.whole[asked_patch[known]]]
+
+    def _ahead(self, strips: list[tuple[int, int]]):
+        """Yield strips with what :meth:`_strip` makes of them, a few being made while one is used."""
+        workers = min(os.cpu_count() or 1, MADE_AHEAD)
+        with ThreadPoolExecutor(workers) as pool:
+            waiting: deque = deque()
+            for strip in strips:
+                waiting.append((strip, pool.submit(self._strip, *strip)))
+                if len(waiting) > workers:
+                    done, made = waiting.popleft()
+                    yield done, made.result()
+            while waiting:
+                done, made = waiting.popleft()
+                yield done, made.result()
 
     def _strip(self, row: int, end: int):
         """Depth (``-inf`` where unknown), velocity and state of rows of the window."""
@@ -149,7 +170,7 @@ class Sweep:
         for row, end in frame.strips():
             # up to the centres of the next strip's first row, where the two meet
             end = min(end + 1, frame.rows)
-            state = self.state.read_around(row, end, halo, 0)
+            state = self.state.read_around(row, end, halo, INSIDE)
             columns = np.flatnonzero((state == what).any(axis=0))
             if not columns.size:
                 continue
@@ -159,13 +180,13 @@ class Sweep:
             top, bottom = halo - (row == 0), len(state) - halo + (end == frame.rows)
             # a ring of dry cells around the window closes the water at its edge, half a cell out
             pad = ((0, 0), (int(low == 0), int(high == frame.columns)))
-            state = np.pad(state, pad)
+            state = np.pad(state, pad, constant_values=INSIDE)
             depth = np.pad(depth, pad, constant_values=-np.inf)
             field = edge_field(depth, state, what, BESIDE)[top:bottom]
             first_row = row + frame.row - (row == 0)
             made = outlines(field, first_row, low - pad[1][0] + frame.column)
             # holes in a strip are whole: what crosses a seam is a bay there, not a hole
-            made = fill_small_holes(made, smallest)
+            made = made_valid(fill_small_holes(made, smallest))
             bounds = shapely.bounds(made).reshape(-1, 4)
             seam = (bounds[:, 1] <= first_row + 0.5) | (bounds[:, 3] >= first_row + len(field) - 0.5)
             seams.append(made[seam])
