@@ -18,7 +18,7 @@ from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
 from terrain2q.ground.layers import clean_texts, columns_of, read_layer, reproject
 from terrain2q.ground.layout import KeptLine, Layout, lay_out
 from terrain2q.ground.low_line import turn_streams
-from terrain2q.ground.streams import StreamNetwork
+from terrain2q.ground.streams import StreamNetwork, feature_ids
 from terrain2q.ground.terrain import Terrain
 from terrain2q.output.cut_line_file import COLUMNS, read_cut_line_file, write_cut_line_file
 from terrain2q.study import Study
@@ -191,7 +191,8 @@ def lay_out_study(
         id_field=study.streams.id_field,
         repeated_ids=True,
     )
-    streams, turned = turn_streams(streams, terrain, study.in_si("streams.snap"), study.system)
+    there = streams_on(terrain, streams)
+    streams, turned = turn_streams(streams, terrain, study.in_si("streams.snap"), study.system, there)
     findings = [*terrain.findings, *turned]
     earlier = read_cut_line_file(file)
     own, kept = _own_lines(earlier, streams, terrain, study)
@@ -218,6 +219,12 @@ def lay_out_study(
     progress(1, 1, "laying out cut lines")
     findings.sort(key=lambda f: SEVERITIES.index(f.severity))
     return LaidOut(file, lines, tuple(k.section_id for k in kept), tuple(findings))
+
+
+def streams_on(terrain: Terrain, streams: geopandas.GeoDataFrame) -> set[str]:
+    """Return the ids of the streams that touch the terrain's bounds."""
+    touching = shapely.intersects(streams.geometry.to_numpy(), shapely.box(*terrain.bounds))
+    return set(np.asarray(feature_ids(streams), dtype=object)[touching])
 
 
 def _need_streams(study: Study) -> None:

@@ -31,7 +31,7 @@ from terrain2q.jobs.fitting import Fit, fit_observations
 from terrain2q.jobs.sections import BuiltSection, SectionInputs, build_sections
 from terrain2q.jobs.slopes import FieldSlopes, OneSlope, Slopes, StreamSlopes
 from terrain2q.jobs.submerged import Submerged
-from terrain2q.laying_out import lines_for_run
+from terrain2q.laying_out import lines_for_run, streams_on
 from terrain2q.output.crossing_table import crossings_layer
 from terrain2q.output.fitted import check_table, write_table
 from terrain2q.output.folder import OutputFolder
@@ -331,7 +331,7 @@ def _read_inputs(study: Study) -> _Inputs:
             id_field=study.streams.id_field,
             repeated_ids=True,
         )
-        near = None if cut_lines is None else streams_near(cut_lines, streams)
+        near = streams_on(terrain, streams) if cut_lines is None else streams_near(cut_lines, streams)
         streams, turned = turn_streams(streams, terrain, study.in_si("streams.snap"), study.system, near)
         findings += turned
     if study.cut_lines is None:

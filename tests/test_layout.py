@@ -208,8 +208,21 @@ def test_a_stream_off_the_terrain_gets_no_line(tmp_path):
     away = stream + np.array([0.0, 5000.0])
     layout = lay_out(network_of([stream, away], ["on", "off"]), terrain, every=300.0, width=600.0)
     assert {line.stream for line in layout.lines} == {"on"}
-    assert [f.code for f in layout.findings] == ["line-left-out"] * 3
-    assert all("no ground" in f.message and "off" in f.message for f in layout.findings)
+    assert [(f.code, f.severity) for f in layout.findings] == [("line-left-out", "note")]
+    assert "1 streams lie off the terrain" in layout.findings[0].message
+
+
+def test_a_hole_in_the_terrain_at_the_stream_leaves_a_line_out(tmp_path):
+    def hole(away, x, y):
+        return np.where(np.hypot(x - ORIGIN[0] - 300.0, y - ORIGIN[1]) < 60.0, np.nan, 0.0)
+
+    stream = straight()
+    terrain = write_valley(tmp_path / "dem.tif", [stream], more=hole)
+    layout = lay_out(network_of([stream]), terrain, every=300.0, width=600.0)
+    assert [line.asked for line in layout.lines] == [600.0, 900.0]
+    (finding,) = layout.findings
+    assert (finding.code, finding.severity, finding.feature_id) == ("line-left-out", "doubtful", "S0-0300")
+    assert (finding.x, finding.y) == pytest.approx((ORIGIN[0] + 299.9, ORIGIN[1]), abs=0.5)
 
 
 # --- tributaries, branches, kept lines --------------------------------------------------------------

@@ -11,13 +11,10 @@ lines straighten up square to the valley. To make them square to the channel, *u
 corridor: at a fortieth and a twentieth of `width` to each side, along the normals of the stream smoothed
 over that distance.
 
-*u* is worked out with linear triangles on points that lie close along the stream and ever wider away from
-it. With the usual weights of the edges (half the sum of the cotangents facing them, any text on finite
-elements), none below zero, each value is a mean of its neighbours', so there is no hill and no hollow in
-*u* and no level line closes on itself. The streets between tight meanders may be narrower than the
-triangles, and streams are drawn with all sorts of wiggles; so every line is checked against its stream and
-all others at the end, and is moved a little along the stream, cut short, or left out where it would
-break the rules. Each of these is a finding.
+:mod:`terrain2q.ground.valley` works *u* out with triangles. Necks of tight meanders may be narrower than
+these, and streams are drawn with all sorts of wiggles; so every line is checked against its stream and all
+others at the end, and is moved a little along the stream, cut short, or left out where it would break the
+rules. Each of these is a finding.
 
 Each line ends where the ground has reached `height` above the bed and stays there, so that a levee or
 a road does not end it, or at half the `width` to each side, whichever comes first.
@@ -25,21 +22,18 @@ a road does not end it, or at half the `width` to each side, whichever comes fir
 
 from __future__ import annotations
 
-from collections import defaultdict
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
 import shapely
-from scipy.ndimage import gaussian_filter1d, minimum_filter1d
-from scipy.sparse import coo_array, csc_array
-from scipy.sparse.linalg import splu
-from scipy.spatial import Delaunay, cKDTree
+from scipy.spatial import cKDTree
 
 from terrain2q.errors import NOTE, Finding, InputError
 from terrain2q.ground.cut_lines import CutLine
 from terrain2q.ground.streams import StreamNetwork, length_text
 from terrain2q.ground.terrain import Profile, Terrain
+from terrain2q.ground.valley import Valley, cuts_corners
 from terrain2q.units import SI, UnitSystem, unit_system
 
 HEIGHT = 6.0
@@ -201,9 +195,9 @@ def lay_out(
     if not len(network):
         return Layout()
     job = _Job(network, terrain, float(width), every, float(height), units, kept)
-    for run in job.runs:
+    for number, run in enumerate(job.runs):
         if streams is None or run.stream in streams:
-            job.lay_out(run, at)
+            job.lay_out(number, at)
     return job.finish()
 
 
@@ -258,37 +252,41 @@ class _Run:
 def _runs(network: StreamNetwork) -> list[_Run]:
     """Return the runs, a receiving one before those that flow into it, else the longer one first."""
     count = len(network)
-    length = network.lengths
     every_chain = np.arange(count)
     start = network.distance_at(every_chain, np.zeros(count))
-    end = network.distance_at(every_chain, length)
+    end = network.distance_at(every_chain, network.lengths)
     xy = [shapely.get_coordinates(chain) for chain in network.chains]
-    tolerance = 2.0 * network.ground.tolerance
-    left = set(range(count))
+    first, last = np.array([points[0] for points in xy]), np.array([points[-1] for points in xy])
+    joining = cKDTree(last).query_ball_point(first, 2.0 * network.ground.tolerance)
+    used = np.zeros(count, dtype=bool)
     runs = []
-    while left:
-        last = max(left, key=lambda c: (end[c], -c))
-        chain = [last]
-        left.discard(last)
-        while True:
-            head = chain[0]
-            before = [
-                c for c in left
-                if network.chain_stream[c] == network.chain_stream[head]
-                and np.hypot(*(xy[c][-1] - xy[head][0])) <= tolerance
-                and abs(end[c] - start[head]) <= 1e-6 * max(end[c], 1.0)
-            ]  # fmt: skip
-            if not before:
-                break
-            chain.insert(0, before[0])
-            left.discard(before[0])
-        points = [xy[chain[0]]] + [xy[c][1:] for c in chain[1:]]
-        distances = [_vertex_distances(network, c, xy[c])[0 if i == 0 else 1 :] for i, c in enumerate(chain)]
-        points, distances = np.concatenate(points), np.concatenate(distances)
+    # The longest way down each stream first, then what is left of its branches.
+    for bottom in np.argsort(-end, kind="stable"):
+        if used[bottom]:
+            continue
+        chain, head = [], int(bottom)
+        while head >= 0:
+            used[head] = True
+            chain.insert(0, head)
+            head = next(
+                (
+                    c
+                    for c in joining[head]
+                    if not used[c]
+                    and network.chain_stream[c] == network.chain_stream[head]
+                    and abs(end[c] - start[head]) <= 1e-6 * max(end[c], 1.0)
+                ),
+                -1,
+            )
+        points = np.concatenate([xy[c][0 if c == chain[0] else 1 :] for c in chain])
+        distances = np.concatenate(
+            [_vertex_distances(network, c, xy[c])[0 if c == chain[0] else 1 :] for c in chain]
+        )
         kept = np.concatenate([[True], np.diff(distances) > 0.0])
-        line = shapely.LineString(points)
-        runs.append(_Run(str(network.chain_stream[last]), points[kept], distances[kept], line))
-    return _receiving_first([r for r in runs if len(r.xy) > 1], network)
+        if kept.sum() > 1:
+            name = str(network.chain_stream[bottom])
+            runs.append(_Run(name, points[kept], distances[kept], shapely.LineString(points)))
+    return _receiving_first(runs, network)
 
 
 def _vertex_distances(network: StreamNetwork, chain: int, xy: np.ndarray) -> np.ndarray:
@@ -350,285 +348,6 @@ class _Plane:
 
 
 # --------------------------------------------------------------------------------------------------
-# The function over the valley, and its level lines
-
-
-class _Valley:
-    """The function *u* about one stretch of stream, on triangles.
-
-    Parameters
-    ----------
-    xy : ndarray, shape (n, 2)
-        The stream in the plane.
-    at : ndarray, shape (n,)
-        Its distances.
-    step : float
-        Between points along the stream, m.
-    corridor, reach : float
-        Half widths of the corridor and of the valley, m.
-    """
-
-    def __init__(self, xy, at, step: float, corridor: float, reach: float) -> None:
-        self.step, self.reach = step, reach
-        stream, label, normal, real = self._stream_points(xy, at, corridor, reach)
-        self.begin = int(np.argmax(real))
-        self.count = int(real.sum())
-        self.stream, self.label, self.normal = stream, label, normal
-        tree = cKDTree(stream)
-        fixed, values = [stream], [label]
-        for side in (1.0, -1.0):
-            room = self._room(side, tree, corridor)
-            for share in (0.5, 1.0):
-                # Closer ones would come between neighbouring points of the stream.
-                there = share * room >= 0.55 * step
-                fixed.append((stream + (side * share * room)[:, None] * normal)[there])
-                values.append(label[there])
-        fixed, values = np.concatenate(fixed), np.concatenate(values)
-        free = self._free_points(stream, tree, fixed)
-        beyond, labels, free = self._beyond_the_ends(free, tree)
-        points = np.concatenate([fixed, beyond, free])
-        self._solve(points, np.concatenate([values, labels]))
-
-    def _stream_points(self, xy, at, corridor: float, reach: float):
-        """Return points along the stream and straight beyond its ends, distances and unit normals (left)."""
-        along = np.concatenate([[0.0], np.cumsum(np.hypot(*np.diff(xy, axis=0).T))])
-        points, place = _evenly(xy, self.step)
-        label = np.interp(place, along, at)
-        pieces = len(points) - 1
-        step = along[-1] / pieces
-        sigma = corridor / step
-        beyond = np.arange(1, int(np.ceil(1.2 * reach / step)) + 1) * step
-        # The course over half a width, not the last bend, tells where the stream comes from and goes to.
-        few = min(max(round(reach / step), 1), pieces)
-        up, down = points[0] - points[few], points[-1] - points[-1 - few]
-        tree = cKDTree(points)
-        parts = []
-        for end, way in ((points[0], up), (points[-1], down)):
-            size = np.hypot(*way)
-            way = way / size if size > 0.0 else np.array([1.0, 0.0])
-            extra = end + beyond[:, None] * way
-            clear = tree.query(extra)[0] >= 0.7 * beyond
-            parts.append(extra[: len(beyond) if clear.all() else int(np.argmin(clear))])
-        before, after = parts[0][::-1], parts[1]
-        rate = (label[-1] - label[0]) / along[-1]
-        whole = np.concatenate([before, points, after])
-        labels = np.concatenate([
-            label[0] - rate * beyond[: len(before)][::-1], label, label[-1] + rate * beyond[: len(after)]
-        ])  # fmt: skip
-        tangent = np.gradient(_smoothed(whole, sigma), axis=0)
-        size = np.hypot(*tangent.T)
-        tangent = tangent / np.where(size > 0.0, size, 1.0)[:, None]
-        normal = np.column_stack([-tangent[:, 1], tangent[:, 0]])
-        real = np.zeros(len(whole), dtype=bool)
-        real[len(before) : len(before) + len(points)] = True
-        return whole, labels, normal, real
-
-    def _room(self, side: float, tree: cKDTree, corridor: float) -> np.ndarray:
-        """Return how far the corridor goes on one side at each point of the stream.
-
-        Beyond the centre of a bend, or half way to another limb, a normal means nothing.
-        """
-        spacing = max(self.step, float(np.hypot(*np.diff(self.stream, axis=0).T).mean()))
-        room = np.zeros(len(self.stream))
-        for share in (0.2, 0.35, 0.5, 0.65, 0.8, 1.0):
-            offset = share * corridor
-            beside = self.stream + side * offset * self.normal
-            sound = tree.query(beside)[0] >= 0.9 * offset
-            # So much stream at most lies about the place if it is all of this limb.
-            own = 4.0 * offset / spacing + 1.0
-            asked = np.flatnonzero(sound)
-            near = tree.query_ball_point(beside[asked], 1.8 * offset)
-            place = np.repeat(asked, [len(some) for some in near])
-            apart = np.abs(np.concatenate([*near, []]) - place)
-            sound[place[apart > own]] = False
-            room[sound & (room >= 0.99 * (share - 0.2) * corridor)] = offset
-        few = max(1.0, 0.5 * corridor / spacing)
-        return gaussian_filter1d(minimum_filter1d(room, 2 * int(few) + 1), few, mode="nearest")
-
-    def _free_points(self, stream, tree: cKDTree, fixed) -> np.ndarray:
-        """Return points of ever wider lattices away from the stream."""
-        random = np.random.default_rng(0)
-        found = []
-        level = 0
-        while True:
-            size = self.step * 2.0**level
-            inner = 0.75 * self.step if level == 0 else 3.0 * size
-            last = 2.0 * size > self.reach / 4.0
-            outer = 1.15 * self.reach + 1.5 * size if last else 6.0 * size
-            self.coarsest = size
-            lattice = _lattice(stream, size, outer)
-            away = tree.query(lattice)[0]
-            lattice = lattice[(away >= inner) & (away < outer)]
-            # A little disorder, so that no four points lie on one circle.
-            found.append(lattice + random.uniform(-0.05, 0.05, lattice.shape) * size)
-            if last:
-                break
-            level += 1
-        points = np.concatenate(found)
-        return points[cKDTree(fixed).query(points)[0] >= 0.6 * self.step]
-
-    def _beyond_the_ends(self, points: np.ndarray, tree: cKDTree):
-        """Return the points past the stream's ends, their values as if it went straight on, and the rest.
-
-        Left free they would draw the level lines of the last reaches in.
-        """
-        nearest = tree.query(points)[1]
-        found, labels = [], []
-        rate = (self.label[-1] - self.label[0]) / np.hypot(*np.diff(self.stream, axis=0).T).sum()
-        for end in (0, len(self.stream) - 1):
-            there = points[nearest == end]
-            course = np.array([self.normal[end, 1], -self.normal[end, 0]])
-            found.append(there)
-            labels.append(self.label[end] + rate * ((there - self.stream[end]) @ course))
-        inside = (nearest > 0) & (nearest < len(self.stream) - 1)
-        return np.concatenate(found), np.concatenate(labels), points[inside]
-
-    def _solve(self, points: np.ndarray, values: np.ndarray) -> None:
-        mesh = Delaunay(points)
-        triangles, neighbours = mesh.simplices, mesh.neighbors.copy()
-        corner = points[triangles]
-        sides = np.stack([corner[:, (k + 2) % 3] - corner[:, (k + 1) % 3] for k in range(3)], axis=1)
-        lengths = np.hypot(sides[..., 0], sides[..., 1])
-        area = np.abs(sides[:, 0, 0] * sides[:, 1, 1] - sides[:, 0, 1] * sides[:, 1, 0])
-        kept = (lengths.max(axis=1) <= 4.0 * self.coarsest) & (area > 1e-9 * self.step**2)
-        # Slivers along the rim would lead *u* along it.
-        thin = area < 0.35 * lengths.max(axis=1) ** 2
-        while True:
-            neighbours[(neighbours >= 0) & ~kept[neighbours]] = -1
-            slivers = kept & thin & (neighbours == -1).any(axis=1)
-            if not slivers.any():
-                break
-            kept &= ~slivers
-        count = len(points)
-        # The cotangent at corner k weighs the edge that faces it.
-        cotangent = [
-            -np.einsum("ij,ij->i", sides[kept, (k + 1) % 3], sides[kept, (k + 2) % 3]) / area[kept]
-            for k in range(3)
-        ]
-        one = np.concatenate([triangles[kept, (k + 1) % 3] for k in range(3)])
-        other = np.concatenate([triangles[kept, (k + 2) % 3] for k in range(3)])
-        weight = 0.5 * np.concatenate(cotangent)
-        matrix = coo_array((weight, (np.minimum(one, other), np.maximum(one, other))), shape=(count, count))
-        matrix = matrix.tocsr()
-        matrix.sum_duplicates()
-        # Only at the rim can a weight be below zero.
-        matrix.data = np.maximum(matrix.data, 1e-6)
-        matrix = matrix + matrix.T
-        degree = np.asarray(matrix.sum(axis=1)).ravel()
-        u = np.full(count, np.nan)
-        known = len(values)
-        u[:known] = values
-        free = np.arange(known, count)
-        free = free[degree[free] > 0.0]
-        if len(free):
-            block = matrix[free]
-            inner = -block[:, free]
-            inner = csc_array(inner + coo_array((degree[free], (np.arange(len(free)),) * 2)))
-            u[free] = splu(inner, permc_spec="MMD_AT_PLUS_A").solve(block[:, np.arange(known)] @ values)
-        self.points, self.u = points, u
-        self._triangles, self._neighbours, self._kept = triangles.tolist(), neighbours.tolist(), kept
-        self._edges = self._stream_edges(triangles, kept)
-
-    def _stream_edges(self, triangles, kept) -> dict[int, list[int]]:
-        """Return the triangles at the edge from each stream point to the next."""
-        found = defaultdict(list)
-        for k in range(3):
-            one, other = triangles[:, (k + 1) % 3], triangles[:, (k + 2) % 3]
-            low, high = np.minimum(one, other), np.maximum(one, other)
-            for triangle in np.flatnonzero(kept & (high < len(self.stream)) & (high - low == 1)):
-                found[int(low[triangle])].append(int(triangle))
-        return found
-
-    def normal_at(self, value: float) -> np.ndarray:
-        normal = np.array([np.interp(value, self.label, self.normal[:, k]) for k in (0, 1)])
-        return normal / max(np.hypot(*normal), 1e-12)
-
-    def wings(self, value: float) -> tuple[np.ndarray, np.ndarray, bool]:
-        """Return the level line of a value as two polylines from the stream outward, left and right.
-
-        Also whether it is one: where limbs all but touch, triangles may span the stream, and the wing is
-        straight instead.
-        """
-        index = int(np.clip(np.searchsorted(self.label, value, side="right") - 1, 0, len(self.label) - 2))
-        low, high = self.label[index], self.label[index + 1]
-        share = min(max((value - low) / (high - low), 1e-6), 1.0 - 1e-6)
-        value = low + share * (high - low)
-        place = self.stream[index] + share * (self.stream[index + 1] - self.stream[index])
-        way = self.stream[index + 1] - self.stream[index]
-        normal = self.normal_at(value)
-        wings = {1: np.array([place, place + self.reach * normal]),
-                 -1: np.array([place, place - self.reach * normal])}  # fmt: skip
-        for triangle in self._edges.get(index, ()):
-            third = next(c for c in self._triangles[triangle] if c not in (index, index + 1))
-            offset = self.points[third] - self.stream[index]
-            side = 1 if way[0] * offset[1] - way[1] * offset[0] > 0.0 else -1
-            wings[side] = self._follow(triangle, index, index + 1, value, place)
-        return wings[1], wings[-1], len(self._edges.get(index, ())) == 2
-
-    def _follow(self, triangle: int, low: int, high: int, value: float, place: np.ndarray) -> np.ndarray:
-        """Follow the level line from an edge, whose ends lie below and above the value."""
-        path, length = [place], 0.0
-        u, points = self.u, self.points
-        while length < 1.1 * self.reach:
-            corners = self._triangles[triangle]
-            third = next(k for k in range(3) if corners[k] not in (low, high))
-            corner = corners[third]
-            if not np.isfinite(u[corner]):
-                break
-            # The line leaves through the edge that faces the end on the third corner's side.
-            if u[corner] > value:
-                left, high = high, corner
-            else:
-                left, low = low, corner
-            share = (value - u[low]) / (u[high] - u[low])
-            place = points[low] + share * (points[high] - points[low])
-            length += float(np.hypot(*(place - path[-1])))
-            path.append(place)
-            triangle = self._neighbours[triangle][corners.index(left)]
-            if triangle < 0 or not self._kept[triangle]:
-                break
-        return np.array(path)
-
-
-def _evenly(xy: np.ndarray, step: float) -> tuple[np.ndarray, np.ndarray]:
-    """Return points at even distances of at most `step` along a line, and these distances."""
-    along = np.concatenate([[0.0], np.cumsum(np.hypot(*np.diff(xy, axis=0).T))])
-    place = np.linspace(0.0, along[-1], max(int(np.ceil(along[-1] / step)), 2) + 1)
-    return np.column_stack([np.interp(place, along, xy[:, k]) for k in (0, 1)]), place
-
-
-def _cuts_corners(xy: np.ndarray, step: float) -> bool:
-    """Tell whether even points along a line miss its bends."""
-    chord = shapely.LineString(_evenly(xy, step)[0])
-    shapely.prepare(chord)
-    near = shapely.dwithin(shapely.points(xy), chord, 0.2 * step)
-    return not near.all()
-
-
-def _smoothed(points: np.ndarray, sigma: float) -> np.ndarray:
-    # Mirrored through its ends, so that the course there is not bent.
-    size = min(int(4.0 * sigma) + 1, len(points) - 1)
-    before = 2.0 * points[0] - points[size:0:-1]
-    after = 2.0 * points[-1] - points[-2 : -2 - size : -1]
-    whole = gaussian_filter1d(np.concatenate([before, points, after]), sigma, axis=0, mode="nearest")
-    return whole[size : size + len(points)]
-
-
-def _lattice(stream: np.ndarray, size: float, outer: float) -> np.ndarray:
-    """Return the points of a lattice of triangles that lie within a box or two of the stream."""
-    box = max(outer, 8.0 * size)
-    squares = np.unique(np.floor(stream / box).astype(np.int64), axis=0)
-    around = np.array([(i, j) for i in (-1, 0, 1) for j in (-1, 0, 1)])
-    squares = np.unique((squares[:, None, :] + around).reshape(-1, 2), axis=0)
-    rows = int(np.ceil(box / (size * np.sqrt(0.75))))
-    columns = int(np.ceil(box / size))
-    row, column = (v.ravel() for v in np.mgrid[0:rows, 0:columns])
-    across, up = box / columns, box / rows
-    inside = np.column_stack([(column + 0.25 + 0.5 * (row % 2)) * across, (row + 0.5) * up])
-    return (squares[:, None, :] * box + inside).reshape(-1, 2)
-
-
-# --------------------------------------------------------------------------------------------------
 # The job
 
 
@@ -662,10 +381,14 @@ class _Job:
         self.width, self.every, self.height = width, every, height
         self.kept = list(kept)
         self.runs = _runs(network)
+        self.tree = shapely.STRtree([run.line for run in self.runs])
+        self.by_stream: dict[str, list[_Run]] = {}
+        for run in self.runs:
+            self.by_stream.setdefault(run.stream, []).append(run)
+        self.off: list[str] = []
         self.decimals = 8 if network.ground.crs.is_geographic else 3
         self.findings: list[Finding] = []
-        self.done: list[tuple[_Run, _Line]] = []
-        self.earlier: list[_Run] = []
+        self.done: dict[int, list[_Line]] = {}
 
     # -- distances ---------------------------------------------------------------------------------
 
@@ -673,7 +396,7 @@ class _Job:
         first, last = float(run.at[0]), float(run.at[-1])
         if at is not None:
             # A line at a distance that the stream has twice, on branches, belongs to the longest.
-            if any(r.stream == run.stream for r in self.earlier):
+            if run is not self.by_stream[run.stream][0]:
                 return []
             inside = [d for d in map(float, at) if first <= d <= last]
             for d in map(float, at):
@@ -687,6 +410,16 @@ class _Job:
         wanted = [d for d in wanted if first + clear <= d <= last - clear]
         if not wanted and run.at[-1] - run.at[0] > clear:
             wanted = [0.5 * (first + last)]
+        left, bottom, right, top = self.terrain.bounds
+        x, y = run.place(wanted).T if wanted else np.empty((2, 0))
+        inside = (x >= left) & (x <= right) & (y >= bottom) & (y <= top)
+        if not inside.all():
+            if not inside.any():
+                self.off.append(run.stream)
+                return []
+            message = f"{np.count_nonzero(~inside)} lines of stream {run.stream} would lie off the terrain"
+            self.findings.append(Finding("line-left-out", message, _LAYER, severity=NOTE))
+            wanted = [d for d, there in zip(wanted, inside, strict=True) if there]
         mine = [k for k in self.kept if k.stream == run.stream]
         near = [k.stream_distance for k in mine if first - every <= k.stream_distance <= last + every]
         ids = {k.section_id for k in mine}
@@ -697,7 +430,7 @@ class _Job:
 
     def _name(self, run: _Run, distance: float) -> str:
         value = distance * self.units.per_si("length")
-        longest = max(r.at[-1] for r in self.runs if r.stream == run.stream) * self.units.per_si("length")
+        longest = max(r.at[-1] for r in self.by_stream[run.stream]) * self.units.per_si("length")
         digits = len(str(int(longest)))
         step = None if self.every is None else self.every * self.units.per_si("length")
         places = 0 if step is None or abs(step - round(step)) < 1e-6 or step > 10.0 else 1
@@ -705,24 +438,31 @@ class _Job:
 
     # -- one stream --------------------------------------------------------------------------------
 
-    def lay_out(self, run: _Run, at) -> None:
+    def lay_out(self, number: int, at) -> None:
+        run = self.runs[number]
         wanted = self._wanted(run, at)
+        if not wanted:
+            return
         plane = _Plane.about(run, self.network)
         lines: list[_Line] = []
         for low, high in self._stretches(run, wanted, at is not None):
             inside = [d for d in wanted if low <= d <= high]
             lines += self._raw_lines(run, plane, low, high, inside)
+        near = self._neighbours(run, self.width / plane.scale.min())
         self._end_on_high_ground(lines)
-        self._end_at_mouths(run, plane, lines)
-        self._keep_apart(run, lines)
+        self._end_at_mouths([self.runs[n] for n in near if n > number], plane, lines)
+        self._keep_apart(run, [n for n in near if n < number], lines)
         self._report(run, lines)
-        self.done += [(run, line) for line in lines if not line.dropped]
-        self.earlier.append(run)
+        self.done[number] = [line for line in lines if not line.dropped]
+
+    def _neighbours(self, run: _Run, distance: float) -> list[int]:
+        """Return the numbers of the other runs whose lines may come near those of a run."""
+        left, bottom, right, top = run.line.bounds
+        box = shapely.box(left - distance, bottom - distance, right + distance, top + distance)
+        return sorted(n for n in self.tree.query(box).tolist() if self.runs[n] is not run)
 
     def _stretches(self, run: _Run, wanted: list[float], few: bool) -> list[tuple[float, float]]:
         """Return the stretches of stream to work on: all of it, or what lies about the distances."""
-        if not wanted:
-            return []
         if not few:
             return [(float(run.at[0]), float(run.at[-1]))]
         found: list[list[float]] = []
@@ -741,10 +481,10 @@ class _Job:
         corridor, reach = CORRIDOR * self.width, 0.5 * self.width
         step = corridor if self.every is None else min(max(self.every / 3.0, 0.35 * corridor), corridor)
         least = max(0.1 * corridor, (high - low) / _MOST_STREAM_POINTS)
-        while step > least and _cuts_corners(xy, step):
+        while step > least and cuts_corners(xy, step):
             step *= 0.7
         step = max(step, (high - low) / _MOST_STREAM_POINTS)
-        valley = _Valley(xy, at, step, corridor, reach)
+        valley = Valley(xy, at, step, corridor, reach)
         stream = shapely.LineString(plane.to_plane(shapely.get_coordinates(run.line)))
         shapely.prepare(stream)
         slack = self.every if self.every is not None else 2.0 * corridor
@@ -795,7 +535,7 @@ class _Job:
         return answer
 
     @staticmethod
-    def _wings(valley: _Valley, distance, place, reach, step) -> tuple[list[np.ndarray], bool]:
+    def _wings(valley: Valley, distance, place, reach, step) -> tuple[list[np.ndarray], bool]:
         left, right, sound = valley.wings(distance)
         answer = []
         for wing in (left, right):
@@ -827,16 +567,14 @@ class _Job:
                 reach = float(np.interp(station, profile.stations, profile.map_distances))
                 line.wings[side] = self._rounded(_shortened(line.wings[side], reach))
 
-    def _end_at_mouths(self, run: _Run, plane: _Plane, lines: list[_Line]) -> None:
+    def _end_at_mouths(self, joining: list[_Run], plane: _Plane, lines: list[_Line]) -> None:
         """End wings that would run on up the valley of a stream that joins.
 
         They end as far out as the lines up- and downstream find high ground: where that valley opens.
         """
-        later = [shapely.LineString(plane.to_plane(r.xy)) for r in self.runs if r not in (run, *self.earlier)]
-        names = [r.stream for r in self.runs if r not in (run, *self.earlier)]
-        if not later:
+        if not joining:
             return
-        tree = shapely.STRtree(later)
+        tree = shapely.STRtree([shapely.LineString(plane.to_plane(run.xy)) for run in joining])
         alive = [line for line in lines if not line.dropped]
         for side in (0, 1):
             shapes = [shapely.LineString(plane.to_plane(line.wings[side])) for line in alive]
@@ -853,21 +591,23 @@ class _Job:
                 share = max(reach, min(2.0 * CORRIDOR * self.width, shape.length)) / shape.length
                 wing = line.wings[side]
                 line.wings[side] = self._rounded(_shortened(wing, share * _length(wing)))
-                line.limits[side] = f"stream {names[other]} joins there"
+                line.limits[side] = f"stream {joining[other].stream} joins there"
 
     # -- apart from each other ---------------------------------------------------------------------
 
-    def _keep_apart(self, run: _Run, lines: list[_Line]) -> None:
+    def _keep_apart(self, run: _Run, earlier: list[int], lines: list[_Line]) -> None:
         """Cut lines short, or leave them out, where they would meet a stream or another line."""
         gap = 0.01 * self.width / self.network.ground.metres_per_map_unit
         least = 0.25 * CORRIDOR * self.width / self.network.ground.metres_per_map_unit
-        own = [r.line for r in self.runs if r.stream == run.stream]
-        blocks = [(r.line, f"stream {r.stream}") for r in self.earlier if r.stream != run.stream]
-        blocks += [(line.shape, f"a line of stream {r.stream}") for r, line in self.done]
+        blocks = []
+        for other, number in ((self.runs[n], n) for n in earlier):
+            if other.stream != run.stream:
+                blocks.append((other.line, f"stream {other.stream}"))
+            blocks += [(line.shape, f"a line of stream {other.stream}") for line in self.done.get(number, ())]
         blocks += [(k.geometry, f"line {k.section_id}") for k in self.kept]
         shapes = np.array([shape for shape, _ in blocks], dtype=object)
         tree = shapely.STRtree(shapes) if blocks else None
-        own_line = shapely.union_all(own)
+        own_line = shapely.union_all([r.line for r in self.by_stream[run.stream]])
         for line in lines:
             if line.dropped:
                 continue
@@ -982,7 +722,11 @@ class _Job:
         """Return the lines with their ids, each stream's own downstream."""
         used = {k.section_id for k in self.kept}
         answer = []
-        for run, line in sorted(self.done, key=lambda d: (self.runs.index(d[0]), d[1].distance)):
+        if self.off:
+            message = f"{len(self.off)} streams lie off the terrain and get no lines"
+            self.findings.append(Finding("line-left-out", message, _LAYER, severity=NOTE))
+        ordered = [(self.runs[n], line) for n in sorted(self.done) for line in self.done[n]]
+        for run, line in ordered:
             name = base = self._name(run, line.asked)
             for letter in "bcdefghijklmnopqrstuvwxyz":
                 if name not in used:
