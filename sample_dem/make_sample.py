@@ -151,6 +151,9 @@ stage = 8.5                     # feet above the lowest ground that the water ma
 [observed]                      # `terrain2q fit` finds the roughness that reproduces the marks
 path = "observed.csv"           # section,stage,discharge; invented high-water marks
 
+[extent]                        # flood extent and depth grids between the sections, every event
+smallest = 270                  # ft²; smaller patches and holes are dropped
+
 [crossings]                     # roads against the floods: layer crossings, crossings.csv, crossings.pdf
 path = "valley.gpkg|layer=crossings"
 id_field = "crossing_id"

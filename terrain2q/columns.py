@@ -53,7 +53,8 @@ class Layer:
     name : str
         Its name in the GeoPackage.
     geometry : str
-        ``LineString ZM``, ``LineString``, ``MultiLineString``, ``Point``, or empty for a table.
+        ``LineString ZM``, ``LineString``, ``MultiLineString``, ``MultiPolygon``, ``Point``, or empty for a
+        table.
     title : str
         What it shows, for a heading.
     meaning : str
@@ -140,6 +141,22 @@ LAYERS: MappingProxyType[str, Layer] = _by_name(
             "weir_discharge", "tailwater_stage", "overflow_station", "slope", "approach_distance",
         ),
         "Where the road meets the stream.",
+    ),
+    Layer(
+        "flood_extent",
+        "MultiPolygon",
+        "Flood extent",
+        "One row for each event; only where an extent was asked for.",
+        ("event", "area", "largest_depth", "boundary_points", "boundary_within_tolerance"),
+        "The ground under water between the first and the last section of each stream.",
+    ),
+    Layer(
+        "low_not_joined",
+        "MultiPolygon",
+        "Low ground not joined",
+        "One row for each event; only where an extent was asked for.",
+        ("event", "area", "largest_depth"),
+        "Ground below the water's level that the stream does not reach over the ground.",
     ),
     Layer(
         "required_widths",
@@ -471,6 +488,37 @@ COLUMNS: MappingProxyType[str, Column] = _by_name(
         "length",
         "Distance to approach section",
         "Along the stream from the approach section to the road's upstream edge.",
+    ),
+    # --- on the map --------------------------------------------------------------------------------
+    Column(
+        "area",
+        float,
+        "area",
+        "Area",
+        "Area of the polygons on the ellipsoid; in low_not_joined, of the ground that stays dry.",
+    ),
+    Column(
+        "largest_depth",
+        float,
+        "length",
+        "Largest depth",
+        "Largest height of the water's level above a cell of the ground.",
+    ),
+    Column(
+        "boundary_points",
+        int,
+        "count",
+        "Boundary points",
+        "Number of points along the boundary, about a cell apart, at which the ground was compared with the "
+        "water's level. Where the mapped ground itself ends none are counted.",
+    ),
+    Column(
+        "boundary_within_tolerance",
+        float,
+        "ratio",
+        "Boundary within tolerance",
+        "Part of these points, from 0 to 1, where ground and water differ by no more than 1 foot "
+        "(0.3048 m): the tolerance of FEMA's Procedure Memorandum 38 (2007), Table 1, from memory.",
     ),
     # --- a bench -----------------------------------------------------------------------------------
     Column(

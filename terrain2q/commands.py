@@ -30,7 +30,7 @@ DONE, WRONG_INPUT, NO_ANSWER, INTERRUPTED = 0, 2, 3, 130
 _METAVARS = {
     "text": "TEXT", "number": "NUMBER", "number or zero": "NUMBER", "count": "WHOLE NUMBER",
     "file": "FILE", "folder": "FOLDER",
-    "table": "FILE|NAME", "layer": "FILE[|layer=NAME]", "rasters": "FILE", "events": "EVENT=DISCHARGE",
+    "table": "FILE|NAME", "layer": "FILE[|layer=NAME]", "rasters": "FILE", "events": "EVENT=DISCHARGE", "names": "NAME",
 }  # fmt: skip
 
 
@@ -116,7 +116,7 @@ class _KeyOption(click.Option):
     def __init__(self, table: str, cls: type[Table], name: str, about: Key) -> None:
         self.table = table
         self.key = f"{table}.{name}"
-        several = about.kind in ("rasters", "events")
+        several = about.kind in ("rasters", "events", "names")
         default = shown_default(cls, name)
         metavar = _METAVARS.get(about.kind) or "|".join(about.choices or ("true", "false"))
         notes = [

@@ -7,6 +7,7 @@ import os
 import time
 from collections import Counter
 from collections.abc import Callable, Mapping, Sequence
+from contextlib import closing
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 
@@ -17,7 +18,7 @@ from pyproj.exceptions import CRSError
 
 from terrain2q.columns import CAUTION
 from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError
-from terrain2q.flows import Flow, read_flows
+from terrain2q.flows import Flow, event_names, read_flows
 from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
 from terrain2q.ground.layers import read_layer, require_field
@@ -26,17 +27,19 @@ from terrain2q.ground.observed import read_observations
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
 from terrain2q.hydraulics.roughness import roughness_from_parts
-from terrain2q.jobs.design_flows import SectionAnswer, answer_sections
+from terrain2q.jobs.design_flows import SectionAnswer, answer_section, answer_sections
+from terrain2q.jobs.extent import ExtentInputs, FloodMap, map_floods
 from terrain2q.jobs.fitting import Fit, fit_observations
 from terrain2q.jobs.sections import BuiltSection, SectionInputs, build_sections
 from terrain2q.jobs.slopes import FieldSlopes, OneSlope, Slopes, StreamSlopes
 from terrain2q.jobs.submerged import Submerged
-from terrain2q.laying_out import lines_for_run, streams_on
+from terrain2q.laying_out import lines_for_run
 from terrain2q.output.crossing_table import crossings_layer
 from terrain2q.output.fitted import check_table, write_table
 from terrain2q.output.folder import OutputFolder
 from terrain2q.output.geopackage import RESULT_NAME, check_output, write_geopackage
 from terrain2q.output.layers import make_layers
+from terrain2q.output.rasters import flood_rasters
 from terrain2q.output.pages import write_pages
 from terrain2q.output.report import Explorer
 from terrain2q.output.report_data import worst_first
@@ -331,7 +334,7 @@ def _read_inputs(study: Study) -> _Inputs:
             id_field=study.streams.id_field,
             repeated_ids=True,
         )
-        near = streams_on(terrain, streams) if cut_lines is None else streams_near(cut_lines, streams)
+        near = None if cut_lines is None else streams_near(cut_lines, streams)
         streams, turned = turn_streams(streams, terrain, study.in_si("streams.snap"), study.system, near)
         findings += turned
     if study.cut_lines is None:
@@ -484,6 +487,47 @@ def _check_crossings(study: Study, inputs: _Inputs) -> list[Finding]:
     return [*findings, *(f for c in crossings for f in c.findings)]
 
 
+def _extent_events(study: Study, flows: Sequence[Flow]) -> tuple[str, ...]:
+    """Return the events whose extent is asked for, in the order of the flows."""
+    if study.extent is None:
+        return ()
+    if study.streams is None:
+        raise InputError(
+            "key-missing",
+            "an extent needs stream lines, which put the sections in order",
+            where="[extent]",
+            fix="add [streams] with path, or take [extent] away",
+        )
+    known = event_names(flows)
+    wanted = known if study.extent.events is None else study.extent.events
+    unknown = [event for event in wanted if event not in known]
+    if unknown:
+        raise InputError(
+            "value-not-allowed",
+            f"no flow has the event {', '.join(map(repr, unknown))}",
+            where="[extent] events",
+            fix=f"the flows have {', '.join(map(repr, known))}",
+        )
+    return tuple(event for event in known if event in wanted)
+
+
+def _map_floods(study: Study, events, flows, inputs: _Inputs, answers, progress) -> FloodMap:
+    if not events:
+        return FloodMap.nothing()
+
+    def again(answer: SectionAnswer, reached) -> SectionAnswer:
+        return answer_section(
+            answer.built, flows, event_names(flows), study.rating.stages, study.in_si("rating.top"),
+            study.system, reached,
+        )  # fmt: skip
+
+    wanted = ExtentInputs(
+        inputs.sections.terrain, inputs.streams, events, study.in_si("extent.smallest"), study.system,
+        study.output.folder,
+    )  # fmt: skip
+    return map_floods(answers, wanted, again, progress)
+
+
 def check_study(study: Study, progress: Progress | None = None) -> list[Finding]:
     """Look at every input of a study and return the findings, the worst first; write nothing.
 
@@ -492,7 +536,7 @@ def check_study(study: Study, progress: Progress | None = None) -> list[Finding]
     InputError
         An input is wrong.
     """
-    read_flows(study)
+    _extent_events(study, read_flows(study))
     inputs = _read_inputs(study)
     built = build_sections(inputs.lines, inputs.sections, progress or _silent)
     return _all_findings(inputs, built, others=_check_crossings(study, inputs))
@@ -518,31 +562,39 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
     check_output(folder, study.output.overwrite)
     check_tables(study.output.tables)
     flows = read_flows(study)
+    events = _extent_events(study, flows)
     inputs = _read_inputs(study)
     built = build_sections(inputs.lines, inputs.sections, progress)
     answers = answer_sections(
         built, flows, study.rating.stages, study.in_si("rating.top"), study.system, progress
     )
     screened = _screen(study, inputs, flows, progress)
-    findings = _all_findings(inputs, built, answers, () if screened is None else screened.findings)
     terrain = inputs.sections.terrain
-    layers = make_layers(answers, findings, study.system, terrain.crs, inputs.crs)
-    if screened is not None:
-        layers["crossings"] = crossings_layer(screened.answers, study.system, terrain.crs, inputs.crs)
+    folder.mkdir(parents=True, exist_ok=True)
+    with closing(_map_floods(study, events, flows, inputs, answers, progress)) as floods:
+        answers = floods.answers or answers
+        others = [*floods.findings, *(screened.findings if screened is not None else ())]
+        findings = _all_findings(inputs, built, answers, others)
+        layers = make_layers(
+            answers, findings, study.system, terrain.crs, inputs.crs, floods.events if events else None
+        )
+        if screened is not None:
+            layers["crossings"] = crossings_layer(screened.answers, study.system, terrain.crs, inputs.crs)
+        progress(0, 1, "writing")
+        package, record = folder / RESULT_NAME, folder / RECORD_NAME
+        # the rasters wait beside their places until the layers are there
+        with flood_rasters(folder, floods, study.system, terrain.crs) as rasters:
+            write_geopackage(
+                package,
+                layers,
+                units=study.system,
+                crs=inputs.crs,
+                description=f"{study.study.name or 'terrain2q study'}: sections, ratings and stages at design flows",
+                metadata={"settings": study.as_dict()},
+                overwrite=study.output.overwrite,
+            )
     failed = frozenset(
         a.section_id for a in answers if a.built.section is None or any(e.status == FAILED for e in a.events)
-    )
-    progress(0, 1, "writing")
-    package, record = folder / RESULT_NAME, folder / RECORD_NAME
-    folder.mkdir(parents=True, exist_ok=True)
-    write_geopackage(
-        package,
-        layers,
-        units=study.system,
-        crs=inputs.crs,
-        description=f"{study.study.name or 'terrain2q study'}: sections, ratings and stages at design flows",
-        metadata={"settings": study.as_dict()},
-        overwrite=study.output.overwrite,
     )
     about_crossings = []
     if screened is not None:
@@ -558,7 +610,7 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
             counts={name: len(table) for name, table in layers.items()},
             findings=findings,
             seconds=seconds,
-            outputs=[package, *about_crossings],
+            outputs=[package, *rasters, *about_crossings],
         ),
     )
     pages = write_pages(folder, study.as_dict()["output"])
@@ -569,7 +621,7 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
         study.system,
         inputs.crs,
         folder,
-        (package, *about_crossings, record, *pages),
+        (package, *rasters, *about_crossings, record, *pages),
         time.perf_counter() - began,
         study.study.name,
         failed,

@@ -355,6 +355,20 @@ class RatingTable(Table):
 
 
 @dataclass(frozen=True)
+class ExtentTable(Table):
+    """The flood on the map: extent and depths between the sections; an empty table maps every event."""
+
+    events: tuple[str, ...] | None = key(
+        "names of the events to map; all where absent", "names", '["10-year", "100-year"]'
+    )
+    smallest: float | None = key(
+        "area of the smallest patch or hole kept, in the study's unit of length squared; 25 m² and at least "
+        "4 cells where absent",
+        "number", "300.0", quantity="area",
+    )  # fmt: skip
+
+
+@dataclass(frozen=True)
 class CrossingsTable(Table):
     """Crossings of roads and streams to screen; the page on crossings has the rules."""
 
@@ -507,6 +521,7 @@ class Study:
     flows: FlowsTable | None = _table(FlowsTable)
     rating: RatingTable = _table(RatingTable, when_absent="defaults")
     crossings: CrossingsTable | None = _table(CrossingsTable)
+    extent: ExtentTable | None = _table(ExtentTable)
     bench: BenchTable | None = _table(BenchTable)
     observed: ObservedTable | None = _table(ObservedTable)
     output: OutputTable = _table(OutputTable, when_absent="defaults")

@@ -41,6 +41,8 @@ PROMISED = {
         "required_opening verdict rank status probability opening_share road_width_under_water "
         "largest_depth_on_road weir_discharge tailwater_stage overflow_station slope approach_distance"
     ),
+    "flood_extent": "event area largest_depth boundary_points boundary_within_tolerance",
+    "low_not_joined": "event area largest_depth",
     "findings": "code severity layer feature_id message remedy",
 }
 GEOMETRY = {
@@ -50,6 +52,8 @@ GEOMETRY = {
     "design_stages": "MultiLineString",
     "subarea_flows": "",
     "crossings": "Point",
+    "flood_extent": "MultiPolygon",
+    "low_not_joined": "MultiPolygon",
     "findings": "Point",
 }
 

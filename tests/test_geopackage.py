@@ -47,6 +47,9 @@ def shape_of(layer, row: int):
         )
     if layer.geometry == "Point":
         return shapely.Point(row, 1.0)
+    if layer.geometry == "MultiPolygon":
+        # one with a hole; single polygons are made multiple
+        return shapely.Point(row, 0.0).buffer(2.0).difference(shapely.Point(row, 0.0).buffer(1.0))
     return shapely.LineString([[row, 0.0], [row + 1.0, 2.0]])
 
 
@@ -123,6 +126,8 @@ def test_geometry_is_declared_as_registered(written):
         ("subareas", "geom", "LINESTRING", CRS, 0, 0),
         ("design_stages", "geom", "MULTILINESTRING", CRS, 0, 0),
         ("crossings", "geom", "POINT", CRS, 0, 0),
+        ("flood_extent", "geom", "MULTIPOLYGON", CRS, 0, 0),
+        ("low_not_joined", "geom", "MULTIPOLYGON", CRS, 0, 0),
         ("findings", "geom", "POINT", CRS, 0, 0),
     ]
     kinds = dict(query(written, "SELECT table_name, data_type FROM gpkg_contents"))
@@ -296,7 +301,8 @@ def test_missing_values_and_geometries_become_null(tmp_path):
         nothing = [None, np.nan, pd.NA]
         table = pd.DataFrame({column: pd.Series(nothing, dtype=object) for column in layer.columns})
         if layer.geometry:
-            empty = {"Point": shapely.Point()}.get(layer.geometry, shapely.LineString())
+            empty = {"Point": shapely.Point(), "MultiPolygon": shapely.MultiPolygon()}
+            empty = empty.get(layer.geometry, shapely.LineString())
             table = geopandas.GeoDataFrame(table, geometry=[None, None, empty], crs=CRS)
         layers[name] = table
     write(path, layers)

@@ -39,6 +39,7 @@ _KINDS = {
     "LineString ZM": ("Measured 3D LineString", {1}, 4),
     "LineString": ("LineString", {1}, 2),
     "MultiLineString": ("MultiLineString", {1, 5}, 2),
+    "MultiPolygon": ("MultiPolygon", {3, 6}, 2),
     "Point": ("Point", {0}, 2),
 }
 
@@ -251,6 +252,9 @@ def _wkb(layer: Layer, table: pd.DataFrame, crs: CRS) -> np.ndarray | None:
     if layer.geometry == "MultiLineString":
         for row in np.flatnonzero(kinds == 1):
             geometry[row] = shapely.multilinestrings([geometry[row]])
+    if layer.geometry == "MultiPolygon":
+        for row in np.flatnonzero(kinds == 3):
+            geometry[row] = shapely.multipolygons([geometry[row]])
     return _objects(shapely.to_wkb(geometry, output_dimension=dimension, byte_order=1, flavor="iso"))
 
 

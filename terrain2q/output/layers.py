@@ -14,6 +14,7 @@ from terrain2q.columns import COLUMNS, LAYERS
 from terrain2q.errors import Finding
 from terrain2q.ground.terrain import Profile
 from terrain2q.jobs.design_flows import SUBAREA_COLUMNS, SectionAnswer
+from terrain2q.jobs.extent import EventExtent
 from terrain2q.output.geopackage import linestring_zm
 from terrain2q.units import UnitSystem
 
@@ -65,7 +66,12 @@ def to_crs(x: np.ndarray, y: np.ndarray, source, target) -> tuple[np.ndarray, np
 
 
 def make_layers(
-    answers: Sequence[SectionAnswer], findings: Sequence[Finding], units: UnitSystem, terrain_crs, crs
+    answers: Sequence[SectionAnswer],
+    findings: Sequence[Finding],
+    units: UnitSystem,
+    terrain_crs,
+    crs,
+    floods: Sequence[EventExtent] | None = None,
 ) -> dict[str, pd.DataFrame]:
     """Return every layer of the results.
 
@@ -79,6 +85,8 @@ def make_layers(
         The study's.
     terrain_crs, crs : pyproj.CRS
         Of the answers' coordinates, and of the layers.
+    floods : sequence of EventExtent, optional
+        In SI, in the terrain's CRS; without, the layers of the flood extent are left out.
 
     Returns
     -------
@@ -86,12 +94,14 @@ def make_layers(
         By name of the layer, columns as registered.
     """
     placed = _Projected(answers, terrain_crs, crs)
+    on_map = {} if floods is None else _floods(floods, units, terrain_crs, crs)
     return {
         "sections": _sections(answers, findings, placed, units, crs),
         "subareas": _subareas(answers, placed, units, crs),
         "ratings": _ratings(answers, units),
         "design_stages": _design_stages(answers, placed, units, crs),
         "subarea_flows": _subarea_flows(answers, units),
+        **on_map,
         "findings": _findings(findings, terrain_crs, crs),
     }
 
@@ -200,6 +210,34 @@ def _subarea_flows(answers, units: UnitSystem):
                 for name in SUBAREA_COLUMNS:
                     rows[name].append(row[name])
     return table_in_units("subarea_flows", rows, units)
+
+
+def _floods(floods: Sequence[EventExtent], units: UnitSystem, terrain_crs, crs) -> dict[str, pd.DataFrame]:
+    def moved(shape):
+        return shapely.transform(
+            shape, lambda xy: np.column_stack(to_crs(xy[:, 0], xy[:, 1], terrain_crs, crs))
+        )
+
+    rows = {
+        "event": [f.event for f in floods],
+        "area": [f.area for f in floods],
+        "largest_depth": [f.largest_depth for f in floods],
+        "boundary_points": [f.boundary_points for f in floods],
+        "boundary_within_tolerance": [f.within for f in floods],
+    }
+    low = {
+        "event": [f.event for f in floods],
+        "area": [f.low_area for f in floods],
+        "largest_depth": [f.low_depth for f in floods],
+    }
+    return {
+        "flood_extent": _with_geometry(
+            table_in_units("flood_extent", rows, units), [moved(f.polygons) for f in floods], crs
+        ),
+        "low_not_joined": _with_geometry(
+            table_in_units("low_not_joined", low, units), [moved(f.low) for f in floods], crs
+        ),
+    }
 
 
 def _findings(findings: Sequence[Finding], terrain_crs, crs):

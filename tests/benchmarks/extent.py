@@ -115,9 +115,8 @@ def main(size: int, folder: Path) -> None:
     wall, own = (float(np.median([each[k] for each in plain])) for k in (0, 1))
     print(f"copy of the tiles {wall:.1f} s ({own:.1f} s of work)")
     print(f"extent {mapped:.1f} s, with {len(files)} grids {taken:.1f} s ({work:.1f} s of work)")
-    print(
-        f"ratio {taken / wall:.2f} ({work / own:.2f} of work); peak memory {peak:.0f} MB, before {before:.0f} MB"
-    )
+    print(f"ratio {taken / wall:.2f} ({work / own:.2f} of work)")
+    print(f"peak memory {peak:.0f} MB, before the extent {before:.0f} MB")
 
 
 if __name__ == "__main__":
