@@ -439,7 +439,7 @@ def _by_code(findings: Sequence[_FoundRow]) -> list[dict]:
 
 def _asked(source: OutputFolder) -> list[str]:
     """Return in sentences what the study asks for."""
-    settings, layers = source.settings, source.layers
+    layers = source.layers
     count = len(layers["sections"])
     unit = source.units.symbol("flow")
     lines = [
@@ -461,14 +461,15 @@ def _asked(source: OutputFolder) -> list[str]:
         lines.append("No design flows: ratings only.")
     more = [
         word
-        for table, word in (
+        for layer, word in (
             ("crossings", "road crossings judged"),
-            ("extent", "flood extent and depth mapped"),
-            ("bench", "widths required of a bench"),
-            ("uncertainty", "uncertainty of the stages"),
+            ("flood_extent", "flood extent and depth mapped"),
+            ("required_widths", "widths required of a bench"),
         )
-        if table in settings
+        if layer in layers
     ]
+    if stages is not None and "stage_low" in stages:
+        more.append("uncertainty of the stages")
     if more:
         lines.append("Also asked for: " + ", ".join(more) + ".")
     return lines
