@@ -25,7 +25,6 @@ from dataclasses import dataclass, replace
 import numpy as np
 import shapely
 from scipy.ndimage import uniform_filter1d
-from scipy.signal import savgol_filter
 
 from terrain2q.ground.local_ground import LocalGround
 
@@ -101,11 +100,7 @@ class RoadSurface:
     @property
     def footprint(self) -> shapely.Geometry:
         """Ground under the road and its fill, a polygon in local metres."""
-        up = self.points + self.normals * self.toes[0][:, None]
-        down = self.points - self.normals * self.toes[1][:, None]
-        # piece by piece: at a sharp bend a single outline would cross itself
-        corners = np.stack([up[:-1], up[1:], down[1:], down[:-1], up[:-1]], axis=1)
-        return shapely.union_all(shapely.convex_hull(shapely.linestrings(corners)))
+        return _outline(self.points, self.normals, *self.toes)
 
     def place(self, station: float) -> np.ndarray:
         """Return the middle of the road at a station, local metres, shape (2,)."""
@@ -114,6 +109,15 @@ class RoadSurface:
     def raised(self, by: float) -> RoadSurface:
         """Return the same surface, higher by a length."""
         return replace(self, heights=self.heights + by)
+
+
+def _outline(points, normals, upstream: np.ndarray, downstream: np.ndarray) -> shapely.Geometry:
+    """Return the ground from one distance to another beside a line."""
+    up = points + normals * upstream[:, None]
+    down = points - normals * downstream[:, None]
+    # piece by piece: at a sharp bend a single outline would cross itself
+    corners = np.stack([up[:-1], up[1:], down[1:], down[:-1], up[:-1]], axis=1)
+    return shapely.union_all(shapely.convex_hull(shapely.linestrings(corners)))
 
 
 @dataclass(frozen=True)
@@ -220,6 +224,26 @@ def _outside(stations: np.ndarray, deck, others) -> np.ndarray:
     for start, end in (*others, *([] if deck is None else [deck])):
         outside &= (stations <= start) | (stations >= end)
     return outside
+
+
+def fill_about(ground: LocalGround, line: shapely.LineString, beside: float) -> shapely.Geometry | None:
+    """Return the ground that a road and its fill may take, without finding the road itself.
+
+    Parameters
+    ----------
+    ground : LocalGround
+    line : LineString
+        The road as drawn, local metres.
+    beside : float
+        Metres to each side within which its edges lie; the fill goes on from there as far as the ground
+        falls.
+    """
+    strip = _strip(ground, line, 0.5 * line.length, np.array([0.0, -1.0]), 0.5 * line.length, beside)
+    if strip is None:
+        return None
+    here = np.zeros(strip.stations.size)
+    toes = _toes(strip, here, (beside, beside), np.ones(here.size, dtype=bool))
+    return _outline(strip.points, strip.normals, *toes)
 
 
 def find_crest(surface: RoadSurface, ground: LocalGround, reach: float) -> Crest | None:
@@ -509,66 +533,51 @@ def _edges(strip: _Strip, offset, there, half: float):
 def _fitted(strip: _Strip, mean: np.ndarray, there: np.ndarray) -> tuple[np.ndarray, float]:
     """Return the road's height at every station, and the noise about it.
 
-    Each piece between gaps is fitted by itself: local parabolas, outliers drawn in; at each station over the
-    longest span whose fit agrees with those of all shorter ones within their errors.
+    A parabola is fitted about each station to what is known of the road, on both sides of a missing deck, and
+    outliers are drawn in; at each station over the longest span whose fit agrees with those of all shorter
+    ones within their errors.
     """
     heights = np.full(mean.size, np.nan)
-    residuals = []
-    for a, b in _runs(there):
-        piece = mean[a:b]
-        fits, errors = [], []
-        tame = piece
-        for spread in SPREADS:
-            window = min(
-                2 * _cells(spread, strip.step) + 1, (piece.size - 1) | 1 if piece.size % 2 else piece.size - 1
-            )
-            window = max(window | 1, 1)
-            if window > piece.size:
-                window = piece.size if piece.size % 2 else piece.size - 1
-            if window < 5:
-                fits.append(_line(piece))
-                errors.append(np.full(piece.size, 1.0 / np.sqrt(max(piece.size, 1))))
-                break
-            fit = savgol_filter(tame, window, 2, mode="interp")
-            if not fits:
-                off = piece - fit
-                limit = 3.0 * 1.4826 * np.median(np.abs(off)) + 1e-6
-                tame = fit + np.clip(off, -limit, limit)
-                fit = savgol_filter(tame, window, 2, mode="interp")
-            fits.append(fit)
-            errors.append(_fit_errors(piece.size, window))
-            if window >= piece.size - 1:
-                break
-        residual = piece - fits[0]
-        residuals.append(residual)
-        noise = float(1.4826 * np.median(np.abs(residual - np.median(residual)))) if residual.size else 0.0
-        heights[a:b] = _longest_agreeing(fits, errors, noise)
-    known = np.isfinite(heights)
-    if known.any():
-        inside = np.arange(mean.size)
-        span = np.flatnonzero(known)
-        bridged = np.interp(inside, span, heights[span])
-        heights = np.where(~there & (inside > span[0]) & (inside < span[-1]) & ~known, bridged, heights)
-    every = np.concatenate(residuals) if residuals else np.zeros(1)
-    return heights, float(1.4826 * np.median(np.abs(every)))
+    if not there.any():
+        return heights, 0.0
+    tame = mean
+    fits, errors = [], []
+    for spread in SPREADS:
+        half = _cells(spread, strip.step)
+        fit, error = _local_parabolas(tame, there, half)
+        if not fits:
+            off = np.where(there, mean - fit, np.nan)
+            limit = 3.0 * 1.4826 * np.nanmedian(np.abs(off)) + 1e-6
+            tame = fit + np.clip(np.nan_to_num(off), -limit, limit)
+            fit, error = _local_parabolas(tame, there, half)
+        fits.append(fit)
+        errors.append(error)
+        if 2 * half > mean.size:
+            break
+    noise = float(1.4826 * np.median(np.abs((mean - fits[0])[there])))
+    heights = np.where(there, _longest_agreeing(fits, errors, noise), np.nan)
+    inside, span = np.arange(mean.size), np.flatnonzero(there)
+    bridged = np.interp(inside, span, heights[span])
+    return np.where((inside >= span[0]) & (inside <= span[-1]), bridged, np.nan), noise
 
 
-def _line(values: np.ndarray) -> np.ndarray:
-    if values.size < 3:
-        return np.full(values.size, values.mean())
-    k = np.arange(values.size)
-    return np.polyval(np.polyfit(k, values, 1), k)
+def _local_parabolas(values: np.ndarray, known: np.ndarray, half: int) -> tuple[np.ndarray, np.ndarray]:
+    """Return parabolas fitted about each point to what is known within some points, and their errors.
 
-
-def _fit_errors(size: int, window: int) -> np.ndarray:
-    """Return the standard error of a local parabola at each point, for noise of 1."""
-    k = np.arange(window) - window // 2
-    basis, _ = np.linalg.qr(np.vander(k.astype(float), 3))
-    own = np.sqrt((basis**2).sum(axis=1))
-    half = window // 2
-    errors = np.full(size, own[half])
-    errors[:half], errors[size - half :] = own[:half], own[window - half :]
-    return errors
+    The errors are for noise of 1. Where little is known, the fit leans towards a straight line.
+    """
+    weight = np.pad(known.astype(float), half)
+    value = np.pad(np.where(known, values, 0.0), half)
+    k = np.arange(-half, half + 1) / max(half, 1)
+    moments = [np.correlate(weight, k**j, mode="valid") for j in range(5)]
+    right = np.stack([np.correlate(value, k**j, mode="valid") for j in range(3)], axis=-1)
+    matrix = np.stack([np.stack([moments[i + j] for j in range(3)], axis=-1) for i in range(3)], axis=-2)
+    matrix[:, 1, 1] += 1e-6
+    matrix[:, 2, 2] += 1e-3
+    matrix[:, 0, 0] = np.maximum(matrix[:, 0, 0], 1e-9)
+    inverse = np.linalg.inv(matrix)
+    fit = np.einsum("ij,ij->i", inverse[:, 0], right)
+    return fit, np.sqrt(np.maximum(inverse[:, 0, 0], 0.0))
 
 
 def _longest_agreeing(fits: list, errors: list, noise: float) -> np.ndarray:

@@ -31,7 +31,7 @@ from terrain2q.ground.approach import (
 from terrain2q.ground.cut_lines import CutLine
 from terrain2q.ground.layers import clean_text
 from terrain2q.ground.local_ground import LocalGround
-from terrain2q.ground.road_surface import Crest, RoadSurface, find_crest, find_road_surface
+from terrain2q.ground.road_surface import Crest, RoadSurface, fill_about, find_crest, find_road_surface
 from terrain2q.ground.roads import BRIDGE, Crossing, RoadNetwork
 from terrain2q.ground.stream_slope import robust_slope
 from terrain2q.ground.streams import StreamNetwork, length_text
@@ -577,12 +577,9 @@ def _fills_beside(crossing, inputs: CrossingInputs, ground: LocalGround) -> list
         for part in shapely.get_parts(shapely.clip_by_rect(local, *[-ALONG_ROADS] * 2, *[ALONG_ROADS] * 2)):
             if part.geom_type != "LineString" or part.length < 4.0 * ground.cell:
                 continue
-            found = find_road_surface(
-                ground, part, 0.5 * part.length, np.array([0.0, -1.0]), reach=0.5 * part.length,
-                width=inputs.road_width, search=inputs.search,
-            )  # fmt: skip
+            found = fill_about(ground, part, 0.5 * inputs.road_width + inputs.search)
             if found is not None:
-                fills.append(found.footprint)
+                fills.append(found)
     return fills
 
 

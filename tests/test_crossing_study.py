@@ -1,0 +1,210 @@
+"""Crossings of a whole study: layers and files, without cut lines, in feet and in metres."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import geopandas
+import numpy as np
+import pandas as pd
+import pytest
+import shapely
+from _county import CRS, N, make_valleys, roads, streams, write_dem
+
+from terrain2q import run
+from terrain2q.columns import LAYERS
+from terrain2q.errors import InputError
+from terrain2q.process import check_study
+from terrain2q.study import load_study
+from terrain2q.units import FOOT
+
+SAMPLE = Path(__file__).parents[1] / "sample_dem"
+
+
+@pytest.fixture(scope="module")
+def folder(tmp_path_factory):
+    """Three valleys with roads, points, flows and a study without cut lines or slope."""
+    folder = tmp_path_factory.mktemp("three")
+    valleys = make_valleys(3)
+    write_dem(folder / "dem.tif", valleys, noise=0.05)
+    streams(valleys).to_file(folder / "data.gpkg", layer="streams")
+    table = roads(valleys)
+    table["traffic"] = [10, 900, 40]
+    table.to_file(folder / "data.gpkg", layer="roads")
+    points = geopandas.GeoDataFrame(
+        {"crossing_id": ["a", "b", "c", "far"], "opening": [20.0, np.nan, 30.0, 40.0]},
+        geometry=[shapely.Point(v.centre + 3.0, v.road.centroid.y) for v in valleys]
+        + [shapely.Point(valleys[0].centre + 100.0, valleys[0].road.centroid.y + 200.0)],
+        crs=CRS,
+    )
+    points.to_file(folder / "data.gpkg", layer="crossings")
+    rows = ["event,discharge,probability,stream"]
+    for v in valleys:
+        rows += [f"10-year,{v.crest_discharge * 0.6:.4f},0.1,S{v.number}"]
+        rows += [f"100-year,{v.crest_discharge * 1.5:.4f},0.01,S{v.number}"]
+    (folder / "flows.csv").write_text("\n".join(rows) + "\n", encoding="utf-8")
+    (folder / "study.toml").write_text(
+        f"""
+[study]
+name = "Three valleys"
+units = "si"
+[terrain]
+dem = "dem.tif"
+[streams]
+path = "data.gpkg|layer=streams"
+id_field = "stream_id"
+[land_cover]
+default_n = {N}
+[channel]
+banks = "none"
+[flows]
+path = "flows.csv"
+[crossings]
+roads = "data.gpkg|layer=roads"
+rank = ["traffic", "probability"]
+[output]
+report = false
+sheets = "none"
+overwrite = true
+""",
+        encoding="utf-8",
+    )
+    return folder, valleys
+
+
+@pytest.fixture(scope="module")
+def results(folder):
+    return run(folder[0] / "study.toml", {"output.folder": str(folder[0] / "out")})
+
+
+def test_a_study_of_roads_alone_needs_no_cut_lines(folder, results):
+    table = results.crossings
+    assert tuple(table.columns[:-1]) == LAYERS["crossings"].columns
+    assert len(table) == 6
+    assert len(results.sections) == 0
+    assert results.answered_crossings == 3
+    assert results.failed_crossings == 0
+    valleys = folder[1]
+    for row in table.itertuples():
+        v = valleys[int(row.stream[1:])]
+        assert row.crest == pytest.approx(v.crest_height, abs=0.05)
+        assert row.crest_discharge == pytest.approx(v.crest_discharge, rel=0.03)
+        assert row.verdict == {"10-year": "crest not reached", "100-year": "over the crest"}[row.event]
+        assert row.first_event_over == "100-year"
+        assert 0.01 < row.probability < 0.1
+        assert row.geometry.distance(shapely.Point(v.centre, v.road.centroid.y)) < 6.0
+
+
+def test_rank_goes_by_the_field_named(results):
+    by_rank = results.crossings.drop_duplicates("crossing_id").sort_values("rank")
+    assert by_rank["road"].tolist() == ["R1", "R2", "R0"]
+    assert by_rank["rank"].tolist() == [1, 2, 3]
+
+
+def test_files_hold_the_same_rows(results):
+    names = {f.name for f in results.files}
+    assert {"results.gpkg", "crossings.csv", "crossings.pdf", "run.json"} <= names
+    layer = geopandas.read_file(results.folder / "results.gpkg", layer="crossings")
+    csv = pd.read_csv(results.folder / "crossings.csv")
+    assert list(csv.columns) == [*LAYERS["crossings"].columns, "x", "y"]
+    for table in (layer, csv):
+        assert table["crossing_id"].tolist() == results.crossings["crossing_id"].tolist()
+        assert table["verdict"].tolist() == results.crossings["verdict"].tolist()
+        assert table["crest"].to_numpy() == pytest.approx(results.crossings["crest"].to_numpy(), abs=1e-3)
+    pdf = (results.folder / "crossings.pdf").read_bytes()
+    assert pdf.startswith(b"%PDF")
+    # the table, the map, and a page for each
+    assert pdf.count(b"/Type /Page\n") + pdf.count(b"/Type /Page ") == 5
+    assert "3 crossings" in results.summary_text()
+    assert len(results.summary()["crossings"]) == 6
+
+
+def test_feet_and_metres_agree(folder, results):
+    options = {
+        "study.units": "us",
+        "output.folder": str(folder[0] / "out_us"),
+        "crossings.panels": 0,
+        "flows.path": str(folder[0] / "flows_us.csv"),
+    }
+    flows = pd.read_csv(folder[0] / "flows.csv")
+    flows["discharge"] /= FOOT**3
+    flows.to_csv(folder[0] / "flows_us.csv", index=False)
+    us = run(folder[0] / "study.toml", options)
+    assert not (us.folder / "crossings.pdf").exists()
+    si, other = results.crossings, us.crossings
+    assert other["verdict"].tolist() == si["verdict"].tolist()
+    assert other["crest"].to_numpy() * FOOT == pytest.approx(si["crest"].to_numpy())
+    assert other["crest_discharge"].to_numpy() * FOOT**3 == pytest.approx(si["crest_discharge"].to_numpy())
+    assert other["weir_discharge"].to_numpy() * FOOT**3 == pytest.approx(si["weir_discharge"].to_numpy())
+    assert other["slope"].to_numpy() == pytest.approx(si["slope"].to_numpy())
+
+
+def test_points_keep_their_rows_and_fields(folder):
+    options = {
+        "output.folder": str(folder[0] / "out_points"),
+        "crossings.path": str(folder[0] / "data.gpkg|layer=crossings"),
+        "crossings.opening_width_field": "opening",
+        "crossings.rank": ["probability"],
+        "crossings.panels": 1,
+    }
+    found = run(folder[0] / "study.toml", options)
+    table = found.crossings
+    assert set(table["crossing_id"]) == {"a", "b", "c", "far"}
+    far = table[table["crossing_id"] == "far"]
+    assert far["status"].tolist() == ["failed", "failed"]
+    assert far["rank"].tolist() == [4, 4]
+    assert far["verdict"].tolist() == ["", ""]
+    assert far["stage"].isna().all()
+    first = table[(table["crossing_id"] == "a") & table["required_opening"].notna()]
+    assert (first["opening_share"] * first["required_opening"]).to_numpy() == pytest.approx(20.0)
+    assert table.loc[table["crossing_id"] == "b", "opening_share"].isna().all()
+    assert found.failed_crossings == 1
+    assert any(f.code == "crossing-off-stream" for f in found.findings_list)
+
+
+def test_wrong_inputs_stop_the_run(folder):
+    study = folder[0] / "study.toml"
+    with pytest.raises(InputError) as caught:
+        check_study(load_study(study, {"crossings.crest_field": "crst"}))
+    assert caught.value.code == "field-missing"
+    assert "traffic" in caught.value.fix
+    text = study.read_text(encoding="utf-8")
+    bare = folder[0] / "bare.toml"
+    bare.write_text(text.replace('roads = "data.gpkg|layer=roads"\n', ""), encoding="utf-8")
+    with pytest.raises(InputError) as caught:
+        load_study(bare)
+    assert caught.value.code == "key-missing"
+    dry = folder[0] / "dry.toml"
+    dry.write_text(text[: text.index("[streams]")] + text[text.index("[land_cover]") :], encoding="utf-8")
+    with pytest.raises(InputError) as caught:
+        check_study(load_study(dry))
+    assert (caught.value.code, caught.value.where) == ("key-missing", "[crossings]")
+
+
+def test_check_tells_of_the_places(folder):
+    options = {"crossings.path": str(folder[0] / "data.gpkg|layer=crossings")}
+    found = check_study(load_study(folder[0] / "study.toml", options))
+    assert [f.feature_id for f in found if f.code == "crossing-off-stream"] == ["far"]
+
+
+def test_the_demonstration_has_three_verdicts(tmp_path):
+    options = {"output.folder": str(tmp_path), "output.report": "false", "output.sheets": "none"}
+    found = run(SAMPLE / "study.toml", options)
+    table = found.crossings
+    verdicts = {
+        name: dict(zip(rows["event"], rows["verdict"], strict=True)) for name, rows in table.groupby("road")
+    }
+    # A lane on the floodplain: awash at the 10-year flow, deep under water at the 50-year flow.
+    assert verdicts["Low Sedge Lane"] == {
+        "10-year": "within freeboard", "50-year": "over the crest", "100-year": "over the crest",
+    }  # fmt: skip
+    # A bridge with its deck missing and a high fill over a culvert: far above the water.
+    for name in ("Pellwick Road", "Orrinfell Road"):
+        assert set(verdicts[name].values()) == {"crest not reached"}
+    codes = {(f.feature_id, f.code): f.severity for f in found.findings_list if f.layer == "crossings"}
+    assert codes["C-2", "deck-bridged"] == "note"  # its road line says that it is a bridge
+    assert codes["C-3", "culvert-ponds"] == "doubtful"
+    assert ("C-1", "deck-bridged") not in codes
+    crest = table.drop_duplicates("crossing_id").set_index("crossing_id")["crest"]
+    assert crest["C-3"] == 832.63  # surveyed
+    assert table.loc[table["crossing_id"] == "C-1", "rank"].tolist() == [1, 1, 1]
