@@ -75,7 +75,9 @@ def test_each_row_can_be_followed_back_to_its_section(sample):
         parts = flows[(flows["section_id"] == row.section_id) & (flows["event"] == row.event)]
         assert parts["discharge"].sum() == pytest.approx(row.discharge, rel=1e-9)
         assert parts["flow_area"].sum() == pytest.approx(row.flow_area, rel=1e-9)
-        if row.channel_share == row.channel_share and parts["stage"].nunique() == 1:
+        # a hollow that the map shows to be reached is a second stretch of water
+        single = parts["stage"].nunique() == 1 and len(row.geometry.geoms) == 1
+        if row.channel_share == row.channel_share and single:
             assert section.discharge(row.stage, row.slope) == pytest.approx(row.discharge, rel=1e-6)
             checked += 1
     assert checked > 20
