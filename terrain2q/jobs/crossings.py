@@ -780,6 +780,16 @@ def _answer(ready: _Ready, made: list[BuiltSection], inputs: CrossingInputs, eve
             notes.add("flow-missing", "no discharge is given for it", event)
             continue
         rows[event] = _row(ready, approach, tailwater, to_road, from_road, flow, opening, inputs, notes)
+    low = ready.bed.near(ready.edges_at[0])
+    under = [e for e in rows if rows[e]["stage"] < low]
+    if under:
+        findings.append(
+            crossing.finding(
+                "slope-uncertain",
+                f"{', '.join(under)}: the stage carried down to the road lies below the stream's bed there, "
+                f"{length_text(low, inputs.units)}; the stream is steeper above than at the road",
+            )
+        )
     largest = max(rows, key=lambda e: rows[e]["discharge"], default=None)
     findings += _wrong_question(ready, inputs, rows.get(largest), flows.get(largest))
     findings += notes.findings()

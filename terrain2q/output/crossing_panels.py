@@ -269,7 +269,7 @@ def draw_panel(answer: CrossingAnswer, inputs: CrossingInputs) -> Figure:
     plan = figure.add_axes((0.06, 0.535, 0.38, 0.375))
     draw_plan(answer, inputs.sections.terrain, ax=plan)
     road = figure.add_axes((0.53, 0.615, 0.44, 0.285))
-    draw_road(answer, units, tones, ax=road)
+    draw_road(answer, units, tones, inputs.reach, ax=road)
     rating = figure.add_axes((0.63, 0.205, 0.34, 0.24))
     _draw_rating(answer, units, rating)
     _text_block(figure, answer, units)
@@ -374,8 +374,8 @@ def hillshade(elevations: np.ndarray, cell: float) -> np.ndarray:
     return np.clip(light / np.sqrt(1.0 + right**2 + down**2), 0.0, 1.0) * 0.8 + 0.15
 
 
-def draw_road(answer: CrossingAnswer, units: UnitSystem, tones, ax: Axes) -> Axes:
-    """Draw the road along its length with the water of each event at the road."""
+def draw_road(answer: CrossingAnswer, units: UnitSystem, tones, most: float, ax: Axes) -> Axes:
+    """Draw the road, `most` metres to each side at the most, with the water of each event at the road."""
     road, factor = answer.road, units.per_si("length")
     unit = units.symbol("length")
     reach = max(60.0, 1.25 * abs(answer.crest_station))
@@ -383,6 +383,7 @@ def draw_road(answer: CrossingAnswer, units: UnitSystem, tones, ax: Axes) -> Axe
     wet = road.stations[road.heights < deepest]
     if wet.size:
         reach = max(reach, 1.1 * float(np.abs(wet).max()))
+    reach = min(reach, most)
     near = (np.abs(road.stations) <= reach) & np.isfinite(road.heights)
     s, top, ground = (v[near] * factor for v in (road.stations, road.heights, road.ground))
     bridged = np.zeros(s.size, dtype=bool)
