@@ -66,10 +66,8 @@ def results_html(results: Any) -> str:
         for name in ids[:_ROWS]:
             mine = [rows.get((name, event)) for event in events]
             known = [r is not None and r.status != FAILED for r in mine]
-            worst = next(
-                (s for s in ("failed", "doubtful", "ok") if any(r is not None and r.status == s for r in mine)),
-                "",
-            )
+            found = {r.status for r in mine if r is not None}
+            worst = next((s for s in ("failed", "doubtful", "ok") if s in found), "")
             cells = [f"{r.stage:.2f}" if ok else "–" for r, ok in zip(mine, known, strict=True)]
             body.append([name, worst, *cells])
         title = column_title("stage", results.units)
@@ -106,4 +104,5 @@ def _picture(draw: Callable[[Any], Any], size: tuple[float, float], words: str) 
     with mpl.rc_context({"svg.fonttype": "none"}):
         figure.savefig(memory, format="svg")
     data = base64.b64encode(memory.getvalue()).decode()
-    return f'<img alt="{escape(words, quote=True)}" style="max-width:100%" src="data:image/svg+xml;base64,{data}">'
+    source = f"data:image/svg+xml;base64,{data}"
+    return f'<img alt="{escape(words, quote=True)}" style="max-width:100%" src="{source}">'
