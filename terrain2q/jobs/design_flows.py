@@ -10,10 +10,11 @@ import numpy as np
 from terrain2q.errors import DOUBTFUL, FAILED, Finding, Terrain2qError
 from terrain2q.flows import AREA_RATIOS, Flow, event_names, flow_for
 from terrain2q.ground.streams import length_text
+from terrain2q.hydraulics.many import MANY, EventSolution, Solution, can_compile, solve
 from terrain2q.hydraulics.section import CHANNEL, FlowState, Section, hydraulic_columns
 from terrain2q.jobs.remarks import Remark, section_remarks, state_remarks
 from terrain2q.jobs.sections import BuiltSection
-from terrain2q.units import UnitSystem
+from terrain2q.units import SI, UnitSystem
 
 OK = "ok"
 
@@ -95,6 +96,7 @@ def answer_sections(
     top: float | None,
     units: UnitSystem,
     progress: Callable | None = None,
+    compiled: bool | None = None,
 ) -> list[SectionAnswer]:
     """Return rating and design stages of every section.
 
@@ -111,6 +113,8 @@ def answer_sections(
         For messages.
     progress : callable, optional
         ``progress(done, total, label)``.
+    compiled : bool, optional
+        Whether compiled code answers what it can; where there are many sections if left out.
 
     Returns
     -------
@@ -118,9 +122,11 @@ def answer_sections(
         In order; a section without an answer keeps its place.
     """
     events = event_names(flows)
+    if compiled is None:
+        compiled = len(built) >= MANY and can_compile()
     answers = []
     for done, one in enumerate(built, 1):
-        answers.append(answer_section(one, flows, events, stages, top, units))
+        answers.append(answer_section(one, flows, events, stages, top, units, compiled=compiled))
         if progress is not None and (done % 200 == 0 or done == len(built)):
             progress(done, len(built), "ratings and stages")
     return answers
@@ -134,18 +140,22 @@ def answer_section(
     top: float | None,
     units: UnitSystem,
     reached: Mapping[str, Sequence[tuple[float, float]]] | None = None,
+    compiled: bool = False,
 ) -> SectionAnswer:
     """Return the rating and the design stages of one section.
 
-    `reached` has, by event, hollows (start, end) that water is known to reach from elsewhere.
+    `reached` has, by event, hollows (start, end) that water is known to reach from elsewhere. Where
+    `compiled`, compiled code answers what it can (:mod:`terrain2q.hydraulics.many`).
     """
     section = built.section
     failed = tuple(EventAnswer(event, FAILED) for event in events)
     if section is None or not np.isfinite(built.slope):
         return SectionAnswer(built, {}, failed, ())
     notes = _Notes(built, units)
+    wanted = {event: _flow(flows, event, built) for event in events}
     try:
-        rating = section.rating_arrays(built.slope, stages, top)
+        solution = _solved(built, wanted, stages, top) if compiled and not reached else None
+        rating = section.rating_arrays(built.slope, stages, top) if solution is None else solution.rating
     except Terrain2qError as error:
         notes.add("section-failed", error.what)
         return SectionAnswer(built, {}, failed, notes.findings())
@@ -156,8 +166,8 @@ def answer_section(
         notes.remark(remark)
     doubtful = doubtful or notes.doubtful > 0
     answers = []
-    for event in events:
-        flow = flow_for(flows, event, built.section_id, built.line.stream, built.line.stream_distance)
+    for number, event in enumerate(events):
+        flow = wanted[event]
         if flow is None:
             notes.add("flow-missing", "no discharge is given for it", event)
             answers.append(EventAnswer(event, FAILED))
@@ -166,8 +176,24 @@ def answer_section(
         flow = _carried_over(flow, built, notes)
         hollows = (reached or {}).get(event)
         known = section.reached(hollows) if hollows else section
-        answers.append(_answer_event(known, built, flow, doubtful or notes.doubtful > before, notes))
+        solved = None if solution is None else solution.events[number]
+        answers.append(_answer_event(known, built, flow, doubtful or notes.doubtful > before, notes, solved))
     return SectionAnswer(built, rating, tuple(answers), notes.findings())
+
+
+def _flow(flows: Sequence[Flow], event: str, built: BuiltSection) -> Flow | None:
+    return flow_for(flows, event, built.section_id, built.line.stream, built.line.stream_distance)
+
+
+def _solved(
+    built: BuiltSection, wanted: Mapping[str, Flow | None], stages: int, top: float | None
+) -> Solution | None:
+    """Return what compiled code answers; an event without a flow keeps its place."""
+    silent = _Notes(built, SI)
+    discharges = [
+        _carried_over(flow, built, silent).discharge if flow is not None else 1.0 for flow in wanted.values()
+    ]
+    return solve(built.section, built.slope, stages, top, discharges)
 
 
 def _carried_over(flow: Flow, built: BuiltSection, notes: _Notes) -> Flow:
@@ -194,21 +220,30 @@ def _carried_over(flow: Flow, built: BuiltSection, notes: _Notes) -> Flow:
 
 
 def _answer_event(
-    section: Section, built: BuiltSection, flow: Flow, doubtful: bool, notes: _Notes
+    section: Section,
+    built: BuiltSection,
+    flow: Flow,
+    doubtful: bool,
+    notes: _Notes,
+    solved: EventSolution | None = None,
 ) -> EventAnswer:
-    try:
-        state = section.flow_state(flow.discharge, built.slope)
-        critical = float(section.critical_stage(flow.discharge))
-    except Terrain2qError as error:
-        notes.add("section-failed", error.what, flow.event)
-        return EventAnswer(flow.event, FAILED)
     root = np.sqrt(built.slope)
-    columns = {
-        k: float(v[0]) for k, v in hydraulic_columns(state.parts, root, section.system.gravity).items()
-    }
+    if solved is None:
+        try:
+            state = section.flow_state(flow.discharge, built.slope)
+            critical = float(section.critical_stage(flow.discharge))
+        except Terrain2qError as error:
+            notes.add("section-failed", error.what, flow.event)
+            return EventAnswer(flow.event, FAILED)
+        columns = {
+            k: float(v[0]) for k, v in hydraulic_columns(state.parts, root, section.system.gravity).items()
+        }
+        share = channel_share(section, state)
+    else:
+        state, columns = solved.state, solved.columns
+        critical, share = solved.critical_stage, solved.channel_share
     # the discharge that was asked for, not its image after solving
     columns["discharge"] = flow.discharge
-    share = channel_share(section, state)
     row = {
         "stage": state.stage,
         "depth": state.stage - section.lowest_ground,
@@ -218,7 +253,7 @@ def _answer_event(
         "channel_share": share,
     }
     before = notes.doubtful
-    _remark(section, state, row, share, flow.event, notes)
+    _remark(section, state, row, share, flow.event, notes, solved is not None)
     status = DOUBTFUL if doubtful or notes.doubtful > before or built.slope > STEEP else OK
     return EventAnswer(
         flow.event,
@@ -260,7 +295,9 @@ def _subarea_rows(state: FlowState, root: float) -> tuple[dict[str, float], ...]
     return tuple(sorted(rows, key=lambda r: r["subarea"]))
 
 
-def _remark(section: Section, state: FlowState, row: dict, share: float, event: str, notes: _Notes) -> None:
+def _remark(
+    section: Section, state: FlowState, row: dict, share: float, event: str, notes: _Notes, compiled: bool
+) -> None:
     """Note what a reviewer must know about one answer."""
     z, text, level = section.elevations, notes.length, notes.level
     for above, end, height in zip(state.above_ends, ("left", "right"), (z[0], z[-1]), strict=True):
@@ -280,7 +317,7 @@ def _remark(section: Section, state: FlowState, row: dict, share: float, event: 
         notes.add("velocity-high", f"mean velocity {notes.velocity(row['mean_velocity'])}", event)
     if row["alpha"] > HIGH_ALPHA:
         notes.add("alpha-high", f"alpha {row['alpha']:.2f}", event)
-    for remark in state_remarks(section, state, notes.units):
+    for remark in state_remarks(section, state, notes.units, compiled):
         notes.remark(remark, event)
     total = sum(p.conveyance for p in state.paths)
     for path in state.paths[1:]:

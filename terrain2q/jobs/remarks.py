@@ -9,6 +9,7 @@ import numpy as np
 
 from terrain2q.ground.cover import SubareaSpec
 from terrain2q.ground.streams import length_text
+from terrain2q.hydraulics.many import may_have_shelf
 from terrain2q.hydraulics.review import (
     N_LOW_FOR_SLOPE,
     N_OUTSIDE_RANGE,
@@ -108,7 +109,9 @@ def _name(section: Section, index: int) -> str:
     return f"subarea {index + 1}" + (f" ({about})" if about else "")
 
 
-def state_remarks(section: Section, state: FlowState, units: UnitSystem) -> list[Remark]:
+def state_remarks(
+    section: Section, state: FlowState, units: UnitSystem, compiled: bool = False
+) -> list[Remark]:
     """Return the remarks on a section at one discharge.
 
     Parameters
@@ -118,8 +121,10 @@ def state_remarks(section: Section, state: FlowState, units: UnitSystem) -> list
     state : FlowState
     units : UnitSystem
         For messages.
+    compiled : bool
+        Whether compiled code may say where there is no shelf.
     """
-    return [*_low_n(section, state, units), *_shelves(section, state, units)]
+    return [*_low_n(section, state, units), *_shelves(section, state, units, compiled)]
 
 
 def _low_n(section: Section, state: FlowState, units: UnitSystem) -> Iterator[Remark]:
@@ -145,12 +150,15 @@ def _low_n(section: Section, state: FlowState, units: UnitSystem) -> Iterator[Re
         )
 
 
-def _shelves(section: Section, state: FlowState, units: UnitSystem) -> Iterator[Remark]:
+def _shelves(section: Section, state: FlowState, units: UnitSystem, compiled: bool) -> Iterator[Remark]:
     whole = sum(p.conveyance for p in state.paths)
     for path in state.paths:
         for i in np.flatnonzero(path.wet.area[0] > 0):
             subarea = section.subareas[i]
-            x, z = _ground(section, max(subarea.start, path.start), min(subarea.end, path.end))
+            start, end = max(subarea.start, path.start), min(subarea.end, path.end)
+            if compiled and not may_have_shelf(section, path.stage, start, end):
+                continue
+            x, z = _ground(section, start, end)
             if x.size < 2:
                 continue
             share = float(path.wet.conveyance[0, i]) / whole

@@ -13,7 +13,9 @@ from terrain2q.ground.cut_lines import CutLine
 from terrain2q.ground.streams import length_text
 from terrain2q.ground.terrain import Profile, Terrain
 from terrain2q.hydraulics.banks import find_banks
+from terrain2q.hydraulics.many import MANY, can_compile, compiled_banks, compiled_water
 from terrain2q.hydraulics.section import DepthRoughness, Section, Subarea
+from terrain2q.hydraulics.submerged import find_water
 from terrain2q.jobs.slopes import Slopes
 from terrain2q.jobs.submerged import Submerged, drainage_area, with_bed
 from terrain2q.units import UnitSystem
@@ -100,7 +102,9 @@ class SectionInputs:
     composite: str = "divide"
 
 
-def build_sections(lines: Sequence[CutLine], inputs: SectionInputs, progress=None) -> list[BuiltSection]:
+def build_sections(
+    lines: Sequence[CutLine], inputs: SectionInputs, progress=None, compiled: bool | None = None
+) -> list[BuiltSection]:
     """Sample the ground along cut lines and make a section of each.
 
     Parameters
@@ -110,12 +114,16 @@ def build_sections(lines: Sequence[CutLine], inputs: SectionInputs, progress=Non
     inputs : SectionInputs
     progress : callable, optional
         ``progress(done, total, label)``.
+    compiled : bool, optional
+        Whether compiled code looks at the ground; where there are many lines if left out.
 
     Returns
     -------
     list of BuiltSection
         One for each line, in order. A line that gives no section has findings that say why.
     """
+    if compiled is None:
+        compiled = len(lines) >= MANY and can_compile()
     usable = [i for i, line in enumerate(lines) if line.usable]
     sampled = inputs.terrain.sample(
         [np.column_stack([lines[i].x, lines[i].y]) for i in usable], spacing=inputs.spacing
@@ -145,7 +153,7 @@ def build_sections(lines: Sequence[CutLine], inputs: SectionInputs, progress=Non
     ):
         notes[i] += cover_notes
         try:
-            built[i] = _build(lines[i], profile, crossing, cover, interval, inputs, notes[i])
+            built[i] = _build(lines[i], profile, crossing, cover, interval, inputs, notes[i], compiled)
         except Terrain2qError as error:
             notes[i].append(
                 _at(lines[i], profile, Finding("section-failed", error.what, _LAYER, lines[i].section_id))
@@ -238,7 +246,9 @@ def _at(line: CutLine, profile: Profile, finding: Finding) -> Finding:
     return finding.at(profile.x[low], profile.y[low])
 
 
-def _build(line, profile, crossing, cover, interval, inputs: SectionInputs, notes) -> BuiltSection:
+def _build(
+    line, profile, crossing, cover, interval, inputs: SectionInputs, notes, compiled: bool
+) -> BuiltSection:
     answer = inputs.slopes.of(line)
     slope, source = answer.slope, answer.source
     notes += [_at(line, profile, finding) for finding in answer.findings]
@@ -252,7 +262,7 @@ def _build(line, profile, crossing, cover, interval, inputs: SectionInputs, note
         wants_banks = True
     if wants_banks:
         try:
-            banks = find_banks(station, z, origin)
+            banks = (compiled_banks if compiled else find_banks)(station, z, origin)
             interval = (banks.left, banks.right)
         except (NoAnswerError, InputError) as error:
             notes.append(
@@ -260,7 +270,10 @@ def _build(line, profile, crossing, cover, interval, inputs: SectionInputs, note
             )
     divided = interval is not None
     specs = split_by_zone(cover, interval, inputs.channel_n if divided else None)
-    profile, found = with_bed(line, profile, interval, specs, slope, inputs.submerged, inputs.units)
+    profile, found = with_bed(
+        line, profile, interval, specs, slope, inputs.submerged, inputs.units,
+        compiled_water if compiled else find_water,
+    )  # fmt: skip
     notes += found
     section = Section(
         profile.stations,

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -84,6 +84,7 @@ def with_bed(
     slope: float,
     submerged: Submerged | None,
     units: UnitSystem,
+    find: Callable[..., Water | None] = find_water,
 ) -> tuple[Profile, list[Finding]]:
     """Return a section's profile with a bed where the terrain shows water, and what is to know about it.
 
@@ -101,8 +102,10 @@ def with_bed(
         None where the study does not say; the profile then stays as it is.
     units : UnitSystem
         For messages.
+    find : callable
+        What finds the water.
     """
-    water = find_water(profile.stations, profile.elevations, channel)
+    water = find(profile.stations, profile.elevations, channel)
     if water is None:
         if submerged is None:
             return profile, []
