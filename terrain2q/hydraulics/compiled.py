@@ -39,7 +39,7 @@ def _over(top, bottom):
 
 @njit(cache=True)
 def _wet(stage, ground, owner, out):
-    """Fill `out` (area, perimeter, width by subarea) with what is wet at a stage, before it passes a ridge."""
+    """Fill `out` (area, perimeter, width by subarea) with what is wet, before a ridge is passed."""
     low, rise, rate, width, length, threshold = ground
     out[:, :] = 0.0
     for i in range(low.size):
