@@ -163,11 +163,14 @@ def screen_study(
 def write_crossings(
     screened: Screened, layer: geopandas.GeoDataFrame, study: Study, folder: Path
 ) -> list[Path]:
-    """Write ``crossings.csv`` and ``crossings.pdf`` into the output folder; return the files."""
+    """Write the crossings' CSV, their sections and their pages into the output folder; return the files."""
     from terrain2q.output.crossing_panels import write_crossings_pdf
-    from terrain2q.output.crossing_table import write_crossings_csv
+    from terrain2q.output.crossing_table import write_crossing_sections, write_crossings_csv
 
+    crs = screened.inputs.sections.terrain.crs
     files = [write_crossings_csv(folder, layer)]
+    sections = write_crossing_sections(folder, screened.answers, study.system, crs, layer.crs)
+    files += [] if sections is None else [sections]
     if study.crossings.panels:
         files.append(
             write_crossings_pdf(

@@ -103,7 +103,8 @@ def test_rank_goes_by_the_field_named(results):
 
 def test_files_hold_the_same_rows(results):
     names = {f.name for f in results.files}
-    assert {"results.gpkg", "crossings.csv", "crossings.pdf", "run.json"} <= names
+    files = {"results.gpkg", "crossings.csv", "crossings.pdf", "crossing_sections.gpkg", "run.json"}
+    assert files <= names
     layer = geopandas.read_file(results.folder / "results.gpkg", layer="crossings")
     csv = pd.read_csv(results.folder / "crossings.csv")
     assert list(csv.columns) == [*LAYERS["crossings"].columns, "x", "y"]
@@ -117,6 +118,23 @@ def test_files_hold_the_same_rows(results):
     assert pdf.count(b"/Type /Page\n") + pdf.count(b"/Type /Page ") == 5
     assert "3 crossings" in results.summary_text()
     assert len(results.summary()["crossings"]) == 6
+
+
+def test_sections_can_be_run_again_as_cut_lines(folder, results):
+    options = {
+        "cut_lines.path": str(results.folder / "crossing_sections.gpkg|layer=cut_lines"),
+        "cut_lines.id_field": "section_id",
+        "slope.field": "slope",
+        "output.folder": str(folder[0] / "again"),
+        "crossings.panels": 0,
+    }
+    again = run(folder[0] / "study.toml", options)
+    assert len(again.sections) == 6
+    stages = again.design_stages.set_index(["section_id", "event"])["stage"]
+    for row in results.crossings.itertuples():
+        stage = stages[f"{row.crossing_id} approach", row.event] - row.slope * row.approach_distance
+        # the line alone has the noise that the mean of five lines has not
+        assert row.stage == pytest.approx(stage, abs=0.05)
 
 
 def test_feet_and_metres_agree(folder, results):

@@ -497,7 +497,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     road = Road(
         surface.stations, surface.heights, surface.ground, xy[:, 0], xy[:, 1], surface.deck, surface.edges,
         float(np.interp(0.0, surface.stations, surface.offsets)), surface.noise,
-        shapely.transform(own, ground.to_map),
+        shapely.transform(own.simplify(0.5 * ground.cell), ground.to_map),
     )  # fmt: skip
     return _Ready(
         crossing, surface, road, crest, crest_xy, slope, source, bed, edges_at, places, made, storage, water,
@@ -807,9 +807,16 @@ def _answer(ready: _Ready, made: list[BuiltSection], inputs: CrossingInputs, eve
     )
     return CrossingAnswer(
         crossing, ready.road, crest, ready.crest.station, float(ready.crest_xy[0]), float(ready.crest_xy[1]),
-        approach, tailwater, to_road, from_road, slope, ready.slope_source, crest_discharge, probability,
-        first, answered, _once(findings),
+        _light(approach), _light(tailwater), to_road, from_road, slope, ready.slope_source,
+        crest_discharge, probability, first, answered, _once(findings),
     )  # fmt: skip
+
+
+def _light(built: BuiltSection | None) -> BuiltSection | None:
+    """Return a section without what was worked out along the way, as thousands of them are kept."""
+    if built is None or built.section is None:
+        return built
+    return replace(built, section=built.section.reached(()))
 
 
 def _ours(crossing: Crossing, built: BuiltSection, finding: Finding) -> Finding:

@@ -213,7 +213,7 @@ def draw_map(answers: Sequence[CrossingAnswer], inputs: CrossingInputs) -> Figur
         seen.add(label)
         if len(answers) <= 150:
             ax.annotate(
-                f"{answer.rank}  {crossing.crossing_id}" if len(answers) <= 40 else str(answer.rank),
+                f"{answer.rank}  {crossing.crossing_id}" if len(answers) <= 15 else str(answer.rank),
                 (crossing.x, crossing.y), xytext=(6, 5), textcoords="offset points", fontsize=7, color=INK,
                 zorder=6,
             )  # fmt: skip

@@ -16,6 +16,7 @@ from terrain2q.output.whole_file import whole_file
 from terrain2q.units import UnitSystem
 
 CSV_NAME = "crossings.csv"
+SECTIONS_NAME = "crossing_sections.gpkg"
 
 
 def crossings_layer(
@@ -85,4 +86,39 @@ def write_crossings_csv(folder: Path, layer: geopandas.GeoDataFrame) -> Path:
         table[axis] = np.round(values, 2)
     with whole_file(target) as temporary:
         table.to_csv(temporary, index=False, encoding="utf-8", lineterminator="\n")
+    return target
+
+
+def write_crossing_sections(
+    folder: Path, answers: Sequence[CrossingAnswer], units: UnitSystem, terrain_crs, crs
+) -> Path | None:
+    """Write the approach and tailwater sections as cut lines in ``crossing_sections.gpkg``; return the file.
+
+    A study that takes them as its cut lines, and their field `slope`, shows every number of a crossing on its
+    calculation sheets. None where no crossing has a section.
+    """
+    rows: dict[str, list] = {
+        name: []
+        for name in ("section_id", "crossing_id", "stream", "stream_distance", "slope", "slope_source")
+    }
+    lines = []
+    for answer in sorted(answers, key=lambda a: a.rank):
+        for built in (answer.approach, answer.tailwater):
+            if built is None:
+                continue
+            line = built.line
+            values = (
+                line.section_id, answer.crossing.crossing_id, line.stream,
+                line.stream_distance * units.per_si("length"), answer.slope, answer.slope_source,
+            )  # fmt: skip
+            for name, value in zip(rows, values, strict=True):
+                rows[name].append(value)
+            lines.append(shapely.LineString(np.column_stack(to_crs(line.x, line.y, terrain_crs, crs))))
+    if not lines:
+        return None
+    target = Path(folder) / SECTIONS_NAME
+    with whole_file(target) as temporary:
+        geopandas.GeoDataFrame(rows, geometry=lines, crs=crs).to_file(
+            temporary, layer="cut_lines", driver="GPKG", engine="pyogrio"
+        )
     return target
