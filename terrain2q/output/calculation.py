@@ -92,8 +92,8 @@ class Calculation:
         Empty where there is no answer.
     together : tuple of Together
     factor : float
-        What every conveyance was multiplied by, so that stretches of water that share a subarea carry
-        the whole; 1 in nearly all sections.
+        What every conveyance was multiplied by, so that stretches of water that share a subarea, or a
+        composite n, carry what the whole carries; 1 in nearly all sections.
     """
 
     row: Mapping[str, Any]
@@ -157,7 +157,7 @@ def calculate(
     ]
     factor = factors[0] if factors else 1.0
     shared = abs(factor - 1.0) > _SAME and all(abs(f / factor - 1.0) <= _SAME for f in factors)
-    if shared and len({p.stage for p in parts} | {p.number for p in parts}) > 1:
+    if shared and (together or len({p.number for p in parts}) < len(parts)):
         parts = [replace(p, n=p.n_table) for p in parts]
     else:
         factor = 1.0

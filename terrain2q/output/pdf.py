@@ -20,7 +20,8 @@ from fontTools.ttLib import TTFont
 
 _FACES = {"regular": ("DejaVuSans.ttf", "F1"), "bold": ("DejaVuSans-Bold.ttf", "F2")}
 _UNKNOWN = "\ufffd"
-_CACHED = 20_000
+_CACHED = 2_000
+"""Texts kept as glyphs, as many stand on page after page."""
 
 
 @lru_cache

@@ -23,7 +23,7 @@ _HEAD = 30.0
 _SIGN = 44.0
 
 
-@lru_cache(maxsize=8192)
+@lru_cache(maxsize=2048)
 def fitted(text: str, width: float, size: float, face: str = "regular") -> str:
     """Return a text, shortened where it is wider than `width`.
 

@@ -368,7 +368,8 @@ class _Sheets:
         ]
         rows = []
         for part in one.parts:
-            source = ": ".join(text for text in (part.land_class, part.n_source) if text)
+            stated = "n stated in the study" if part.n_source == "study" else part.n_source
+            source = ": ".join(text for text in (part.land_class, stated) if text)
             if source and source not in sources:
                 sources.append(source)
             mark = f"[{sources.index(source) + 1}]" if source else ""
@@ -416,8 +417,8 @@ class _Sheets:
             )
         if one.factor != 1.0:
             sheet.lines(
-                f"Stretches of water here share a subarea: each K is {figures(one.factor, 5)} times what its "
-                "own A and P give, so that together they carry what the whole carries.",
+                "Stretches of water here share a subarea or a composite n: each K is "
+                f"{figures(one.factor, 5)} times what its own A and P give, so that together they carry what the whole carries.",
                 6.8,
             )
 
@@ -629,7 +630,7 @@ class _Sheets:
         crest, stage, free = (float(row[n]) for n in ("crest", "stage", "freeboard"))
         numbers = "–"
         if row["status"] != FAILED and all(math.isfinite(v) for v in (crest, stage, free)):
-            numbers = f"{crest:.2f} − {stage:.2f} = {free:.2f}"
+            numbers = f"{crest:.2f} − {stage:.2f} = {free:.2f}".replace("-", "−")
         return [
             row["event"], figures(float(row["discharge"])), f"{stage:.2f}" if math.isfinite(stage) else "–",
             numbers, figures(float(row["crest_discharge"])), row["verdict"] or "–", row["status"],
