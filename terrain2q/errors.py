@@ -129,7 +129,6 @@ CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
     "n-low-for-slope": Kind(DOUBTFUL, "The roughness is far below what steep streams show", "Raise n, or show from an observed flood that the channel is so smooth."),
     "shelf-undivided": Kind(DOUBTFUL, "A wide shelf shares a subarea with deeper water", "Let a subarea begin at the shelf's edge."),
     "subarea-sliver": Kind(NOTE, "A subarea is a sliver", "Mend the edges of the land cover or the channel polygon there."),
-    "surface-tilts": Kind(NOTE, "Water in a hollow stands lower than in the channel", "Treat the stage behind the bank apart."),
     "hollow-reached": Kind(NOTE, "Water reaches low ground that the section's own ridges cut off", "Look at the map up- and downstream; draw the section so that it meets the low ground, or accept the stage with it."),
     "water-rises-downstream": Kind(DOUBTFUL, "Water rises from one section to the next one downstream", "Check slope and roughness of both sections, or look for backwater, which normal depth does not know."),
     "extent-cut-off": Kind(DOUBTFUL, "The flood extent is cut off where the sections end", "Lengthen the cut lines to high ground, or lay another between them."),

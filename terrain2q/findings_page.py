@@ -547,12 +547,6 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "It means nothing, and each division adds a little conveyance that is not there.",
             "A strip of half a metre where the channel polygon and the land cover do not quite meet.",
         ),
-        "surface-tilts": (
-            "The water in a hollow of this section stands lower than the water in the channel.",
-            "One stage does not describe the section: maps and freeboard behind the bank need the "
-            "hollow's own.",
-            "Fields behind a levee that fill while the channel is bankfull.",
-        ),
         "hollow-reached": (
             "Ground on this section lies lower than the water, and the section's own ridges keep the water "
             "out; "
