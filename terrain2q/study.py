@@ -891,6 +891,8 @@ def _shown(value: object) -> str:
         return f'"{value}"'
     if isinstance(value, dict):
         return ", ".join(f"{name} = {_shown(inner)}" for name, inner in value.items())
+    if isinstance(value, list | tuple):
+        return f"[{', '.join(_shown(inner) for inner in value)}]"
     return str(value)
 
 
