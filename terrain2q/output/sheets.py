@@ -418,7 +418,8 @@ class _Sheets:
         if one.factor != 1.0:
             sheet.lines(
                 "Stretches of water here share a subarea or a composite n: each K is "
-                f"{figures(one.factor, 5)} times what its own A and P give, so that together they carry what the whole carries.",
+                f"{figures(one.factor, 5)} times what its own A and P give, so that together they carry what "
+                "the whole carries.",
                 6.8,
             )
 

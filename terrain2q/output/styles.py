@@ -106,7 +106,7 @@ def layer_style(layer: str, tones: Mapping[str, str]) -> Style:
                 "left floodplain": Symbol(EARTHS[3], width=1.4),
                 "channel": Symbol(water, width=1.8),
                 "right floodplain": Symbol("#6f5a3c", width=1.4, dash=(3.0, 1.2)),
-                "": Symbol(QUIET, width=1.0),
+                "": Symbol(QUIET, width=1.0, dash=(1.0, 0.6)),
             },
             "zone",
             words={"": "not divided"},
@@ -170,7 +170,8 @@ def event_tones(layers: Mapping[str, pd.DataFrame]) -> dict[str, str]:
     ):
         table = layers.get(name)
         if table is not None and len(table):
-            typical = table.groupby("event", sort=False)[measure].median()
+            measured = pd.to_numeric(table[measure], errors="coerce").astype(float)
+            typical = measured.groupby(table["event"], sort=False).median()
             order = sorted(typical.index, key=lambda e: (not np.isfinite(typical[e]), typical[e]))
             return dict(zip(order, water_tones(len(order)), strict=True))
     return {}
