@@ -383,7 +383,9 @@ def test_a_crossing_has_its_sheet(tmp_path):
     assert titles(path)[-2:] == ["Crossings", ["Crossing C-7"]]
     text = text_of(path)
     assert "4.50 − 5.20 = −0.70" in text
-    assert "First event over the road: 100-year" in text
+    assert re.search(r"First event over\s+100-year", text)
+    assert re.search(r"Discharge at crest\s+150.0 m³/s", text)
+    assert "crossing_sections.gpkg" in text
     assert "over the crest" in text
 
 

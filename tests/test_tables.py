@@ -80,6 +80,7 @@ def test_parquet_keeps_geometry_and_meaning(source):
     }
     profile = geopandas.read_parquet(source.folder / "results_sections.parquet").geometry.iloc[0]
     assert profile.has_z
+    assert profile.has_m
 
 
 def test_both_and_none(source):

@@ -230,6 +230,7 @@ class Plan:
 def draw_plan(
     page: Page, left: float, top: float, width: float, height: float, plan: Plan, line: Any,
     length: float, unit: str, *, wet: Any = None, tone: str = WATERS[2], point: Any = None,
+    shown: bool = True,
 ) -> None:  # fmt: skip
     """Draw a piece of map about a cut line, north up, with the water across it and a scale.
 
@@ -250,6 +251,8 @@ def draw_plan(
         Its colour.
     point : shapely.Point, optional
         A crossing to mark.
+    shown : bool
+        Whether the line itself is drawn; where not, it only says what part of the map and its scale.
     """
     bounds = np.array(shapely.bounds(line))
     middle = 0.5 * (bounds[1] + bounds[3])
@@ -275,13 +278,14 @@ def draw_plan(
             if shapely.get_type_id(part) == 1:
                 _polyline(page, part, place, 1.2, WATERS[3])
                 _arrow(page, place(shapely.get_coordinates(part)), WATERS[3])
-    _polyline(page, line, place, 1.3, INK)
+    if shown:
+        _polyline(page, line, place, 1.3, INK)
     if wet is not None and not shapely.is_empty(wet):
         for part in shapely.get_parts(wet):
             _polyline(page, part, place, 3.2, tone)
         _polyline(page, line, place, 0.6, INK)
     ends = place(shapely.get_coordinates(line)[[0, -1]])
-    for text, end, other in (("L", ends[0], ends[1]), ("R", ends[1], ends[0])):
+    for text, end, other in (("L", ends[0], ends[1]), ("R", ends[1], ends[0])) if shown else ():
         away = (end - other) / max(float(np.hypot(*(end - other))), 1e-9)
         page.text(end[0] + 7 * away[0], end[1] + 7 * away[1] - 2.5, text, 7.5, face="bold", align="center")
     if point is not None:

@@ -15,9 +15,10 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+import pyproj
 import shapely
 
-from terrain2q.columns import CAUTION
+from terrain2q.columns import CAUTION, COLUMNS
 from terrain2q.errors import FAILED, InputError
 from terrain2q.ground.layers import read_layer
 from terrain2q.output.calculation import Calculation, Part, area_below, calculate, stretches
@@ -50,6 +51,11 @@ _WORKED = 12
 _SECTION_LAYERS = frozenset(
     {"cut_lines", "sections", "subareas", "ratings", "design_stages", "subarea_flows", "required_widths"}
 )
+
+_CROSSING_NUMBERS = (
+    "tailwater_stage", "road_width_under_water", "largest_depth_on_road", "weir_discharge",
+    "required_opening", "opening_share",
+)  # fmt: skip
 
 _INDEX_FIRST, _INDEX_NEXT, _INDEX_SIZE = 30, 56, 7.0
 
@@ -279,9 +285,6 @@ class _Sheets:
         return Water(one.event, float(one.row["stage"]), pieces, area, tone, stroke(order))
 
     def _facts(self, sheet: Sheet, row: Mapping, found: Sequence[Calculation], point: Any) -> None:
-        height, plan_width = 128.0, 190.0
-        sheet.need(height)
-        top, page = sheet.y, sheet.page
         subareas = self.rows.of("subareas", row["section_id"])
         crs = self.source.crs
         authority = crs.to_authority()
@@ -302,18 +305,28 @@ class _Sheets:
         ]  # fmt: skip
         if self.composite != "divide":
             facts.insert(6, ("n in the channel", f"one composite n, {self.composite}"))
-        y, room = top - 2, sheet.width - plan_width - 94
+        plan = None
+        if _is_line(row["geometry"]):
+            wet = found[0].row.get("geometry") if found and found[0].answered else None
+            tone = self.tones.get(found[0].event, (WATERS[2], 0))[0] if found else WATERS[2]
+            line = shapely.force_2d(row["geometry"])
+            plan = (line, float(row["length"]), wet, max(tone, WATERS[1], key=WATERS.index), point, True)
+        self._fact_list(sheet, facts, plan)
+
+    def _fact_list(self, sheet: Sheet, facts: Sequence[tuple[str, str]], plan: tuple | None) -> None:
+        """Write facts one below the other, and beside them draw a piece of map."""
+        height, plan_width = max(128.0, 12.4 * len(facts) + 8), 190.0
+        sheet.need(height)
+        y, page, room = sheet.y - 2, sheet.page, sheet.width - plan_width - 94
         for word, text in facts:
             y -= 12.4
             page.text(sheet.left, y, word, 7.2, colour=GREY)
             page.text(sheet.left + 80, y, fitted(text, room, 7.4), 7.4, colour=INK)
-        if _is_line(row["geometry"]):
-            wet = found[0].row.get("geometry") if found and found[0].answered else None
-            tone = self.tones.get(found[0].event, (WATERS[2], 0))[0] if found else WATERS[2]
+        if plan is not None:
+            line, length, wet, tone, point, named = plan
             draw_plan(
-                page, sheet.left + sheet.width - plan_width, top, plan_width, height - 6, self.plan,
-                shapely.force_2d(row["geometry"]), float(row["length"]), self.length, wet=wet,
-                tone=max(tone, WATERS[1], key=WATERS.index), point=point,
+                page, sheet.left + sheet.width - plan_width, sheet.y, plan_width, 122.0, self.plan, line,
+                length, self.length, wet=wet, tone=tone, point=point, shown=named,
             )  # fmt: skip
         sheet.space(height)
 
@@ -582,29 +595,24 @@ class _Sheets:
             writer, self.size, f"Crossing {name}", fitted(self.source.name, 260, 8), CAUTION, anchor
         )
         first = max(rows, key=lambda r: r["discharge"] if math.isfinite(r["discharge"]) else -math.inf)
-        sheet.lines(
-            f"Road {first['road'] or 'not named'}, stream {first['stream'] or 'not named'}. "
-            f"Crest (the lowest point of the road over which water would first pass): "
-            f"{self._length(first['crest'])}.",
-            7.6,
-        )
+        self._crossing_facts(sheet, first)
         sheet.title("Verdict by event", keep=50)
         columns = [
             TableColumn("event", "", 80, words=True),
             TableColumn("Q", self.flow, 50),
-            TableColumn("stage", self.length, 50),
+            TableColumn("stage at road", self.length, 60),
             TableColumn("crest − stage = freeboard", self.length, 130),
-            TableColumn("over the crest from", self.flow, 82),
             TableColumn("verdict", "", 110, words=True),
             TableColumn("status", "", 50, words=True),
         ]
         sheet.table(columns, [self._crossing_row(r) for r in rows])
-        over = first.get("first_event_over")
-        if over:
-            sheet.lines(f"First event over the road: {over}.", 7.3)
-        opening = first.get("required_opening", float("nan"))
-        if isinstance(opening, float) and math.isfinite(opening):
-            sheet.lines(f"Clear width required about the channel: {self._length(opening, 1)}.", 7.3)
+        about = [n for n in _CROSSING_NUMBERS if n in first and any(math.isfinite(r[n]) for r in rows)]
+        if about:
+            sheet.title("Water on the road and the opening it needs", keep=50)
+            columns = [TableColumn("event", "", 80, words=True)] + [
+                TableColumn(COLUMNS[n].title, self._unit(n), 30 + 3.2 * len(COLUMNS[n].title)) for n in about
+            ]
+            sheet.table(columns, [[r["event"], *(_shown(n, float(r[n])) for n in about)] for r in rows])
         section = self._section_of(name, first)
         found: list[Calculation] = []
         if section is not None:
@@ -614,7 +622,12 @@ class _Sheets:
                 sheet, section, found, {"crest of the road": float(first["crest"])}, first.get("geometry")
             )
         else:
-            sheet.lines("The results have no section of this crossing's name; see the findings.", 7.3)
+            sheet.lines(
+                "The stage at the road is carried from the section above it (the approach), worked out by "
+                "itself. Its cut line is in crossing_sections.gpkg: a run with that file as [cut_lines] "
+                "gives the section a sheet on which its stage can be followed.",
+                7.3,
+            )
         findings = self.findings.get((False, name), [])
         self._findings(sheet, findings)
         sheet.sign()
@@ -622,6 +635,42 @@ class _Sheets:
         statuses = {r["status"] for r in rows}
         entry.status = next((s for s in ("failed", "doubtful", "ok") if s in statuses), entry.status)
         return sheet, entry
+
+    def _crossing_facts(self, sheet: Sheet, row: Mapping) -> None:
+        """Write where the crossing is, and draw a piece of map about it."""
+        facts = [
+            ("Road", row["road"] or "not named"),
+            ("Stream", row["stream"] or "not named"),
+            ("Crest", f"{self._length(row['crest'])}, where water would first pass the road"),
+            ("First event over", row["first_event_over"] or "none"),
+            ("Discharge at crest", f"{figures(float(row['crest_discharge']))} {self.flow}"),
+        ]
+        for word, name, where in (
+            ("Crest from stream", "overflow_station", "along the road, positive to the right"),
+            ("Approach section", "approach_distance", "above the road"),
+        ):
+            if name in row and math.isfinite(row[name]):
+                facts.append((word, f"{self._length(row[name], 1)} {where}"))
+        if "slope" in row and math.isfinite(row["slope"]):
+            facts.append(("Slope", figures(row["slope"], 4)))
+        if math.isfinite(row.get("rank", float("nan"))):
+            facts.append(("Rank", f"{int(row['rank'])} of {len(self.crossings)}"))
+        point = row.get("geometry")
+        line, length = (None, 0.0) if point is None else self._about(point)
+        self._fact_list(sheet, facts, None if line is None else (line, length, None, WATERS[2], point, False))
+
+    def _about(self, point: Any) -> tuple[shapely.LineString, float]:
+        """Return a line through a point, west to east, about 300 m long, and its length on the ground."""
+        crs, (x, y) = self.source.crs, shapely.get_coordinates(point)[0]
+        reach = 150.0 / (111_000.0 if crs.is_geographic else crs.axis_info[0].unit_conversion_factor)
+        ends = np.array([[x - reach, y], [x + reach, y]])
+        there = pyproj.Transformer.from_crs(crs, crs.geodetic_crs, always_xy=True).transform(*ends.T)
+        metres = crs.get_geod().inv(there[0][0], there[1][0], there[0][1], there[1][1])[2]
+        return shapely.LineString(ends), metres * self.units.per_si("length")
+
+    def _unit(self, column: str) -> str:
+        unit = self.units.symbol(COLUMNS[column].quantity)
+        return "" if unit == "1" else unit
 
     def _section_of(self, name: str, row: Mapping) -> str | None:
         wanted = row.get("section_id") or name
@@ -634,7 +683,7 @@ class _Sheets:
             numbers = f"{crest:.2f} − {stage:.2f} = {free:.2f}".replace("-", "−")
         return [
             row["event"], figures(float(row["discharge"])), f"{stage:.2f}" if math.isfinite(stage) else "–",
-            numbers, figures(float(row["crest_discharge"])), row["verdict"] or "–", row["status"],
+            numbers, row["verdict"] or "–", row["status"],
         ]  # fmt: skip
 
     # --- the index --------------------------------------------------------------------------------
@@ -701,6 +750,11 @@ class _Sheets:
 
         rows = [[e.title, e.about, e.status, str(e.findings), e.stage, str(e.page)] for e in entries]
         sheet.table(columns, rows, size=_INDEX_SIZE, on_row=link)
+
+
+def _shown(column: str, value: float) -> str:
+    """Return a number with four figures, a level of water with two decimals."""
+    return f"{value:.2f}" if column.endswith("stage") and math.isfinite(value) else figures(value)
 
 
 def _is_line(geometry: Any) -> bool:
