@@ -145,7 +145,7 @@ CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
     "crest-at-end": Kind(DOUBTFUL, "A road goes on falling where the search for its crest ends", "Look along the road; set `reach` under [crossings] to a larger distance."),
     "crest-survey-differs": Kind(DOUBTFUL, "The surveyed crest differs from the one in the ground; the surveyed one was used", "Check the survey, its datum and its unit."),
     "overflow-aside": Kind(NOTE, "Water would first pass the road away from the stream", "Look at the place; a sag aside decides when the road is closed."),
-    "section-cut-by-road": Kind(DOUBTFUL, "A road's fill ends a section before high ground", "Draw a section there by hand; the one laid out is too narrow."),
+    "section-cut-by-road": Kind(DOUBTFUL, "No place for a section is clear of the fills of roads", "Draw a section there by hand, from high ground to high ground."),
     "no-opening-passes": Kind(NOTE, "No opening within the section passes the event below the stage allowed", "Nothing; the whole valley is not enough at that stage."),
     "weir-drowned": Kind(NOTE, "The tailwater stands above the crest, so the weir's flow is too high", "Use the flow over the road as an upper bound."),
     "backwater": Kind(DOUBTFUL, "Water downstream may hold the stage up", "Find the stage of the water downstream and take the higher one."),

@@ -656,10 +656,10 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "A road 1.3 m lower 120 m from its bridge.",
         ),
         "section-cut-by-road": (
-            "No line square to the stream within the search is clear of the fill over the width it needs, "
-            "so that the "
-            "section ends at the fill.",
-            "The section is narrower than the valley and its stage too high.",
+            "No line square to the stream within the search is clear of the fills of roads over the width it "
+            "needs. The section ends at the fill; or, where other roads leave no room at all, it runs over "
+            "theirs.",
+            "A section narrower than the valley has a stage too high; one over a fill has too little room.",
             "A road that crosses a wide floodplain at a small angle.",
         ),
         "no-opening-passes": (

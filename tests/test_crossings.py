@@ -22,6 +22,7 @@ from terrain2q.ground.roads import RoadNetwork, crossings_from_points, crossings
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
 from terrain2q.hydraulics.weir import greatest_coefficient, road_overflow, weir_discharge, wetted_road
+from terrain2q.jobs import crossings as crossing_job
 from terrain2q.jobs.crossings import CrossingInputs, _probability, ranked, screen_crossings
 from terrain2q.jobs.sections import SectionInputs
 from terrain2q.jobs.slopes import OneSlope
@@ -387,6 +388,30 @@ def test_one_bad_crossing_stops_nothing(county):
         assert [e.event for e in answer.events] == list(EVENTS)
         assert answer.rank > 2
     assert found[1].crest == answers[0].crest
+
+
+def test_a_section_that_breaks_takes_no_other_with_it(county, monkeypatch):
+    _, inputs, answers = county
+    plain = crossing_job.build_sections
+
+    def build(lines, *more):
+        if any(line.section_id.startswith(answers[1].crossing.crossing_id) for line in lines):
+            raise ValueError("no section")
+        return plain(lines, *more)
+
+    monkeypatch.setattr(crossing_job, "build_sections", build)
+    found = screen_crossings(replace(inputs, crossings=[answers[k].crossing for k in (0, 1, 2)]))
+    assert [a.status == "failed" for a in found] == [False, True, False]
+    assert any(f.code == "crossing-failed" and "no section" in f.message for f in found[1].findings)
+
+
+def test_streets_all_around_leave_a_doubtful_section(tmp_path):
+    valley, inputs = one_valley(tmp_path, crest=2.0)
+    x = valley.centre - WEST
+    rows = {f"Street_{k}": [(x - 90.0, -20.0 - 22.0 * k), (x + 90.0, -20.0 - 22.0 * k)] for k in range(16)}
+    (answer,) = screen_crossings(replace(inputs, roads=RoadNetwork(lines(**rows))))
+    assert answer.status == "doubtful"
+    assert any(f.code == "section-cut-by-road" and "other roads" in f.message for f in answer.findings)
 
 
 def test_rank_rule_can_be_changed(county):

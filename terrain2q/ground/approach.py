@@ -18,6 +18,9 @@ from terrain2q.ground.streams import StreamNetwork
 SWATH = 8.0
 """Metres to each side of the stream line within which its bed is looked for."""
 
+LEAST_CELLS = 4
+"""Cells that a section must be wide at the least."""
+
 LOW_SHARE = 0.3
 """Share of the ground across the swath whose mean is the bed: one cell alone is noise."""
 
@@ -309,13 +312,16 @@ def place_section(
             continue
         level = top - slope * (at - start)
         left, right = _high_ends(z, middle, level)
+        if right - left < LEAST_CELLS:
+            # the stream line runs over ground as high as that: no valley to be seen
+            continue
         ends = [point + across * t[left], point + across * t[right]]
         line = shapely.LineString([ends[0], point, ends[1]])
         if not closed.intersects(line):
             return SectionPlace(float(at), np.array([ends[0], point, ends[1]]), False)
         rest = line.difference(closed)
         own = min(shapely.get_parts(rest), key=lambda p: p.distance(shapely.Point(point)))
-        if best is None or own.length > best[0]:
+        if own.length > LEAST_CELLS * step and (best is None or own.length > best[0]):
             xy = shapely.get_coordinates(own)
             best = own.length, SectionPlace(float(at), np.array([xy[0], point, xy[-1]]), True)
     return None if best is None else best[1]

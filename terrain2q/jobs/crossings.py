@@ -340,23 +340,39 @@ def screen_crossings(inputs: CrossingInputs, progress: Callable | None = None) -
                 prepared[i] = _prepare(crossings[i], inputs, courses)
             except _EXPECTED as error:
                 answers[i] = _failed(crossings[i], events, _reason(error))
-        lines = [line for p in prepared.values() for line in p.lines]
         own = replace(
             inputs.sections,
             terrain=_Strips(inputs.sections.terrain),
             slopes=_AttributeSlopes(),
             area_field=None,
         )
-        built = dict(zip((id(line) for line in lines), build_sections(lines, own), strict=True))
-        for i, ready in prepared.items():
+        for i, made in _sections_of(prepared, own).items():
             try:
-                made = [built[id(line)] for line in ready.lines]
-                answers[i] = _answer(ready, made, inputs, events)
+                if isinstance(made, Exception):
+                    raise made
+                answers[i] = _answer(prepared[i], made, inputs, events)
             except _EXPECTED as error:
-                answers[i] = _failed(crossings[i], events, _reason(error), ready.findings)
+                answers[i] = _failed(crossings[i], events, _reason(error), prepared[i].findings)
         if progress is not None:
             progress(min(start + BATCH, len(order)), len(order), "crossings")
     return ranked([a for a in answers if a is not None], inputs.rank)
+
+
+def _sections_of(prepared: Mapping[int, _Ready], inputs: SectionInputs) -> dict:
+    """Return the sections of each crossing, or the exception that kept it from having any."""
+    lines = [line for ready in prepared.values() for line in ready.lines]
+    try:
+        together = iter(build_sections(lines, inputs))
+        return {i: [next(together) for _ in ready.lines] for i, ready in prepared.items()}
+    except _EXPECTED:
+        # one of them is to blame: each by itself
+        found = {}
+        for i, ready in prepared.items():
+            try:
+                found[i] = build_sections(ready.lines, inputs)
+            except _EXPECTED as error:
+                found[i] = error
+        return found
 
 
 _EXPECTED = (Terrain2qError, ArithmeticError, ValueError, IndexError, shapely.errors.GEOSException)
@@ -450,13 +466,27 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     crest, surface = _surveyed(crossing, inputs, crest, surface, findings)
     low = bed.near(edges_at[0])
     top = crest.height + max(CLEAR_ABOVE, crest.height - low)
-    places = [
-        place_section(
-            ground, stream, start, up, fills, top=top + (slope * abs(edges_at[0] - start) if up else 0.0),
-            slope=slope, half_width=HALF_SECTION, farthest=FARTHEST, clear=(STRIP + 2) * ground.cell,
+    places, over = [], []
+    for start, up in zip(fill_at, (True, False), strict=True):
+        # streets may leave no room at all: then clear of its own road at least
+        level = top + (slope * abs(edges_at[0] - start) if up else 0.0)
+        for avoided in (fills, own):
+            place = place_section(
+                ground, stream, start, up, avoided, top=level, slope=slope, half_width=HALF_SECTION,
+                farthest=FARTHEST, clear=(STRIP + 2) * ground.cell,
+            )  # fmt: skip
+            if place is not None:
+                break
+        places.append(place)
+        if place is not None and avoided is own and fills is not own:
+            over.append("approach" if up else "tailwater")
+    if over:
+        findings.append(
+            crossing.finding(
+                "section-cut-by-road",
+                f"the {' and the '.join(over)} section could not be kept clear of the fills of other roads",
+            )
         )
-        for start, up in zip(fill_at, (True, False), strict=True)
-    ]  # fmt: skip
     if places[0] is None:
         raise NoAnswerError("there is no place for an approach section upstream", where=crossing.crossing_id)
     cut = [
@@ -722,6 +752,9 @@ def _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, fi
     doubts = []
     if surface.noise > 0.1:
         doubts.append(f"the ground across the road is uneven by {text(surface.noise)}")
+    near = np.abs(surface.stations) <= 50.0
+    if np.abs(surface.offsets[near]).max(initial=0.0) > inputs.search - 1.5 * ground.cell:
+        doubts.append(f"it lies at the edge of the search, {text(inputs.search)} from its drawn line")
     if surface.crossfall > 0.1:
         doubts.append(f"it slopes {100 * surface.crossfall:.0f} % across")
     if ground.cell > 0.5 * inputs.road_width:

@@ -491,7 +491,7 @@ def _draw_rating(answer: CrossingAnswer, units: UnitSystem, ax: Axes) -> None:
     plot_rating(
         rating,
         events={e.event: e.values["discharge"] * flow for e in known},
-        marks={"crest": answer.crest * length},
+        marks={"crest": answer.crest * length} if answer.crest + lift > low else None,
         units=units.name,
         ax=ax,
         title="Rating at the road",
