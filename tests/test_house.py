@@ -26,8 +26,9 @@ MAY_IMPORT = {
     "output": {"errors", "units", "columns", "ground", "hydraulics", "jobs"},
     "laying_out": {"errors", "units", "study", "ground", "output"},
     "screening": {"errors", "flows", "study", "ground", "hydraulics", "jobs", "output"},
-    "process": {"errors", "units", "columns", "flows", "study", "ground", "hydraulics", "jobs", "output",
-                "roughness_tables", "laying_out", "screening"},
+    "batches": {"errors", "units", "columns", "flows", "ground", "hydraulics", "jobs", "output"},
+    "process": {"batches", "errors", "units", "columns", "flows", "study", "ground", "hydraulics", "jobs",
+                "output", "roughness_tables", "laying_out", "screening"},
     "commands": {"errors", "units", "columns", "study", "flows", "start", "process", "roughness_tables",
                  "output", "laying_out"},
 }  # fmt: skip

@@ -104,6 +104,10 @@ class RoughnessTable:
     source: str = ""
     findings: tuple[Finding, ...] = ()
 
+    def __reduce__(self):
+        # a mapping that cannot be changed cannot be pickled either
+        return RoughnessTable, (dict(self.rows), self.source, self.findings)
+
     def __getitem__(self, land_class: object) -> Roughness:
         return self.rows[clean_text(land_class)]
 

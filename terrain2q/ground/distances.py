@@ -163,6 +163,10 @@ class GroundDistances:
     def __repr__(self) -> str:
         return f"GroundDistances({self.crs.name!r})"
 
+    def __reduce__(self):
+        # made anew from the CRS: an ellipsoid that is pickled loses its last digits
+        return GroundDistances, (self.crs,)
+
     def _longitude_latitude(self, x: np.ndarray, y: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return radians; infinite where the projection has no such place."""
         if self._to_geographic is not None and x.size:

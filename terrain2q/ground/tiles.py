@@ -45,6 +45,9 @@ IMPOSSIBLE = 1e30
 CHUNK_CELLS = 2**18
 """Strips of rows are read together up to about this many cells."""
 
+MOST_THREADS = 16
+"""Threads that read at once at most; 1 where several processes share a machine."""
+
 MEMORY = 2**30
 """Bytes of decoded blocks that all threads together may hold; one block is held in any case."""
 
@@ -681,7 +684,7 @@ class _Gathering:
                 serve(*job)
 
         largest = max(tile.chunk_rows * tile.chunk_columns * tile.dtype.itemsize for tile in mosaic.tiles)
-        workers = max(1, min(os.cpu_count() or 1, 16, len(jobs) // 2, MEMORY // largest))
+        workers = max(1, min(os.cpu_count() or 1, MOST_THREADS, len(jobs) // 2, MEMORY // largest))
         if workers == 1:
             serve_all(jobs)
             return

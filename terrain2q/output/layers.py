@@ -102,7 +102,7 @@ def make_layers(
         "design_stages": _design_stages(answers, placed, units, crs),
         "subarea_flows": _subarea_flows(answers, units),
         **on_map,
-        "findings": _findings(findings, terrain_crs, crs),
+        "findings": findings_layer(findings, terrain_crs, crs),
     }
 
 
@@ -183,7 +183,9 @@ def _ratings(answers, units: UnitSystem):
     names = LAYERS["ratings"].columns
     if not rated:
         return table_in_units("ratings", {name: [] for name in names}, units)
-    return table_in_units("ratings", {name: np.concatenate([r[name] for r in rated]) for name in names}, units)
+    return table_in_units(
+        "ratings", {name: np.concatenate([r[name] for r in rated]) for name in names}, units
+    )
 
 
 def _design_stages(answers, placed: _Projected, units: UnitSystem, crs):
@@ -240,7 +242,8 @@ def _floods(floods: Sequence[EventExtent], units: UnitSystem, terrain_crs, crs) 
     }
 
 
-def _findings(findings: Sequence[Finding], terrain_crs, crs):
+def findings_layer(findings: Sequence[Finding], terrain_crs, crs) -> geopandas.GeoDataFrame:
+    """Return the layer of findings, their places brought into the output's CRS."""
     rows = {name: [getattr(f, name) for f in findings] for name in LAYERS["findings"].columns}
     x, y = np.array([f.x for f in findings], dtype=float), np.array([f.y for f in findings], dtype=float)
     known = np.isfinite(x) & np.isfinite(y)

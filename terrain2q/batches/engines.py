@@ -1,0 +1,180 @@
+"""Who works on the batches: this process, several on this machine, or a Dask cluster.
+
+Each gives the parts as they come, in any order; what they hold is the same.
+"""
+
+from __future__ import annotations
+
+import os
+import pickle
+import subprocess
+import sys
+import threading
+from collections.abc import Iterator, Sequence
+from concurrent.futures import FIRST_COMPLETED, ThreadPoolExecutor, wait
+from contextlib import contextmanager
+
+from terrain2q.batches.work import Part, Work, answer_batch, one_thread_each
+from terrain2q.errors import InputError, Terrain2qError
+from terrain2q.ground.cut_lines import CutLine
+
+Batch = tuple[int, Sequence[CutLine], Sequence[int]]
+"""Number of a batch, its lines, and their places among all lines."""
+
+
+def serial(work: Work, batches: Sequence[Batch]) -> Iterator[tuple[int, Part]]:
+    """Work on one batch after another in this process."""
+    for number, lines, places in batches:
+        yield number, answer_batch(work, lines, places)
+
+
+# --- processes ----------------------------------------------------------------------------------------
+
+
+class _Worker:
+    """Another Python that answers batches through its pipes.
+
+    It starts nothing of the program that called us, unlike a process of `multiprocessing`, so that a script
+    needs no guard about its own main part; and it ends when its pipe does.
+    """
+
+    def __init__(self) -> None:
+        path = [p for p in sys.path if p]
+        environment = {**os.environ, "PYTHONPATH": os.pathsep.join(path)}
+        for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
+            environment.setdefault(name, "1")
+        self._process = subprocess.Popen(
+            [sys.executable, "-m", "terrain2q.batches.engines"],
+            stdin=subprocess.PIPE, stdout=subprocess.PIPE, env=environment,
+        )  # fmt: skip
+
+    def send(self, message: bytes) -> None:
+        self._process.stdin.write(message)
+        self._process.stdin.flush()
+
+    def answer(self, batch: Batch) -> Part:
+        try:
+            self.send(pickle.dumps(batch, protocol=5))
+            part = pickle.load(self._process.stdout)
+        except (EOFError, OSError, pickle.UnpicklingError) as error:
+            raise RuntimeError(
+                f"a worker process ended in the middle of its work (exit code {self._process.poll()}); "
+                "run again to go on, with a smaller --jobs where memory is short"
+            ) from error
+        if isinstance(part, BaseException):
+            raise part
+        return part
+
+    def close(self) -> None:
+        self._process.stdin.close()
+        self._process.stdout.close()
+        self._process.kill()
+        self._process.wait()
+
+
+def processes(work: Work, batches: Sequence[Batch], jobs: int) -> Iterator[tuple[int, Part]]:
+    """Work on several batches at once, each in a process of its own."""
+    message = pickle.dumps(work, protocol=5)
+    workers: list[_Worker] = []
+    mine = threading.local()
+
+    def begin() -> None:
+        mine.worker = _Worker()
+        workers.append(mine.worker)
+        mine.worker.send(message)
+
+    def one(batch: Batch) -> tuple[int, Part]:
+        return batch[0], mine.worker.answer(batch)
+
+    pool = ThreadPoolExecutor(min(jobs, len(batches)), initializer=begin)
+    try:
+        waiting = iter(batches)
+        # few are asked for ahead, so that parts do not pile up where they are taken slowly
+        asked = {pool.submit(one, batch) for _, batch in zip(range(2 * jobs), waiting, strict=False)}
+        while asked:
+            done, asked = wait(asked, return_when=FIRST_COMPLETED)
+            for future in done:
+                following = next(waiting, None)
+                if following is not None:
+                    asked.add(pool.submit(one, following))
+                yield future.result()
+    finally:
+        for worker in workers:
+            worker.close()
+        pool.shutdown(cancel_futures=True)
+
+
+def _serve() -> None:
+    """Answer batches from stdin to stdout until there are no more."""
+    source, target = sys.stdin.buffer, os.fdopen(os.dup(sys.stdout.fileno()), "wb")
+    # what libraries print must not get between the parts
+    os.dup2(sys.stderr.fileno(), sys.stdout.fileno())
+    one_thread_each()
+    work = pickle.load(source)
+    while True:
+        try:
+            _, lines, places = pickle.load(source)
+        except EOFError:
+            return
+        try:
+            answer: object = answer_batch(work, lines, places)
+        except Terrain2qError as error:
+            answer = error
+        except Exception as error:
+            error.add_note("in a worker process")
+            answer = error
+        pickle.dump(answer, target, protocol=5)
+        target.flush()
+
+
+# --- a cluster ----------------------------------------------------------------------------------------
+
+
+def cluster(work: Work, batches: Sequence[Batch], address: str) -> Iterator[tuple[int, Part]]:
+    """Work on a Dask cluster; a batch whose worker dies is given to another.
+
+    Raises
+    ------
+    InputError
+        ``library-missing`` where Dask is not installed, ``scheduler-unreachable`` where nobody answers.
+    """
+    with _client(address) as client:
+        from distributed import as_completed
+
+        shared = client.scatter(work, broadcast=True)
+        futures = {
+            client.submit(answer_batch, shared, lines, places, pure=False, retries=3): number
+            for number, lines, places in batches
+        }
+        for future in as_completed(list(futures)):
+            number = futures.pop(future)
+            part = future.result()
+            future.release()  # the cluster need not hold what has been taken
+            yield number, part
+
+
+@contextmanager
+def _client(address: str):
+    try:
+        from distributed import Client
+    except ImportError as error:
+        raise InputError(
+            "library-missing",
+            "a cluster needs Dask, which is not installed",
+            where="--scheduler",
+            fix='install it with: pip install "terrain2q[cluster]"',
+        ) from error
+    try:
+        client = Client(address, timeout=10, set_as_default=False)
+    except (OSError, TimeoutError, ValueError) as error:
+        raise InputError(
+            "scheduler-unreachable", f"no scheduler answers at {address}: {error}", where="--scheduler"
+        ) from error
+    try:
+        yield client
+    finally:
+        client.close()
+
+
+if __name__ == "__main__":
+    _serve()
