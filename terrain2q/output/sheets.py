@@ -52,6 +52,9 @@ _SECTION_LAYERS = frozenset(
     {"cut_lines", "sections", "subareas", "ratings", "design_stages", "subarea_flows", "required_widths"}
 )
 
+_ROW, _UNBROKEN = 10.6, 14
+"""Height of a row of a table in points, and rows of a table that stays on one page."""
+
 _CROSSING_NUMBERS = (
     "tailwater_stage", "road_width_under_water", "largest_depth_on_road", "weir_discharge",
     "required_opening", "opening_share",
@@ -346,7 +349,7 @@ class _Sheets:
             f"{one.event}: Q = {figures(row['discharge'])} {self.flow}, stage found "
             f"{self._length(row['stage'])}, depth {self._length(row['depth'])}",
             f"status: {row['status']}",
-            keep=60 if first else 45,
+            keep=30 + _ROW * (min(len(one.parts), _UNBROKEN) + 2),  # a short table is not broken,
         )
         sources = self._table(sheet, one, first)
         if first:
