@@ -56,6 +56,7 @@ CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
     "section-unknown": Kind(ERROR, "No cut line has the id that a table names", "Correct the id, or take the row away."),
     "table-unknown": Kind(ERROR, "No built-in table has this name", "`terrain2q tables` lists them."),
     "library-missing": Kind(ERROR, "A library that is asked for is not installed", "Install what the message names, or ask for another kind of file."),
+    "scheduler-unreachable": Kind(ERROR, "No scheduler answers at the address", "Start the cluster, or correct the address; without --scheduler this machine does the work."),
     "number-not-positive": Kind(ERROR, "A roughness, slope or discharge is not above zero", "Give a number above zero."),
     "station-decreases": Kind(ERROR, "Stations of a section decrease", "Give the points from left to right; two equal stations make a vertical face."),
     "profile-too-short": Kind(ERROR, "A section has no width", "Give at least two points at different stations."),

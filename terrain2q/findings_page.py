@@ -146,6 +146,11 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "It is found before any work, so that no long run ends without its files.",
             '`tables = "parquet"` under [output] where pyarrow is not installed.',
         ),
+        "scheduler-unreachable": (
+            "--scheduler names a Dask scheduler, and nothing answers there.",
+            "It is found before a section is worked on; parts that were finished earlier are kept.",
+            "`--scheduler tcp://10.0.0.5:8786` before the cluster is started.",
+        ),
         "number-not-positive": (
             "A roughness, a slope or a discharge is zero or negative where the equation needs a number "
             "above zero.",

@@ -359,3 +359,11 @@ def test_a_study_turns_its_streams(tmp_path):
     np.testing.assert_array_equal(up.sections["stream_distance"], right.sections["stream_distance"])
     for one, other in zip(up.sections.geometry, right.sections.geometry, strict=True):
         assert one.equals_exact(other)
+
+
+def test_compiled_path_is_that_of_the_arrays():
+    random = np.random.default_rng(8)
+    for digits in (1, 6):  # many equal costs, and none
+        rows = random.normal(0.0, 0.3, (6000, 21)).cumsum(axis=0).round(digits) / 10
+        rows[random.random(rows.shape) < 0.01] = np.nan
+        np.testing.assert_array_equal(lowest_path(rows), lowest_path(rows, compiled=False))

@@ -1,1 +1,1 @@
-"""Many sections in batches: planned along the raster, answered one by one or together, kept when interrupted."""
+"""Many sections in batches: planned along the raster, answered together, kept when interrupted."""

@@ -1,4 +1,4 @@
-"""The unit of work: neighbouring cut lines become the rows of the results, by one function without side effects.
+"""The unit of work: neighbouring cut lines become rows of the results, by one function without side effects.
 
 How the lines are cut into batches depends on the lines alone, never on who works on them, so that one
 process, many, and a cluster give the same bytes.

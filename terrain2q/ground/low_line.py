@@ -22,7 +22,7 @@ from __future__ import annotations
 
 from collections.abc import Collection
 from dataclasses import dataclass, field
-from functools import cached_property
+from functools import cache, cached_property
 
 import geopandas
 import numpy as np
@@ -60,6 +60,9 @@ CLEAR_FALL, AGREEING = 2.0, 0.9
 """Metres of fall, and share of pairs of points that agree, that tell it even where the profile is bent."""
 
 _LAYER = "streams"
+
+_MANY_ROWS = 5000
+"""Rows of ground from which on compiled code is worth its loading."""
 
 
 @dataclass(frozen=True)
@@ -131,7 +134,16 @@ class LowLine:
 # ---- arrays ---------------------------------------------------------------------------------------
 
 
-def lowest_path(rows: np.ndarray, side_cost: float = SIDE_COST) -> np.ndarray:
+@cache
+def _can_compile() -> bool:
+    try:
+        import numba  # noqa: F401
+    except ImportError:
+        return False
+    return True
+
+
+def lowest_path(rows: np.ndarray, side_cost: float = SIDE_COST, compiled: bool | None = None) -> np.ndarray:
     """Return the column of the path of least cost through rows of ground.
 
     Parameters
@@ -140,6 +152,8 @@ def lowest_path(rows: np.ndarray, side_cost: float = SIDE_COST) -> np.ndarray:
         Ground at m places square to the stream, m odd with the drawn line in the middle; NaN for gaps.
     side_cost : float
         Cost of moving by one column from one row to the next, m. A path moves by one column at most.
+    compiled : bool, optional
+        False keeps to arrays also where there are many rows.
 
     Returns
     -------
@@ -153,6 +167,10 @@ def lowest_path(rows: np.ndarray, side_cost: float = SIDE_COST) -> np.ndarray:
     cost = np.where(known, np.minimum(rows - np.where(np.isfinite(least), least, 0.0), HIGH_COST), HIGH_COST)
     # On level ground the path stays at the drawn line.
     cost += 1e-3 * np.abs(np.arange(places) - places // 2)
+    if count >= _MANY_ROWS and compiled is not False and _can_compile():
+        from terrain2q.ground.compiled_path import cheapest_path
+
+        return cheapest_path(cost, side_cost)
     came = np.zeros((count, places), dtype=np.int8)
     total = cost[0]
     choices = np.full((3, places), np.inf)

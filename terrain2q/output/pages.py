@@ -36,6 +36,10 @@ def write_pages(folder: str | os.PathLike, asked: Mapping[str, Any] | None = Non
     OutputError
         A file cannot be written.
     """
+    if asked is not None and not asked.get("report", True) and not {
+        asked.get("sheets", FLAGGED), asked.get("tables", NONE)
+    } - {NONE}:  # fmt: skip
+        return []  # nothing to read the layers for
     source = read_folder(folder)
     if asked is None:
         sheets = source.settings.get("output", {}).get("sheets", NONE)
