@@ -103,14 +103,14 @@ class Joins:
 
     def add(self, wet: np.ndarray) -> tuple[np.ndarray, int]:
         """Label the wet cells of the next strip; return labels (0 dry) and the number of the first patch."""
-        labels, count = ndimage.label(wet)
+        labels, count = ndimage.label(wet) if wet.any() else (np.zeros(wet.shape, dtype=np.int32), 0)
         first = self._count
         if self._last is not None and count:
             above, below = self._last, labels[0]
             touch = (above > 0) & (below > 0)
             pairs = np.column_stack([above[touch] - 1, below[touch] - 1 + first])
             self._pairs.append(np.unique(pairs, axis=0))
-        self._sizes.append(np.bincount(labels.ravel(), minlength=count + 1)[1:])
+        self._sizes.append(np.bincount(labels.ravel())[1:] if count else np.zeros(0, dtype=np.int64))
         self._first.append(first)
         self._count += count
         last = labels[-1].astype(np.int64)

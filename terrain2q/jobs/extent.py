@@ -103,13 +103,18 @@ class EventExtent:
 
     def depth(self, row: int, end: int) -> np.ndarray:
         """Return depths of rows `row` to `end` of the map, m, NaN where dry; float32."""
+        joined = self._state.read(row, end) == JOINED
+        if not joined.any():
+            return np.full(joined.shape, np.nan, dtype=np.float32)
         values = self._depth.read(row, end)
-        values[self._state.read(row, end) != JOINED] = np.nan
+        values[~joined] = np.nan
         return values
 
     def depth_velocity(self, row: int, end: int) -> np.ndarray:
         """Return depth times velocity of rows `row` to `end`, m²/s, NaN where dry; float32."""
-        return self.depth(row, end) * self._velocity.read(row, end)
+        values = self.depth(row, end)
+        values *= self._velocity.read(row, end)
+        return values
 
     def close(self) -> None:
         """Give the room on the disk back; depths cannot be read any more."""

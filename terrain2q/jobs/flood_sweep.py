@@ -28,6 +28,9 @@ JOINED, LOW = 3, 4
 MADE_AHEAD = 2
 """Strips made at once; more would take more memory."""
 
+HALO = 3
+"""Rows of the strips beside it that a strip's outlines look at."""
+
 
 class Sweep:
     """One event over the whole window: depth, velocity and state of every cell, a strip of rows at a time."""
@@ -41,6 +44,7 @@ class Sweep:
         self.joins = Joins()
         self.region = shapely.union_all([p.reach.polygon for p in pieces])
         self.largest = {JOINED: float("nan"), LOW: float("nan")}
+        self._wet_strips: set[int] = set()
 
     def close(self) -> None:
         """Give the room on the disk back."""
@@ -56,12 +60,12 @@ class Sweep:
         inside = ((asked >= 0) & (asked < (frame.rows, frame.columns))).all(axis=1)
         patches = []
         asked_patch = np.full(len(asked), -1, dtype=np.int64)
-        for (row, end), (depth, speed, state) in self._ahead(frame.strips()):
-            wet = (state == INSIDE) & (depth > 0)
-            labels, first = self.joins.add(wet)
-            self.depth.write(row, depth)
-            self.velocity.write(row, speed)
-            self.state.write(row, state)
+        for number, ((row, end), (depth, speed, state)) in enumerate(self._ahead(frame.strips())):
+            labels, first = self.joins.add((state == INSIDE) & (depth > 0))
+            some = labels.any()
+            self._keep(number, row, depth, speed, state, some)
+            if not some:
+                continue
             mine = seeds[(seeds[:, 0] >= row) & (seeds[:, 0] < end)]
             found = labels[mine[:, 0] - row, mine[:, 1]]
             patches.append(np.unique(found[found > 0]) - 1 + first)
@@ -73,6 +77,18 @@ class Sweep:
         known = asked_patch >= 0
         self.asked_is_joined = np.zeros(len(asked), dtype=bool)
         self.asked_is_joined[known] = self.joined[self.joins.whole[asked_patch[known]]]
+
+    def _keep(self, number: int, row: int, depth, speed, state, wet: bool) -> None:
+        """Write a strip; of a dry one only the rows that the outlines beside it look at."""
+        if wet:
+            self._wet_strips.add(number)
+            self.velocity.write(row, speed)
+        for grid, values in ((self.depth, depth), (self.state, state)):
+            if wet or len(values) <= 2 * (HALO + 1):
+                grid.write(row, values)
+            else:
+                grid.write(row, values[: HALO + 1])
+                grid.write(row + len(values) - HALO - 1, values[-HALO - 1 :])
 
     def _ahead(self, strips: list[tuple[int, int]]):
         """Yield strips with what :meth:`_strip` makes of them, a few being made while one is used."""
@@ -148,6 +164,8 @@ class Sweep:
         kind[large & self.joined] = JOINED
         kind[large & ~self.joined] = LOW
         for number, (row, end) in enumerate(frame.strips()):
+            if number not in self._wet_strips:
+                continue
             depth, state = self.depth.read(row, end), self.state.read(row, end)
             again = Joins()
             labels, _ = again.add((state == INSIDE) & (depth > 0))
@@ -165,7 +183,7 @@ class Sweep:
     def _polygons(self, what: int, smallest: float) -> list:
         if not self.largest[what] > 0:
             return []
-        frame, halo = self.frame, 3
+        frame, halo = self.frame, HALO
         seams, whole = [], []
         for row, end in frame.strips():
             # up to the centres of the next strip's first row, where the two meet

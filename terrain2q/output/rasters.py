@@ -15,6 +15,7 @@ from pathlib import Path
 import numpy as np
 import rasterio
 import rasterio.shutil
+from rasterio.enums import Resampling
 from rasterio.errors import RasterioError
 from rasterio.transform import Affine
 from rasterio.windows import Window
@@ -139,6 +140,9 @@ def cloud_raster(
                     end = min(row + step, rows)
                     values = read(row, end)
                     known = np.isfinite(values)
+                    if not known.any():
+                        statistics.add(values[known], values.size)
+                        continue
                     values *= np.float32(factor * FINENESS)
                     np.rint(values, out=values)
                     values *= np.float32(1.0 / FINENESS)
@@ -152,10 +156,14 @@ def cloud_raster(
                             out.write(part, 1, window=Window(column, row, last - column, end - row))
                 out.units, out.descriptions = (unit,), (description,)
                 out.update_tags(1, **statistics.tags())
+            # here parts without water are passed over; the COG driver would average every one of them
+            factors = [2**k for k in range(1, 32) if 2 ** (k - 1) * BLOCK < max(rows, columns)]
+            if factors:
+                with rasterio.Env(SPARSE_OK_OVERVIEW="YES"), rasterio.open(base, "r+") as out:
+                    out.build_overviews(factors, Resampling.average)
             rasterio.shutil.copy(
                 base, temporary, driver="COG", compress="DEFLATE", predictor="YES", level="1",
-                blocksize=str(BLOCK),
-                overview_resampling="AVERAGE", bigtiff="IF_SAFER", num_threads="ALL_CPUS", sparse_ok="TRUE",
+                blocksize=str(BLOCK), bigtiff="IF_SAFER", num_threads="ALL_CPUS", sparse_ok="TRUE",
             )  # fmt: skip
         except (RasterioError, OSError) as error:
             raise not_writable(Path(path), error) from error
