@@ -28,7 +28,9 @@ def sample(tmp_path, monkeypatch):
     keep_out = shutil.ignore_patterns("output", "*.py", "__pycache__")
     shutil.copytree(ROOT / "sample_dem", tmp_path / "sample", ignore=keep_out)
     shutil.copytree(
-        ROOT / "sample_dem", tmp_path / "sample" / "data", ignore=shutil.ignore_patterns("output", "*.py", "*.toml")
+        ROOT / "sample_dem",
+        tmp_path / "sample" / "data",
+        ignore=shutil.ignore_patterns("output", "*.py", "*.toml"),
     )
     monkeypatch.chdir(tmp_path / "sample")
     return tmp_path / "sample"

@@ -70,7 +70,9 @@ def jacksboro(tmp_path_factory):
     geopandas.GeoDataFrame({"id": ["creek"]}, geometry=[stream], crs=crs).to_file(
         folder / "lines.gpkg", layer="streams"
     )
-    geopandas.GeoDataFrame({"id": ids}, geometry=cuts, crs=crs).to_file(folder / "lines.gpkg", layer="cut_lines")
+    geopandas.GeoDataFrame({"id": ids}, geometry=cuts, crs=crs).to_file(
+        folder / "lines.gpkg", layer="cut_lines"
+    )
     return folder, run(study(folder, "dem.tif", "lines.gpkg"))
 
 
@@ -137,9 +139,7 @@ def test_jacksboro_discharge_by_hand(jacksboro):
             continue
         station, ground = zm[:, 3], zm[:, 2]
         deep = ground.min() - 10
-        earth = shapely.Polygon(
-            [(station[0], deep), *zip(station, ground, strict=True), (station[-1], deep)]
-        )
+        earth = shapely.Polygon([(station[0], deep), *zip(station, ground, strict=True), (station[-1], deep)])
         total = 0.0
         for part in parts.itertuples():
             strip = subareas.loc[part.subarea]
@@ -187,7 +187,10 @@ def test_one_terrain_in_four_crs(tmp_path, crs):
         out.write(z, 1)
         out.units = ("m",)
     lines = {
-        "cut_lines": [LineString([(MIDDLE[0] - 100, MIDDLE[1] + s), (MIDDLE[0] + 100, MIDDLE[1] + s)]) for s in (-20, 20)],
+        "cut_lines": [
+            LineString([(MIDDLE[0] - 100, MIDDLE[1] + s), (MIDDLE[0] + 100, MIDDLE[1] + s)])
+            for s in (-20, 20)
+        ],
         "streams": [LineString([(MIDDLE[0], MIDDLE[1] - 50), (MIDDLE[0], MIDDLE[1] + 50)])],
     }
     for layer, shapes in lines.items():
