@@ -1,4 +1,4 @@
-"""Make the pictures of the README and of the gallery from the sample study.
+"""Make the pictures of the README, of the gallery and of the theory page.
 
 Run it in the repository: ``python docs/make_pictures.py``. The pictures of the report page need
 Chromium; where there is none, those that are there are kept.
@@ -13,12 +13,14 @@ import sys
 import tempfile
 from pathlib import Path
 
+import numpy as np
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 from PIL import Image
 
 from terrain2q import Section, Subarea, run
 from terrain2q.output.folder import OutputFolder, read_folder
+from terrain2q.output.looks import INK, WALL, WATERS
 from terrain2q.output.plots import plot_rating, plot_section
 
 ROOT = Path(__file__).parents[1]
@@ -65,6 +67,52 @@ def section_picture(source: OutputFolder, name: str = SECTION) -> bytes:
     return smaller(memory.getvalue())
 
 
+RULES = ("horton", "pavlovskii", "lotter")
+_STROKES = {"horton": "-", "pavlovskii": (0, (5, 2)), "lotter": (0, (1.5, 1.5))}
+
+
+def brushy_channel(composite: str) -> Section:
+    """Return the channel of the theory page: a bed of n 0.03 and banks of n 0.08, 10 m wide and 3 m deep."""
+    parts = [
+        Subarea(0, 6, 0.08, "brush", "channel"),
+        Subarea(6, 16, 0.03, "gravel bed", "channel"),
+        Subarea(16, 22, 0.08, "brush", "channel"),
+    ]
+    return Section([0, 6, 16, 22], [3, 0, 0, 3], parts, composite=composite)
+
+
+def one_n(section: Section, depth: np.ndarray) -> np.ndarray:
+    """Return the one n with which the section as a whole carries what it carries."""
+    wet = section.geometry(depth)
+    return wet.flow_area * wet.hydraulic_radius ** (2 / 3) / section.conveyance(depth)
+
+
+def composite_picture() -> bytes:
+    """Return a channel with rough banks, and the one n that each rule gives it by depth, as PNG."""
+    figure = Figure(figsize=(11.0, 3.9), layout="constrained")
+    FigureCanvasAgg(figure)
+    left, right = figure.subplots(1, 2, width_ratios=(5, 4))
+    plot_section(
+        brushy_channel("divide"), stages={"full": 3.0}, exaggeration=1.5, ax=left, title="Bed and banks"
+    )
+    depth = np.linspace(0.02, 3.0, 150)
+    for rule, tone in zip(RULES, (INK, WATERS[3], WALL), strict=True):
+        label = "Lotter, and dividing" if rule == "lotter" else rule.capitalize()
+        n = one_n(brushy_channel(rule), depth)
+        right.plot(n, depth, color=tone, ls=_STROKES[rule], lw=2.0, label=label)
+    right.set_xlabel("n of the channel as a whole [s/m^(1/3)]", color=INK)
+    right.set_ylabel("Depth [m]", color=INK)
+    right.set_title("What each rule makes of it", loc="left", color=INK)
+    right.set_ylim(0.0, 3.0)
+    right.legend(frameon=False, fontsize=9, labelcolor=INK)
+    right.grid(color="#ddd6cc", lw=0.6)
+    for side in ("top", "right"):
+        right.spines[side].set_visible(False)
+    memory = io.BytesIO()
+    figure.savefig(memory, dpi=100, format="png")
+    return smaller(memory.getvalue())
+
+
 def smaller(png: bytes, colours: int = 256) -> bytes:
     """Return a picture with few colours, as PNG."""
     picture = Image.open(io.BytesIO(png)).convert("RGB")
@@ -98,6 +146,7 @@ def report_pictures(page_file: Path, browser) -> dict[str, bytes]:
 def main() -> None:
     """Write every picture into the folder of this file."""
     docs = Path(__file__).parent
+    (docs / "composite_n.png").write_bytes(composite_picture())
     chromium = shutil.which("chromium") or "/usr/bin/chromium"
     with tempfile.TemporaryDirectory() as folder:
         run(ROOT / "sample_dem" / "study.toml", {"output.folder": folder})

@@ -12,6 +12,7 @@ from __future__ import annotations
 import json
 import math
 import sys
+import time
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
@@ -25,12 +26,16 @@ from terrain2q.errors import CATALOGUE, SEVERITIES, InputErrors, NoAnswerError, 
 from terrain2q.study import NEEDED_TO_RUN, TABLES, Key, Study, Table, keys_of, load_study, shown_default
 
 DONE, WRONG_INPUT, NO_ANSWER, INTERRUPTED = 0, 2, 3, 130
+
+_TOLD_EVERY = 10.0
+"""Seconds between lines that tell how far a step is, where there is no terminal for a bar."""
 """Exit codes."""
 
 _METAVARS = {
     "text": "TEXT", "number": "NUMBER", "number or zero": "NUMBER", "count": "WHOLE NUMBER",
     "file": "FILE", "folder": "FOLDER",
-    "table": "FILE|NAME", "layer": "FILE[|layer=NAME]", "rasters": "FILE", "events": "EVENT=DISCHARGE", "names": "NAME",
+    "table": "FILE|NAME", "layer": "FILE[|layer=NAME]", "rasters": "FILE", "events": "EVENT=DISCHARGE",
+    "names": "NAME",
 }  # fmt: skip
 
 
@@ -155,6 +160,26 @@ def _takes_study(command: Callable[..., Any]) -> Callable[..., Any]:
     return command
 
 
+def _works_together(command: Callable[..., Any]) -> Callable[..., Any]:
+    """Give a command the options --jobs and --scheduler."""
+    for decorate in (
+        click.option(
+            "--scheduler",
+            metavar="ADDRESS",
+            help="Work on the sections of a large study on the Dask cluster of this scheduler, "
+            "such as tcp://10.0.0.5:8786.",
+        ),
+        click.option(
+            "--jobs",
+            metavar="WHOLE NUMBER",
+            type=click.IntRange(min=1),
+            help="Processes that work on the sections of a large study; one a core if left out.",
+        ),
+    ):
+        command = decorate(command)
+    return command
+
+
 def _study(ctx: click.Context, study_path: Path | None, needs: Sequence[str] = NEEDED_TO_RUN) -> Study:
     options = ctx.obj or {}
     if study_path is None and not options:
@@ -197,8 +222,11 @@ def _json_ready(value: Any) -> Any:
 
 @contextmanager
 def _progress() -> Iterator[Callable[[int, int, str], None]]:
-    """Yield `progress(done, total, label)`: a bar where stderr is a terminal, else a line a step."""
-    state: dict[str, Any] = {"label": None, "bar": None}
+    """Yield `progress(done, total, label)`: a bar where stderr is a terminal, else a line a step.
+
+    What follows a colon in the label tells how far the step is: beside the bar, or in a line now and then.
+    """
+    state: dict[str, Any] = {"label": None, "bar": None, "told": 0.0}
     terminal = sys.stderr.isatty()
 
     def close() -> None:
@@ -207,16 +235,25 @@ def _progress() -> Iterator[Callable[[int, int, str], None]]:
             state["bar"] = None
 
     def progress(done: int, total: int, label: str = "") -> None:
-        if label != state["label"]:
+        step, _, how_far = label.partition(":")
+        if step != state["label"]:
             close()
-            state["label"] = label
+            state["label"], state["told"] = step, time.monotonic()
             if terminal:
-                state["bar"] = click.progressbar(length=max(total, 1), label=label, file=sys.stderr)
+                # how long is left is told by who works, where there is more to tell
+                state["bar"] = click.progressbar(
+                    length=max(total, 1), label=step, file=sys.stderr, show_pos=bool(how_far),
+                    show_eta=not how_far,
+                )  # fmt: skip
                 state["bar"].__enter__()
-            elif label:
-                click.echo(label, err=True)
+            elif step:
+                click.echo(step, err=True)
         if state["bar"] is not None:
+            state["bar"].label = label
             state["bar"].update(done - state["bar"].pos)
+        elif how_far and time.monotonic() - state["told"] >= _TOLD_EVERY:
+            state["told"] = time.monotonic()
+            click.echo(f"{step}: {done} of {total},{how_far}", err=True)
 
     try:
         yield progress
@@ -337,12 +374,22 @@ def layout(ctx: click.Context, study_path: Path | None, as_json: bool, strict: b
 
 @main.command(cls=_StudyCommand, epilog=CAUTION)
 @_takes_study
+@_works_together
 @click.pass_context
-def run(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool) -> int:
+def run(
+    ctx: click.Context,
+    study_path: Path | None,
+    as_json: bool,
+    strict: bool,
+    jobs: int | None,
+    scheduler: str | None,
+) -> int:
     """Do everything the study asks for, into its output folder.
 
     Every key of the study file is an option too, and goes before the file. Relative paths in options start
     at the current folder, those in the study file at the file.
+
+    A large study that was interrupted goes on where it stopped when it is run again.
 
     \b
     Examples:
@@ -354,8 +401,9 @@ def run(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool
     study = _study(ctx, study_path)
     from terrain2q.process import run_study
 
+    together = {k: v for k, v in (("jobs", jobs), ("scheduler", scheduler)) if v is not None}
     with _progress() as progress:
-        results = run_study(study, progress=progress)
+        results = run_study(study, progress=progress, **together)
     if as_json:
         _print_json(results.summary())
     else:
@@ -364,6 +412,35 @@ def run(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool
     if not answered or (strict and results.failed_sections + results.failed_crossings):
         return NO_ANSWER
     return DONE
+
+
+@main.command(cls=_StudyCommand, epilog=CAUTION)
+@_takes_study
+@click.pass_context
+def size(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool) -> int:
+    """Find the widths of a bench required to pass each flow within a stage.
+
+    Does all that `run` does, and cuts the bench that [bench] describes into each section until the section
+    passes the flow: the layer required_widths, and benches.pdf with each section before and after.
+
+    \b
+    Examples:
+      terrain2q size study.toml
+      terrain2q size study.toml --bench.sides right --bench.event 100-year
+    """
+    study = _study(ctx, study_path, (*NEEDED_TO_RUN, "flows", "bench"))
+    from terrain2q.output.benches import widths_records, widths_text
+    from terrain2q.process import run_study
+
+    with _progress() as progress:
+        results = run_study(study, progress=progress, widths=True)
+    widths = results.layers["required_widths"]
+    if as_json:
+        _print_json(results.summary() | {"required_widths": widths_records(widths)})
+    else:
+        click.echo("\n".join([widths_text(widths, results.units), "", results.summary_text()]))
+    failed = int((widths["status"] == "failed").sum())
+    return NO_ANSWER if failed == len(widths) or (strict and failed) else DONE
 
 
 @main.command(cls=_StudyCommand, epilog=CAUTION)

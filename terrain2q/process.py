@@ -16,6 +16,9 @@ import pandas as pd
 import pyproj
 from pyproj.exceptions import CRSError
 
+from terrain2q.batches.kept import KeptParts, study_hash
+from terrain2q.batches.run import answer_lines, in_order
+from terrain2q.batches.work import Part, Work, cores, is_failed, join_layers, plan_batches, wants_compiled
 from terrain2q.columns import CAUTION
 from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError
 from terrain2q.flows import Flow, event_names, read_flows
@@ -27,20 +30,22 @@ from terrain2q.ground.observed import read_observations
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
 from terrain2q.hydraulics.roughness import roughness_from_parts
-from terrain2q.jobs.design_flows import SectionAnswer, answer_section, answer_sections
+from terrain2q.jobs.design_flows import SectionAnswer, answer_section
 from terrain2q.jobs.extent import ExtentInputs, FloodMap, map_floods
 from terrain2q.jobs.fitting import Fit, fit_observations
-from terrain2q.jobs.sections import BuiltSection, SectionInputs, build_sections
+from terrain2q.jobs.sections import SectionInputs, build_sections
+from terrain2q.jobs.sizing import BenchWish, SizedSection, size_sections
 from terrain2q.jobs.slopes import FieldSlopes, OneSlope, Slopes, StreamSlopes
 from terrain2q.jobs.submerged import Submerged
-from terrain2q.laying_out import lines_for_run
+from terrain2q.laying_out import lines_for_run, streams_on
+from terrain2q.output.benches import PICTURES_NAME, required_widths_layer, write_benches
 from terrain2q.output.crossing_table import crossings_layer
 from terrain2q.output.fitted import check_table, write_table
 from terrain2q.output.folder import OutputFolder
 from terrain2q.output.geopackage import RESULT_NAME, check_output, write_geopackage
-from terrain2q.output.layers import make_layers
-from terrain2q.output.rasters import flood_rasters
+from terrain2q.output.layers import findings_layer, make_layers
 from terrain2q.output.pages import write_pages
+from terrain2q.output.rasters import flood_rasters
 from terrain2q.output.report import Explorer
 from terrain2q.output.report_data import worst_first
 from terrain2q.output.run_record import run_record, write_run_record
@@ -231,7 +236,7 @@ class Results:
         for _, rows in list(table.groupby("rank"))[:_SHOWN]:
             one = rows.iloc[0]
             verdicts = ", ".join(f"{r.event} {r.verdict or '-'}" for r in rows.itertuples())
-            crest = f"crest {one.crest:.2f} {unit} at {one.crest_discharge:.4g} {flow}"
+            crest = f"crest {one.crest:.2f} {unit} at {one.crest_discharge:,.0f} {flow}"
             lines.append(f"  {one['rank']}. {one.crossing_id} {one.road}: {crest}; {verdicts}")
         if count > _SHOWN:
             lines.append(f"  ... and {count - _SHOWN} more in crossings")
@@ -334,7 +339,7 @@ def _read_inputs(study: Study) -> _Inputs:
             id_field=study.streams.id_field,
             repeated_ids=True,
         )
-        near = None if cut_lines is None else streams_near(cut_lines, streams)
+        near = streams_on(terrain, streams) if cut_lines is None else streams_near(cut_lines, streams)
         streams, turned = turn_streams(streams, terrain, study.in_si("streams.snap"), study.system, near)
         findings += turned
     if study.cut_lines is None:
@@ -432,59 +437,44 @@ def _read_cover(study: Study, terrain: Terrain) -> Cover | UniformCover:
 
 
 def _all_findings(
-    inputs: _Inputs,
-    built: Sequence[BuiltSection],
-    answers: Sequence[SectionAnswer] = (),
-    others: Sequence[Finding] = (),
-):
-    found = [*inputs.findings, *others]
-    found += [f for b in built for f in b.findings]
-    found += [f for a in answers for f in a.findings]
+    inputs: _Inputs, about_sections: Sequence[Finding], others: Sequence[Finding] = ()
+) -> list[Finding]:
+    found = [*inputs.findings, *others, *about_sections]
     return sorted(found, key=lambda f: SEVERITIES.index(f.severity))
 
 
-def fit_study(study: Study, progress: Progress | None = None) -> tuple[Fit, Path]:
-    """Return the roughness that reproduces a study's observed stages, and the table that was written.
+def _findings_of(answers: Sequence[SectionAnswer]) -> list[Finding]:
+    return [f for a in answers for f in a.built.findings] + [f for a in answers for f in a.findings]
 
-    Raises
-    ------
-    InputError, OutputError
-        An input is wrong, or the output cannot be written; nothing was written.
-    """
-    progress = progress or _silent
-    folder = Path(study.output.folder)
-    check_table(folder, study.output.overwrite)
-    inputs = _read_inputs(study)
-    ids = [line.section_id for line in inputs.lines]
-    observations, findings = read_observations(
-        study.observed.path, study.system, ids, inputs.sections.terrain.crs
+
+def _parts(
+    study: Study, inputs: _Inputs, flows: Sequence[Flow], as_layers: bool, jobs: int | None,
+    scheduler: str | None, progress: Progress,
+) -> tuple[list[Part], KeptParts | None]:  # fmt: skip
+    """Return what comes of the cut lines, batch by batch, and where it is kept until all is written."""
+    work = Work(
+        inputs.sections,
+        tuple(flows),
+        study.rating.stages,
+        study.in_si("rating.top"),
+        inputs.crs,
+        wants_compiled(inputs.lines),
+        as_layers,
     )
-    seen = {o.section_id for o in observations}
-    built = build_sections(
-        [line for line in inputs.lines if line.section_id in seen], inputs.sections, progress
-    )
-    fit = fit_observations(observations, {b.section_id: b for b in built}, study.system, progress)
-    about = [f for f in inputs.findings if not f.feature_id or f.feature_id in seen]
-    about += [*findings, *(f for b in built for f in b.findings)]
-    fit = replace(fit, findings=tuple(worst_first([*about, *fit.findings])))
-    return fit, write_table(folder, fit, study.system)
-
-
-def _screen(study: Study, inputs: _Inputs, flows: Sequence[Flow], progress) -> Screened | None:
-    if study.crossings is None:
-        return None
-    return screen_study(study, inputs.sections, inputs.streams, flows, progress)
-
-
-def _check_crossings(study: Study, inputs: _Inputs) -> list[Finding]:
-    """Return what is to know about the places of crossings, before any of them is screened."""
-    if study.crossings is None:
-        return []
-    crs = inputs.sections.terrain.crs
-    points, roads = crossing_layers(study, crs)
-    network = StreamNetwork(inputs.streams, crs, study.system)
-    crossings, findings = find_crossings(study, points, roads, network)
-    return [*findings, *(f for c in crossings for f in c.findings)]
+    batches = plan_batches(inputs.lines, inputs.sections.terrain)
+    kept = None
+    if len(batches) > 1:
+        settings = {**study.as_dict(), "as_layers": as_layers}
+        kept = KeptParts(study.output.folder, study_hash(settings, study.inputs(), len(batches)))
+        if kept.refused:
+            progress(0, 1, "parts of an unfinished run with other inputs are there; they are not used")
+    try:
+        parts = answer_lines(work, inputs.lines, batches, kept, jobs or cores(), scheduler, progress)
+    except InputError:
+        if kept is not None:
+            kept.remove(all_new=True)
+        raise
+    return parts, kept
 
 
 def _extent_events(study: Study, flows: Sequence[Flow]) -> tuple[str, ...]:
@@ -528,6 +518,62 @@ def _map_floods(study: Study, events, flows, inputs: _Inputs, answers, progress)
     return map_floods(answers, wanted, again, progress)
 
 
+def _screen(study: Study, inputs: _Inputs, flows: Sequence[Flow], progress) -> Screened | None:
+    if study.crossings is None:
+        return None
+    return screen_study(study, inputs.sections, inputs.streams, flows, progress)
+
+
+def _check_crossings(study: Study, inputs: _Inputs) -> list[Finding]:
+    """Return what is to know about the places of crossings, before any of them is screened."""
+    if study.crossings is None:
+        return []
+    crs = inputs.sections.terrain.crs
+    points, roads = crossing_layers(study, crs)
+    network = StreamNetwork(inputs.streams, crs, study.system)
+    crossings, findings = find_crossings(study, points, roads, network)
+    return [*findings, *(f for c in crossings for f in c.findings)]
+
+
+def _size(study: Study, answers: Sequence[SectionAnswer], progress: Progress) -> list[SizedSection]:
+    bench = study.bench
+    wish = BenchWish(
+        study.in_si("bench.base"),
+        bench.n,
+        bench.sides,
+        bench.side_slope,
+        bench.event,
+        study.in_si("bench.stage"),
+    )
+    return size_sections(answers, wish, study.system, progress)
+
+
+def fit_study(study: Study, progress: Progress | None = None) -> tuple[Fit, Path]:
+    """Return the roughness that reproduces a study's observed stages, and the table that was written.
+
+    Raises
+    ------
+    InputError, OutputError
+        An input is wrong, or the output cannot be written; nothing was written.
+    """
+    progress = progress or _silent
+    folder = Path(study.output.folder)
+    check_table(folder, study.output.overwrite)
+    inputs = _read_inputs(study)
+    ids = [line.section_id for line in inputs.lines]
+    observations, findings = read_observations(
+        study.observed.path, study.system, ids, inputs.sections.terrain.crs
+    )
+    seen = {o.section_id for o in observations}
+    wanted = [line for line in inputs.lines if line.section_id in seen]
+    built = build_sections(wanted, inputs.sections, progress)
+    fit = fit_observations(observations, {b.section_id: b for b in built}, study.system, progress)
+    about = [f for f in inputs.findings if not f.feature_id or f.feature_id in seen]
+    about += [*findings, *(f for b in built for f in b.findings)]
+    fit = replace(fit, findings=tuple(worst_first([*about, *fit.findings])))
+    return fit, write_table(folder, fit, study.system)
+
+
 def check_study(study: Study, progress: Progress | None = None) -> list[Finding]:
     """Look at every input of a study and return the findings, the worst first; write nothing.
 
@@ -536,13 +582,21 @@ def check_study(study: Study, progress: Progress | None = None) -> list[Finding]
     InputError
         An input is wrong.
     """
+    check_tables(study.output.tables)
     _extent_events(study, read_flows(study))
     inputs = _read_inputs(study)
     built = build_sections(inputs.lines, inputs.sections, progress or _silent)
-    return _all_findings(inputs, built, others=_check_crossings(study, inputs))
+    return _all_findings(inputs, [f for b in built for f in b.findings], _check_crossings(study, inputs))
 
 
-def run_study(study: Study, progress: Progress | None = None) -> Results:
+def run_study(
+    study: Study,
+    progress: Progress | None = None,
+    *,
+    widths: bool = False,
+    jobs: int | None = None,
+    scheduler: str | None = None,
+) -> Results:
     """Do everything a study asks for and write it into its output folder.
 
     Parameters
@@ -550,6 +604,12 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
     study : Study
     progress : callable, optional
         ``progress(done, total, label)``.
+    widths : bool
+        Find the required benches too, with their layer and pictures; the study must have [bench].
+    jobs : int, optional
+        Processes that work on the sections of a large study; one a core if left out.
+    scheduler : str, optional
+        Address of a Dask scheduler, whose cluster works on them instead.
 
     Raises
     ------
@@ -564,22 +624,35 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
     flows = read_flows(study)
     events = _extent_events(study, flows)
     inputs = _read_inputs(study)
-    built = build_sections(inputs.lines, inputs.sections, progress)
-    answers = answer_sections(
-        built, flows, study.rating.stages, study.in_si("rating.top"), study.system, progress
-    )
+    # the flood extent and the benches need the answers themselves, the layers only their rows
+    as_layers = not (events or widths)
+    parts, kept = _parts(study, inputs, flows, as_layers, jobs, scheduler, progress)
+    about_sections, answers, failed = in_order(parts)
     screened = _screen(study, inputs, flows, progress)
     terrain = inputs.sections.terrain
     folder.mkdir(parents=True, exist_ok=True)
     with closing(_map_floods(study, events, flows, inputs, answers, progress)) as floods:
-        answers = floods.answers or answers
+        if floods.answers:
+            answers = floods.answers
+            about_sections = _findings_of(answers)
+            failed = frozenset(a.section_id for a in answers if is_failed(a))
+        sized = _size(study, answers, progress) if widths else []
         others = [*floods.findings, *(screened.findings if screened is not None else ())]
-        findings = _all_findings(inputs, built, answers, others)
-        layers = make_layers(
-            answers, findings, study.system, terrain.crs, inputs.crs, floods.events if events else None
-        )
+        others += [f for one in sized for f in one.findings]
+        findings = _all_findings(inputs, about_sections, others)
+        if as_layers and parts:
+            ids = [line.section_id for line in inputs.lines]
+            layers = join_layers(parts, ids, findings, inputs.crs)
+            layers["findings"] = findings_layer(findings, terrain.crs, inputs.crs)
+            parts.clear()
+        else:
+            layers = make_layers(
+                answers, findings, study.system, terrain.crs, inputs.crs, floods.events if events else None
+            )
         if screened is not None:
             layers["crossings"] = crossings_layer(screened.answers, study.system, terrain.crs, inputs.crs)
+        if sized:
+            layers["required_widths"] = required_widths_layer(sized, study.system, terrain.crs, inputs.crs)
         progress(0, 1, "writing")
         package, record = folder / RESULT_NAME, folder / RECORD_NAME
         # the rasters wait beside their places until the layers are there
@@ -589,16 +662,16 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
                 layers,
                 units=study.system,
                 crs=inputs.crs,
-                description=f"{study.study.name or 'terrain2q study'}: sections, ratings and stages at design flows",
+                description=f"{study.study.name or 'terrain2q study'}: sections, ratings, design stages",
                 metadata={"settings": study.as_dict()},
                 overwrite=study.output.overwrite,
             )
-    failed = frozenset(
-        a.section_id for a in answers if a.built.section is None or any(e.status == FAILED for e in a.events)
-    )
     about_crossings = []
     if screened is not None:
         about_crossings = write_crossings(screened, layers["crossings"], study, folder)
+    pictures = [] if not sized else write_benches(folder / PICTURES_NAME, sized, study.system)
+    if kept is not None:
+        kept.remove()
     seconds = time.perf_counter() - began
     write_run_record(
         record,
@@ -610,7 +683,7 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
             counts={name: len(table) for name, table in layers.items()},
             findings=findings,
             seconds=seconds,
-            outputs=[package, *rasters, *about_crossings],
+            outputs=[package, *rasters, *about_crossings, *pictures],
         ),
     )
     pages = write_pages(folder, study.as_dict()["output"])
@@ -621,14 +694,19 @@ def run_study(study: Study, progress: Progress | None = None) -> Results:
         study.system,
         inputs.crs,
         folder,
-        (package, *rasters, *about_crossings, record, *pages),
+        (package, *rasters, *about_crossings, *pictures, record, *pages),
         time.perf_counter() - began,
         study.study.name,
         failed,
     )
 
 
-def run(study: str | os.PathLike | Study, options: Mapping[str, object] | None = None) -> Results:
+def run(
+    study: str | os.PathLike | Study,
+    options: Mapping[str, object] | None = None,
+    jobs: int | None = None,
+    scheduler: str | None = None,
+) -> Results:
     """Run a study file: everything it asks for, into its output folder.
 
     Parameters
@@ -637,6 +715,10 @@ def run(study: str | os.PathLike | Study, options: Mapping[str, object] | None =
         A study file, or a study already loaded.
     options : mapping, optional
         Values by ``table.key`` that go before those of the file.
+    jobs : int, optional
+        Processes that work on the sections of a large study; one a core if left out.
+    scheduler : str, optional
+        Address of a Dask scheduler, whose cluster works on them instead.
 
     Returns
     -------
@@ -650,4 +732,4 @@ def run(study: str | os.PathLike | Study, options: Mapping[str, object] | None =
     """
     if not isinstance(study, Study):
         study = load_study(Path(study), options or {})
-    return run_study(study)
+    return run_study(study, jobs=jobs, scheduler=scheduler)

@@ -43,6 +43,7 @@ PROMISED = {
     ),
     "flood_extent": "event area largest_depth boundary_points boundary_within_tolerance",
     "low_not_joined": "event area largest_depth",
+    "required_widths": "section_id event discharge stage side width discharge_before status",
     "findings": "code severity layer feature_id message remedy",
 }
 GEOMETRY = {
@@ -54,6 +55,7 @@ GEOMETRY = {
     "crossings": "Point",
     "flood_extent": "MultiPolygon",
     "low_not_joined": "MultiPolygon",
+    "required_widths": "LineString",
     "findings": "Point",
 }
 

@@ -108,7 +108,7 @@ def test_help_says_what_where_and_the_caution(call):
     assert result.out.index("start") < result.out.index("check") < result.out.index("run")
 
 
-@pytest.mark.parametrize("command", ["start", "check", "layout", "run", "fit", "tables", "report"])
+@pytest.mark.parametrize("command", ["start", "check", "layout", "run", "size", "fit", "tables", "report"])
 def test_every_command_has_help_with_an_example(call, command):
     result = call(command, "--help")
     assert result.code == 0
@@ -138,7 +138,7 @@ def test_version(call):
 
 
 def test_only_what_is_built_is_offered():
-    assert list(main.commands) == ["start", "check", "layout", "run", "fit", "tables", "report"]
+    assert list(main.commands) == ["start", "check", "layout", "run", "size", "fit", "tables", "report"]
 
 
 def test_help_imports_nothing_heavy():
