@@ -785,7 +785,6 @@ class Section:
     def rating_arrays(self, slope: float, stages: ArrayLike | int | None = None, top: float | None = None):
         """Return the rating as a dict of arrays; `top` is how high even steps go above the lowest ground."""
         root = np.sqrt(float(_positives("slope", slope)))
-        tops = np.array(self.bank_tops)
         if stages is None or isinstance(stages, int | np.integer):
             count = 30 if stages is None else int(stages)
             if count < 1:
@@ -798,7 +797,10 @@ class Section:
             level = np.union1d(level, [t for t in self.telling_bank_tops if t <= high])
         else:
             level = np.sort(_finite("stages", stages).ravel())
-        twice = np.isin(level, tops)
+        # most stages lie at no ridge at all, and then the tops of banks need not be worked out
+        twice = np.isin(level, self._profile.ground.threshold)
+        if twice.any():
+            twice = np.isin(level, np.array(self.bank_tops))
         # the second of two rows is the one after the hollow has filled
         passed = np.repeat(twice, 1 + twice)
         passed[np.cumsum(1 + twice) - 1 - twice] = False
