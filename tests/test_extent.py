@@ -1,6 +1,7 @@
 """The flood on the map: extent, low ground not joined, boundary audit and depth grids."""
 
 import json
+import re
 from itertools import pairwise
 
 import geopandas
@@ -297,8 +298,8 @@ def test_unbroken_levee_holds_and_a_gap_one_cell_wide_does_not(tmp_path, azimuth
     assert now["at30"] < before["at30"] - 0.1
     found = {f.feature_id: f.message for f in codes(broken, "hollow-reached")}
     assert "at30" in found
-    assert f"{now['at30']:.1f} m" in found["at30"]
-    assert f"{before['at30']:.1f} m" in found["at30"]
+    assert f"{now['at30']:.2f} m" in found["at30"]
+    assert f"{before['at30']:.2f} m" in found["at30"]
     # map and section agree: the section's wetted part has the hollow
     wetted = broken.design_stages.set_index("section_id").geometry["at30"]
     assert len(wetted.geoms) == 2
@@ -485,6 +486,35 @@ def test_water_that_rises_downstream_is_a_finding(tmp_path):
     results = valley.run({"flood": 60.0}, SLOPE, N)
     (found,) = codes(results, "water-rises-downstream")
     assert found.feature_id == "at-60"
+    assert re.fullmatch(r"flood: water rises by 0\.\d\d m from at-60 to at60", found.message)
+
+
+def test_a_rise_of_less_than_a_tenth_of_a_foot_is_no_finding(tmp_path):
+    valley = Valley(tmp_path, lambda s, t: trapezoid(s, t) + np.where(s > 0, 0.02 + SLOPE * s, 0), 90)
+    valley.stream([(-140, 0), (140, 0)])
+    valley.across([-1, 1])
+    results = valley.run({"flood": 60.0}, SLOPE, N)
+    stages = results.design_stages.set_index("section_id")["stage"]
+    assert 0.001 < stages["at1"] - stages["at-1"] < 0.03
+    assert not codes(results, "water-rises-downstream")
+
+
+def test_a_place_has_one_finding_for_all_events(tmp_path):
+    valley = Valley(tmp_path, lambda s, t: trapezoid(s, t) + np.where(s > 0, 0.3 + 0.004 * s, 0), 90)
+    valley.stream([(-140, 0), (140, 0)])
+    valley.across([-60, 60], -12, 12)
+    results = valley.run({"small": 60.0, "middle": 90.0, "large": 120.0}, SLOPE, N)
+    (rise,) = codes(results, "water-rises-downstream")
+    assert rise.message.startswith("small, middle, large: water rises by 0.")
+    assert rise.message.endswith(" m from at-60 to at60")
+    left, right = codes(results, "extent-cut-off")
+    assert (left.feature_id, right.feature_id) == ("at-60", "at-60")
+    for found, side in ((left, "left"), (right, "right")):
+        assert re.fullmatch(
+            rf"small, middle, large: water reaches the line from the {side} end of at-60 to that of at60 "
+            r"over (\d+, \d+ and )?\d+ m; beyond it nothing is mapped",
+            found.message,
+        )
 
 
 def test_failed_section_is_left_out_and_told(tmp_path):

@@ -24,7 +24,7 @@ import numpy as np
 import shapely
 from rasterio.transform import Affine
 
-from terrain2q.errors import DOUBTFUL, FAILED, NOTE, Finding
+from terrain2q.errors import DOUBTFUL, FAILED, NOTE, SEVERITIES, Finding
 from terrain2q.ground.streams import StreamNetwork, length_text
 from terrain2q.ground.terrain import Terrain
 from terrain2q.ground.water_edge import GridFile
@@ -57,8 +57,9 @@ ROUNDS = 3
 TELLING_AREA = 0.01
 """Hollows reached from elsewhere count where they add more than this share to a section's flow area."""
 
-RISE = 0.01
-"""m by which water may rise downstream before it is a finding."""
+RISE = 0.1 * FOOT
+"""m by which water may rise downstream before it is a finding: levels of floods are given to a tenth of a
+foot (common practice), and the noise of the ground moves a stage by centimetres."""
 
 DOUBTFUL_DIFFERENCE = 0.5 * FOOT
 """m; a stage that moves further is doubtful (FIA's tolerance for flood profiles, letter of 1975: 0.5 ft)."""
@@ -68,6 +69,7 @@ PARTING = 1e-3
 
 _LAYER = "flood_extent"
 _ON_BOUNDARY = 1e-3
+_NUMBER = "\0"
 
 
 @dataclass(frozen=True, eq=False)
@@ -220,8 +222,52 @@ def map_floods(
         progress(len(made), len(made), "flood extent")
     return FloodMap(
         tuple(made), job.frame.rows, job.frame.columns, job.frame.transform, job.frame.block,
-        tuple(job.answers), tuple(job.findings),
+        tuple(job.answers), (*job.findings, *job.remarks.findings()),
     )  # fmt: skip
+
+
+class _Remarks:
+    """Findings about places, one a place, with the events that they hold for."""
+
+    def __init__(self) -> None:
+        self._found: dict[tuple, tuple[Finding, dict[tuple[str, ...], dict[str, list[str]]]]] = {}
+
+    def add(self, finding: Finding, place: object, event: str, numbers: Sequence[str] = ()) -> None:
+        """Note a finding about a place at an event.
+
+        `numbers` stand where its message has :data:`_NUMBER`; those of several events are told together.
+        """
+        first, texts = self._found.setdefault((finding.code, place), (finding, {}))
+        if SEVERITIES.index(finding.severity) < SEVERITIES.index(first.severity):
+            self._found[finding.code, place] = (finding, texts)
+        texts.setdefault(finding.message, {})[event] = list(numbers)
+
+    def findings(self) -> list[Finding]:
+        """Return the findings, each place's in one."""
+        made = []
+        for finding, texts in self._found.values():
+            told = []
+            for message, by_event in texts.items():
+                columns = [_listed(column) for column in zip(*by_event.values(), strict=True)]
+                first, *rest = message.split(_NUMBER)
+                text = first + "".join(number + part for number, part in zip(columns, rest, strict=True))
+                told.append(f"{', '.join(by_event)}: {text}")
+            made.append(replace(finding, message="; ".join(told)))
+        return made
+
+
+def _listed(numbers: Sequence[str]) -> str:
+    """Return numbers of several events in one: their common unit once, and alike ones once.
+
+    Examples
+    --------
+    >>> _listed(["0.75 ft", "0.68 ft", "0.93 ft"]), _listed(["12 m", "12 m"])
+    ('0.75, 0.68 and 0.93 ft', '12 m')
+    """
+    if len(set(numbers)) == 1:
+        return numbers[0]
+    unit = numbers[0].rpartition(" ")[2]
+    return f"{', '.join(n.removesuffix(' ' + unit) for n in numbers[:-1])} and {numbers[-1]}"
 
 
 class _Job:
@@ -237,7 +283,7 @@ class _Job:
         self._reaches: dict[object, Reach | None] = {}
         self.reached: dict[int, dict[str, list[tuple[float, float]]]] = {}
         self.findings: list[Finding] = []
-        self._rises: dict[tuple, list[str]] = {}
+        self.remarks = _Remarks()
         self.stations = self._place()
         cell = self.size[0] * self.size[1]
         smallest = (
@@ -248,6 +294,11 @@ class _Job:
 
     def _text(self, metres: float) -> str:
         return length_text(metres, self.inputs.units)
+
+    def _height(self, metres: float) -> str:
+        """Return a level or a difference of levels; water is told apart by hundredths."""
+        units = self.inputs.units
+        return f"{metres * units.per_si('length'):.2f} {units.symbol('length')}"
 
     # --- sections, streams, reaches ----------------------------------------------------------------
 
@@ -488,14 +539,14 @@ class _Job:
         self._remark_surface(event, pieces)
         for stream, stations in self._answered(event).items():
             if len(stations) < 2 and not self._joins_another(stream, event):
-                self.findings.append(
-                    Finding(
-                        "extent-one-section",
-                        f"{event}: stream {stream} has one section with an answer, {stations[0].name}",
-                        _LAYER,
-                        stations[0].name,
-                    ).at(*to_map(self.terrain.transform, *stations[0].line.mean(axis=0)))
+                where = to_map(self.terrain.transform, *stations[0].line.mean(axis=0))
+                finding = Finding(
+                    "extent-one-section",
+                    f"stream {stream} has one section with an answer, {stations[0].name}",
+                    _LAYER,
+                    stations[0].name,
                 )
+                self.remarks.add(finding.at(*where), stream, event)
         polygons, low = sweep.finish(self.smallest)
         return self._measured(event, pieces, sweep, polygons, low)
 
@@ -552,45 +603,48 @@ class _Job:
             station = self.stations[index]
             middle = 0.5 * sum(reached[event][0])
             column, row = (np.interp(middle, station.stations, v) for v in (station.column, station.row))
-            where = " and ".join(f"{self._text(a)} to {self._text(b)}" for a, b in reached[event])
-            self.findings.append(
-                Finding(
-                    "hollow-reached",
-                    f"{event}: on the map water reaches the low ground at stations {where}, "
-                    f"which the section's own ridges cut off; with it the stage is "
-                    f"{self._text(now.row['stage'])}, without it {self._text(first.row['stage'])}: "
-                    f"{self._text(difference)} lower",
-                    "design_stages",
-                    station.name,
-                    severity=DOUBTFUL if abs(difference) > DOUBTFUL_DIFFERENCE else NOTE,
-                ).at(*to_map(self.terrain.transform, column, row))
+            where = " and ".join(f"{self._text(a)} to {self._text(b)}" for a, b in sorted(reached[event]))
+            finding = Finding(
+                "hollow-reached",
+                f"on the map water reaches the low ground at stations {where}, which the section's own "
+                f"ridges cut off; with it the stage is {_NUMBER}, without it {_NUMBER}: {_NUMBER} lower",
+                "design_stages",
+                station.name,
+                severity=DOUBTFUL if abs(difference) > DOUBTFUL_DIFFERENCE else NOTE,
             )
+            self.remarks.add(
+                finding.at(*to_map(self.terrain.transform, column, row)), index, event,
+                [self._height(v) for v in (now.row["stage"], first.row["stage"], difference)],
+            )  # fmt: skip
         for piece in pieces:
-            upper, lower = piece.waters
-            rises = []
-            labels = [0, *range(1, len(upper.right) + 1), *range(-len(upper.left), 0)]
-            for label in labels:
-                rise = lower.level(label) - upper.level(label)
-                if rise > RISE and upper.path(label) is not None:
-                    rises.append((rise, label))
-            if piece.lower is None and piece.least > upper.stage + RISE:
-                rises.append((piece.least - upper.stage, 0))
-            if not rises:
-                continue
-            rise, label = max(rises)
-            place = "" if label == 0 else f" behind the {'right' if label > 0 else 'left'} bank"
-            to = "the mouth" if piece.lower is None else piece.lower.name
-            where = np.mean(
-                [piece.upper.line.mean(axis=0), piece.reach.lower.points.mean(axis=0) / self.size], axis=0
-            )
-            self.findings.append(
-                Finding(
-                    "water-rises-downstream",
-                    f"{event}: water{place} rises by {self._text(rise)} from {piece.upper.name} to {to}",
-                    _LAYER,
-                    piece.upper.name,
-                ).at(*to_map(self.terrain.transform, *where))
-            )
+            self._remark_rise(event, piece)
+
+    def _remark_rise(self, event: str, piece: FloodReach) -> None:
+        upper, lower = piece.waters
+        rises = [(0.0, 0)]
+        for label in (0, *range(1, len(upper.right) + 1), *range(-len(upper.left), 0)):
+            if upper.path(label) is not None:
+                rises.append((lower.level(label) - upper.level(label), label))
+        rise, label = max(rises)
+        name = piece.upper.name
+        place = "" if label == 0 else f" behind the {'right' if label > 0 else 'left'} bank"
+        if piece.lower is None:
+            rise = max(rise, piece.least - upper.stage)
+            message = f"the stream that {piece.upper.stream} joins stands {_NUMBER} above the water on {name}"
+        else:
+            message = f"water{place} rises by {_NUMBER} from {name} to {piece.lower.name}"
+        if rise <= RISE:
+            return
+        where = np.mean(
+            [piece.upper.line.mean(axis=0), piece.reach.lower.points.mean(axis=0) / self.size], axis=0
+        )
+        finding = Finding("water-rises-downstream", message, _LAYER, name)
+        self.remarks.add(
+            finding.at(*to_map(self.terrain.transform, *where)),
+            _reach_key(piece),
+            event,
+            [self._height(rise)],
+        )
 
     # --- measuring ---------------------------------------------------------------------------------------
 
@@ -629,16 +683,17 @@ class _Job:
                 mine = on[shapely.dwithin(shapely.LineString(line), places[on], _ON_BOUNDARY)]
                 if not mine.size:
                     continue
-                middle = points[mine[mine.size // 2]]
-                self.findings.append(
-                    Finding(
-                        "extent-cut-off",
-                        f"{event}: water reaches the line {name} over {self._text(step * mine.size)}; "
-                        "beyond it nothing is mapped",
-                        _LAYER,
-                        piece.upper.name,
-                    ).at(*to_map(self.terrain.transform, *middle))
-                )
+                finding = Finding(
+                    "extent-cut-off",
+                    f"water reaches the line {name} over {_NUMBER}; beyond it nothing is mapped",
+                    _LAYER,
+                    piece.upper.name,
+                ).at(*to_map(self.terrain.transform, *points[mine[mine.size // 2]]))
+                length = step * mine.size * self.inputs.units.per_si("length")
+                self.remarks.add(
+                    finding, (*_reach_key(piece), name), event,
+                    [f"{length:.0f} {self.inputs.units.symbol('length')}"],
+                )  # fmt: skip
         return cut
 
     def _on_map(self, polygons: list) -> shapely.MultiPolygon:
@@ -658,6 +713,10 @@ class _Job:
             area = self.terrain.distances.ring_area(x, y)
             total += area if is_outer else -area
         return total
+
+
+def _reach_key(piece: FloodReach) -> tuple[int, int | None]:
+    return piece.upper.index, None if piece.lower is None else piece.lower.index
 
 
 def _segments(boundary) -> np.ndarray:
