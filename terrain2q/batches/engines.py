@@ -141,12 +141,13 @@ def cluster(work: Work, batches: Sequence[Batch], address: str) -> Iterator[tupl
     with _client(address) as client:
         from distributed import as_completed
 
-        shared = client.scatter(work, broadcast=True)
+        # a task and not scattered data, so that it can be made again where the worker that held it dies
+        shared = client.submit(pickle.loads, pickle.dumps(work, protocol=5), pure=False, retries=3)
         futures = {
             client.submit(answer_batch, shared, lines, places, pure=False, retries=3): number
             for number, lines, places in batches
         }
-        for future in as_completed(list(futures)):
+        for future in as_completed(list(futures), loop=client.loop):
             number = futures.pop(future)
             part = future.result()
             future.release()  # the cluster need not hold what has been taken

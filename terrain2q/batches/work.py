@@ -7,7 +7,7 @@ process, many, and a cluster give the same bytes.
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import geopandas
@@ -74,7 +74,7 @@ class Part:
     ----------
     places : tuple of int
         Where its lines stand among all lines, rising.
-    layers : mapping of str to mapping of str to ndarray
+    layers : dict of str to dict of str to ndarray
         Columns by layer; geometries as WKB under ``geometry``, None where there is none. Empty where the
         answers are asked for.
     built_findings, answer_findings : tuple of tuple of Finding
@@ -86,7 +86,7 @@ class Part:
     """
 
     places: tuple[int, ...]
-    layers: Mapping[str, Mapping[str, np.ndarray]]
+    layers: dict[str, dict[str, np.ndarray]]
     built_findings: tuple[tuple[Finding, ...], ...]
     answer_findings: tuple[tuple[Finding, ...], ...]
     failed: tuple[str, ...]
@@ -175,6 +175,8 @@ def join_layers(
 ) -> dict[str, pd.DataFrame]:
     """Return the layers of all parts, their rows in the order of the lines.
 
+    The parts are emptied as their rows are taken, so that no more than one layer is held twice.
+
     Parameters
     ----------
     parts : sequence of Part
@@ -188,15 +190,15 @@ def join_layers(
     place = pd.Series(np.arange(len(ids)), index=pd.Index(ids, dtype=object))
     about = pd.Series([f.feature_id for f in findings], dtype=object).value_counts()
     layers = {}
-    for name in parts[0].layers:
-        joined = {
-            column: np.concatenate([part.layers[name][column] for part in parts])
-            for column in parts[0].layers[name]
-        }
+    for name in list(parts[0].layers):
+        pieces = [part.layers.pop(name) for part in parts]
+        joined = {column: np.concatenate([p.pop(column) for p in pieces]) for column in list(pieces[0])}
         order = np.argsort(place.reindex(joined["section_id"]).to_numpy(), kind="stable")
         out = {}
         for column in LAYERS[name].columns:
             values = joined[column][order]
+            if column != "section_id":
+                del joined[column]
             is_text = COLUMNS[column].dtype is str
             out[column] = pd.array(values, dtype="str") if is_text else values
         if name == "sections":
@@ -205,7 +207,7 @@ def join_layers(
             )
         table = pd.DataFrame(out)
         if _GEOMETRY in joined:
-            shapes = shapely.from_wkb(joined[_GEOMETRY][order])
+            shapes = shapely.from_wkb(joined.pop(_GEOMETRY)[order])
             table = geopandas.GeoDataFrame(table, geometry=geopandas.GeoSeries(shapes, crs=crs))
         layers[name] = table
     return layers
