@@ -71,7 +71,8 @@ def folder(tmp_path_factory):
     z = (z + 100 + values.normal(0, 0.05, z.shape)).round(2)
     with rasterio.open(
         made / "dem.tif", "w", driver="GTiff", width=400, height=1200, count=1, dtype="float32",
-        crs="EPSG:26915", transform=from_origin(500000, 4500000, 1, 1), tiled=True, blockxsize=128, blockysize=128,
+        crs="EPSG:26915", transform=from_origin(500000, 4500000, 1, 1), tiled=True,
+        blockxsize=128, blockysize=128,
     ) as out:  # fmt: skip
         out.write(z.astype("float32"), 1)
         out.units = ("m",)

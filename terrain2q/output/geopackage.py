@@ -153,9 +153,8 @@ def write_geopackage(
     unknown = sorted(set(layers) - set(LAYERS))
     if unknown:
         raise ValueError(f"layers that are not registered: {', '.join(unknown)}")
-    prepared = [(layer, _fields(layer, layers[name]), _wkb(layer, layers[name], crs), len(layers[name]))
-                for name, layer in LAYERS.items() if name in layers]  # fmt: skip
-    if not prepared:
+    wanted = [layer for name, layer in LAYERS.items() if name in layers]
+    if not wanted:
         raise ValueError("no layer to write")
     about = {**(metadata or {}), "description": description, "caution": CAUTION, "units": units.name}
     about = json.dumps(plain(about), ensure_ascii=False, allow_nan=False)
@@ -165,9 +164,11 @@ def write_geopackage(
     with whole_file(target) as temporary:
         try:
             with _gdal_options(OGR_CURRENT_DATE=date, OGR_SQLITE_SYNCHRONOUS="OFF"):
-                for layer, fields, geometry, _ in prepared:
-                    _write_layer(temporary, layer, fields, geometry, units, crs)
-            counts = {layer.name: count for layer, _, _, count in prepared}
+                # one after another, so that no more than one layer is held as it is written
+                for layer in wanted:
+                    table = layers[layer.name]
+                    _write_layer(temporary, layer, _fields(layer, table), _wkb(layer, table, crs), units, crs)
+            counts = {layer.name: len(layers[layer.name]) for layer in wanted}
             counts |= _describe(temporary, layers, units, about, date)
             _check(temporary, counts)
         except (RuntimeError, sqlite3.Error, OSError) as error:  # pyogrio's own are RuntimeErrors
