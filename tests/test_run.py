@@ -105,8 +105,9 @@ def test_earlier_results_are_kept_unless_asked(tmp_path):
 
 BED, SIDE, DEPTH, SLOPE_V, N_CHANNEL, N_PLAIN = 16.0, 4.0, 2.0, 0.004, 0.035, 0.08
 WIDE, RISE = 30.0, 0.25
-"""A trapezoid of bed 16 m and sides 4:1, 2 m deep; floodplains 30 m wide; valley sides of 1 in 4. Cells of 1 m round off a
-kink by up to an eighth of its change of slope, so that sharper sides would shift the stage by more than 1 cm."""
+"""A trapezoid of bed 16 m and sides 4:1, 2 m deep; floodplains 30 m wide; valley sides of 1 in 4.
+Cells of 1 m round off a kink by up to an eighth of its change of slope: sharper sides would shift the stage by
+over 1 cm."""
 
 
 def closed_form(depth):
@@ -204,7 +205,7 @@ def test_straight_valley_at_any_azimuth(tmp_path, azimuth):
 
 
 def test_turned_line_gives_the_same_answers(tmp_path):
-    study, place = valley(tmp_path, 30)
+    study, _ = valley(tmp_path, 30)
     first = run(study).design_stages
     lines = geopandas.read_file(tmp_path / "lines.gpkg", layer="cut_lines")
     lines["geometry"] = lines.geometry.reverse()
@@ -244,8 +245,11 @@ def test_one_bad_line_stops_nothing(tmp_path):
     assert failed["stage"].isna().all()
     why = {f.feature_id: f.code for f in results.findings_list if f.severity == "failed"}
     assert why == {
-        "off": "line-off-terrain", "no-length": "line-empty", "none": "line-empty", "hillside": "no-low-ground",
-    }  # fmt: skip
+        "off": "line-off-terrain",
+        "no-length": "line-empty",
+        "none": "line-empty",
+        "hillside": "no-low-ground",
+    }
     assert set(results.design_stages.loc[results.design_stages["status"] != "failed", "section_id"]) == set(
         "abc"
     )

@@ -113,7 +113,8 @@ def find_banks(stations: ArrayLike, elevations: ArrayLike, origin: float | None 
     the next by the highest ground). Each one's score is lowered by four times its distance from the
     origin in widths of its channel. A channel that holds the origin in its lower half goes before one
     that lies beside it, unless that is more than three times as deep: the stream may be drawn beside its
-    channel, but when it is drawn on a bed it is not in the hollow behind the bank. So a channel that lies higher than its flood plain is kept.
+    channel, but when it is drawn on a bed it is not in the hollow behind the bank. So a channel that lies
+    higher than its flood plain is kept.
 
     *How good it is.* The form of the rule and its round weights were chosen on half of the sites of 77 stream
     sections surveyed and classed by the US Geological Survey (Smith Creek, Virginia; channels 4 to 45 m

@@ -1,4 +1,4 @@
-"""A rating as a table. The one module of the hydraulics that knows pandas; imported when a table is asked for."""
+"""A rating as a table: the one module of the hydraulics that knows pandas, imported when it is needed."""
 
 from __future__ import annotations
 

@@ -22,7 +22,7 @@ HIGH_VELOCITY = 6.0
 """Mean velocity (m/s) above which a row is doubtful (from memory: floods seldom pass 4 m/s over a reach)."""
 
 HIGH_ALPHA = 2.0
-"""Velocity coefficient above which a row is doubtful (Chow 1959, Table 2-1: up to 2.0 in overflooded valleys)."""
+"""Velocity coefficient above which a row is doubtful (Chow 1959, Table 2-1, from memory: at most 2.0)."""
 
 STEEP = 0.04
 """Slope above which normal depth is seldom trusted (Jarrett 1984, upper end of his range; from memory)."""
@@ -31,7 +31,7 @@ _LEAVES = 0.01
 """Share of the discharge beyond a bank that is worth a finding."""
 
 _APART = 0.01
-"""Stages (m) that are nearer to each other are one stage to a reader; noise in the ground makes many of them."""
+"""Stages (m) nearer to each other than this are one to a reader; noise in the ground makes many of them."""
 
 _LAYER = "design_stages"
 

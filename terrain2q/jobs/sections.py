@@ -176,7 +176,7 @@ def _crossing_station(line: CutLine, profile: Profile) -> float:
 def _usable_part(
     line: CutLine, whole: Profile, crossing: float, inputs: SectionInputs, notes
 ) -> Profile | None:
-    """The ground between gaps that are too wide to bridge; what was done is noted."""
+    """Return the ground between gaps that are too wide to bridge; what was done is noted."""
     known = np.isfinite(whole.elevations)
     name = line.section_id
 

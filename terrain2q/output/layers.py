@@ -53,7 +53,7 @@ class _Projected:
                     profile.elevations * factor,
                     profile.stations * factor,
                 ]
-            )  # fmt: skip
+            )
         )
 
 
