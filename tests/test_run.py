@@ -106,8 +106,10 @@ def test_earlier_results_are_kept_unless_asked(tmp_path):
 BED, SIDE, DEPTH, SLOPE_V, N_CHANNEL, N_PLAIN = 16.0, 4.0, 2.0, 0.004, 0.035, 0.08
 WIDE, RISE = 30.0, 0.25
 """A trapezoid of bed 16 m and sides 4:1, 2 m deep; floodplains 30 m wide; valley sides of 1 in 4.
+
 Cells of 1 m round off a kink by up to an eighth of its change of slope: sharper sides would shift the stage by
-over 1 cm."""
+more than 1 cm.
+"""
 
 
 def closed_form(depth):
