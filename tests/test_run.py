@@ -107,8 +107,8 @@ BED, SIDE, DEPTH, SLOPE_V, N_CHANNEL, N_PLAIN = 16.0, 4.0, 2.0, 0.004, 0.035, 0.
 WIDE, RISE = 30.0, 0.25
 """A trapezoid of bed 16 m and sides 4:1, 2 m deep; floodplains 30 m wide; valley sides of 1 in 4.
 
-Cells of 1 m round off a kink by up to an eighth of its change of slope: sharper sides would shift the stage by
-more than 1 cm.
+Cells of 1 m round off a kink by up to an eighth of its change of slope: sharper sides would shift the stage
+by more than 1 cm.
 """
 
 
