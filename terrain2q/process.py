@@ -48,7 +48,13 @@ from terrain2q.output.pages import write_pages
 from terrain2q.output.rasters import flood_rasters
 from terrain2q.output.report import Explorer
 from terrain2q.output.report_data import worst_first
-from terrain2q.output.run_record import run_record, write_run_record
+from terrain2q.output.run_record import (
+    files_of_record,
+    note_pages,
+    remove_earlier,
+    run_record,
+    write_run_record,
+)
 from terrain2q.output.tables import check_tables
 from terrain2q.screening import Screened, crossing_layers, find_crossings, screen_study, write_crossings
 from terrain2q.study import Study, load_study
@@ -82,6 +88,8 @@ class Results:
         How long it took.
     name : str
         Of the study.
+    left_files : tuple of pathlib.Path
+        Files of an earlier run that this one did not write, but that have changed since; they were left.
     """
 
     layers: Mapping[str, pd.DataFrame]
@@ -93,6 +101,7 @@ class Results:
     seconds: float = 0.0
     name: str = ""
     failed: frozenset[str] = field(default=frozenset())
+    left_files: tuple[Path, ...] = ()
 
     def __getattr__(self, name: str) -> pd.DataFrame:
         layers = self.__dict__.get("layers", {})
@@ -161,6 +170,7 @@ class Results:
             ],
             "folder": None if self.folder is None else str(self.folder),
             "files": [str(f) for f in self.files],
+            "left_files": [str(f) for f in self.left_files],
             "seconds": round(self.seconds, 2),
             "caution": CAUTION,
         }
@@ -224,6 +234,9 @@ class Results:
         ]
         if self.folder is not None:
             parts += ["", f"Written to {self.folder}: {', '.join(f.name for f in self.files)}"]
+        if self.left_files:
+            names = ", ".join(f.name for f in self.left_files)
+            parts += [f"Not of this run, but changed since an earlier one and so not removed: {names}"]
         parts += [f"Took {self.seconds:.1f} s.", "", CAUTION]
         return "\n".join(parts)
 
@@ -631,6 +644,7 @@ def run_study(
     screened = _screen(study, inputs, flows, progress)
     terrain = inputs.sections.terrain
     folder.mkdir(parents=True, exist_ok=True)
+    earlier = files_of_record(folder)
     with closing(_map_floods(study, events, flows, inputs, answers, progress)) as floods:
         if floods.answers:
             answers = floods.answers
@@ -684,9 +698,14 @@ def run_study(
             findings=findings,
             seconds=seconds,
             outputs=[package, *rasters, *about_crossings, *pictures],
+            earlier=earlier,
         ),
     )
     pages = write_pages(folder, study.as_dict()["output"])
+    files = (package, *rasters, *about_crossings, *pictures, record, *pages)
+    # only now that all is there: what a run before wrote and this one did not would be taken for its own
+    left = remove_earlier(folder, earlier, files)
+    note_pages(folder, pages, alone=True)
     progress(1, 1, "writing")
     return Results(
         layers,
@@ -694,10 +713,11 @@ def run_study(
         study.system,
         inputs.crs,
         folder,
-        (package, *rasters, *about_crossings, *pictures, record, *pages),
+        files,
         time.perf_counter() - began,
         study.study.name,
         failed,
+        tuple(left),
     )
 
 

@@ -1,8 +1,10 @@
 """The flood on the map: extent, low ground not joined, boundary audit and depth grids."""
 
+import hashlib
 import json
 import re
 from itertools import pairwise
+from pathlib import Path
 
 import geopandas
 import numpy as np
@@ -22,6 +24,7 @@ from terrain2q.errors import InputError, OutputError
 from terrain2q.ground import water_edge
 from terrain2q.ground.water_edge import GridFile, Joins, edge_field, outlines, strips, tidy
 from terrain2q.ground.water_surface import Polyline, Reach, divide
+from terrain2q.output.pages import write_pages
 from terrain2q.output.rasters import file_words
 
 # rasterio 1.4 multiplies transforms in a way that affine 3.1 will some day retire
@@ -625,6 +628,92 @@ def test_no_grid_stays_where_the_layers_fail(tmp_path, monkeypatch):
     with pytest.raises(OutputError):
         valley.run({"flood": 60.0})
     assert list((tmp_path / "output").iterdir()) == []
+
+
+def small_valley(folder):
+    valley = Valley(folder, trapezoid, 0)
+    valley.stream([(-140, 0), (140, 0)])
+    valley.across([-60, 60])
+    return valley
+
+
+def contents(folder):
+    return {path.name: path.read_bytes() for path in folder.iterdir()}
+
+
+def test_files_of_an_earlier_run_do_not_stay_to_be_mistaken(tmp_path):
+    valley = small_valley(tmp_path)
+    first = valley.run(
+        {"flood": 60.0, "larger": 90.0}, options={"output.tables": "csv", "output.report": True}
+    )
+    mine = tmp_path / "output" / "depth_mine.tif"
+    mine.write_bytes((tmp_path / "output" / "depth_flood.tif").read_bytes())
+    noted = tmp_path / "output" / "depth_velocity_larger.tif"
+    with noted.open("ab") as file:
+        file.write(b"changed by hand")
+    assert {"depth_larger.tif", "results_sections.csv", "report.html"} <= {f.name for f in first.files}
+    second = valley.run({"flood": 50.0})
+    there = set(contents(second.folder))
+    assert there == {f.name for f in second.files} | {mine.name, noted.name}
+    assert second.left_files == (noted,)
+    assert "not removed: depth_velocity_larger.tif" in second.summary_text()
+    assert second.summary()["left_files"] == [str(noted)]
+    # what a person changed is not taken for a file of ours ever after
+    third = valley.run({"flood": 50.0})
+    assert noted.exists()
+    assert third.left_files == ()
+
+
+def test_the_record_holds_every_file_with_its_hash(tmp_path):
+    results = small_valley(tmp_path).run(
+        {"flood": 60.0}, options={"output.tables": "csv", "output.report": True}
+    )
+
+    def holds_all():
+        record = json.loads((results.folder / "run.json").read_text())
+        listed = {Path(e["path"]).name: e["sha256"] for e in record["outputs"] + record["pages"]}
+        return listed == {
+            name: hashlib.sha256(data).hexdigest()
+            for name, data in contents(results.folder).items()
+            if name != "run.json"
+        }
+
+    assert holds_all()
+    (results.folder / "report.html").write_text("spoilt")
+    assert not holds_all()
+    write_pages(results.folder)
+    assert holds_all()
+
+
+@pytest.mark.parametrize("where", ["make_layers", "write_geopackage"])
+def test_earlier_files_stay_whole_where_a_run_fails(tmp_path, monkeypatch, where):
+    valley = small_valley(tmp_path)
+    valley.run({"flood": 60.0, "larger": 90.0})
+    before = contents(tmp_path / "output")
+
+    def fail(*_args, **_more):
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr(f"terrain2q.process.{where}", fail)
+    with pytest.raises(KeyboardInterrupt):
+        valley.run({"flood": 50.0})
+    assert contents(tmp_path / "output") == before
+
+
+def test_a_run_that_fails_at_its_end_loses_sight_of_nothing(tmp_path, monkeypatch):
+    valley = small_valley(tmp_path)
+    valley.run({"flood": 60.0, "larger": 90.0})
+
+    def fail(*_args, **_more):
+        raise KeyboardInterrupt
+
+    with monkeypatch.context() as patch:
+        patch.setattr("terrain2q.process.write_pages", fail)
+        with pytest.raises(KeyboardInterrupt):
+            valley.run({"flood": 50.0})
+    assert (tmp_path / "output" / "depth_larger.tif").exists()
+    results = valley.run({"flood": 50.0})
+    assert set(contents(results.folder)) == {f.name for f in results.files}
 
 
 def test_file_names_are_safe_and_apart():

@@ -9,6 +9,7 @@ from typing import Any
 
 from terrain2q.output.folder import read_folder
 from terrain2q.output.report import write_report
+from terrain2q.output.run_record import note_pages
 from terrain2q.output.sheets import FLAGGED, NONE, write_sheets
 from terrain2q.output.tables import write_tables
 
@@ -51,4 +52,5 @@ def write_pages(folder: str | os.PathLike, asked: Mapping[str, Any] | None = Non
         written.append(write_sheets(source, sheets))
     if (tables := asked.get("tables", NONE)) != NONE:
         written += write_tables(source, tables)
+    note_pages(Path(folder), written)
     return written

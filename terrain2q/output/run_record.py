@@ -128,6 +128,7 @@ def run_record(
     findings: Iterable[Finding],
     seconds: float,
     outputs: Iterable[str | os.PathLike] = (),
+    earlier: Iterable[Mapping] = (),
     finished: str | None = None,
 ) -> dict:
     """Gather what ``run.json`` says about a run.
@@ -148,6 +149,9 @@ def run_record(
         How long the run took.
     outputs : iterable of path
         Files written, to tell whether a result belongs to this record.
+    earlier : iterable of mapping
+        Files of the run before, see :func:`files_of_record`, that are still in the folder. They stand under
+        ``pages`` until the run has ended, so that no file of ours is ever lost sight of.
     finished : str, optional
         The time of writing; now where not given.
 
@@ -156,6 +160,8 @@ def run_record(
     dict
         To be given to :func:`write_run_record`.
     """
+    outputs = [_file(path) for path in outputs]
+    new = {_name(entry) for entry in outputs}
     files = []
     for key, paths in inputs.items():
         paths = [paths] if isinstance(paths, str | os.PathLike) else paths
@@ -169,7 +175,8 @@ def run_record(
         "versions": versions(),
         "platform": platform.platform(),
         "inputs": files,
-        "outputs": [_file(path) for path in outputs],
+        "outputs": outputs,
+        "pages": [dict(entry) for entry in earlier if _name(entry) not in new],
         "counts": dict(counts),
         "findings": findings_by_code(findings),
         "settings": dict(settings),
@@ -178,6 +185,75 @@ def run_record(
 
 def _file(path: str | os.PathLike) -> dict:
     return {"path": str(path), "bytes": size_of(path), "sha256": sha256_of(path)}
+
+
+def _name(entry: Mapping) -> str:
+    return str(entry["path"]).replace("\\", "/").rpartition("/")[2]
+
+
+def files_of_record(folder: Path) -> list[dict]:
+    """Return the files that the record in an output folder says were written there; empty without one."""
+    try:
+        record = json.loads((folder / RECORD_NAME).read_text(encoding="utf-8"))
+        entries = [*record.get("outputs", ()), *record.get("pages", ())]
+        return [e for e in entries if isinstance(e["path"], str) and isinstance(e["sha256"], str)]
+    except (OSError, ValueError, TypeError, KeyError, AttributeError):
+        return []
+
+
+def note_pages(folder: Path, pages: Iterable[Path], *, alone: bool = False) -> None:
+    """Note pages and tables, with their SHA-256, in the record of their folder; without one nothing is done.
+
+    Parameters
+    ----------
+    folder : Path
+    pages : iterable of Path
+        Just written.
+    alone : bool
+        Forget what else stood there.
+    """
+    path = folder / RECORD_NAME
+    try:
+        record = json.loads(path.read_text(encoding="utf-8"))
+    except (OSError, ValueError):
+        return
+    new = {_name(entry): entry for entry in map(_file, pages)}
+    old = {} if alone else {_name(entry): entry for entry in record.get("pages", ())}
+    record["pages"] = list({**old, **new}.values())
+    write_run_record(path, record)
+
+
+def remove_earlier(folder: Path, earlier: Iterable[Mapping], written: Iterable[Path]) -> list[Path]:
+    """Remove files of the run before that a new run did not write, as they could be taken for its own.
+
+    Parameters
+    ----------
+    folder : Path
+        Nothing outside of it is touched.
+    earlier : iterable of mapping
+        See :func:`files_of_record`.
+    written : iterable of Path
+        Files of the new run.
+
+    Returns
+    -------
+    list of Path
+        Those that have changed since they were written, or cannot be removed; they stay.
+    """
+    names = {path.name for path in written}
+    left = []
+    for entry in earlier:
+        path = folder / _name(entry)
+        if path.name in names or not path.is_file():
+            continue
+        try:
+            if sha256_of(path) == entry["sha256"]:
+                path.unlink()
+                continue
+        except OSError:
+            pass
+        left.append(path)
+    return left
 
 
 def plain(value):
