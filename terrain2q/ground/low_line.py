@@ -344,7 +344,8 @@ def low_line(line, terrain: Terrain, snap: float, stream: str = "", start: float
     LowLine or None
         None where the line has no length.
     """
-    profile = terrain.sample([line])[0]
+    # the line's own ground is in the rows laid across it below
+    profile = terrain.sample([line], elevations=False)[0]
     if len(profile) < 2:
         return None
     cell = min(terrain.cell_size)

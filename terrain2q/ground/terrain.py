@@ -325,7 +325,9 @@ class Terrain:
             cells *= self.metres_per_unit
         return cells, shifted(self.transform, first_column, first_row)
 
-    def sample(self, lines, spacing: float | None = None, crs=None) -> list[Profile]:
+    def sample(
+        self, lines, spacing: float | None = None, crs=None, *, elevations: bool = True
+    ) -> list[Profile]:
         """Return the ground along lines.
 
         Parameters
@@ -337,6 +339,8 @@ class Terrain:
             middle of the line's bounds). Each segment between two vertices is divided evenly.
         crs : pyproj.CRS or anything it accepts, optional
             The lines' CRS where it is not the terrain's; a GeoSeries brings its own.
+        elevations : bool
+            False lays the points alone and reads no cell; every elevation is then NaN.
 
         Returns
         -------
@@ -395,7 +399,18 @@ class Terrain:
         last = np.append(first[1:], x.size)
         for batch in self._batches(points, x[first], y[first]):
             vertex = _ranges(first[batch], last[batch])
-            self._fill(profiles, line[first[batch]], points[batch], vertex, x, y, drawn, intervals, measured)
+            self._fill(
+                profiles,
+                line[first[batch]],
+                points[batch],
+                vertex,
+                x,
+                y,
+                drawn,
+                intervals,
+                measured,
+                elevations,
+            )
         return profiles
 
     def _bring_over(self, x, y, line, crs):
@@ -479,7 +494,9 @@ class Terrain:
         order = np.lexsort((column, row // 512))
         return np.split(order, np.flatnonzero(np.diff(np.cumsum(points[order]) // POINTS_AT_ONCE)) + 1)
 
-    def _fill(self, profiles, lines, points, vertex, x, y, drawn, intervals, measured) -> None:
+    def _fill(
+        self, profiles, lines, points, vertex, x, y, drawn, intervals, measured, elevations: bool
+    ) -> None:
         """Work out the profiles of some lines; `vertex` are the numbers of all their vertices."""
         parts = intervals[vertex]
         owner = np.repeat(vertex, parts)
@@ -491,7 +508,7 @@ class Terrain:
         point_y = y[owner] + fraction * (y[following] - y[owner])
         columns = [
             measured.stations(owner, fraction),
-            self.elevations(point_x, point_y),
+            self.elevations(point_x, point_y) if elevations else np.full(point_x.size, np.nan),
             point_x,
             point_y,
             (number == 0) & drawn[owner],
