@@ -342,9 +342,22 @@ def check(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bo
     type=click.Path(path_type=Path),
     help="GeoPackage to write (default cut_lines.gpkg beside the study file).",
 )
+@click.option(
+    "--at",
+    type=click.Choice(["spacing", "crossings"]),
+    help="Lines every so many feet or metres, or one up- and one downstream of each crossing (default: "
+    "crossings for a study with [crossings] whose [cut_lines] has neither every nor path).",
+)
 @_takes_study
 @click.pass_context
-def layout(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool, to: Path | None) -> int:
+def layout(
+    ctx: click.Context,
+    study_path: Path | None,
+    as_json: bool,
+    strict: bool,
+    to: Path | None,
+    at: str | None,
+) -> int:
     """Lay out cut lines along the streams, into a GeoPackage to edit.
 
     Lines stand square to the smoothed stream at every so many feet or metres ([cut_lines] every), reach up to
@@ -352,16 +365,21 @@ def layout(ctx: click.Context, study_path: Path | None, as_json: bool, strict: b
     that a person drew or edited are kept when lines are laid out again. --strict also counts places where no
     line could be laid out.
 
+    At crossings, a line stands at the nearest place up- and downstream that is clear of the fill of every
+    road; it needs no width.
+
     \b
     Examples:
       terrain2q layout study.toml
+      terrain2q layout study.toml --at crossings
       terrain2q layout study.toml --cut_lines.every 250 --cut_lines.width 1500 --to lines.gpkg
     """
-    study = _study(ctx, study_path, ("terrain", "streams", "cut_lines"))
+    where = "crossings" if at == "crossings" else "cut_lines"
+    study = _study(ctx, study_path, ("terrain", "streams", where))
     from terrain2q.laying_out import lay_out_study
 
     with _progress() as progress:
-        laid_out = lay_out_study(study, to, progress)
+        laid_out = lay_out_study(study, to, progress, at)
     findings = laid_out.findings
     if as_json:
         _print_json({**laid_out.summary(), "found": [_finding(f) for f in findings]})

@@ -14,17 +14,26 @@ import pandas
 import shapely
 
 from terrain2q.errors import SEVERITIES, Finding, InputError
+from terrain2q.ground.cover import UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
 from terrain2q.ground.layers import clean_texts, columns_of, read_layer, reproject
 from terrain2q.ground.layout import KeptLine, Layout, lay_out
 from terrain2q.ground.low_line import turn_streams
 from terrain2q.ground.streams import StreamNetwork, feature_ids
 from terrain2q.ground.terrain import Terrain
+from terrain2q.jobs.crossings import HALF_SECTION, places_beside
+from terrain2q.jobs.lines_at_crossings import lines_at_crossings
+from terrain2q.jobs.sections import SectionInputs
+from terrain2q.jobs.slopes import OneSlope
 from terrain2q.output.cut_line_file import COLUMNS, read_cut_line_file, write_cut_line_file
+from terrain2q.screening import crossing_inputs
 from terrain2q.study import Study
 
 FILE_NAME = "cut_lines.gpkg"
 """The file beside the study that lines are laid out into."""
+
+SPACING, CROSSINGS = "spacing", "crossings"
+"""Where lines are laid out: every so far along the streams, or up- and downstream of each crossing."""
 
 
 @dataclass(frozen=True)
@@ -39,12 +48,15 @@ class LaidOut:
     kept : tuple of str
         Ids of the lines that a person drew or edited.
     findings : tuple of Finding
+    at : str
+        :data:`SPACING` or :data:`CROSSINGS`.
     """
 
     file: Path
     lines: geopandas.GeoDataFrame
     kept: tuple[str, ...]
     findings: tuple[Finding, ...]
+    at: str = SPACING
 
     def summary(self) -> dict:
         """Return what the command prints, as plain values for JSON."""
@@ -61,12 +73,14 @@ class LaidOut:
     def summary_text(self) -> str:
         """Return what the command prints."""
         new, streams = len(self.lines) - len(self.kept), self.lines["stream"].nunique()
-        text = [f"{new} lines laid out along {streams} streams, written to {self.file}"]
+        where = f"along {streams} streams" if self.at == SPACING else "up- and downstream of crossings"
+        text = [f"{new} lines laid out {where}, written to {self.file}"]
         if self.kept:
             text.append(f"{len(self.kept)} lines that a person drew or edited were kept: {_some(self.kept)}")
         text += [
             "Edit them in a GIS; what you change is kept when you lay out again. To run the study on them",
-            f'put path = "{self.file.name}|layer=cut_lines" under [cut_lines] in place of every and width.',
+            f'put path = "{self.file.name}|layer=cut_lines" under [cut_lines] '
+            + ("in place of every and width." if self.at == SPACING else "in place of width and height."),
         ]
         return "\n".join(text)
 
@@ -97,6 +111,49 @@ def lay_out_lines(
     )
 
 
+def lay_out_at_crossings(
+    study: Study,
+    terrain: Terrain,
+    streams: geopandas.GeoDataFrame,
+    kept: list[KeptLine] | None = None,
+    progress: Callable[[int, int, str], None] | None = None,
+) -> Layout:
+    """Lay out a line up- and one downstream of each crossing of a study, clear of the fills of roads.
+
+    Parameters
+    ----------
+    study : Study
+        With [crossings]; ``width`` and ``height`` of [cut_lines] where given.
+    terrain, streams, kept
+        As for :func:`lay_out_lines`. A line with the id of a kept one is not laid out.
+    progress : callable, optional
+        ``progress(done, total, label)``.
+
+    Returns
+    -------
+    Layout
+        Ids are those of the crossings with ``approach`` or ``tailwater``.
+    """
+    sections = SectionInputs(
+        terrain, UniformCover(0.05), None, "none", None, OneSlope(float("nan")), None, study.system
+    )
+    inputs, findings = crossing_inputs(study, sections, streams)
+    places = places_beside(inputs, progress)
+    findings = [*findings, *(f for place in places for f in place.findings)]
+    table = study.cut_lines
+    width = None if table is None else study.in_si("cut_lines.width")
+    layout = lines_at_crossings(
+        places,
+        inputs.network,
+        terrain,
+        width=2.0 * HALF_SECTION if width is None else width,
+        height=None if table is None else study.in_si("cut_lines.height"),
+        kept=kept or (),
+        units=study.system,
+    )
+    return Layout(layout.lines, [*findings, *layout.findings])
+
+
 def lines_for_run(
     study: Study, terrain: Terrain, streams: geopandas.GeoDataFrame | None
 ) -> tuple[list[CutLine], list[Finding]]:
@@ -109,6 +166,14 @@ def lines_for_run(
         have none (``key-conflict``), or no line could be laid out (``layer-empty``).
     """
     _need_streams(study)
+    if study.cut_lines.every is None:
+        raise InputError(
+            "key-missing",
+            "[cut_lines] has no path and no every",
+            where="[cut_lines]",
+            fix="run `terrain2q layout --at crossings` and name its file as path, or add every; crossings "
+            "alone need no [cut_lines]",
+        )
     if study.slope is not None and study.slope.field is not None:
         raise InputError(
             "key-conflict",
@@ -138,6 +203,7 @@ def lay_out_study(
     study: Study,
     file: str | os.PathLike | None = None,
     progress: Callable[[int, int, str], None] | None = None,
+    at: str | None = None,
 ) -> LaidOut:
     """Lay out cut lines along a study's streams into a GeoPackage to edit.
 
@@ -147,11 +213,15 @@ def lay_out_study(
     Parameters
     ----------
     study : Study
-        With [terrain], [streams] and ``every`` and ``width`` under [cut_lines].
+        With [terrain] and [streams], and ``every`` and ``width`` under [cut_lines] or [crossings].
     file : path, optional
         The GeoPackage; ``cut_lines.gpkg`` beside the study where not given.
     progress : callable, optional
         ``progress(done, total, label)``.
+    at : str, optional
+        :data:`SPACING` for lines every so far, :data:`CROSSINGS` for one up- and one downstream of each
+        crossing. Where not given, the latter for a study with [crossings] whose [cut_lines] has neither
+        ``every`` nor ``path``.
 
     Raises
     ------
@@ -159,7 +229,20 @@ def lay_out_study(
         An input is wrong, or the file cannot be written; nothing was written.
     """
     _need_streams(study)
-    if study.cut_lines is None or study.cut_lines.every is None:
+    table = study.cut_lines
+    if at is None:
+        at = SPACING
+        spaced = table is not None and (table.every is not None or table.path is not None)
+        if study.crossings is not None and not spaced:
+            at = CROSSINGS
+    if at == CROSSINGS and study.crossings is None:
+        raise InputError(
+            "key-missing",
+            "lines are to be laid out at crossings, and there are none",
+            where=str(study.path or "the options"),
+            fix="add [crossings] with path or roads",
+        )
+    if at == SPACING and (table is None or table.every is None):
         raise InputError(
             "key-missing",
             "[cut_lines] has no every and no width, by which lines are laid out",
@@ -196,7 +279,10 @@ def lay_out_study(
     findings = [*terrain.findings, *turned]
     earlier = read_cut_line_file(file)
     own, kept = _own_lines(earlier, streams, terrain, study)
-    layout = lay_out_lines(study, terrain, streams, kept)
+    if at == CROSSINGS:
+        layout = lay_out_at_crossings(study, terrain, streams, kept, progress)
+    else:
+        layout = lay_out_lines(study, terrain, streams, kept)
     findings += layout.findings
     if kept:
         ids = [k.section_id for k in kept]
@@ -218,7 +304,7 @@ def lay_out_study(
     write_cut_line_file(file, lines, study.system, edited)
     progress(1, 1, "laying out cut lines")
     findings.sort(key=lambda f: SEVERITIES.index(f.severity))
-    return LaidOut(file, lines, tuple(k.section_id for k in kept), tuple(findings))
+    return LaidOut(file, lines, tuple(k.section_id for k in kept), tuple(findings), at)
 
 
 def streams_on(terrain: Terrain, streams: geopandas.GeoDataFrame) -> set[str]:

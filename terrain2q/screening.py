@@ -108,14 +108,13 @@ def find_crossings(
     return crossings_from_points(points, network, lines, merge, snap, study.system), []
 
 
-def screen_study(
+def crossing_inputs(
     study: Study,
     sections: SectionInputs,
     streams: geopandas.GeoDataFrame,
-    flows: Sequence[Flow],
-    progress: Callable | None = None,
-) -> Screened:
-    """Screen the crossings of a study.
+    flows: Sequence[Flow] = (),
+) -> tuple[CrossingInputs, list[Finding]]:
+    """Return a study's crossings and what they are screened with, and findings that belong to none of them.
 
     Parameters
     ----------
@@ -126,8 +125,6 @@ def screen_study(
     streams : geopandas.GeoDataFrame
         In the terrain's CRS, turned downstream.
     flows : sequence of Flow
-    progress : callable, optional
-        ``progress(done, total, label)``.
     """
     crs = sections.terrain.crs
     points, roads = crossing_layers(study, crs)
@@ -155,6 +152,26 @@ def screen_study(
         roads=road_lines,
         rank=table.rank,
     )
+    return inputs, findings
+
+
+def screen_study(
+    study: Study,
+    sections: SectionInputs,
+    streams: geopandas.GeoDataFrame,
+    flows: Sequence[Flow],
+    progress: Callable | None = None,
+) -> Screened:
+    """Screen the crossings of a study.
+
+    Parameters
+    ----------
+    study, sections, streams, flows
+        As for :func:`crossing_inputs`.
+    progress : callable, optional
+        ``progress(done, total, label)``.
+    """
+    inputs, findings = crossing_inputs(study, sections, streams, flows)
     answers = tuple(screen_crossings(inputs, progress))
     findings = [*findings, *(f for a in answers for f in a.findings)]
     return Screened(inputs, answers, tuple(findings))

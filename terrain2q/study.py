@@ -193,8 +193,8 @@ class CutLinesTable(Table):
     @classmethod
     def missing(cls, given: Collection[str]) -> Iterator[tuple[str, ...]]:
         """Yield what is missing for lines."""
-        if "path" not in given and "every" not in given:
-            yield ("every",) if {"width", "height"}.intersection(given) else ("path", "every")
+        if not {"path", "every", "width", "height"}.intersection(given):
+            yield ("path", "every")
         if "every" in given and "width" not in given:
             yield ("width",)
 
@@ -830,9 +830,15 @@ def nearest(word: str, known: Collection[str]) -> str:
 
 
 def _read_table(
-    cls: type[Table], given: Mapping[str, object], place: Callable[[str], str]
+    cls: type[Table],
+    given: Mapping[str, object],
+    place: Callable[[str], str],
+    needed: Collection[str] = (),
 ) -> tuple[dict[str, Any], list[InputError]]:
-    """Return the checked values of the keys given, and every problem; `place` says where a key stands."""
+    """Return the checked values of the keys given, and every problem; `place` says where a key stands.
+
+    `needed` are keys that the other tables of the study ask for.
+    """
     table_name, keys = _table_name(cls), keys_of(cls)
     values: dict[str, Any] = {}
     problems: list[InputError] = []
@@ -859,6 +865,7 @@ def _read_table(
         (name,) for name, about in keys.items() if about.needed and name not in given
     ]
     absent += cls.missing([name for name in given if name in keys])
+    absent += [(name,) for name in needed if name not in given and (name,) not in absent]
     for names in absent:
         if not meant.intersection(names):
             lines = " or ".join(f"{name} = {keys[name].example}" for name in names)
@@ -1042,7 +1049,11 @@ class _Given:
     def table(self, table: str) -> Table | None:
         """Return a table, checked and with its paths made absolute; None where it has problems."""
         cls = TABLES[table]
-        values, problems = _read_table(cls, self.values.get(table, {}), lambda name: self.place(table, name))
+        given = self.values.get(table, {})
+        # only lines at crossings have no spacing
+        spaced = table == "cut_lines" and "crossings" not in self.values and "path" not in given
+        needed = ("every",) if spaced and {"width", "height"}.intersection(given) else ()
+        values, problems = _read_table(cls, given, lambda name: self.place(table, name), needed)
         for name, about in keys_of(cls).items():
             if about.kind == "folder":
                 values.setdefault(name, default_of(cls, name))

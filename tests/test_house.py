@@ -24,7 +24,7 @@ MAY_IMPORT = {
     "ground": {"errors", "units"},
     "jobs": {"errors", "units", "flows", "ground", "hydraulics"},
     "output": {"errors", "units", "columns", "ground", "hydraulics", "jobs"},
-    "laying_out": {"errors", "units", "study", "ground", "output"},
+    "laying_out": {"errors", "units", "study", "ground", "jobs", "output", "screening"},
     "screening": {"errors", "flows", "study", "ground", "hydraulics", "jobs", "output"},
     "batches": {"errors", "units", "columns", "flows", "ground", "hydraulics", "jobs", "output"},
     "process": {"batches", "errors", "units", "columns", "flows", "study", "ground", "hydraulics", "jobs",

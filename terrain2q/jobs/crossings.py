@@ -358,6 +358,49 @@ def screen_crossings(inputs: CrossingInputs, progress: Callable | None = None) -
     return ranked([a for a in answers if a is not None], inputs.rank)
 
 
+@dataclass(frozen=True, eq=False)
+class Beside:
+    """Where sections up- and downstream of a crossing lie clear of every fill.
+
+    Attributes
+    ----------
+    crossing : Crossing
+    distances : mapping of str to float
+        Stream distance, m, of the ``approach`` and of the ``tailwater`` section, where there is a place.
+    closed : shapely.Geometry
+        Ground under roads and fills, and what a section keeps clear of them less one cell, as a section may
+        stand on the very edge; in the terrain's CRS.
+    findings : tuple of Finding
+    """
+
+    crossing: Crossing
+    distances: Mapping[str, float]
+    closed: shapely.Geometry
+    findings: tuple[Finding, ...]
+
+
+def places_beside(inputs: CrossingInputs, progress: Callable | None = None) -> list[Beside]:
+    """Find places for sections up- and downstream of every crossing, as :func:`screen_crossings` does.
+
+    A crossing for which there are none has no distances, and a finding.
+    """
+    courses = Courses(inputs.network)
+    crossings = list(inputs.crossings)
+    found: dict[int, Beside] = {}
+    for done, i in enumerate(_neighbours(crossings, inputs), 1):
+        try:
+            ready = _prepare(crossings[i], inputs, courses)
+        except _EXPECTED as error:
+            failed = _failed(crossings[i], (), _reason(error))
+            found[i] = Beside(crossings[i], {}, shapely.Polygon(), failed.findings)
+        else:
+            distances = {line.section_id.rpartition(" ")[2]: line.stream_distance for line in ready.lines}
+            found[i] = Beside(crossings[i], distances, ready.closed, tuple(crossings[i].findings))
+        if progress is not None:
+            progress(done, len(crossings), "crossings")
+    return [found[i] for i in range(len(crossings))]
+
+
 def _sections_of(prepared: Mapping[int, _Ready], inputs: SectionInputs) -> dict:
     """Return the sections of each crossing, or the exception that kept it from having any."""
     lines = [line for ready in prepared.values() for line in ready.lines]
@@ -409,6 +452,7 @@ class _Ready:
     storage: tuple[float, float, bool] | None
     water: tuple[float, float, float] | None
     joins: tuple[float, str] | None
+    closed: shapely.Geometry
     findings: list[Finding]
 
 
@@ -452,7 +496,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     downstream = along_line(stream, np.array([at]))[1][0]
     bed = bed_along(ground, stream)
     surface, lines = _surface(crossing, inputs, ground, stream, at, downstream, findings)
-    at = _meeting(surface, stream, at)
+    drawn_at, at = at, _meeting(surface, stream, at)
     crest = find_crest(surface, ground, inputs.reach)
     if crest is None:
         raise NoAnswerError("the terrain has no road here", where=crossing.crossing_id)
@@ -466,6 +510,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     crest, surface = _surveyed(crossing, inputs, crest, surface, findings)
     low = bed.near(edges_at[0])
     top = crest.height + max(CLEAR_ABOVE, crest.height - low)
+    clear = (STRIP + 2) * ground.cell
     places, over = [], []
     for start, up in zip(fill_at, (True, False), strict=True):
         # streets may leave no room at all: then clear of its own road at least
@@ -473,7 +518,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
         for avoided in (fills, own):
             place = place_section(
                 ground, stream, start, up, avoided, top=level, slope=slope, half_width=HALF_SECTION,
-                farthest=FARTHEST, clear=(STRIP + 2) * ground.cell,
+                farthest=FARTHEST, clear=clear,
             )  # fmt: skip
             if place is not None:
                 break
@@ -506,7 +551,14 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, findings)
     made = [
         _cut_line(
-            crossing, name, place, ground, inputs, crossing.stream_distance + place.at - at, slope, source
+            crossing,
+            name,
+            place,
+            ground,
+            inputs,
+            crossing.stream_distance + place.at - drawn_at,
+            slope,
+            source,
         )
         for name, place in zip(("approach", "tailwater"), places, strict=True)
         if place is not None
@@ -531,7 +583,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     )  # fmt: skip
     return _Ready(
         crossing, surface, road, crest, crest_xy, slope, source, bed, edges_at, places, made, storage, water,
-        joins, findings,
+        joins, shapely.transform(fills.buffer(clear - ground.cell), ground.to_map), findings,
     )  # fmt: skip
 
 
