@@ -186,7 +186,9 @@ def write_crossings(
 
     crs = screened.inputs.sections.terrain.crs
     files = [write_crossings_csv(folder, layer)]
-    sections = write_crossing_sections(folder, screened.answers, study.system, crs, layer.crs)
+    sections = write_crossing_sections(
+        folder, screened.answers, study.system, crs, layer.crs, study.rating.stages, study.in_si("rating.top")
+    )
     files += [] if sections is None else [sections]
     if study.crossings.panels:
         files.append(

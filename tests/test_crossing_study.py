@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 
 import geopandas
@@ -10,6 +11,7 @@ import pandas as pd
 import pytest
 import shapely
 from _county import CRS, N, make_valleys, roads, streams, write_dem
+from test_sheets import text_of, worked_out_again
 
 from terrain2q import run
 from terrain2q.columns import LAYERS
@@ -135,6 +137,56 @@ def test_sections_can_be_run_again_as_cut_lines(folder, results):
         stage = stages[f"{row.crossing_id} approach", row.event] - row.slope * row.approach_distance
         # the line alone has the noise that the mean of five lines has not
         assert row.stage == pytest.approx(stage, abs=0.05)
+
+
+@pytest.mark.parametrize("units", ["si", "us"])
+def test_each_number_of_a_crossing_follows_from_its_sheet(folder, results, units, tmp_path):
+    options = {
+        "study.units": units,
+        "output.folder": str(tmp_path),
+        "output.sheets": "flagged",
+        "crossings.panels": 0,
+    }
+    found = run(folder[0] / "study.toml", options)
+    assert len(found.sections) == 0
+    text = text_of(tmp_path / "calculation_sheets.pdf")
+    _, *parts = re.split(r"^\f?Crossing (.+?)(?: \(continued\))?\s{2,}Three valleys.*$", text, flags=re.M)
+    sheets: dict[str, str] = {}
+    for name, page in zip(parts[::2], parts[1::2], strict=True):
+        sheets[name] = sheets.get(name, "") + page
+    table = found.crossings
+    assert set(sheets) == set(table["crossing_id"])
+    number = r"(−?[\d.]+)"
+
+    def value(text: str) -> float:
+        return float(text.replace("−", "-"))
+
+    for name, rows in table.groupby("crossing_id"):
+        sheet = sheets[name]
+        worked = worked_out_again(sheet)
+        asked = [*rows["discharge"], rows["crest_discharge"].iloc[0]]
+        # table, slope and constant give each discharge, that at the crest among them, to three figures
+        assert sorted(q for q, _ in worked) == pytest.approx(sorted(asked), rel=1e-3)
+        for printed, again in worked:
+            assert again == pytest.approx(printed, rel=2e-3)
+        at_section = dict(re.findall(rf"^\s*(.+?): Q = .*stage found {number}", sheet, re.M))
+        slope, distance = re.search(rf"S × distance = {number} × {number}", sheet).groups()
+        fall = value(slope) * value(distance)
+        for row in rows.itertuples():
+            level, down, stage, crest, same, room = map(value, re.search(
+                rf"{row.event}: {number} − {number} = {number};\s+{number} − {number} = {number}", sheet
+            ).groups())  # fmt: skip
+            assert level == pytest.approx(value(at_section[row.event]), abs=0.006)
+            assert down == pytest.approx(fall, abs=2e-3 + 1e-3 * fall)
+            assert level - down == pytest.approx(stage, abs=0.0021)
+            assert crest - stage == pytest.approx(room, abs=0.0021)
+            assert same == stage
+            assert (stage, crest, room) == pytest.approx((row.stage, row.crest, row.freeboard), abs=6e-4)
+        crest, down, level = map(value, re.search(
+            rf"crest reached: {number} \+ {number} = {number}", sheet
+        ).groups())  # fmt: skip
+        assert crest + down == pytest.approx(level, abs=0.0021)
+        assert level == pytest.approx(value(at_section["crest reached"]), abs=0.006)
 
 
 def test_feet_and_metres_agree(folder, results):

@@ -43,7 +43,7 @@ def make(tmp_path, source, which="all") -> str:
 
 
 NUMBER = r"([\d.]+)"
-EVENT = re.compile(rf"^(\S+): Q = {NUMBER} (?:ft³/s|m³/s), stage found {NUMBER}", re.M)
+EVENT = re.compile(rf"^(\S.*?): Q = {NUMBER} (?:ft³/s|m³/s), stage found {NUMBER}", re.M)
 ROW = re.compile(r"^\s*(\d+) .*?(\d\.\d{3,})([*†]?)\s+(?:\[\d+\]\s+)?([\d.]+(?:\s+[\d.]+){5})\s*$", re.M)
 
 

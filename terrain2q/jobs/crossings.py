@@ -37,6 +37,7 @@ from terrain2q.ground.stream_slope import robust_slope
 from terrain2q.ground.streams import StreamNetwork, length_text
 from terrain2q.ground.terrain import Profile, Terrain
 from terrain2q.hydraulics.weir import road_overflow, wetted_road
+from terrain2q.jobs.design_flows import SectionAnswer, answer_section
 from terrain2q.jobs.sections import BuiltSection, SectionInputs, build_sections
 from terrain2q.jobs.slopes import FLAT, SlopeAnswer
 from terrain2q.units import UnitSystem
@@ -91,6 +92,9 @@ SURVEY_DIFFERS = 0.3
 
 STRIP = 2
 """Cells to each side of a section, along the stream, over which its ground is averaged."""
+
+AT_CREST = "crest reached"
+"""Name of the event, in the sections of crossings, whose discharge is that at which the crest is reached."""
 
 DEFAULT_RANK = ("probability", "freeboard")
 
@@ -1077,6 +1081,38 @@ class _Notes:
         for (code, message), events in self._found.items():
             by_code.setdefault(code, []).append(f"{', '.join(events)}: {message}")
         return [self._crossing.finding(code, "; ".join(texts)) for code, texts in by_code.items()]
+
+
+def answered_sections(
+    answers: Sequence[CrossingAnswer], units: UnitSystem, stages: int, top: float | None
+) -> list[SectionAnswer]:
+    """Return the sections of crossings, in order of rank, each with its rating and its stages.
+
+    Parameters
+    ----------
+    answers : sequence of CrossingAnswer
+    units : UnitSystem
+        For messages.
+    stages, top : int, float or None
+        Of a rating; `top` in m.
+
+    Returns
+    -------
+    list of SectionAnswer
+        Approach and tailwater sections at the discharges of their crossing; the approach section also at
+        that which reaches the crest, as the event `AT_CREST`.
+    """
+    out = []
+    for answer in sorted(answers, key=lambda a: a.rank):
+        flows = [Flow(e.event, e.values["discharge"]) for e in answer.events if e.values]
+        for built in (answer.approach, answer.tailwater):
+            if built is None:
+                continue
+            mine = list(flows)
+            if built is answer.approach and answer.crest_discharge > 0:
+                mine.append(Flow(AT_CREST, answer.crest_discharge))
+            out.append(answer_section(built, mine, [f.event for f in mine], stages, top, units))
+    return out
 
 
 # --- rank --------------------------------------------------------------------------------------------

@@ -10,13 +10,16 @@ import numpy as np
 import shapely
 
 from terrain2q.columns import COLUMNS, LAYERS
-from terrain2q.jobs.crossings import CrossingAnswer
-from terrain2q.output.layers import table_in_units, to_crs
+from terrain2q.jobs.crossings import CrossingAnswer, answered_sections
+from terrain2q.output.folder import CROSSING_SECTIONS_NAME as SECTIONS_NAME
+from terrain2q.output.geopackage import write_geopackage
+from terrain2q.output.layers import make_layers, table_in_units, to_crs
 from terrain2q.output.whole_file import whole_file
 from terrain2q.units import UnitSystem
 
 CSV_NAME = "crossings.csv"
-SECTIONS_NAME = "crossing_sections.gpkg"
+
+_SECTION_LAYERS = ("sections", "subareas", "ratings", "design_stages", "subarea_flows")
 
 
 def crossings_layer(
@@ -90,12 +93,20 @@ def write_crossings_csv(folder: Path, layer: geopandas.GeoDataFrame) -> Path:
 
 
 def write_crossing_sections(
-    folder: Path, answers: Sequence[CrossingAnswer], units: UnitSystem, terrain_crs, crs
+    folder: Path,
+    answers: Sequence[CrossingAnswer],
+    units: UnitSystem,
+    terrain_crs,
+    crs,
+    stages: int = 30,
+    top: float | None = None,
 ) -> Path | None:
-    """Write the approach and tailwater sections as cut lines in ``crossing_sections.gpkg``; return the file.
+    """Write the approach and tailwater sections into ``crossing_sections.gpkg``; return the file.
 
-    A study that takes them as its cut lines, and their field `slope`, shows every number of a crossing on its
-    calculation sheets. None where no crossing has a section.
+    It has the very sections from which the numbers of the crossings come, in the layers of the results
+    (``sections`` to ``subarea_flows``), for each event of the crossing and at the discharge that reaches the
+    crest; and their lines in the layer ``cut_lines``, which another study can take. None where no crossing
+    has a section. `stages` and `top` are those of a rating.
     """
     rows: dict[str, list] = {
         name: []
@@ -117,8 +128,16 @@ def write_crossing_sections(
     if not lines:
         return None
     target = Path(folder) / SECTIONS_NAME
+    layers = make_layers(answered_sections(answers, units, stages, top), (), units, terrain_crs, crs)
     with whole_file(target) as temporary:
+        write_geopackage(
+            temporary,
+            {name: layers[name] for name in _SECTION_LAYERS},
+            units=units,
+            crs=crs,
+            description="Sections above and below the roads of crossings",
+        )
         geopandas.GeoDataFrame(rows, geometry=lines, crs=crs).to_file(
-            temporary, layer="cut_lines", driver="GPKG", engine="pyogrio"
+            temporary, layer="cut_lines", driver="GPKG", engine="pyogrio", mode="a"
         )
     return target

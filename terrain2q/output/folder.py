@@ -22,6 +22,8 @@ from terrain2q.output.geopackage import RESULT_NAME
 from terrain2q.output.run_record import RECORD_NAME, sha256_of
 from terrain2q.units import UnitSystem, unit_system
 
+CROSSING_SECTIONS_NAME = "crossing_sections.gpkg"
+
 # Bytes before the WKB in a GeoPackage geometry, by the kind of its envelope (OGC 12-128r17, 2.1.3).
 _HEADER = {0: 8, 1: 40, 2: 56, 3: 56, 4: 72}
 
@@ -42,6 +44,8 @@ class OutputFolder:
     record : mapping
         What ``run.json`` says; empty where it is not there.
     folder : pathlib.Path or None
+    crossing_layers : mapping of str to DataFrame
+        The layers of ``crossing_sections.gpkg``, where the run wrote it.
     """
 
     layers: Mapping[str, pd.DataFrame]
@@ -49,6 +53,7 @@ class OutputFolder:
     crs: pyproj.CRS
     record: Mapping = field(default_factory=dict)
     folder: Path | None = None
+    crossing_layers: Mapping[str, pd.DataFrame] = field(default_factory=dict)
 
     @property
     def name(self) -> str:
@@ -107,7 +112,21 @@ def read_folder(folder: str | os.PathLike) -> OutputFolder:
             units = record.get("units") or _units(database)
     except sqlite3.Error as error:
         raise InputError("file-unreadable", f"{RESULT_NAME}: {error}", where=str(package)) from None
-    return OutputFolder(layers, unit_system(units), crs, record, folder)
+    return OutputFolder(layers, unit_system(units), crs, record, folder, _crossing_layers(folder, record))
+
+
+def _crossing_layers(folder: Path, record: Mapping) -> dict[str, pd.DataFrame]:
+    """Return the sections of crossings; nothing where the file is not the one that the run wrote."""
+    path = folder / CROSSING_SECTIONS_NAME
+    digests = {entry["sha256"] for entry in record.get("outputs", ()) if "sha256" in entry}
+    if not path.is_file() or sha256_of(path) not in digests:
+        return {}
+    try:
+        with closing(sqlite3.connect(f"{path.as_uri()}?mode=ro", uri=True)) as database:
+            there = {name for (name,) in database.execute("SELECT table_name FROM gpkg_contents")}
+            return {name: _read_layer(database, name) for name in LAYERS if name in there}
+    except sqlite3.Error as error:
+        raise InputError("file-unreadable", f"{path.name}: {error}", where=str(path)) from None
 
 
 def _read_layer(database: sqlite3.Connection, name: str) -> pd.DataFrame:

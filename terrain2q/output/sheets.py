@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 import os
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
 from typing import Any
@@ -21,6 +21,7 @@ import shapely
 from terrain2q.columns import CAUTION, COLUMNS
 from terrain2q.errors import FAILED, InputError
 from terrain2q.ground.layers import read_layer
+from terrain2q.jobs.crossings import AT_CREST
 from terrain2q.output.calculation import Calculation, Part, area_below, calculate, stretches
 from terrain2q.output.folder import OutputFolder, read_folder
 from terrain2q.output.geopackage import RESULT_NAME
@@ -212,6 +213,12 @@ class _Sheets:
             except InputError:
                 pass  # a plan without streams: the inputs have moved since the run
         return Plan(shapely.STRtree(lines), shapely.STRtree(streams), self.source.crs.is_geographic)
+
+    @cached_property
+    def of_crossings(self) -> _Sheets | None:
+        """The sections that were laid out for crossings; None where the run kept none."""
+        layers = self.source.crossing_layers
+        return _Sheets(replace(self.source, layers=layers), ALL) if layers else None
 
     @cached_property
     def tones(self) -> dict[str, tuple[str, int]]:
@@ -617,8 +624,11 @@ class _Sheets:
             ]
             sheet.table(columns, [[r["event"], *(_shown(n, float(r[n])) for n in about)] for r in rows])
         section = self._section_of(name, first)
+        approach = f"{name} approach"
         found: list[Calculation] = []
-        if section is not None:
+        if self.of_crossings is not None and approach in self.of_crossings.sections:
+            self._approach_part(sheet, approach, rows)
+        elif section is not None:
             sheet.title(f"Section {section}", keep=120)
             found = self._calculations(section)
             self._section_part(
@@ -638,6 +648,38 @@ class _Sheets:
         statuses = {r["status"] for r in rows}
         entry.status = next((s for s in ("failed", "doubtful", "ok") if s in statuses), entry.status)
         return sheet, entry
+
+    def _approach_part(self, sheet: Sheet, section: str, rows: Sequence[Mapping]) -> None:
+        """Write the section that gives the stages, and how each is carried down to the road."""
+        first = rows[0]
+        found = self.of_crossings._calculations(section)
+        stages = {c.event: c.row for c in found if c.answered}
+        slope, distance, crest = (float(first[n]) for n in ("slope", "approach_distance", "crest"))
+        fall = slope * distance
+        sheet.title("From the approach section to the road", keep=70)
+        sheet.lines(
+            f"Fall to the road = S × distance = {figures(slope, 4)} × {distance:.1f} = {fall:.2f} "
+            f"{self.length}; freeboard = crest − (stage at the section − fall), crest {crest:.2f}:",
+            7.3,
+        )
+        for row in rows:
+            at = stages.get(row["event"])
+            if at is not None:
+                text = (
+                    f"{row['event']}: {at['stage']:.3f} − {fall:.3f} = {row['stage']:.3f};   "
+                    f"{crest:.3f} − {row['stage']:.3f} = {row['freeboard']:.3f} {self.length}"
+                )
+                sheet.lines(text.replace("= -", "= −").replace("− -", "− −"), 7.2, indent=8)
+        at = stages.get(AT_CREST)
+        if at is not None:
+            sheet.lines(
+                f"{AT_CREST}: {crest:.3f} + {fall:.3f} = {crest + fall:.3f} at the section, where it carries "
+                f"{figures(float(at['discharge']))} {self.flow}; worked out below.",
+                7.2,
+                indent=8,
+            )
+        sheet.title(f"Section {section}", keep=120)
+        self.of_crossings._section_part(sheet, section, found)
 
     def _crossing_facts(self, sheet: Sheet, row: Mapping) -> None:
         """Write where the crossing is, and draw a piece of map about it."""
