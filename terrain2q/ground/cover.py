@@ -16,6 +16,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 from pathlib import Path
 from types import MappingProxyType
 from typing import Protocol
@@ -334,6 +335,33 @@ def _check_default(default_n: float | None) -> None:
         raise InputError("number-not-positive", f"default_n is {default_n}", where="land_cover: default_n")
 
 
+@dataclass(frozen=True)
+class FlatPieces:
+    """What many profiles run over, as arrays.
+
+    Attributes
+    ----------
+    told : ndarray of bool, shape (profiles,)
+        Where there is a finding to tell; the pieces of such a profile are those of :meth:`Cover.pieces` all
+        the same.
+    bounds : ndarray of int, shape (profiles + 1,)
+        Where each profile's pieces begin.
+    start, end : ndarray, shape (pieces,)
+        Stations.
+    row : ndarray of int, shape (pieces,)
+        Number of the piece's class in `classes`.
+    classes : sequence of CoverPiece
+        Class, n and source of every class that occurs, from station 0 to 0.
+    """
+
+    told: np.ndarray
+    bounds: np.ndarray
+    start: np.ndarray
+    end: np.ndarray
+    row: np.ndarray
+    classes: Sequence[CoverPiece]
+
+
 class UniformCover:
     """One roughness everywhere: what a study has that gives `default_n` and no polygons.
 
@@ -369,6 +397,18 @@ class UniformCover:
     ) -> list[tuple[list[CoverPiece], list[Finding]]]:
         """Return :meth:`pieces` of many profiles."""
         return [self.pieces(profile) for profile in profiles]
+
+    def flat_pieces(self, profiles: Sequence[_Profile]) -> FlatPieces:
+        """Return the same as arrays; every profile has points."""
+        count = len(profiles)
+        return FlatPieces(
+            np.zeros(count, dtype=bool),
+            np.arange(count + 1),
+            np.array([p.stations[0] for p in profiles], dtype=float),
+            np.array([p.stations[-1] for p in profiles], dtype=float),
+            np.zeros(count, dtype=np.int64),
+            [CoverPiece(0.0, 0.0, "", self.default_n, n_source=self.source)],
+        )
 
 
 class Cover:
@@ -505,6 +545,62 @@ class Cover:
                     pieces.append(piece)
             answer.append((pieces, self._findings(profiles[number], section_id, overlaps, gaps)))
         return answer
+
+    def flat_pieces(self, profiles: Sequence[_Profile]) -> FlatPieces:
+        """Return the pieces of :meth:`pieces_many` as arrays, and where there are findings beside them.
+
+        Parameters
+        ----------
+        profiles : sequence of Profile
+            Each with points.
+        """
+        cut = self._lines.cut(profiles)
+        order = np.lexsort((cut.polygon, -self._n[cut.polygon], ~cut.holds, cut.interval))
+        interval, polygon, holds = cut.interval[order], cut.polygon[order], cut.holds[order]
+        number = self._class_number[polygon]
+        intervals = len(cut.start)
+        row = np.full(intervals, len(self._class_names))
+        first = np.flatnonzero(np.diff(interval, prepend=-1))
+        row[interval[first]] = number[first]
+        told = np.zeros(len(profiles), dtype=bool)
+        told[cut.profile[row == len(self._class_names)]] = True
+        # several classes hold the interval: the first of those that hold is the first of all
+        other = holds & (number != row[interval])
+        told[cut.profile[interval[other]]] = True
+
+        length = cut.end - cut.start
+        begins = np.diff(cut.profile, prepend=-1) != 0
+        kept = np.flatnonzero(begins | (length >= SMALLEST))
+        new = (np.diff(cut.profile[kept], prepend=-1) != 0) | (np.diff(row[kept], prepend=-1) != 0)
+        piece = kept[new]
+        profile = cut.profile[piece]
+        ends_at = np.append(piece[1:] - 1, intervals - 1)[: len(piece)]
+        return FlatPieces(
+            told,
+            np.searchsorted(profile, np.arange(len(profiles) + 1)),
+            cut.start[piece],
+            cut.end[ends_at],
+            row[piece],
+            self._class_pieces,
+        )
+
+    @cached_property
+    def _class_names(self) -> list[str]:
+        return list(dict.fromkeys(self._classes.tolist()))
+
+    @cached_property
+    def _class_number(self) -> np.ndarray:
+        place = {name: i for i, name in enumerate(self._class_names)}
+        return np.array([place[name] for name in self._classes], dtype=np.int64)
+
+    @cached_property
+    def _class_pieces(self) -> list[CoverPiece]:
+        rows = [(name, self.roughness.rows[name]) for name in self._class_names]
+        gap = np.nan if self.default_n is None else self.default_n
+        return [
+            *(CoverPiece(0.0, 0.0, name, r.n, r.n_low, r.n_high, r.source, r.falling) for name, r in rows),
+            CoverPiece(0.0, 0.0, "", gap, n_source="" if self.default_n is None else "default_n"),
+        ]
 
     def _findings(self, profile, section_id: str, overlaps, gaps) -> list[Finding]:
         findings = []
@@ -864,19 +960,30 @@ class _Segments:
     def _stations(self, segment: np.ndarray, share: np.ndarray) -> np.ndarray:
         """Return stations by interpolating the map distance along the profile's own points."""
         stations = np.empty(len(segment))
-        bounds = np.searchsorted(self.profile[segment], np.arange(len(self._profiles) + 1))
-        for number, profile in enumerate(self._profiles):
-            here = slice(bounds[number], bounds[number + 1])
-            if here.start == here.stop:
+        bounds = np.searchsorted(self.profile[segment], np.arange(len(self._profiles) + 1)).tolist()
+        first, last = self._first[segment], self._last[segment]
+        for number, (profile, start, stop) in enumerate(
+            zip(self._profiles, bounds[:-1], bounds[1:], strict=True)
+        ):
+            if start == stop:
                 continue
+            distance = self._distances[number]
+            offset, part = self._offset[number], share[start:stop]
+            begin, end = distance[first[start:stop] - offset], distance[last[start:stop] - offset]
+            # At the ends of a segment the share is 0 or 1 and the station is the point's own.
+            position = np.where(part < 1.0, begin + part * (end - begin), end)
+            stations[start:stop] = np.interp(position, distance, profile.stations)
+        return stations
+
+    @cached_property
+    def _distances(self) -> list[np.ndarray]:
+        """Map distances along each profile from its first point."""
+        found = []
+        for profile in self._profiles:
             distance = np.zeros(len(profile.x))
             np.cumsum(np.hypot(np.diff(profile.x), np.diff(profile.y)), out=distance[1:])
-            first = distance[self._first[segment[here]] - self._offset[number]]
-            last = distance[self._last[segment[here]] - self._offset[number]]
-            # At the ends of a segment the share is 0 or 1 and the station is the point's own.
-            position = np.where(share[here] < 1.0, first + share[here] * (last - first), last)
-            stations[here] = np.interp(position, distance, profile.stations)
-        return stations
+            found.append(distance)
+        return found
 
 
 class _PolygonsUnderLines:
@@ -1009,7 +1116,7 @@ def split_by_zone(
     for subarea in subareas:
         last = joined[-1] if joined else None
         if last and (last.zone, last.n, last.falling) == (subarea.zone, subarea.n, subarea.falling):
-            joined[-1] = _together(joined[-1], subarea)
+            joined[-1] = joined_specs(joined[-1], subarea)
         else:
             joined.append(subarea)
     return joined
@@ -1019,7 +1126,8 @@ def _onto(value: float, marks: Sequence[float]) -> float:
     return next((mark for mark in marks if abs(value - mark) < SMALLEST), value)
 
 
-def _together(one: SubareaSpec, other: SubareaSpec) -> SubareaSpec:
+def joined_specs(one: SubareaSpec, other: SubareaSpec) -> SubareaSpec:
+    """Return two neighbours of one zone with the same n as one subarea."""
     return replace(
         one,
         end=other.end,

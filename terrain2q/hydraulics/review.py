@@ -12,8 +12,8 @@ from itertools import pairwise
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from terrain2q.hydraulics.roughness import JARRETT_ERROR, JARRETT_RADII, JARRETT_SLOPES, jarrett_n
-from terrain2q.units import unit_system
+from terrain2q.hydraulics.roughness import JARRETT_ERROR, JARRETT_RADII, JARRETT_SLOPES, jarrett_law
+from terrain2q.units import FOOT, unit_system
 
 Floats = NDArray[np.float64]
 
@@ -116,12 +116,32 @@ def n_low_for_slope(n: float, slope: float, radius: float, units: str = "si") ->
     """
     if not (slope >= JARRETT_SLOPES[0] and radius > 0):
         return None
-    metres = radius * unit_system(units).length
+    limit = float(lowest_n_for_slope(slope, radius * unit_system(units).length))
+    return LowForSlope(n, limit / (1.0 - 2.0 * JARRETT_ERROR), limit) if n < limit else None
+
+
+def lowest_n_for_slope(slope: ArrayLike, radius: ArrayLike) -> Floats:
+    """Return the least n that passes :func:`n_low_for_slope` without a remark.
+
+    Parameters
+    ----------
+    slope : array_like
+    radius : array_like
+        Hydraulic radius of the channel, m; broadcast with `slope`.
+
+    Returns
+    -------
+    ndarray
+        NaN on slopes below 0.002, and where the channel is dry.
+    """
+    slope, radius = np.broadcast_arrays(np.asarray(slope, dtype=float), np.asarray(radius, dtype=float))
     deepest = JARRETT_RADII[1]
-    estimate = jarrett_n(min(slope, JARRETT_SLOPES[1]), min(max(metres, JARRETT_RADII[0]), deepest))
-    estimate *= (max(metres, deepest) / deepest) ** -0.16
-    limit = (1.0 - 2.0 * JARRETT_ERROR) * estimate
-    return LowForSlope(n, estimate, limit) if n < limit else None
+    applies = (slope >= JARRETT_SLOPES[0]) & (radius > 0)
+    radius = np.where(applies, radius, 1.0)
+    feet = np.clip(radius, JARRETT_RADII[0], deepest) / FOOT
+    estimate = jarrett_law(np.minimum(slope, JARRETT_SLOPES[1]), feet)
+    estimate = estimate * (np.maximum(radius, deepest) / deepest) ** -0.16
+    return np.where(applies, (1.0 - 2.0 * JARRETT_ERROR) * estimate, np.nan)
 
 
 @dataclass(frozen=True)

@@ -215,7 +215,12 @@ def jarrett_n(slope: float, radius: float, units: str = "si") -> float:
     low, high = JARRETT_RADII
     _within("slope", slope, *JARRETT_SLOPES, "Jarrett's n")
     _within("hydraulic radius in feet", feet, low / FOOT, high / FOOT, "Jarrett's n")
-    return float(0.39 * slope**0.38 * feet**-0.16)
+    return float(jarrett_law(slope, feet))
+
+
+def jarrett_law(slope, feet):
+    """Return :func:`jarrett_n` of arrays, unchecked; the hydraulic radius is in feet."""
+    return 0.39 * slope**0.38 * feet**-0.16
 
 
 LIMERINOS_RATIOS = (1.0, 70.0)

@@ -10,6 +10,7 @@ import numpy as np
 from terrain2q.errors import DOUBTFUL, FAILED, Finding, Terrain2qError
 from terrain2q.flows import AREA_RATIOS, Flow, event_names, flow_for
 from terrain2q.ground.streams import length_text
+from terrain2q.ground.terrain import Profile
 from terrain2q.hydraulics.many import MANY, EventSolution, Solution, can_compile, solve
 from terrain2q.hydraulics.section import CHANNEL, FlowState, Section, hydraulic_columns
 from terrain2q.jobs.remarks import Remark, section_remarks, state_remarks
@@ -27,10 +28,10 @@ HIGH_ALPHA = 2.0
 STEEP = 0.04
 """Slope above which normal depth is seldom trusted (Jarrett 1984, upper end of his range; from memory)."""
 
-_LEAVES = 0.01
+LEAVES = 0.01
 """Share of the discharge beyond a bank that is worth a finding."""
 
-_APART = 0.01
+APART = 0.01
 """Stages (m) nearer to each other than this are one to a reader; noise in the ground makes many of them."""
 
 _LAYER = "design_stages"
@@ -151,7 +152,7 @@ def answer_section(
     failed = tuple(EventAnswer(event, FAILED) for event in events)
     if section is None or not np.isfinite(built.slope):
         return SectionAnswer(built, {}, failed, ())
-    notes = _Notes(built, units)
+    notes = Notes(built.section_id, built.profile, units)
     wanted = {event: _flow(flows, event, built) for event in events}
     try:
         solution = _solved(built, wanted, stages, top) if compiled and not reached else None
@@ -189,14 +190,14 @@ def _solved(
     built: BuiltSection, wanted: Mapping[str, Flow | None], stages: int, top: float | None
 ) -> Solution | None:
     """Return what compiled code answers; an event without a flow keeps its place."""
-    silent = _Notes(built, SI)
+    silent = Notes(built.section_id, built.profile, SI)
     discharges = [
         _carried_over(flow, built, silent).discharge if flow is not None else 1.0 for flow in wanted.values()
     ]
     return solve(built.section, built.slope, stages, top, discharges)
 
 
-def _carried_over(flow: Flow, built: BuiltSection, notes: _Notes) -> Flow:
+def _carried_over(flow: Flow, built: BuiltSection, notes: Notes) -> Flow:
     """Return the flow at the section's own drainage area, where both areas are known."""
     area = built.drainage_area
     if not flow.carried_over or area is None:
@@ -224,7 +225,7 @@ def _answer_event(
     built: BuiltSection,
     flow: Flow,
     doubtful: bool,
-    notes: _Notes,
+    notes: Notes,
     solved: EventSolution | None = None,
 ) -> EventAnswer:
     root = np.sqrt(built.slope)
@@ -296,60 +297,112 @@ def _subarea_rows(state: FlowState, root: float) -> tuple[dict[str, float], ...]
 
 
 def _remark(
-    section: Section, state: FlowState, row: dict, share: float, event: str, notes: _Notes, compiled: bool
+    section: Section, state: FlowState, row: dict, share: float, event: str, notes: Notes, compiled: bool
 ) -> None:
     """Note what a reviewer must know about one answer."""
-    z, text, level = section.elevations, notes.length, notes.level
-    for above, end, height in zip(state.above_ends, ("left", "right"), (z[0], z[-1]), strict=True):
-        if above:
-            top = max(p.stage for p in state.paths if (p.at_left_end if end == "left" else p.at_right_end))
-            notes.add("above-section-ends", f"water stands {text(top - height)} above the {end} end", event)
-    if state.stages[-1] - state.stages[0] > _APART:
-        listed = ", ".join(level(s) for s in state.stages)
-        notes.add("several-stages", f"stages {listed} carry the discharge", event)
-    if row["froude"] > 1.0:
-        notes.add(
-            "supercritical",
-            f"Froude number {row['froude']:.2f}, critical stage {level(row['critical_stage'])}",
-            event,
-        )
-    if row["mean_velocity"] > HIGH_VELOCITY:
-        notes.add("velocity-high", f"mean velocity {notes.velocity(row['mean_velocity'])}", event)
-    if row["alpha"] > HIGH_ALPHA:
-        notes.add("alpha-high", f"alpha {row['alpha']:.2f}", event)
+    z = section.elevations
+    above = [np.nan, np.nan]
+    for side, (is_above, height) in enumerate(zip(state.above_ends, (z[0], z[-1]), strict=True)):
+        if is_above:
+            top = max(p.stage for p in state.paths if (p.at_right_end if side else p.at_left_end))
+            above[side] = top - height
+    total = sum(p.conveyance for p in state.paths)
+    passed = [top for top in section.telling_bank_tops if top < state.stage]
+    facts = WaterFacts(
+        state.stages,
+        (above[0], above[1]),
+        row["froude"],
+        row["critical_stage"],
+        row["mean_velocity"],
+        row["alpha"],
+        tuple((p.conveyance / total, p.start, p.end, p.stage) for p in state.paths[1:]),
+        passed[0] if passed else np.nan,
+        1.0 - share,
+    )
+    tell_water(facts, event, notes)
     for remark in state_remarks(section, state, notes.units, compiled):
         notes.remark(remark, event)
-    total = sum(p.conveyance for p in state.paths)
-    for path in state.paths[1:]:
-        part = path.conveyance / total
-        if part >= _LEAVES:
+
+
+@dataclass(frozen=True)
+class WaterFacts:
+    """The numbers of one answer about which there may be something to tell, in SI.
+
+    Attributes
+    ----------
+    stages : sequence of float
+        Every stage that carries the discharge; the last is the answer.
+    above : (float, float)
+        How high the water stands above the left and the right end, NaN where it does not.
+    froude, critical_stage, mean_velocity, alpha : float
+    behind : sequence of (share, start, end, stage)
+        Paths behind banks with their share of the discharge.
+    passed : float
+        The lowest top of a bank below the stage behind which there is more than a hundredth, NaN where none.
+    outside : float
+        Share of the discharge outside the channel, NaN where there is no channel zone.
+    """
+
+    stages: Sequence[float]
+    above: tuple[float, float]
+    froude: float
+    critical_stage: float
+    mean_velocity: float
+    alpha: float
+    behind: Sequence[tuple[float, float, float, float]]
+    passed: float
+    outside: float
+
+
+def tell_water(facts: WaterFacts, event: str, notes: Notes) -> None:
+    """Note what a reviewer must know about the water of one answer."""
+    text, level = notes.length, notes.level
+    stage = facts.stages[-1]
+    for height, end in zip(facts.above, ("left", "right"), strict=True):
+        if np.isfinite(height):
+            notes.add("above-section-ends", f"water stands {text(height)} above the {end} end", event)
+    if stage - facts.stages[0] > APART:
+        listed = ", ".join(level(s) for s in facts.stages)
+        notes.add("several-stages", f"stages {listed} carry the discharge", event)
+    if facts.froude > 1.0:
+        notes.add(
+            "supercritical",
+            f"Froude number {facts.froude:.2f}, critical stage {level(facts.critical_stage)}",
+            event,
+        )
+    if facts.mean_velocity > HIGH_VELOCITY:
+        notes.add("velocity-high", f"mean velocity {notes.velocity(facts.mean_velocity)}", event)
+    if facts.alpha > HIGH_ALPHA:
+        notes.add("alpha-high", f"alpha {facts.alpha:.2f}", event)
+    for part, start, end, behind in facts.behind:
+        if part >= LEAVES:
             notes.add(
                 "bank-passed",
                 f"{100 * part:.0f} % of the discharge leaves the channel and flows behind a bank "
-                f"from station {text(path.start)} to {text(path.end)} at stage {level(path.stage)}, "
-                f"{text(state.stage - path.stage)} below the channel's",
+                f"from station {text(start)} to {text(end)} at stage {level(behind)}, "
+                f"{text(stage - behind)} below the channel's",
                 event,
             )
-    passed = [top for top in section.telling_bank_tops if top < state.stage]
-    if len(state.paths) == 1 and passed and 1.0 - share >= _LEAVES:
+    if not facts.behind and facts.passed < stage and facts.outside >= LEAVES:
         notes.add(
             "bank-passed",
-            f"water has passed a bank's top at {level(passed[0])} and stands at one level behind it; "
-            f"{100 * (1 - share):.0f} % of the discharge is outside the channel",
+            f"water has passed a bank's top at {level(facts.passed)} and stands at one level behind it; "
+            f"{100 * facts.outside:.0f} % of the discharge is outside the channel",
             event,
         )
 
 
-class _Notes:
+class Notes:
     """Findings about one section, one for each code and text, with the events they hold for."""
 
-    def __init__(self, built: BuiltSection, units: UnitSystem) -> None:
-        self._built, self.units = built, units
+    def __init__(self, section_id: str, profile: Profile, units: UnitSystem) -> None:
+        self._section_id, self._profile, self.units = section_id, profile, units
         self._found: dict[tuple[str, str], list[str]] = {}
         self._worst: dict[tuple[str, str], tuple[Remark, list[str]]] = {}
         self.doubtful = 0
 
     def length(self, metres: float) -> str:
+        """Return a length in the study's units."""
         return length_text(metres, self.units)
 
     def level(self, metres: float) -> str:
@@ -357,9 +410,11 @@ class _Notes:
         return f"{metres * self.units.per_si('length'):.2f} {self.units.symbol('length')}"
 
     def velocity(self, value: float) -> str:
+        """Return a velocity in the study's units."""
         return f"{value * self.units.per_si('velocity'):.1f} {self.units.symbol('velocity')}"
 
     def add(self, code: str, message: str, event: str = "") -> None:
+        """Note a finding at an event; empty where it holds for the section."""
         finding = Finding(code, message)
         self.doubtful += finding.severity != "note"
         self._found.setdefault((code, message), []).append(event)
@@ -374,10 +429,11 @@ class _Notes:
         )
 
     def findings(self) -> tuple[Finding, ...]:
+        """Return all that was noted, one finding a code."""
         for remark, events in self._worst.values():
             self._found.setdefault((remark.code, remark.message), []).extend(events)
         self._worst.clear()
-        profile = self._built.profile
+        profile = self._profile
         low = int(np.argmin(profile.elevations))
         out = []
         by_code: dict[str, list[str]] = {}
@@ -390,7 +446,7 @@ class _Notes:
                     code,
                     "; ".join(messages),
                     _LAYER if code != "section-failed" else "sections",
-                    self._built.section_id,
+                    self._section_id,
                     x=float(profile.x[low]),
                     y=float(profile.y[low]),
                 )

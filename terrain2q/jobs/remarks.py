@@ -27,7 +27,7 @@ from terrain2q.units import UnitSystem
 CHANNEL_N = (0.016, 0.15)
 """n of natural and excavated channels, from the cleanest to the weediest (Chow 1959, Table 5-6)."""
 
-_TELLING_SHELF = 0.05
+TELLING_SHELF = 0.05
 """A shelf is remarked on where dividing at its edge changes the section's discharge by this share (ours)."""
 
 
@@ -164,7 +164,7 @@ def _shelves(section: Section, state: FlowState, units: UnitSystem, compiled: bo
             share = float(path.wet.conveyance[0, i]) / whole
             for shelf in undivided_shelves(x, z, path.stage):
                 gain = share * division_gain(x, z, path.stage, shelf)
-                if gain < _TELLING_SHELF:
+                if gain < TELLING_SHELF:
                     continue
                 yield Remark(
                     SHELF_UNDIVIDED,

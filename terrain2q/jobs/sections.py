@@ -156,7 +156,7 @@ def build_sections(
             built[i] = _build(lines[i], profile, crossing, cover, interval, inputs, notes[i], compiled)
         except Terrain2qError as error:
             notes[i].append(
-                _at(lines[i], profile, Finding("section-failed", error.what, _LAYER, lines[i].section_id))
+                at_low_ground(profile, Finding("section-failed", error.what, _LAYER, lines[i].section_id))
             )
             built[i] = BuiltSection(lines[i], profile)
         if progress is not None and (done % 200 == 0 or done == len(kept)):
@@ -241,7 +241,8 @@ def _usable_part(
     return Profile(station[keep], whole.elevations[keep], whole.x[keep], whole.y[keep], whole.is_vertex[keep])
 
 
-def _at(line: CutLine, profile: Profile, finding: Finding) -> Finding:
+def at_low_ground(profile: Profile, finding: Finding) -> Finding:
+    """Return a finding placed at the lowest ground of a profile."""
     low = int(np.argmin(profile.elevations))
     return finding.at(profile.x[low], profile.y[low])
 
@@ -251,7 +252,7 @@ def _build(
 ) -> BuiltSection:
     answer = inputs.slopes.of(line)
     slope, source = answer.slope, answer.source
-    notes += [_at(line, profile, finding) for finding in answer.findings]
+    notes += [at_low_ground(profile, finding) for finding in answer.findings]
     failed = any(f.severity == "failed" for f in notes)
     if failed:
         return BuiltSection(line, profile, slope=slope, slope_source=source)
@@ -266,7 +267,7 @@ def _build(
             interval = (banks.left, banks.right)
         except (NoAnswerError, InputError) as error:
             notes.append(
-                _at(line, profile, Finding("channel-not-found", error.what, _LAYER, line.section_id))
+                at_low_ground(profile, Finding("channel-not-found", error.what, _LAYER, line.section_id))
             )
     divided = interval is not None
     specs = split_by_zone(cover, interval, inputs.channel_n if divided else None)
@@ -299,12 +300,12 @@ def _has_low_ground(section: Section, line: CutLine, profile: Profile, inputs: S
     ends = float(min(z[0], z[-1]))
     if low >= ends and z[1:-1].min(initial=np.inf) >= ends:
         message = f"the lowest ground, {length_text(low, inputs.units)}, is at an end of the section"
-        notes.append(_at(line, profile, Finding("no-low-ground", message, _LAYER, line.section_id)))
+        notes.append(at_low_ground(profile, Finding("no-low-ground", message, _LAYER, line.section_id)))
         return False
     if low >= ends:
         message = (
             f"an end of the section, {length_text(ends, inputs.units)}, "
             f"is no higher than the channel's lowest ground, {length_text(low, inputs.units)}"
         )
-        notes.append(_at(line, profile, Finding("end-is-lowest", message, _LAYER, line.section_id)))
+        notes.append(at_low_ground(profile, Finding("end-is-lowest", message, _LAYER, line.section_id)))
     return True

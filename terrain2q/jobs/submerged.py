@@ -113,26 +113,17 @@ def with_bed(
         message = "the lowest ground is not level, as water would be, so no bed was put below it"
         finding = Finding("water-not-found", message, _LAYER, line.section_id)
         return profile, [finding.at(profile.x[low], profile.y[low])]
-    middle = int(np.argmin(np.abs(profile.stations - 0.5 * (water.start + water.end))))
-
-    def shown(metres: float) -> str:
-        return length_text(metres, units)
-
-    level = f"{water.surface * units.per_si('length'):.2f} {units.symbol('length')}"
-    where = f"from station {shown(water.start)} to {shown(water.end)} at {level}"
+    if submerged is None:
+        return profile, [water_in_channel(line.section_id, profile, water, units)]
+    middle = _middle_of(profile, water)
 
     def found(code: str, message: str) -> Finding:
         return Finding(code, message, _LAYER, line.section_id).at(profile.x[middle], profile.y[middle])
 
-    unknown = (
-        f"the ground is level within {shown(water.within)} {where}, as water is; it was taken for the bed"
-    )
-    if submerged is None:
-        return profile, [found("water-in-channel", f"{unknown}, so the stage is on the high side")]
     depth, how, missing = submerged.depth_at(line, water, specs, slope, units)
     if not np.isfinite(depth):
         why = f" ({how})" if how else ""
-        notes = [found("water-in-channel", f"{unknown}, so the stage is on the high side{why}")]
+        notes = [water_in_channel(line.section_id, profile, water, units, why)]
         if missing is not None:
             notes.append(missing.at(profile.x[middle], profile.y[middle]))
         return profile, notes
@@ -141,10 +132,32 @@ def with_bed(
     vertices = profile.stations[profile.is_vertex]
     bed = Profile(station, elevation, x, y, np.isin(station, vertices))
     message = (
-        f"water {where}: its bed was put {shown(depth)} below it, {how}, as a {submerged.shape}; "
-        "z of the section is this bed there"
+        f"water {_where(water, units)}: its bed was put {length_text(depth, units)} below it, {how}, "
+        f"as a {submerged.shape}; z of the section is this bed there"
     )
     return bed, [found("bed-below-water", message)]
+
+
+def water_in_channel(
+    section_id: str, profile: Profile, water: Water, units: UnitSystem, why: str = ""
+) -> Finding:
+    """Return the finding that a section's lowest ground is water whose depth is not known."""
+    middle = _middle_of(profile, water)
+    message = (
+        f"the ground is level within {length_text(water.within, units)} {_where(water, units)}, as water is; "
+        f"it was taken for the bed, so the stage is on the high side{why}"
+    )
+    return Finding("water-in-channel", message, _LAYER, section_id).at(profile.x[middle], profile.y[middle])
+
+
+def _middle_of(profile: Profile, water: Water) -> int:
+    return int(np.argmin(np.abs(profile.stations - 0.5 * (water.start + water.end))))
+
+
+def _where(water: Water, units: UnitSystem) -> str:
+    level = f"{water.surface * units.per_si('length'):.2f} {units.symbol('length')}"
+    start, end = length_text(water.start, units), length_text(water.end, units)
+    return f"from station {start} to {end} at {level}"
 
 
 def _roughness(specs: Sequence[SubareaSpec], water: Water, depth: float) -> float:

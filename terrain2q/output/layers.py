@@ -7,7 +7,6 @@ from collections.abc import Iterable, Sequence
 import geopandas
 import numpy as np
 import pandas as pd
-import pyproj
 import shapely
 
 from terrain2q.columns import COLUMNS, LAYERS
@@ -15,6 +14,7 @@ from terrain2q.errors import Finding
 from terrain2q.ground.terrain import Profile
 from terrain2q.jobs.design_flows import SUBAREA_COLUMNS, SectionAnswer
 from terrain2q.jobs.extent import EventExtent
+from terrain2q.output.arrow_tables import to_crs
 from terrain2q.output.geopackage import linestring_zm
 from terrain2q.units import UnitSystem
 
@@ -55,14 +55,6 @@ class _Projected:
                 ]
             )
         )
-
-
-def to_crs(x: np.ndarray, y: np.ndarray, source, target) -> tuple[np.ndarray, np.ndarray]:
-    """Return coordinates in another CRS, x eastward first; unchanged where both are one."""
-    source, target = pyproj.CRS.from_user_input(source), pyproj.CRS.from_user_input(target)
-    if source.equals(target, ignore_axis_order=True) or not x.size:
-        return x, y
-    return pyproj.Transformer.from_crs(source, target, always_xy=True).transform(x, y)
 
 
 def make_layers(
