@@ -13,6 +13,7 @@ from hypothesis import strategies as st
 from shapely.geometry import LineString, MultiPolygon, Polygon, box
 
 from terrain2q.errors import InputError
+from terrain2q.ground import cover as cover_module
 from terrain2q.ground.cover import (
     ChannelPolygons,
     Cover,
@@ -659,3 +660,31 @@ def test_pieces_whose_n_falls_alike_become_one_subarea_and_others_do_not():
     ]  # fmt: skip
     assert split_by_zone(pieces, None)[0].falling == falling
     assert split_by_zone(pieces, (0.0, 5.0), 0.03)[0].falling is None
+
+
+def test_compiled_stations_are_those_of_the_arrays():
+    """Many profiles, some with repeated points, cut at edges: one at a time and all at once give the same."""
+    random = np.random.default_rng(5)
+    profiles = []
+    for _ in range(320):
+        n = int(random.integers(2, 40))
+        x, y = np.cumsum(random.uniform(0, 3, n)), np.cumsum(random.normal(0, 1, n))
+        if n > 4:
+            x[3], y[3] = x[2], y[2]
+        steps = np.hypot(np.diff(x), np.diff(y)) * random.uniform(0.9, 1.1)
+        vertices = random.random(n) < 0.3
+        profiles.append(Profile(np.concatenate([[0.0], np.cumsum(steps)]), np.zeros(n), x, y, vertices))
+    segments = cover_module._Segments(profiles, 1e-6)
+    segment = np.sort(random.integers(0, len(segments.length), 4000))
+    share = np.where(random.random(4000) < 0.1, random.integers(0, 2, 4000), random.random(4000))
+    many = segments._many_stations(segment, share)
+    one_by_one = np.concatenate(
+        [
+            cover_module._Segments([profile], 1e-6)._stations(
+                segment[segments.profile[segment] == i] - np.searchsorted(segments.profile, i),
+                share[segments.profile[segment] == i],
+            )
+            for i, profile in enumerate(profiles)
+        ]
+    )
+    np.testing.assert_array_equal(many, one_by_one)

@@ -38,6 +38,9 @@ LEFT, CHANNEL, RIGHT = "left floodplain", "channel", "right floodplain"
 
 _CHUNK = 4_000_000
 
+_MANY = 300
+"""Profiles from which on compiled code is worth its loading."""
+
 
 class _Profile(Protocol):
     """What is needed of a sampled cut line: stations [m] and map coordinates of its points."""
@@ -874,6 +877,8 @@ class _Segments:
         )
         self._tolerance = tolerance
         self._profiles = profiles
+        self._xy = xy
+        self._along: np.ndarray | None = None
         self._offset = np.cumsum(sizes) - sizes
 
     @staticmethod
@@ -959,6 +964,8 @@ class _Segments:
 
     def _stations(self, segment: np.ndarray, share: np.ndarray) -> np.ndarray:
         """Return stations by interpolating the map distance along the profile's own points."""
+        if len(self._profiles) >= _MANY:
+            return self._many_stations(segment, share)
         stations = np.empty(len(segment))
         bounds = np.searchsorted(self.profile[segment], np.arange(len(self._profiles) + 1)).tolist()
         first, last = self._first[segment], self._last[segment]
@@ -974,6 +981,22 @@ class _Segments:
             position = np.where(part < 1.0, begin + part * (end - begin), end)
             stations[start:stop] = np.interp(position, distance, profile.stations)
         return stations
+
+    def _many_stations(self, segment: np.ndarray, share: np.ndarray) -> np.ndarray:
+        from terrain2q.ground.compiled_cover import map_distances, stations_between
+
+        bounds = np.append(self._offset, len(self._xy))
+        if self._along is None:
+            self._along = map_distances(bounds, self._xy)
+        return stations_between(
+            bounds,
+            self._along,
+            np.concatenate([p.stations for p in self._profiles]),
+            self.profile[segment],
+            self._first[segment],
+            self._last[segment],
+            share,
+        )
 
     @cached_property
     def _distances(self) -> list[np.ndarray]:

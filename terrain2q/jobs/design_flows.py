@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from terrain2q.errors import DOUBTFUL, FAILED, Finding, Terrain2qError
+from terrain2q.errors import CATALOGUE, DOUBTFUL, FAILED, NOTE, Finding, Terrain2qError
 from terrain2q.flows import AREA_RATIOS, Flow, event_names, flow_for
 from terrain2q.ground.streams import length_text
 from terrain2q.ground.terrain import Profile
@@ -415,13 +415,12 @@ class Notes:
 
     def add(self, code: str, message: str, event: str = "") -> None:
         """Note a finding at an event; empty where it holds for the section."""
-        finding = Finding(code, message)
-        self.doubtful += finding.severity != "note"
+        self.doubtful += CATALOGUE[code].severity != NOTE
         self._found.setdefault((code, message), []).append(event)
 
     def remark(self, remark: Remark, event: str = "") -> None:
         """Take up a remark; of those on one place the worst is told, with the events they hold for."""
-        self.doubtful += Finding(remark.code, remark.message).severity != "note"
+        self.doubtful += CATALOGUE[remark.code].severity != NOTE
         worst, events = self._worst.get((remark.code, remark.place), (remark, []))
         self._worst[remark.code, remark.place] = (
             max(worst, remark, key=lambda r: r.weight),
