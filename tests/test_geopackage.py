@@ -13,12 +13,13 @@ import subprocess
 import sys
 import textwrap
 import time
-from contextlib import closing
+from contextlib import closing, suppress
 from pathlib import Path
 
 import geopandas
 import numpy as np
 import pandas as pd
+import pyarrow as pa
 import pyogrio
 import pytest
 import shapely
@@ -27,8 +28,8 @@ from hypothesis import strategies as st
 
 from terrain2q.columns import CAUTION, COLUMNS, LAYERS, column_description, column_title
 from terrain2q.errors import OutputError
-from terrain2q.output import geopackage, whole_file
-from terrain2q.output.geopackage import check_output, linestring_zm, write_geopackage
+from terrain2q.output import geopackage, spatial_index, whole_file
+from terrain2q.output.geopackage import GeoPackageWriter, check_output, linestring_zm, write_geopackage
 from terrain2q.units import SI, US
 
 CRS = 26915
@@ -497,20 +498,273 @@ def test_a_folder_without_permission_is_said(tmp_path):
     assert caught.value.code == "output-not-writable"
 
 
+# --- rows as they come ---------------------------------------------------------------------------------
+
+
+def tables_of(layers) -> dict[str, pa.Table]:
+    """Return layers as the tables that a writer takes."""
+    return {
+        name: geopackage._table(LAYERS[name], table, geopackage.CRS(CRS)) for name, table in layers.items()
+    }
+
+
+def writer(path, layers=LAYERS, **options) -> GeoPackageWriter:
+    options = {"units": US, "crs": CRS, "description": "A test.", "date": DATE} | options
+    return GeoPackageWriter(path, layers, **options)
+
+
+def write_in_pieces(path, tables, size: int, **options) -> None:
+    """Write tables in pieces of so many rows, last layer first, in turns."""
+    with writer(path, tables, **options) as made:
+        for start in range(0, max(table.num_rows for table in tables.values()), size):
+            for name in reversed(tables):
+                made.append(name, tables[name].slice(start, size))
+        assert made.counts == {name: tables[name].num_rows for name in LAYERS}
+
+
+def everything_in(path) -> dict:
+    """Return every row of every table, and every statement that made one; the pages of indexes left out."""
+    made = query(path, "SELECT type, name, tbl_name, sql FROM sqlite_master ORDER BY type, name")
+    names = [name for kind, name, _, _ in made if kind == "table" and not name.startswith("rtree_")]
+    return {"": made} | {name: query(path, f'SELECT * FROM "{name}" ORDER BY rowid') for name in names}
+
+
+def boxes_in(path, name: str) -> dict[int, tuple]:
+    rows = query(path, f"SELECT id, minx, maxx, miny, maxy FROM rtree_{name}_geom")
+    assert query(path, f"SELECT rtreecheck('rtree_{name}_geom')") == [("ok",)]
+    return {row[0]: row[1:] for row in rows}
+
+
+@pytest.mark.parametrize("waiting", [64_000_000, 20_000, 1], ids=["all", "some", "none"])
+def test_pieces_in_any_order_make_the_same_file(tmp_path, monkeypatch, waiting):
+    whole, pieces, again = (tmp_path / f"{name}.gpkg" for name in ("whole", "pieces", "again"))
+    tables = tables_of(make_layers(100))
+    write(whole, make_layers(100))
+    monkeypatch.setattr(geopackage, "_WAITING_BYTES", waiting)
+    write_in_pieces(pieces, tables, 7)
+    write_in_pieces(again, tables, 7)
+    assert pieces.read_bytes() == again.read_bytes()
+    assert everything_in(pieces) == everything_in(whole)
+    for name in (name for name, layer in LAYERS.items() if layer.geometry):
+        assert boxes_in(pieces, name) == boxes_in(whole, name)
+    if waiting == 64_000_000:
+        assert pieces.read_bytes() == whole.read_bytes()
+
+
+def test_rows_that_wait_are_bounded_and_go_in_large_pieces(tmp_path, monkeypatch):
+    monkeypatch.setattr(geopackage, "_WAITING_BYTES", 50_000)
+    tables, sizes = tables_of(make_layers(100)), []
+    original = geopackage._write_rows
+
+    def write_rows(path, layer, table, *arguments, append):
+        sizes.extend([table.nbytes] if append else [])
+        original(path, layer, table, *arguments, append=append)
+
+    monkeypatch.setattr(geopackage, "_write_rows", write_rows)
+    with writer(tmp_path / "results.gpkg") as made:
+        for _ in range(10):
+            for name, table in tables.items():
+                made.append(name, table)
+                assert sum(t.nbytes for waiting in made._waiting.values() for t in waiting) <= 50_000
+        pieces, written = len(sizes), sum(sizes)
+    total = 10 * sum(table.nbytes for table in tables.values())
+    assert written > total - 50_000
+    # the fullest of ten layers is at least a tenth of what may wait
+    assert pieces <= total / 5_000
+
+
+def test_layers_without_rows_are_there_in_the_order_of_the_registry(tmp_path):
+    path = tmp_path / "results.gpkg"
+    wanted = ["findings", "ratings", "sections", "subarea_flows"]
+    with writer(path, wanted) as made:
+        made.append("ratings", tables_of(make_layers())["ratings"])
+    listed = [name for (name,) in query(path, "SELECT table_name FROM gpkg_contents ORDER BY rowid")]
+    assert listed == ["sections", "ratings", "subarea_flows", "findings", "layer_styles"]
+    assert made.counts == {"sections": 0, "ratings": 3, "subarea_flows": 0, "findings": 0}
+    for name in wanted:
+        columns = [row[1] for row in query(path, f"PRAGMA table_info({name})")]
+        assert columns[-len(LAYERS[name].columns) :] == list(LAYERS[name].columns)
+
+
+def test_what_is_put_off_while_rows_are_written_is_as_ogr_makes_it(tmp_path):
+    """An independent writer of the same rows: OGR, which keeps its index row by row."""
+    ours, ogrs = tmp_path / "ours.gpkg", tmp_path / "ogrs.gpkg"
+    table = make_layers(300)["subareas"]
+    write_in_pieces(ours, tables_of(make_layers(1) | {"subareas": table}), 50)
+    pyogrio.write_dataframe(
+        table, ogrs, layer="subareas", SPATIAL_INDEX="YES", GEOMETRY_NAME="geom", VERSION="1.3"
+    )
+    made = "SELECT type, name, sql FROM sqlite_master WHERE tbl_name LIKE '%subareas%' ORDER BY type, name"
+    assert query(ours, made) == query(ogrs, made)
+    for asked in (
+        "SELECT * FROM sqlite_sequence WHERE name = 'subareas'",
+        "SELECT * FROM gpkg_extensions WHERE table_name = 'subareas'",
+        "SELECT * FROM gpkg_ogr_contents WHERE table_name = 'subareas'",
+        "SELECT min_x, min_y, max_x, max_y FROM gpkg_contents WHERE table_name = 'subareas'",
+        "SELECT * FROM subareas ORDER BY fid",
+    ):
+        assert query(ours, asked) == query(ogrs, asked), asked
+    assert boxes_in(ours, "subareas").keys() == boxes_in(ogrs, "subareas").keys()
+
+
+def test_a_gis_goes_on_where_the_writer_ended(tmp_path):
+    path = tmp_path / "results.gpkg"
+    write_in_pieces(path, tables_of(make_layers(200)), 50)
+    more = make_layers(2, start=500)["subareas"].set_geometry(
+        [shapely.LineString([[9000, 0], [9001, 1]])] * 2, crs=CRS
+    )
+    pyogrio.write_dataframe(more, path, layer="subareas", append=True)
+    assert query(path, "SELECT max(fid), count(*) FROM subareas") == [(202, 202)]
+    found = pyogrio.read_dataframe(path, layer="subareas", bbox=(8999, -1, 9002, 2))
+    assert list(found["subarea"]) == [500, 501]
+    assert len(boxes_in(path, "subareas")) == 202
+
+
+@pytest.mark.parametrize("guarded", [False, True], ids=["plain", "guarded"])
+@pytest.mark.parametrize("rows", [0, 1, 51, 52, 3000])
+def test_the_index_finds_what_a_look_at_every_row_finds(tmp_path, monkeypatch, rows, guarded):
+    monkeypatch.setattr(spatial_index, "_BLOCK", 1000)
+    monkeypatch.setattr(spatial_index, "_FETCHED", 300)
+    if guarded:
+
+        def refuse(*arguments):
+            raise sqlite3.OperationalError("table may not be modified")
+
+        monkeypatch.setattr(spatial_index, "_pack", refuse)
+        monkeypatch.setattr(geopackage, "_write_schema", refuse)
+    random = np.random.default_rng(11)
+    starts = random.uniform([-500_000.0, 4_000_000.0], [500_000.0, 5_000_000.0], (rows, 2))
+    lines = np.array(
+        [
+            shapely.LineString([a, a + d])
+            for a, d in zip(starts, random.normal(size=(rows, 2)) * 5e3, strict=True)
+        ]
+    )
+    lines[5::10] = None
+    path, name = tmp_path / "results.gpkg", "subareas"
+    table = pd.DataFrame({column: column_of(column, rows) for column in LAYERS[name].columns})
+    write(path, {name: geopandas.GeoDataFrame(table, geometry=lines, crs=CRS)})
+    boxes = boxes_in(path, name)
+    present = [row for row in range(rows) if lines[row] is not None]
+    assert sorted(boxes) == [row + 1 for row in present]
+    for row in present:
+        x0, y0, x1, y1 = lines[row].bounds
+        a, b, c, d = boxes[row + 1]
+        assert a <= x0 <= x1 <= b
+        assert c <= y0 <= y1 <= d
+        # single precision, as SQLite keeps it
+        assert max(x0 - a, b - x1, y0 - c, d - y1) <= 1.0
+    for west, south in random.uniform([-500_000.0, 4_000_000.0], [400_000.0, 4_900_000.0], (20, 2)):
+        window = shapely.box(west, south, west + 1e5, south + 1e5)
+        found = pyogrio.read_dataframe(path, layer=name, bbox=window.bounds, fid_as_index=True)
+        assert sorted(found.index) == [row + 1 for row in present if lines[row].intersects(window)]
+
+
+def test_what_an_append_cannot_take_is_our_own_mistake(tmp_path):
+    tables = tables_of(make_layers())
+    ratings, subareas, findings = tables["ratings"], tables["subareas"], tables["findings"]
+    froude = ratings.column_names.index("froude")
+
+    def with_shapes(table, shapes):
+        kind = pa.string() if isinstance(shapes[0], str) else pa.binary()
+        return table.set_column(table.num_columns - 1, "geometry", pa.array(shapes, kind))
+
+    def with_froude(values):
+        return ratings.set_column(froude, "froude", values)
+
+    line = shapely.LineString([[0, 0], [1, 1]])
+    for name, table, said in [
+        ("sections", tables["sections"], "was not made for the layer sections"),
+        ("ratings", ratings.select(ratings.column_names[::-1]), "columns of ratings"),
+        ("subareas", subareas.drop_columns(["geometry"]), "columns of subareas"),
+        ("ratings", with_froude(pa.array([1, 2, 3])), "ratings.froude is int64, not double"),
+        ("ratings", with_froude(pa.chunked_array([[0.0], [1.0, -np.inf]])), "infinite number in row 2"),
+        ("subareas", with_shapes(subareas, ["a", "b", "c"]), "geometry is string, not binary"),
+        ("subareas", with_shapes(subareas, [None, None, shapely.to_wkb(shapely.Point(0, 0))]), "of kind 1"),
+        ("subareas", with_shapes(subareas, [None, None, shapely.to_wkb(line, byte_order=0)]), "other than"),
+        ("subareas", with_shapes(subareas, [None, None, b"\1\2\0\0\0"]), "no WKB"),
+        ("findings", with_shapes(findings, [None, None, shapely.to_wkb(line)]), "other than Point"),
+    ]:  # fmt: skip
+        wanted = ["ratings", "subareas", "findings"]
+        with pytest.raises(ValueError, match=said), writer(tmp_path / "results.gpkg", wanted) as made:
+            made.append(name, table)
+    assert list(tmp_path.iterdir()) == []
+    with pytest.raises(ValueError, match="no layer to write"):
+        writer(tmp_path / "results.gpkg", [])
+
+
+def test_nothing_in_a_table_becomes_null_and_empty_text_stays(tmp_path):
+    path = tmp_path / "results.gpkg"
+    findings, subareas, stages = LAYERS["findings"], LAYERS["subareas"], LAYERS["design_stages"]
+
+    def rows(layer, values, shapes):
+        made = {name: pa.array(values[COLUMNS[name].dtype], geopackage._ARROW_TYPES[COLUMNS[name].dtype][0])
+                for name in layer.columns}  # fmt: skip
+        return pa.table(made | {"geometry": pa.array(shapes, pa.binary())})
+
+    values = {float: [np.nan, None, 1.0], int: [None, 2, 3], str: [None, "", "é"]}
+    empty = {
+        "Point": shapely.Point(), "LineString": shapely.LineString(),
+        "MultiLineString": shapely.MultiLineString(),
+    }  # fmt: skip
+    with writer(path, ["findings", "subareas", "design_stages"]) as made:
+        for layer in (findings, subareas, stages):
+            shape = shape_of(layer, 1)
+            shape = shapely.multilinestrings([shape]) if layer.geometry == "MultiLineString" else shape
+            table = rows(layer, values, [None, *shapely.to_wkb([empty[layer.geometry], shape])])
+            made.append(layer.name, table)
+            made.append(layer.name, table.slice(1))  # a part, whose bytes begin elsewhere
+    for layer in (findings, subareas, stages):
+        expected = {float: [None, None, 1.0], int: [None, 2, 3], str: [None, "", "é"]}
+        for name in layer.columns:
+            wanted = expected[COLUMNS[name].dtype]
+            found = [value for (value,) in query(path, f"SELECT {name} FROM {layer.name} ORDER BY fid")]
+            assert found == wanted + wanted[1:], name
+        kinds = query(path, f"SELECT typeof(geom) FROM {layer.name} ORDER BY fid")
+        assert kinds == [("null",), ("null",), ("blob",), ("null",), ("blob",)]
+        assert sorted(boxes_in(path, layer.name)) == [3, 5]
+
+
+def test_an_exception_between_rows_leaves_nothing(tmp_path):
+    path = tmp_path / "new" / "results.gpkg"
+    tables = tables_of(make_layers())
+    with suppress(KeyboardInterrupt), writer(path) as made:
+        made.append("ratings", tables["ratings"])
+        raise KeyboardInterrupt
+    assert list(path.parent.iterdir()) == []
+    write(path, make_layers())
+    with pytest.raises(OutputError) as caught, writer(path):
+        raise AssertionError("entered")
+    assert caught.value.code == "output-exists"
+
+
+def test_tones_of_events_are_those_of_all_rows(tmp_path):
+    """Events that come in pieces: the styles are those of the layers at once."""
+    layers = make_layers(60)
+    for name in ("design_stages", "flood_extent", "crossings"):
+        layers[name]["event"] = [f"{2 + row % 3}-year" for row in range(60)]
+    whole, pieces = tmp_path / "whole.gpkg", tmp_path / "pieces.gpkg"
+    write(whole, layers)
+    write_in_pieces(pieces, tables_of(layers), 11)
+    styles = query(pieces, "SELECT styleQML, styleSLD FROM layer_styles ORDER BY id")
+    assert styles == query(whole, "SELECT styleQML, styleSLD FROM layer_styles ORDER BY id")
+    assert any("3-year" in qml for qml, _ in styles)
+
+
 # --- whole or not there --------------------------------------------------------------------------------
 
 
-def fail_on_layer(number: int):
+def fail_on_write(number: int):
     def prepare(monkeypatch, error):
-        original, calls = geopackage._write_layer, []
+        original, calls = geopackage._write_rows, []
 
-        def write_layer(*arguments):
-            original(*arguments)
+        def write_rows(*arguments, **options):
+            original(*arguments, **options)
             calls.append(arguments)
             if len(calls) == number:
                 raise error
 
-        monkeypatch.setattr(geopackage, "_write_layer", write_layer)
+        monkeypatch.setattr(geopackage, "_write_rows", write_rows)
 
     return prepare
 
@@ -526,9 +780,14 @@ def fail_at(owner, name: str):
 
 
 MOMENTS = {
-    "first layer": fail_on_layer(1),
-    "third layer": fail_on_layer(3),
-    "last layer": fail_on_layer(6),
+    # layers are made first, then rows are written
+    "first layer": fail_on_write(1),
+    "last layer": fail_on_write(len(LAYERS)),
+    "first rows": fail_on_write(len(LAYERS) + 1),
+    "third rows": fail_on_write(len(LAYERS) + 3),
+    "last rows": fail_on_write(2 * len(LAYERS)),
+    "putting off": fail_at(geopackage, "_put_off"),
+    "indexing": fail_at(geopackage, "fill_index"),
     "describing": fail_at(geopackage, "_describe"),
     "checking": fail_at(geopackage, "_check"),
     "settling": fail_at(geopackage, "_settle"),

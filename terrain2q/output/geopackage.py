@@ -1,8 +1,9 @@
 """Results as one GeoPackage: every layer in the order of the registry, written whole or not at all.
 
-Layers are written by GDAL through pyogrio's raw interface from ISO WKB, the route that keeps M; the
-column descriptions, the data set's own description and the styles are added with sqlite3. Standard: OGC
-GeoPackage 1.3 (12-128r17) with its extensions Schema, Metadata and RTree Spatial Indexes.
+Rows are written by GDAL from Arrow tables with shapes as ISO WKB, the route that keeps M and the fastest
+one; the spatial indexes, the column descriptions, the data set's own description and the styles are added
+with sqlite3. Standard: OGC GeoPackage 1.3 (12-128r17) with its extensions Schema, Metadata and RTree
+Spatial Indexes.
 """
 
 from __future__ import annotations
@@ -12,22 +13,26 @@ import os
 import sqlite3
 import struct
 import tempfile
-from collections.abc import Iterator, Mapping
-from contextlib import closing, contextmanager, suppress
+from collections.abc import Iterable, Iterator, Mapping
+from contextlib import ExitStack, closing, contextmanager, suppress
+from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
 
 import numpy as np
 import pandas as pd
+import pyarrow as pa
+import pyarrow.compute as pc
 import pyogrio
-import pyogrio.raw
 import shapely
 from pyproj import CRS
 
 from terrain2q.columns import CAUTION, COLUMNS, FID, LAYERS, Column, Layer, column_description, column_title
 from terrain2q.errors import OutputError
+from terrain2q.output.arrow_tables import GEOMETRY
 from terrain2q.output.run_record import plain
-from terrain2q.output.styles import STYLES_TABLE, write_styles
+from terrain2q.output.spatial_index import fill_index
+from terrain2q.output.styles import EVENT_MEASURES, STYLES_TABLE, write_styles
 from terrain2q.output.whole_file import not_writable, whole_file
 from terrain2q.units import UnitSystem, unit_system
 
@@ -42,6 +47,24 @@ _KINDS = {
     "MultiPolygon": ("MultiPolygon", {3, 6}, 2),
     "Point": ("Point", {0}, 2),
 }
+
+# The same kinds as numbers of ISO WKB, in which tables of rows hold them.
+_WKB_KINDS = {
+    "LineString ZM": 3002, "LineString": 2, "MultiLineString": 5, "MultiPolygon": 6, "Point": 1,
+}  # fmt: skip
+
+_ARROW_TYPES = {float: (pa.float64(),), int: (pa.int64(),), str: (pa.string(), pa.large_string())}
+
+# Bytes of rows that wait. GDAL opens and commits once for each layer that is written out, some 10 ms, which
+# this makes small beside the writing itself; a hundred times more would gain nothing and cost memory.
+_WAITING_BYTES = 64_000_000
+
+# Pieces below this size are joined: to pass one on costs 0.1 ms, and so does to copy this much.
+_PIECE_BYTES = 100_000
+
+# As much of the finished file as this is checked where the system holds it, not copied page by page, which
+# halves the time. It is seen as memory of this process, though the system can take it back; so a limit.
+_MAPPED_BYTES = 256_000_000
 
 # The version that older readers (GDAL 3.6) open without a warning.
 _VERSION = "1.3"
@@ -149,32 +172,194 @@ def write_geopackage(
     ValueError
         A layer is not as registered: a mistake in the program, not in the inputs.
     """
-    target, units, crs = Path(path), unit_system(units), CRS.from_user_input(crs)
-    unknown = sorted(set(layers) - set(LAYERS))
-    if unknown:
-        raise ValueError(f"layers that are not registered: {', '.join(unknown)}")
-    wanted = [layer for name, layer in LAYERS.items() if name in layers]
-    if not wanted:
-        raise ValueError("no layer to write")
-    about = {**(metadata or {}), "description": description, "caution": CAUTION, "units": units.name}
-    about = json.dumps(plain(about), ensure_ascii=False, allow_nan=False)
-    date = date or datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%S.000Z")
+    with GeoPackageWriter(
+        path,
+        layers,
+        units=units,
+        crs=crs,
+        description=description,
+        metadata=metadata,
+        overwrite=overwrite,
+        date=date,
+    ) as writer:
+        for name in writer.counts:
+            # one after another, so that no more than one layer is held as it is written
+            writer.append(name, _table(LAYERS[name], layers[name], writer.crs))
 
-    check_output(target.parent, overwrite, target.name)
-    with whole_file(target) as temporary:
+
+class GeoPackageWriter:
+    """A GeoPackage that takes rows as they come and is put in its place when the block ends well.
+
+    A reader of `path` sees the earlier file or the whole new one at every moment; where the block raises,
+    nothing is left. Rows wait until there are many, so pieces may be small; memory does not grow with the
+    number of rows.
+
+    Parameters
+    ----------
+    path : path
+        The file, ending in ``.gpkg``.
+    layers : iterable of str
+        The layers it will have, in any order; one without rows stands there empty.
+    units : UnitSystem or str
+        The system the numbers are in.
+    crs : pyproj.CRS or what it takes
+        The CRS of every geometry.
+    description : str
+        One line on what the results are.
+    metadata : dict, optional
+        More about the run, kept as JSON in the file.
+    overwrite : bool
+        Whether an earlier file may be replaced.
+    date : str, optional
+        The time of writing, such as ``2026-01-01T00:00:00.000Z``; now where not given. The same pieces
+        and the same date give the same bytes; other pieces of the same rows the same rows.
+
+    Raises
+    ------
+    OutputError
+        The file is there and may not be replaced (code ``output-exists``), or it cannot be written
+        (code ``output-not-writable``): when the block is entered, by :meth:`append`, or at its end.
+    ValueError
+        A layer is not registered, or there is none.
+
+    Examples
+    --------
+    >>> from tempfile import TemporaryDirectory
+    >>> piece = pa.table({"event": ["2-year"], "area": [10.0], "largest_depth": [0.5], "geometry": [None]})
+    >>> piece = piece.set_column(3, "geometry", piece["geometry"].cast(pa.binary()))
+    >>> options = {"units": "si", "crs": 26915, "description": "An example"}
+    >>> with TemporaryDirectory() as folder:
+    ...     with GeoPackageWriter(f"{folder}/a.gpkg", ["low_not_joined"], **options) as writer:
+    ...         writer.append("low_not_joined", piece)
+    ...         writer.append("low_not_joined", piece)
+    ...     writer.counts
+    {'low_not_joined': 2}
+    """
+
+    def __init__(
+        self,
+        path: str | os.PathLike,
+        layers: Iterable[str],
+        *,
+        units: UnitSystem | str,
+        crs,
+        description: str,
+        metadata: dict | None = None,
+        overwrite: bool = False,
+        date: str | None = None,
+    ) -> None:
+        wanted = set(layers)
+        unknown = sorted(wanted - set(LAYERS))
+        if unknown:
+            raise ValueError(f"layers that are not registered: {', '.join(unknown)}")
+        if not wanted:
+            raise ValueError("no layer to write")
+        self.path, self.units, self.crs = Path(path), unit_system(units), CRS.from_user_input(crs)
+        self.counts: dict[str, int] = {name: 0 for name in LAYERS if name in wanted}
+        """Rows taken so far, by layer in the order of the file."""
+        about = {**(metadata or {}), "description": description, "caution": CAUTION, "units": self.units.name}
+        self._about = json.dumps(plain(about), ensure_ascii=False, allow_nan=False)
+        self._date = date or datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%S.000Z")
+        self._overwrite = overwrite
+        self._waiting: dict[str, list[pa.Table]] = {name: [] for name in self.counts}
+        self._bytes = dict.fromkeys(self.counts, 0)
+        self._measured: dict[str, list[tuple[pa.Array, np.ndarray]]] = {
+            name: [] for name in EVENT_MEASURES if name in self.counts
+        }
+        self._stack = ExitStack()
+
+    def __enter__(self) -> GeoPackageWriter:
+        check_output(self.path.parent, self._overwrite, self.path.name)
+        with ExitStack() as stack:
+            self._temporary = stack.enter_context(whole_file(self.path))
+            with self._saying_why():
+                for name in self.counts:
+                    self._write(name, _no_rows(LAYERS[name]))
+                self._put_off = _put_off(self._temporary, self.counts)
+            self._stack = stack.pop_all()
+        return self
+
+    def append(self, layer: str, table: pa.Table) -> None:
+        """Take rows, which follow those that the layer has.
+
+        Parameters
+        ----------
+        layer : str
+            One of those the file was made for.
+        table : pyarrow.Table
+            The layer's columns of :data:`terrain2q.columns.LAYERS` in their order, float64, int64 or
+            string, numbers in the units of the file; and, where the layer has shapes, a last column
+            ``geometry`` of little-endian ISO WKB of the registered kind. NaN, null and empty shapes
+            become NULL.
+
+        Raises
+        ------
+        OutputError
+            The file cannot be written (code ``output-not-writable``).
+        ValueError
+            The layer or its rows are not as registered: a mistake in the program, not in the inputs.
+        """
+        if layer not in self.counts:
+            raise ValueError(f"the file was not made for the layer {layer}")
+        table = _checked(LAYERS[layer], table)
+        if not table.num_rows:
+            return
+        self._waiting[layer].append(table)
+        self._bytes[layer] += table.nbytes
+        self.counts[layer] += table.num_rows
+        if layer in self._measured:
+            # copies: a view would keep alive all that the rows came with
+            measure = table[EVENT_MEASURES[layer]].to_numpy().copy()
+            self._measured[layer].append((_encoded(table["event"]), measure))
+        while sum(self._bytes.values()) > _WAITING_BYTES:
+            # the layer with the most bytes goes first, so that each opening of the file is worth it
+            self._write_out(max(self._bytes, key=self._bytes.get))
+
+    def __exit__(self, kind, error, trace) -> bool | None:
+        if kind is not None:
+            return self._stack.__exit__(kind, error, trace)
+        with self._stack:
+            for name in self.counts:
+                self._write_out(name)
+            with self._saying_why():
+                _bring_back(self._temporary, self._put_off, self.counts)
+                styled = _describe(self._temporary, self._events(), self.units, self._about, self._date)
+                _check(self._temporary, self.counts | styled)
+            check_output(self.path.parent, self._overwrite, self.path.name)
+            _settle(self.path)
+        return None
+
+    def _events(self) -> dict[str, pd.DataFrame]:
+        """Return each layer with no more of its columns than the tones of its events are found from."""
+        tables = {name: pd.DataFrame() for name in self.counts}
+        for name, pieces in self._measured.items():
+            if pieces:
+                events = pa.chunked_array([events.dictionary_decode() for events, _ in pieces])
+                measures = np.concatenate([measures for _, measures in pieces])
+                tables[name] = pd.DataFrame({"event": events.to_pandas(), EVENT_MEASURES[name]: measures})
+        return tables
+
+    def _write_out(self, name: str) -> None:
+        tables, size = self._waiting[name], self._bytes[name]
+        self._waiting[name], self._bytes[name] = [], 0
+        if not tables:
+            return
+        table = pa.concat_tables(tables, promote_options="permissive")
+        if size < _PIECE_BYTES * table.column(0).num_chunks:
+            table = table.combine_chunks()
+        with self._saying_why():
+            self._write(name, table, append=True)
+
+    def _write(self, name: str, table: pa.Table, *, append: bool = False) -> None:
+        with _gdal_options(OGR_CURRENT_DATE=self._date, OGR_SQLITE_SYNCHRONOUS="OFF"):
+            _write_rows(self._temporary, LAYERS[name], table, self.units, self.crs, append=append)
+
+    @contextmanager
+    def _saying_why(self) -> Iterator[None]:
         try:
-            with _gdal_options(OGR_CURRENT_DATE=date, OGR_SQLITE_SYNCHRONOUS="OFF"):
-                # one after another, so that no more than one layer is held as it is written
-                for layer in wanted:
-                    table = layers[layer.name]
-                    _write_layer(temporary, layer, _fields(layer, table), _wkb(layer, table, crs), units, crs)
-            counts = {layer.name: len(layers[layer.name]) for layer in wanted}
-            counts |= _describe(temporary, layers, units, about, date)
-            _check(temporary, counts)
+            yield
         except (RuntimeError, sqlite3.Error, OSError) as error:  # pyogrio's own are RuntimeErrors
-            raise not_writable(target, error) from error
-        check_output(target.parent, overwrite, target.name)
-        _settle(target)
+            raise not_writable(self.path, error) from error
 
 
 def _linestring_zm_wkb(xyzm) -> bytes:
@@ -187,8 +372,8 @@ def _geometry_name(table: pd.DataFrame) -> str:
     return getattr(table, "active_geometry_name", None) or "geometry"
 
 
-def _fields(layer: Layer, table: pd.DataFrame) -> list[tuple[np.ndarray, np.ndarray | None]]:
-    """Return the values and the mask of NULLs of each registered column, checked."""
+def _table(layer: Layer, table: pd.DataFrame, crs: CRS) -> pa.Table:
+    """Return a frame as rows to write, checked."""
     names = [str(name) for name in table.columns]
     shape = (
         {getattr(table, "_geometry_column_name", None) or "geometry", "geometry"} if layer.geometry else set()
@@ -199,10 +384,13 @@ def _fields(layer: Layer, table: pd.DataFrame) -> list[tuple[np.ndarray, np.ndar
     unknown = [name for name in names if name not in layer.columns and name not in shape]
     if missing or unknown or len(set(names)) != len(names):
         raise ValueError(f"columns of {layer.name}: missing {missing}, unknown {unknown}, given {names}")
-    return [_values(layer, COLUMNS[name], table[name]) for name in layer.columns]
+    columns = {name: _values(layer, COLUMNS[name], table[name]) for name in layer.columns}
+    if layer.geometry:
+        columns[GEOMETRY] = pa.array(_wkb(layer, table, crs), pa.large_binary())
+    return pa.table(columns)
 
 
-def _values(layer: Layer, column: Column, series: pd.Series) -> tuple[np.ndarray, np.ndarray | None]:
+def _values(layer: Layer, column: Column, series: pd.Series) -> pa.Array:
     where = f"{layer.name}.{column.name}"
     empty = series.isna().to_numpy(dtype=bool)
     if column.dtype is str:
@@ -211,26 +399,93 @@ def _values(layer: Layer, column: Column, series: pd.Series) -> tuple[np.ndarray
         wrong = next((value for value in values if value is not None and not isinstance(value, str)), None)
         if wrong is not None:
             raise ValueError(f"{where} holds {wrong!r}, which is not text")
-        return values, None
+        return pa.array(values, pa.large_string())
     if pd.api.types.is_bool_dtype(series) and not empty.all():
         raise ValueError(f"{where} holds true and false, not numbers")
     try:
         numbers = pd.to_numeric(series).to_numpy(dtype=float, na_value=np.nan)
     except (TypeError, ValueError) as error:
         raise ValueError(f"{where} holds what is not a number: {error}") from error
-    if np.isinf(numbers).any():
-        raise ValueError(f"{where} holds an infinite number in row {int(np.argmax(np.isinf(numbers)))}")
     if column.dtype is float:
-        return numbers, None
+        return pa.array(numbers)
+    _check_finite(layer, column.name, numbers)
     if (numbers[~empty] != np.round(numbers[~empty])).any():
         raise ValueError(f"{where} holds a number that is not whole")
-    return np.where(empty, 0.0, numbers).astype(np.int64), empty if empty.any() else None
+    return pa.array(np.where(empty, 0.0, numbers).astype(np.int64), mask=empty)
 
 
-def _wkb(layer: Layer, table: pd.DataFrame, crs: CRS) -> np.ndarray | None:
-    """Return the geometries as ISO WKB with None where there is none; None for a table."""
-    if not layer.geometry:
-        return None
+def _check_finite(layer: Layer, column: str, numbers: np.ndarray, first: int = 0) -> None:
+    if np.isinf(numbers).any():
+        row = first + int(np.argmax(np.isinf(numbers)))
+        raise ValueError(f"{layer.name}.{column} holds an infinite number in row {row}")
+
+
+def _checked(layer: Layer, table: pa.Table) -> pa.Table:
+    """Return rows as they go into the file; raise where they are not as registered."""
+    expected = [*layer.columns, *([GEOMETRY] if layer.geometry else [])]
+    if table.column_names != expected:
+        raise ValueError(f"columns of {layer.name}: {table.column_names}, not {expected}")
+    columns = {}
+    for name in layer.columns:
+        values, kinds = table[name], _ARROW_TYPES[COLUMNS[name].dtype]
+        if values.type not in kinds:
+            raise ValueError(f"{layer.name}.{name} is {values.type}, not {kinds[0]}")
+        if COLUMNS[name].dtype is float:
+            first = 0
+            for chunk in values.chunks:
+                _check_finite(layer, name, chunk.to_numpy(zero_copy_only=False), first)
+                first += len(chunk)
+        columns[name] = values
+    if layer.geometry:
+        shapes = table[GEOMETRY]
+        if shapes.type not in (pa.binary(), pa.large_binary()):
+            raise ValueError(f"{layer.name}.{GEOMETRY} is {shapes.type}, not binary")
+        columns[GEOMETRY] = pa.chunked_array([_shapes(layer, chunk) for chunk in shapes.chunks], shapes.type)
+    return pa.table(columns)  # without what a schema may say beside names and types
+
+
+def _shapes(layer: Layer, shapes: pa.Array) -> pa.Array:
+    """Return WKB with null for empty shapes; raise where one is of another kind."""
+    present = np.flatnonzero(shapes.is_valid().to_numpy(zero_copy_only=False))
+    if not present.size:
+        return shapes
+    offset_type = np.int64 if shapes.type == pa.large_binary() else np.int32
+    _, offsets, data = shapes.buffers()
+    begins = np.frombuffer(offsets, offset_type)[shapes.offset :][: len(shapes) + 1].astype(np.int64)
+    sizes, begins = np.diff(begins)[present], begins[present]
+    data = np.frombuffer(data, np.uint8)
+    point = layer.geometry == "Point"
+    if (sizes < (21 if point else 9)).any():
+        raise ValueError(f"{layer.name} holds geometries that are no WKB")
+    kinds = data[begins[:, None] + np.arange(1, 5)].view("<u4").ravel()
+    wrong = (data[begins] != 1) | (kinds != _WKB_KINDS[layer.geometry])
+    if wrong.any():
+        kind = int(kinds[np.argmax(wrong)])
+        raise ValueError(f"{layer.name} holds geometries other than {layer.geometry}: WKB of kind {kind}")
+    if point:
+        empty = np.isnan(data[begins[:, None] + np.arange(5, 13)].view("<f8").ravel())
+    else:
+        empty = data[begins[:, None] + np.arange(5, 9)].view("<u4").ravel() == 0
+    if not empty.any():
+        return shapes
+    mask = np.zeros(len(shapes), dtype=bool)
+    mask[present[empty]] = True
+    return pc.if_else(pa.array(mask), pa.scalar(None, shapes.type), shapes)
+
+
+def _encoded(texts: pa.ChunkedArray) -> pa.Array:
+    return texts.cast(pa.string()).combine_chunks().dictionary_encode()
+
+
+def _no_rows(layer: Layer) -> pa.Table:
+    kinds = {name: _ARROW_TYPES[COLUMNS[name].dtype][0] for name in layer.columns}
+    if layer.geometry:
+        kinds[GEOMETRY] = pa.binary()
+    return pa.schema(kinds).empty_table()
+
+
+def _wkb(layer: Layer, table: pd.DataFrame, crs: CRS) -> np.ndarray:
+    """Return the geometries as ISO WKB with None where there is none."""
     if "xyzm" in table.columns and layer.geometry == "LineString ZM":
         lines = [None if xyzm is None else _linestring_zm_wkb(xyzm) for xyzm in table["xyzm"]]
         return _objects(lines)
@@ -275,24 +530,104 @@ def _gdal_options(**options: str) -> Iterator[None]:
         pyogrio.set_gdal_config_options(before)
 
 
-def _write_layer(path: Path, layer: Layer, fields, geometry, units: UnitSystem, crs: CRS) -> None:
+def _write_rows(
+    path: Path, layer: Layer, table: pa.Table, units: UnitSystem, crs: CRS, *, append: bool
+) -> None:
+    """Make a layer with the rows of a table, or append them to it."""
     options = {"IDENTIFIER": layer.title, "DESCRIPTION": f"{layer.meaning} {_units_sentence(units)}"}
     if layer.geometry:
         options |= {"GEOMETRY_NAME": "geom", "SPATIAL_INDEX": "YES"}
-    pyogrio.raw.write(
+    pyogrio.write_arrow(
+        table,
         str(path),
-        geometry=geometry,
-        field_data=[values for values, _ in fields],
-        fields=list(layer.columns),
-        field_mask=[mask for _, mask in fields],
         layer=layer.name,
         driver="GPKG",
+        geometry_name=GEOMETRY if layer.geometry else None,
         geometry_type=_KINDS[layer.geometry][0] if layer.geometry else None,
         crs=crs.to_wkt() if layer.geometry else None,
         encoding="UTF-8",
+        append=append,
         dataset_options={"VERSION": _VERSION} if not path.exists() else None,
-        layer_options=options,
+        layer_options=None if append else options,
     )
+
+
+_INDEXES = "FROM gpkg_extensions WHERE extension_name = 'gpkg_rtree_index'"
+
+
+@dataclass(frozen=True)
+class _PutOff:
+    """What tables lack while rows are written, to be given back."""
+
+    tables: list[tuple[str, str]]
+    """Statements that make them as they are to be in the end, each with the table's name."""
+    indexes: list[tuple]
+    """Rows of the list of extensions, by which OGR knows of a spatial index."""
+    triggers: list[str]
+    """Statements that make the triggers of the spatial indexes."""
+
+
+@contextmanager
+def _edited(path: Path) -> Iterator[sqlite3.Connection]:
+    with closing(sqlite3.connect(path)) as database:
+        database.execute("PRAGMA synchronous = OFF")  # the whole file is flushed before it is renamed
+        yield database
+        database.commit()
+
+
+def _put_off(path: Path, names: Iterable[str]) -> _PutOff:
+    """Free empty tables of what costs time at each row."""
+    with _edited(path) as database:
+        made = dict(database.execute("SELECT name, sql FROM sqlite_master WHERE type = 'table'"))
+        indexes = []
+        if "gpkg_extensions" in made:  # not where all layers are tables
+            indexes = database.execute(f"SELECT * {_INDEXES} ORDER BY rowid").fetchall()
+            database.execute(f"DELETE {_INDEXES}")
+        triggers = database.execute(
+            "SELECT name, sql FROM sqlite_master WHERE type = 'trigger' AND name LIKE 'rtree!_%' ESCAPE '!' "
+            "ORDER BY rowid"
+        ).fetchall()
+        for name, _ in triggers:
+            database.execute(f'DROP TRIGGER "{name}"')
+    missing = [name for name in names if name not in made]
+    if missing:
+        raise sqlite3.DatabaseError(f"the layers {', '.join(missing)} could not be made")
+    tables = [(name, made[name]) for name in names]
+    try:
+        # For AUTOINCREMENT SQLite looks up and stores a table's last row number at each row, a quarter of a
+        # row's time. Builds that guard their schema refuse to do without: slower, and just as right.
+        with _edited(path) as database:
+            _write_schema(database, [(name, sql.replace(" AUTOINCREMENT", "")) for name, sql in tables])
+    except sqlite3.OperationalError:
+        tables = []
+    return _PutOff(tables, indexes, [sql for _, sql in triggers])
+
+
+def _bring_back(path: Path, put_off: _PutOff, counts: Mapping[str, int]) -> None:
+    """Give tables with all their rows back what was put off, and fill their spatial indexes."""
+    if put_off.tables:
+        with _edited(path) as database:
+            _write_schema(database, put_off.tables)
+            database.executemany(
+                "INSERT INTO sqlite_sequence VALUES (?, ?)",
+                [(name, counts[name]) for name, _ in put_off.tables if counts[name]],
+            )
+    with _edited(path) as database:
+        for table, column, *_ in put_off.indexes:
+            fill_index(database, table, column)
+        if put_off.indexes:
+            database.executemany("INSERT INTO gpkg_extensions VALUES (?, ?, ?, ?, ?)", put_off.indexes)
+        for trigger in put_off.triggers:
+            database.execute(trigger)
+
+
+def _write_schema(database: sqlite3.Connection, tables: Iterable[tuple[str, str]]) -> None:
+    # The way that SQLite's page on ALTER TABLE gives for changes that leave what is stored as it is.
+    database.execute("PRAGMA writable_schema = ON")
+    database.executemany(
+        "UPDATE sqlite_master SET sql = ? WHERE type = 'table' AND name = ?", [(sql, n) for n, sql in tables]
+    )
+    database.execute("PRAGMA writable_schema = OFF")
 
 
 def _units_sentence(units: UnitSystem) -> str:
@@ -339,7 +674,7 @@ def _describe(
         Rows of each table that was added to the contents of the file.
     """
     rows = []
-    for layer in (layer for name, layer in LAYERS.items() if name in layers):
+    for layer in (LAYERS[name] for name in layers):
         described = [(column.name, column_title(column, units), column_description(column, units))
                      for column in (FID, *(COLUMNS[name] for name in layer.columns))]  # fmt: skip
         if layer.geometry:
@@ -349,8 +684,7 @@ def _describe(
             described.insert(1, ("geom", "Geometry", shape))
         # `name` is what a GIS shows as the column's alias, so it carries the unit as well.
         rows += [(layer.name, name, title, title, text) for name, title, text in described]
-    with closing(sqlite3.connect(path)) as database:
-        database.execute("PRAGMA synchronous = OFF")  # the whole file is flushed before it is renamed
+    with _edited(path) as database:
         database.executescript(f"BEGIN;{_SCHEMA}")
         database.executemany("INSERT INTO gpkg_data_columns VALUES (?, ?, ?, ?, ?, NULL, NULL)", rows)
         database.executemany(
@@ -365,13 +699,13 @@ def _describe(
             "INSERT INTO gpkg_metadata_reference VALUES ('geopackage', NULL, NULL, NULL, ?, 1, NULL)", (date,)
         )
         styles = write_styles(database, layers, units, date)
-        database.commit()
     return {STYLES_TABLE: styles}
 
 
 def _check(path: Path, counts: dict[str, int]) -> None:
     """Raise sqlite3.DatabaseError where the file is not what was to be written."""
     with closing(sqlite3.connect(path)) as database:
+        database.execute(f"PRAGMA mmap_size = {_MAPPED_BYTES}")
         state = database.execute("PRAGMA integrity_check").fetchone()[0]
         if state != "ok":
             raise sqlite3.DatabaseError(state)

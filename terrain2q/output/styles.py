@@ -22,6 +22,9 @@ from terrain2q.units import UnitSystem
 
 STYLES_TABLE = "layer_styles"
 
+EVENT_MEASURES = {"design_stages": "discharge", "flood_extent": "area", "crossings": "discharge"}
+"""Layers from which the tones of events are found, the first that has rows, and what is measured there."""
+
 OCHRE = "#d99a1c"
 QUIET = "#8a7f72"
 WHITE = "#ffffff"
@@ -163,11 +166,7 @@ def layer_style(layer: str, tones: Mapping[str, str]) -> Style:
 
 def event_tones(layers: Mapping[str, pd.DataFrame]) -> dict[str, str]:
     """Return the tone of each event: the more water it brings, the deeper."""
-    for name, measure in (
-        ("design_stages", "discharge"),
-        ("flood_extent", "area"),
-        ("crossings", "discharge"),
-    ):
+    for name, measure in EVENT_MEASURES.items():
         table = layers.get(name)
         if table is not None and len(table):
             measured = pd.to_numeric(table[measure], errors="coerce").astype(float)
