@@ -1,18 +1,25 @@
-"""Results read back from an output folder, so that pages can be made long after the run."""
+"""Results read back from an output folder, so that pages can be made long after the run.
+
+Rows are read by GDAL as Arrow tables with shapes as ISO WKB, which keeps M.
+"""
 
 from __future__ import annotations
 
 import json
 import os
 import sqlite3
-from collections.abc import Mapping
+import warnings
+from collections.abc import Iterator, Mapping
 from contextlib import closing
 from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
 
+import geopandas
 import numpy as np
 import pandas as pd
+import pyarrow as pa
+import pyogrio
 import pyproj
 import shapely
 
@@ -24,8 +31,75 @@ from terrain2q.units import UnitSystem, unit_system
 
 CROSSING_SECTIONS_NAME = "crossing_sections.gpkg"
 
-# Bytes before the WKB in a GeoPackage geometry, by the kind of its envelope (OGC 12-128r17, 2.1.3).
-_HEADER = {0: 8, 1: 40, 2: 56, 3: 56, 4: 72}
+# What sqlite3 and pyogrio raise; pyogrio's own are RuntimeErrors.
+_UNREADABLE = (sqlite3.Error, RuntimeError, OSError)
+
+
+class StoredLayers(Mapping[str, pd.DataFrame]):
+    """Layers of a GeoPackage, each read when it is first asked for and kept then.
+
+    Columns and their types are those that :func:`terrain2q.output.layers.make_layers` gives: a layer with
+    shapes is a GeoDataFrame, `sections` with z and m. None stands for an empty shape, as the file keeps it.
+
+    Parameters
+    ----------
+    path : path
+        A file that :func:`~terrain2q.output.geopackage.write_geopackage` wrote.
+    counts : mapping of str to int, optional
+        Rows of each layer, where they are known, as the writer does; else they are counted when asked for.
+
+    Raises
+    ------
+    InputError
+        The file cannot be read (code ``file-unreadable``), now or when a layer is asked for.
+    """
+
+    def __init__(self, path: str | os.PathLike, counts: Mapping[str, int] | None = None) -> None:
+        self.path = Path(path).absolute()
+        try:
+            with closing(_opened(self.path)) as database:
+                self._names = _layers_in(database)
+                self._crs = _crs(database) if any(LAYERS[name].geometry for name in self._names) else None
+        except _UNREADABLE as error:
+            raise _unreadable(self.path, error) from None
+        self._counts = None if counts is None else {name: counts[name] for name in self._names}
+        self._read: dict[str, pd.DataFrame] = {}
+
+    def __getitem__(self, name: str) -> pd.DataFrame:
+        if name not in self._names:
+            raise KeyError(name)
+        if name not in self._read:
+            try:
+                table = _read_layer(self.path, name)
+            except _UNREADABLE as error:
+                raise _unreadable(self.path, error) from None
+            if "geometry" in table:
+                table = geopandas.GeoDataFrame(table, geometry="geometry", crs=self._crs)
+            self._read[name] = table
+        return self._read[name]
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(self._names)
+
+    def __len__(self) -> int:
+        return len(self._names)
+
+    def __contains__(self, name: object) -> bool:
+        return name in self._names
+
+    @property
+    def counts(self) -> dict[str, int]:
+        """Rows of each layer, none of which is read for it."""
+        if self._counts is None:
+            try:
+                with closing(_opened(self.path)) as database:
+                    self._counts = {
+                        name: database.execute(f'SELECT count(*) FROM "{name}"').fetchone()[0]
+                        for name in self._names
+                    }
+            except _UNREADABLE as error:
+                raise _unreadable(self.path, error) from None
+        return dict(self._counts)
 
 
 @dataclass(frozen=True)
@@ -105,13 +179,12 @@ def read_folder(folder: str | os.PathLike) -> OutputFolder:
         except (OSError, ValueError) as error:
             raise InputError("file-unreadable", f"{RECORD_NAME}: {error}", where=str(record_path)) from None
     try:
-        with closing(sqlite3.connect(f"{package.as_uri()}?mode=ro", uri=True)) as database:
-            there = {name for (name,) in database.execute("SELECT table_name FROM gpkg_contents")}
-            layers = {name: _read_layer(database, name) for name in LAYERS if name in there}
-            crs = _crs(database)
+        with closing(_opened(package)) as database:
+            names, crs = _layers_in(database), _crs(database)
             units = record.get("units") or _units(database)
-    except sqlite3.Error as error:
-        raise InputError("file-unreadable", f"{RESULT_NAME}: {error}", where=str(package)) from None
+        layers = {name: _with_texts(_read_layer(package, name)) for name in names}
+    except _UNREADABLE as error:
+        raise _unreadable(package, error) from None
     return OutputFolder(layers, unit_system(units), crs, record, folder, _crossing_layers(folder, record))
 
 
@@ -122,39 +195,57 @@ def _crossing_layers(folder: Path, record: Mapping) -> dict[str, pd.DataFrame]:
     if not path.is_file() or sha256_of(path) not in digests:
         return {}
     try:
-        with closing(sqlite3.connect(f"{path.as_uri()}?mode=ro", uri=True)) as database:
-            there = {name for (name,) in database.execute("SELECT table_name FROM gpkg_contents")}
-            return {name: _read_layer(database, name) for name in LAYERS if name in there}
-    except sqlite3.Error as error:
-        raise InputError("file-unreadable", f"{path.name}: {error}", where=str(path)) from None
+        with closing(_opened(path)) as database:
+            names = _layers_in(database)
+        return {name: _with_texts(_read_layer(path, name)) for name in names}
+    except _UNREADABLE as error:
+        raise _unreadable(path, error) from None
 
 
-def _read_layer(database: sqlite3.Connection, name: str) -> pd.DataFrame:
-    there = {row[1] for row in database.execute(f'PRAGMA table_info("{name}")')}
-    names = [column for column in LAYERS[name].columns if column in there]
-    listed = ", ".join(f'"{column}"' for column in [*names, *(["geom"] if "geom" in there else [])])
-    rows = database.execute(f'SELECT {listed} FROM "{name}" ORDER BY fid').fetchall()
+def _opened(path: Path) -> sqlite3.Connection:
+    return sqlite3.connect(f"{path.as_uri()}?mode=ro", uri=True)
+
+
+def _unreadable(path: Path, error: Exception) -> InputError:
+    return InputError("file-unreadable", f"{path.name}: {error}", where=str(path))
+
+
+def _layers_in(database: sqlite3.Connection) -> list[str]:
+    there = {name for (name,) in database.execute("SELECT table_name FROM gpkg_contents")}
+    return [name for name in LAYERS if name in there]
+
+
+def _read_layer(path: Path, name: str) -> pd.DataFrame:
+    """Return the registered columns that a layer has, in their order, then ``geometry`` as an array."""
+    with warnings.catch_warnings():
+        # what it says of M is not so of the rows, only of the kind that it names
+        warnings.filterwarnings("ignore", "Measured", UserWarning)
+        about, rows = pyogrio.read_arrow(path, layer=name)
     table = {}
-    for i, column in enumerate(names):
-        values = [row[i] for row in rows]
-        kind = COLUMNS[column].dtype
+    for column in LAYERS[name].columns:
+        if column not in rows.column_names:
+            continue
+        values, kind = rows[column], COLUMNS[column].dtype
         if kind is str:
-            table[column] = pd.array(["" if v is None else str(v) for v in values], dtype="str")
+            table[column] = pd.array(values.cast(pa.string()), dtype="str")
+        elif kind is int and not values.null_count:
+            table[column] = np.array(values, dtype=np.int64)
         else:
-            numbers = np.array([np.nan if v is None else v for v in values], dtype=float)
-            whole = kind is int and bool(np.isfinite(numbers).all())
-            table[column] = numbers.astype(np.int64) if whole else numbers
-    if "geom" in there:
-        table["geometry"] = _geometries([row[-1] for row in rows])
+            table[column] = np.array(values.cast(pa.float64()), dtype=float)
+    shapes = about["geometry_name"] or "wkb_geometry"
+    if LAYERS[name].geometry and shapes in rows.column_names:
+        found = np.full(len(rows), None, dtype=object)
+        found[:] = shapely.from_wkb(rows[shapes].to_numpy())
+        table["geometry"] = found
     return pd.DataFrame(table)
 
 
-def _geometries(blobs: list[bytes | None]) -> np.ndarray:
-    found = np.full(len(blobs), None, dtype=object)
-    for i, blob in enumerate(blobs):
-        if blob is not None:
-            found[i] = shapely.from_wkb(blob[_HEADER[(blob[3] >> 1) & 7] :])
-    return found
+def _with_texts(table: pd.DataFrame) -> pd.DataFrame:
+    """Return a table with empty text where there was none, as pages show it."""
+    for column in table.columns:
+        if column != "geometry" and COLUMNS[column].dtype is str and table[column].isna().any():
+            table[column] = pd.array(table[column].fillna(""), dtype="str")
+    return table
 
 
 def _crs(database: sqlite3.Connection) -> pyproj.CRS:
