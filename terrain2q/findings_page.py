@@ -142,9 +142,9 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "A built-in table's name with a letter missing.",
         ),
         "library-missing": (
-            "A key asks for a kind of file that needs a library which does not come with the package.",
-            "It is found before any work, so that no long run ends without its files.",
-            '`tables = "parquet"` under [output] where pyarrow is not installed.',
+            "An option asks for what needs a library that does not come with the package.",
+            "It is found before any section is worked on.",
+            "`--scheduler` where Dask is not installed.",
         ),
         "scheduler-unreachable": (
             "--scheduler names a Dask scheduler, and nothing answers there.",

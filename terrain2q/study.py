@@ -486,7 +486,7 @@ class OutputTable(Table):
         "choice", '"all"', choices=("flagged", "all", "none"), default="flagged",
     )  # fmt: skip
     tables: str = key(
-        "the layers also as tables beside results.gpkg: csv, parquet (needs pyarrow), both or none",
+        "the layers also as tables beside results.gpkg: csv, parquet, both or none",
         "choice", '"csv"', choices=("none", "csv", "parquet", "both"), default="none",
     )  # fmt: skip
 

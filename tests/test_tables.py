@@ -3,22 +3,21 @@
 from __future__ import annotations
 
 import dataclasses
-import importlib.util
 
 import geopandas
 import numpy as np
 import pandas as pd
+import pyarrow.parquet
 import pytest
 from _results import CRS, THREE, US, VALLEY, built, folder_of
 
 from terrain2q.columns import COLUMNS, LAYERS
-from terrain2q.errors import Finding, InputError
+from terrain2q.errors import Finding
 from terrain2q.flows import Flow
 from terrain2q.output import tables
 from terrain2q.output.pages import write_pages
-from terrain2q.output.tables import TABLE_CHOICES, check_tables, write_tables
-from terrain2q.process import check_study
-from terrain2q.study import OutputTable, keys_of, load_study
+from terrain2q.output.tables import TABLE_CHOICES, write_tables
+from terrain2q.study import OutputTable, keys_of
 
 
 @pytest.fixture
@@ -63,7 +62,6 @@ def test_a_second_file_says_what_the_columns_are(source):
 
 
 def test_parquet_keeps_geometry_and_meaning(source):
-    parquet = pytest.importorskip("pyarrow.parquet")
     files = write_tables(source, "parquet")
     assert [f.name for f in files] == [f"results_{n}.parquet" for n in source.layers]
     stages = geopandas.read_parquet(source.folder / "results_design_stages.parquet")
@@ -72,7 +70,7 @@ def test_parquet_keeps_geometry_and_meaning(source):
     np.testing.assert_array_equal(stages["discharge"], source.layers["design_stages"]["discharge"])
     ratings = pd.read_parquet(source.folder / "results_ratings.parquet")
     pd.testing.assert_frame_equal(ratings, source.layers["ratings"])
-    field = parquet.read_schema(source.folder / "results_ratings.parquet").field("stage")
+    field = pyarrow.parquet.read_schema(source.folder / "results_ratings.parquet").field("stage")
     assert {k.decode(): v.decode() for k, v in field.metadata.items() if k != b"PARQUET:field_id"} == {
         "title": "Stage",
         "unit": "ft",
@@ -84,36 +82,8 @@ def test_parquet_keeps_geometry_and_meaning(source):
 
 
 def test_both_and_none(source):
-    pytest.importorskip("pyarrow")
     assert len(write_tables(source, "both")) == 2 * len(source.layers) + 1
     assert write_tables(source, "none") == []
-
-
-def test_parquet_without_its_library_is_refused_before_any_work(source, monkeypatch, tmp_path):
-    monkeypatch.setattr(importlib.util, "find_spec", lambda name: None)
-    for asked in ("parquet", "both"):
-        with pytest.raises(InputError) as refused:
-            check_tables(asked)
-        assert refused.value.code == "library-missing"
-        assert 'pip install "terrain2q[parquet]"' in refused.value.fix
-    check_tables("csv")
-    check_tables("none")
-    with pytest.raises(InputError):
-        write_tables(source, "parquet")
-    assert not list(source.folder.glob("*.parquet"))
-    # `check` says it too, before it looks at any data
-    (tmp_path / "dem.tif").touch()
-    (tmp_path / "lines.gpkg").touch()
-    study = load_study(
-        None,
-        {
-            "study.units": "si", "terrain.dem": [str(tmp_path / "dem.tif")], "land_cover.default_n": 0.05,
-            "cut_lines.path": str(tmp_path / "lines.gpkg"), "slope.value": 0.01, "output.tables": "parquet",
-        },
-    )  # fmt: skip
-    with pytest.raises(InputError) as refused:
-        check_study(study)
-    assert refused.value.code == "library-missing"
 
 
 def test_choices_of_the_study_are_those_of_the_writer():

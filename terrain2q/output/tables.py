@@ -8,7 +8,6 @@ column.
 
 from __future__ import annotations
 
-import importlib.util
 import os
 from pathlib import Path
 from typing import Any
@@ -16,10 +15,11 @@ from typing import Any
 import geopandas
 import numpy as np
 import pandas as pd
+import pyarrow
+import pyarrow.parquet
 import shapely
 
 from terrain2q.columns import COLUMNS, LAYERS
-from terrain2q.errors import InputError
 from terrain2q.output.folder import OutputFolder, read_folder
 from terrain2q.output.whole_file import not_writable, whole_file
 
@@ -30,20 +30,7 @@ COLUMNS_NAME = "results_columns.csv"
 
 
 def check_tables(asked: str) -> None:
-    """Say no before any work where Parquet is asked for and cannot be written.
-
-    Raises
-    ------
-    InputError
-        pyarrow is not installed (code ``library-missing``).
-    """
-    if asked in (PARQUET, BOTH) and importlib.util.find_spec("pyarrow") is None:
-        raise InputError(
-            "library-missing",
-            "Parquet is written by pyarrow, which is not installed",
-            where="[output] tables",
-            fix='pip install "terrain2q[parquet]", or set tables = "csv"',
-        )
+    """Find nothing missing: what writes Parquet comes with the package."""
 
 
 def write_tables(source: OutputFolder | str | os.PathLike, asked: str) -> list[Path]:
@@ -64,11 +51,10 @@ def write_tables(source: OutputFolder | str | os.PathLike, asked: str) -> list[P
     Raises
     ------
     InputError
-        pyarrow is not installed (code ``library-missing``), or the folder has no results.
+        The folder has no results.
     OutputError
         A file cannot be written (code ``output-not-writable``).
     """
-    check_tables(asked)
     if not isinstance(source, OutputFolder):
         source = read_folder(source)
     if source.folder is None:
@@ -122,8 +108,6 @@ def _columns(source: OutputFolder) -> pd.DataFrame:
 
 
 def _write_parquet(path: Path, table: pd.DataFrame, source: OutputFolder) -> None:
-    import pyarrow.parquet
-
     if "geometry" in table:
         table = geopandas.GeoDataFrame(table, geometry="geometry", crs=source.crs)
     table.to_parquet(path, index=False)
