@@ -573,6 +573,16 @@ def test_rows_that_wait_are_bounded_and_go_in_large_pieces(tmp_path, monkeypatch
     assert pieces <= total / 5_000
 
 
+def test_ogr_finds_no_index_out_of_step_while_rows_come(tmp_path, monkeypatch):
+    """OGR holds the index of a large table without entries for a broken one; here from ten rows on."""
+    monkeypatch.setattr(geopackage, "_WAITING_BYTES", 1)
+    with geopackage._gdal_options(OGR_GPKG_THRESHOLD_DETECT_BROKEN_RTREE="10"):
+        write_in_pieces(tmp_path / "results.gpkg", tables_of(make_layers(60)), 20)
+        assert (
+            len(pyogrio.read_dataframe(tmp_path / "results.gpkg", layer="subareas", bbox=(0, 0, 3, 1))) == 4
+        )
+
+
 def test_layers_without_rows_are_there_in_the_order_of_the_registry(tmp_path):
     path = tmp_path / "results.gpkg"
     wanted = ["findings", "ratings", "sections", "subarea_flows"]
@@ -607,9 +617,22 @@ def test_what_is_put_off_while_rows_are_written_is_as_ogr_makes_it(tmp_path):
     assert boxes_in(ours, "subareas").keys() == boxes_in(ogrs, "subareas").keys()
 
 
-def test_a_gis_goes_on_where_the_writer_ended(tmp_path):
+REFUSED = {
+    "nothing": [],
+    "tables behind an index": [(spatial_index, "_pack")],
+    "a schema written by hand": [(geopackage, "_write_schema")],
+    "indexes": [(geopackage, "_take_indexes")],
+}
+"""What SQLite may be built to refuse."""
+
+
+@pytest.mark.parametrize("refused", REFUSED)
+def test_a_gis_goes_on_where_the_writer_ended(tmp_path, monkeypatch, refused):
     path = tmp_path / "results.gpkg"
-    write_in_pieces(path, tables_of(make_layers(200)), 50)
+    with monkeypatch.context() as patch:
+        for owner, what in REFUSED[refused]:
+            fail_at(owner, what)(patch, sqlite3.OperationalError("may not be modified"))
+        write_in_pieces(path, tables_of(make_layers(200)), 50)
     more = make_layers(2, start=500)["subareas"].set_geometry(
         [shapely.LineString([[9000, 0], [9001, 1]])] * 2, crs=CRS
     )
@@ -620,18 +643,13 @@ def test_a_gis_goes_on_where_the_writer_ended(tmp_path):
     assert len(boxes_in(path, "subareas")) == 202
 
 
-@pytest.mark.parametrize("guarded", [False, True], ids=["plain", "guarded"])
+@pytest.mark.parametrize("refused", REFUSED)
 @pytest.mark.parametrize("rows", [0, 1, 51, 52, 3000])
-def test_the_index_finds_what_a_look_at_every_row_finds(tmp_path, monkeypatch, rows, guarded):
+def test_the_index_finds_what_a_look_at_every_row_finds(tmp_path, monkeypatch, rows, refused):
     monkeypatch.setattr(spatial_index, "_BLOCK", 1000)
     monkeypatch.setattr(spatial_index, "_FETCHED", 300)
-    if guarded:
-
-        def refuse(*arguments):
-            raise sqlite3.OperationalError("table may not be modified")
-
-        monkeypatch.setattr(spatial_index, "_pack", refuse)
-        monkeypatch.setattr(geopackage, "_write_schema", refuse)
+    for owner, what in REFUSED[refused]:
+        fail_at(owner, what)(monkeypatch, sqlite3.OperationalError("may not be modified"))
     random = np.random.default_rng(11)
     starts = random.uniform([-500_000.0, 4_000_000.0], [500_000.0, 5_000_000.0], (rows, 2))
     lines = np.array(

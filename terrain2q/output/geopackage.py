@@ -552,19 +552,16 @@ def _write_rows(
     )
 
 
-_INDEXES = "FROM gpkg_extensions WHERE extension_name = 'gpkg_rtree_index'"
-
-
 @dataclass(frozen=True)
 class _PutOff:
     """What tables lack while rows are written, to be given back."""
 
     tables: list[tuple[str, str]]
     """Statements that make them as they are to be in the end, each with the table's name."""
-    indexes: list[tuple]
-    """Rows of the list of extensions, by which OGR knows of a spatial index."""
-    triggers: list[str]
-    """Statements that make the triggers of the spatial indexes."""
+    indexes: list[tuple[str, ...]]
+    """Rows of the list of extensions that stand for the spatial indexes."""
+    made_by: list[str]
+    """Statements that make the spatial indexes and their triggers."""
 
 
 @contextmanager
@@ -576,31 +573,43 @@ def _edited(path: Path) -> Iterator[sqlite3.Connection]:
 
 
 def _put_off(path: Path, names: Iterable[str]) -> _PutOff:
-    """Free empty tables of what costs time at each row."""
-    with _edited(path) as database:
+    """Free empty tables of what costs time at each row; keep it where SQLite was built to refuse."""
+    with closing(sqlite3.connect(path)) as database:
         made = dict(database.execute("SELECT name, sql FROM sqlite_master WHERE type = 'table'"))
-        indexes = []
-        if "gpkg_extensions" in made:  # not where all layers are tables
-            indexes = database.execute(f"SELECT * {_INDEXES} ORDER BY rowid").fetchall()
-            database.execute(f"DELETE {_INDEXES}")
-        triggers = database.execute(
-            "SELECT name, sql FROM sqlite_master WHERE type = 'trigger' AND name LIKE 'rtree!_%' ESCAPE '!' "
-            "ORDER BY rowid"
-        ).fetchall()
-        for name, _ in triggers:
-            database.execute(f'DROP TRIGGER "{name}"')
     missing = [name for name in names if name not in made]
     if missing:
         raise sqlite3.DatabaseError(f"the layers {', '.join(missing)} could not be made")
-    tables = [(name, made[name]) for name in names]
+    tables, indexes, made_by = [(name, made[name]) for name in names], [], []
     try:
         # For AUTOINCREMENT SQLite looks up and stores a table's last row number at each row, a quarter of a
-        # row's time. Builds that guard their schema refuse to do without: slower, and just as right.
+        # row's time.
         with _edited(path) as database:
             _write_schema(database, [(name, sql.replace(" AUTOINCREMENT", "")) for name, sql in tables])
     except sqlite3.OperationalError:
         tables = []
-    return _PutOff(tables, indexes, [sql for _, sql in triggers])
+    if "gpkg_extensions" in made:  # not where no layer has shapes
+        with suppress(sqlite3.OperationalError), _edited(path) as database:
+            indexes, made_by = _take_indexes(database)
+    return _PutOff(tables, indexes, made_by)
+
+
+def _take_indexes(database: sqlite3.Connection) -> tuple[list[tuple[str, ...]], list[str]]:
+    """Remove the spatial indexes; return their rows among the extensions, and what makes them anew."""
+    listed = "FROM gpkg_extensions WHERE extension_name = 'gpkg_rtree_index'"
+    indexes = database.execute(f"SELECT * {listed} ORDER BY rowid").fetchall()
+    parts = []
+    for table, column, *_ in indexes:
+        index = f"rtree_{table}_{column}"
+        parts += database.execute(
+            "SELECT type, name, sql FROM sqlite_master WHERE (type = 'table' AND name = ?) "
+            "OR (type = 'trigger' AND tbl_name = ? AND substr(name, 1, ?) = ?) ORDER BY rowid",
+            (index, table, len(index), index),
+        ).fetchall()
+    database.execute("BEGIN")
+    for kind, name, _ in parts:
+        database.execute(f'DROP {kind} "{name}"')
+    database.execute(f"DELETE {listed}")
+    return indexes, [sql for _, _, sql in parts]
 
 
 def _bring_back(path: Path, put_off: _PutOff, counts: Mapping[str, int]) -> None:
@@ -612,13 +621,14 @@ def _bring_back(path: Path, put_off: _PutOff, counts: Mapping[str, int]) -> None
                 "INSERT INTO sqlite_sequence VALUES (?, ?)",
                 [(name, counts[name]) for name, _ in put_off.tables if counts[name]],
             )
-    with _edited(path) as database:
-        for table, column, *_ in put_off.indexes:
-            fill_index(database, table, column)
-        if put_off.indexes:
+    if put_off.indexes:
+        with _edited(path) as database:
+            database.execute("BEGIN")
+            for statement in put_off.made_by:
+                database.execute(statement)
+            for table, column, *_ in put_off.indexes:
+                fill_index(database, table, column)
             database.executemany("INSERT INTO gpkg_extensions VALUES (?, ?, ?, ?, ?)", put_off.indexes)
-        for trigger in put_off.triggers:
-            database.execute(trigger)
 
 
 def _write_schema(database: sqlite3.Connection, tables: Iterable[tuple[str, str]]) -> None:

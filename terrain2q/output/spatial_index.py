@@ -19,8 +19,8 @@ import numpy as np
 _CELLS = 51
 _CELL = np.dtype([("number", ">i8"), ("box", ">f4", 4)])
 
-# Rows that are sorted together: some 40 MB. More would lose memory and gain nothing for a reader.
-_BLOCK = 2**19
+# Rows that are sorted together: some 40 MB. More would cost memory and gain nothing for a reader.
+_BLOCK = 2**17
 
 # Rows that stand as objects at a time.
 _FETCHED = 5000
