@@ -13,6 +13,7 @@ of :data:`CATALOGUE`, and each code has a heading in ``docs/findings.md``.
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from types import MappingProxyType
 
@@ -55,7 +56,7 @@ CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
     "class-duplicate": Kind(ERROR, "A class stands twice in the roughness table", "Keep one row for each class."),
     "section-unknown": Kind(ERROR, "No cut line has the id that a table names", "Correct the id, or take the row away."),
     "table-unknown": Kind(ERROR, "No built-in table has this name", "`terrain2q tables` lists them."),
-    "library-missing": Kind(ERROR, "A library that is asked for is not installed", "Install what the message names, or ask for another kind of file."),
+    "library-missing": Kind(ERROR, "A library that is asked for is not installed", "Install what the message names."),
     "scheduler-unreachable": Kind(ERROR, "No scheduler answers at the address", "Start the cluster, or correct the address; without --scheduler this machine does the work."),
     "number-not-positive": Kind(ERROR, "A roughness, slope or discharge is not above zero", "Give a number above zero."),
     "station-decreases": Kind(ERROR, "Stations of a section decrease", "Give the points from left to right; two equal stations make a vertical face."),
@@ -324,3 +325,21 @@ def worst(severities) -> str:
     """
     found = set(severities)
     return next((s for s in SEVERITIES if s in found), "")
+
+
+def worst_first(findings: Iterable) -> list:
+    """Return findings in order of severity, within each at first one for each feature.
+
+    Parameters
+    ----------
+    findings : iterable
+        Of anything with ``severity`` and ``feature_id``.
+    """
+    ordered = sorted(findings, key=lambda f: SEVERITIES.index(f.severity))
+    seen: set[tuple[str, str]] = set()
+    first, later = [], []
+    for finding in ordered:
+        feature = (finding.severity, finding.feature_id)
+        (later if feature in seen else first).append(finding)
+        seen.add(feature)
+    return sorted(first + later, key=lambda f: SEVERITIES.index(f.severity))

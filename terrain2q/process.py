@@ -6,48 +6,42 @@ import json
 import os
 import time
 from collections import Counter
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from contextlib import closing
 from dataclasses import dataclass, field, replace
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import geopandas
+import numpy as np
 import pandas as pd
+import pyarrow as pa
 import pyproj
 from pyproj.exceptions import CRSError
 
 from terrain2q.batches.kept import KeptParts, study_hash
 from terrain2q.batches.run import answer_lines, in_order
-from terrain2q.batches.work import Part, Work, cores, is_failed, join_layers, plan_batches, wants_compiled
+from terrain2q.batches.work import LAYER_NAMES, Part, Work, cores, is_failed, plan_batches
 from terrain2q.columns import CAUTION
-from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError
+from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError, worst_first
 from terrain2q.flows import Flow, event_names, read_flows
 from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
 from terrain2q.ground.layers import read_layer, require_field
 from terrain2q.ground.low_line import LowLines, streams_near, turn_streams
-from terrain2q.ground.observed import read_observations
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
+from terrain2q.hydraulics.many import worth_compiling
 from terrain2q.hydraulics.roughness import roughness_from_parts
 from terrain2q.jobs.design_flows import SectionAnswer, answer_section
-from terrain2q.jobs.extent import ExtentInputs, FloodMap, map_floods
-from terrain2q.jobs.fitting import Fit, fit_observations
 from terrain2q.jobs.sections import SectionInputs, build_sections
-from terrain2q.jobs.sizing import BenchWish, SizedSection, size_sections
 from terrain2q.jobs.slopes import FieldSlopes, OneSlope, Slopes, StreamSlopes
 from terrain2q.jobs.submerged import Submerged
-from terrain2q.laying_out import lines_for_run, streams_on
-from terrain2q.output.benches import PICTURES_NAME, required_widths_layer, write_benches
-from terrain2q.output.crossing_table import crossings_layer
-from terrain2q.output.fitted import check_table, write_table
-from terrain2q.output.folder import OutputFolder
-from terrain2q.output.geopackage import RESULT_NAME, check_output, write_geopackage
+from terrain2q.output.arrow_tables import table_of_frame
+from terrain2q.output.folder import OutputFolder, StoredLayers
+from terrain2q.output.geopackage import RESULT_NAME, GeoPackageWriter, check_output, write_geopackage
 from terrain2q.output.layers import findings_layer, make_layers
 from terrain2q.output.pages import write_pages
-from terrain2q.output.rasters import flood_rasters
-from terrain2q.output.report import Explorer
-from terrain2q.output.report_data import worst_first
 from terrain2q.output.run_record import (
     files_of_record,
     note_pages,
@@ -55,10 +49,16 @@ from terrain2q.output.run_record import (
     run_record,
     write_run_record,
 )
-from terrain2q.output.tables import check_tables
-from terrain2q.screening import Screened, crossing_layers, find_crossings, screen_study, write_crossings
 from terrain2q.study import Study, load_study
 from terrain2q.units import UnitSystem
+
+# What only some runs need is loaded where it is needed: a large study should begin at once.
+if TYPE_CHECKING:
+    from terrain2q.jobs.extent import FloodMap
+    from terrain2q.jobs.fitting import Fit
+    from terrain2q.jobs.sizing import SizedSection
+    from terrain2q.output.report import Explorer
+    from terrain2q.screening import Screened
 
 Progress = Callable[[int, int, str], None]
 
@@ -207,6 +207,8 @@ class Results:
         height : int
             Of its place in the notebook, in pixels.
         """
+        from terrain2q.output.report import Explorer
+
         record = {}
         if self.folder is not None and (self.folder / RECORD_NAME).is_file():
             record = json.loads((self.folder / RECORD_NAME).read_text(encoding="utf-8"))
@@ -352,13 +354,20 @@ def _read_inputs(study: Study) -> _Inputs:
             id_field=study.streams.id_field,
             repeated_ids=True,
         )
-        near = streams_on(terrain, streams) if cut_lines is None else streams_near(cut_lines, streams)
+        if cut_lines is None:
+            from terrain2q.laying_out import streams_on
+
+            near = streams_on(terrain, streams)
+        else:
+            near = streams_near(cut_lines, streams)
         streams, turned = turn_streams(streams, terrain, study.in_si("streams.snap"), study.system, near)
         findings += turned
     if study.cut_lines is None:
         # crossings lay out their own sections
         lines, line_findings = [], []
     elif cut_lines is None:
+        from terrain2q.laying_out import lines_for_run
+
         lines, line_findings = lines_for_run(study, terrain, streams)
     else:
         for key_name, name in _cut_line_fields(study):
@@ -460,34 +469,47 @@ def _findings_of(answers: Sequence[SectionAnswer]) -> list[Finding]:
     return [f for a in answers for f in a.built.findings] + [f for a in answers for f in a.findings]
 
 
-def _parts(
-    study: Study, inputs: _Inputs, flows: Sequence[Flow], as_layers: bool, jobs: int | None,
-    scheduler: str | None, progress: Progress,
-) -> tuple[list[Part], KeptParts | None]:  # fmt: skip
-    """Return what comes of the cut lines, batch by batch, and where it is kept until all is written."""
+def _begin(
+    study: Study, inputs: _Inputs, flows: Sequence[Flow], as_rows: bool, progress: Progress
+) -> tuple[Work, list, KeptParts | None]:
+    """Return the work on the cut lines, its batches, and where parts are kept; nowhere where there is one."""
+    batches = plan_batches(inputs.lines, inputs.sections.terrain)
+    as_rows = as_rows and len(batches) > 1
     work = Work(
         inputs.sections,
         tuple(flows),
         study.rating.stages,
         study.in_si("rating.top"),
         inputs.crs,
-        wants_compiled(inputs.lines),
-        as_layers,
+        worth_compiling(len(inputs.lines)),
+        as_rows,
     )
-    batches = plan_batches(inputs.lines, inputs.sections.terrain)
     kept = None
     if len(batches) > 1:
-        settings = {**study.as_dict(), "as_layers": as_layers}
+        settings = {**study.as_dict(), "as_rows": as_rows, "compiled": work.compiled}
         kept = KeptParts(study.output.folder, study_hash(settings, study.inputs(), len(batches)))
         if kept.refused:
             progress(0, 1, "parts of an unfinished run with other inputs are there; they are not used")
-    try:
-        parts = answer_lines(work, inputs.lines, batches, kept, jobs or cores(), scheduler, progress)
-    except InputError:
-        if kept is not None:
-            kept.remove(all_new=True)
-        raise
-    return parts, kept
+    return work, batches, kept
+
+
+def _write_rows(
+    writer: GeoPackageWriter, parts: Iterable[Part], inputs: _Inputs
+) -> tuple[list[Finding], frozenset[str]]:
+    """Write the rows of all parts as they come; return the findings, and the sections without an answer."""
+    known = Counter(f.feature_id for f in inputs.findings)
+    told = []
+    for part in parts:
+        for name, table in part.layers.items():
+            if name == "sections" and known:
+                place = table.schema.get_field_index("findings")
+                before = [known[section_id] for section_id in table["section_id"].to_pylist()]
+                counts = table["findings"].to_numpy() + np.array(before, dtype=np.int64)
+                table = table.set_column(place, "findings", pa.array(counts))
+            writer.append(name, table)
+        told.append(replace(part, layers={}))
+    findings, _, failed = in_order(told)
+    return findings, failed
 
 
 def _extent_events(study: Study, flows: Sequence[Flow]) -> tuple[str, ...]:
@@ -515,6 +537,8 @@ def _extent_events(study: Study, flows: Sequence[Flow]) -> tuple[str, ...]:
 
 
 def _map_floods(study: Study, events, flows, inputs: _Inputs, answers, progress) -> FloodMap:
+    from terrain2q.jobs.extent import ExtentInputs, FloodMap, map_floods
+
     if not events:
         return FloodMap.nothing()
 
@@ -534,6 +558,8 @@ def _map_floods(study: Study, events, flows, inputs: _Inputs, answers, progress)
 def _screen(study: Study, inputs: _Inputs, flows: Sequence[Flow], progress) -> Screened | None:
     if study.crossings is None:
         return None
+    from terrain2q.screening import screen_study
+
     return screen_study(study, inputs.sections, inputs.streams, flows, progress)
 
 
@@ -541,6 +567,8 @@ def _check_crossings(study: Study, inputs: _Inputs) -> list[Finding]:
     """Return what is to know about the places of crossings, before any of them is screened."""
     if study.crossings is None:
         return []
+    from terrain2q.screening import crossing_layers, find_crossings
+
     crs = inputs.sections.terrain.crs
     points, roads = crossing_layers(study, crs)
     network = StreamNetwork(inputs.streams, crs, study.system)
@@ -549,6 +577,8 @@ def _check_crossings(study: Study, inputs: _Inputs) -> list[Finding]:
 
 
 def _size(study: Study, answers: Sequence[SectionAnswer], progress: Progress) -> list[SizedSection]:
+    from terrain2q.jobs.sizing import BenchWish, size_sections
+
     bench = study.bench
     wish = BenchWish(
         study.in_si("bench.base"),
@@ -569,6 +599,10 @@ def fit_study(study: Study, progress: Progress | None = None) -> tuple[Fit, Path
     InputError, OutputError
         An input is wrong, or the output cannot be written; nothing was written.
     """
+    from terrain2q.ground.observed import read_observations
+    from terrain2q.jobs.fitting import fit_observations
+    from terrain2q.output.fitted import check_table, write_table
+
     progress = progress or _silent
     folder = Path(study.output.folder)
     check_table(folder, study.output.overwrite)
@@ -595,7 +629,6 @@ def check_study(study: Study, progress: Progress | None = None) -> list[Finding]
     InputError
         An input is wrong.
     """
-    check_tables(study.output.tables)
     _extent_events(study, read_flows(study))
     inputs = _read_inputs(study)
     built = build_sections(inputs.lines, inputs.sections, progress or _silent)
@@ -633,18 +666,128 @@ def run_study(
     progress = progress or _silent
     folder = Path(study.output.folder)
     check_output(folder, study.output.overwrite)
-    check_tables(study.output.tables)
     flows = read_flows(study)
     events = _extent_events(study, flows)
     inputs = _read_inputs(study)
     # the flood extent and the benches need the answers themselves, the layers only their rows
-    as_layers = not (events or widths)
-    parts, kept = _parts(study, inputs, flows, as_layers, jobs, scheduler, progress)
-    about_sections, answers, failed = in_order(parts)
+    work, batches, kept = _begin(study, inputs, flows, not (events or widths), progress)
+    parts = answer_lines(work, inputs.lines, batches, kept, jobs or cores(), scheduler, progress)
+    try:
+        if work.as_layers:
+            made = _finish_rows(study, inputs, flows, parts, progress)
+        else:
+            made = _finish_answers(study, inputs, flows, events, widths, parts, progress)
+    except InputError:
+        if kept is not None:
+            kept.remove(all_new=True)
+        raise
+    if kept is not None:
+        kept.remove()
+    record = folder / RECORD_NAME
+    write_run_record(
+        record,
+        run_record(
+            inputs=study.inputs(),
+            settings=study.as_dict(),
+            units=study.system.name,
+            crs=inputs.crs.to_string(),
+            counts=made.counts,
+            findings=made.findings,
+            seconds=time.perf_counter() - began,
+            outputs=made.files,
+            earlier=made.earlier,
+        ),
+    )
+    pages = write_pages(folder, study.as_dict()["output"])
+    files = (*made.files, record, *pages)
+    # only now that all is there: what a run before wrote and this one did not would be taken for its own
+    left = remove_earlier(folder, made.earlier, files)
+    note_pages(folder, pages, alone=True)
+    progress(1, 1, "writing")
+    return Results(
+        made.layers,
+        tuple(made.findings),
+        study.system,
+        inputs.crs,
+        folder,
+        files,
+        time.perf_counter() - began,
+        study.study.name,
+        made.failed,
+        tuple(left),
+    )
+
+
+@dataclass(frozen=True)
+class _Made:
+    """What a run has written before its record, and what the record and the results tell of it."""
+
+    layers: Mapping[str, pd.DataFrame]
+    counts: Mapping[str, int]
+    findings: list[Finding]
+    failed: frozenset[str]
+    files: tuple[Path, ...]
+    earlier: Sequence
+
+
+def _package(study: Study, inputs: _Inputs) -> dict:
+    """Return how the package of results is described."""
+    return {
+        "units": study.system,
+        "crs": inputs.crs,
+        "description": f"{study.study.name or 'terrain2q study'}: sections, ratings, design stages",
+        "metadata": {"settings": study.as_dict()},
+        "overwrite": study.output.overwrite,
+    }
+
+
+def _finish_rows(study: Study, inputs: _Inputs, flows, parts: Iterable[Part], progress: Progress) -> _Made:
+    """Write the rows of many sections as they come, with what there is beside them."""
+    folder = Path(study.output.folder)
+    package = folder / RESULT_NAME
+    terrain_crs = inputs.sections.terrain.crs
+    earlier = files_of_record(folder)
+    names = [*LAYER_NAMES, *(["crossings"] if study.crossings is not None else []), "findings"]
+    with GeoPackageWriter(package, names, **_package(study, inputs)) as writer:
+        about_sections, failed = _write_rows(writer, parts, inputs)
+        screened = _screen(study, inputs, flows, progress)
+        others = screened.findings if screened is not None else ()
+        findings = _all_findings(inputs, about_sections, others)
+        progress(0, 1, "writing")
+        crossings = None
+        if screened is not None:
+            from terrain2q.output.crossing_table import crossings_layer
+
+            crossings = crossings_layer(screened.answers, study.system, terrain_crs, inputs.crs)
+            writer.append("crossings", table_of_frame("crossings", crossings))
+        writer.append(
+            "findings", table_of_frame("findings", findings_layer(findings, terrain_crs, inputs.crs))
+        )
+    about_crossings = []
+    if screened is not None:
+        from terrain2q.screening import write_crossings
+
+        about_crossings = write_crossings(screened, crossings, study, folder)
+    layers = StoredLayers(package, writer.counts)
+    return _Made(layers, writer.counts, findings, failed, (package, *about_crossings), earlier)
+
+
+def _finish_answers(
+    study: Study, inputs: _Inputs, flows, events, widths: bool, parts: Iterable[Part], progress: Progress
+) -> _Made:
+    """Write what comes of the answers of all sections together."""
+    from terrain2q.output.benches import PICTURES_NAME, required_widths_layer, write_benches
+    from terrain2q.output.crossing_table import crossings_layer
+    from terrain2q.output.rasters import flood_rasters
+    from terrain2q.screening import write_crossings
+
+    folder = Path(study.output.folder)
+    about_sections, answers, failed = in_order(list(parts))
     screened = _screen(study, inputs, flows, progress)
-    terrain = inputs.sections.terrain
+    terrain_crs = inputs.sections.terrain.crs
     folder.mkdir(parents=True, exist_ok=True)
     earlier = files_of_record(folder)
+    package = folder / RESULT_NAME
     with closing(_map_floods(study, events, flows, inputs, answers, progress)) as floods:
         if floods.answers:
             answers = floods.answers
@@ -654,71 +797,24 @@ def run_study(
         others = [*floods.findings, *(screened.findings if screened is not None else ())]
         others += [f for one in sized for f in one.findings]
         findings = _all_findings(inputs, about_sections, others)
-        if as_layers and parts:
-            ids = [line.section_id for line in inputs.lines]
-            layers = join_layers(parts, ids, findings, inputs.crs)
-            layers["findings"] = findings_layer(findings, terrain.crs, inputs.crs)
-            parts.clear()
-        else:
-            layers = make_layers(
-                answers, findings, study.system, terrain.crs, inputs.crs, floods.events if events else None
-            )
+        layers = make_layers(
+            answers, findings, study.system, terrain_crs, inputs.crs, floods.events if events else None
+        )
         if screened is not None:
-            layers["crossings"] = crossings_layer(screened.answers, study.system, terrain.crs, inputs.crs)
+            layers["crossings"] = crossings_layer(screened.answers, study.system, terrain_crs, inputs.crs)
         if sized:
-            layers["required_widths"] = required_widths_layer(sized, study.system, terrain.crs, inputs.crs)
+            layers["required_widths"] = required_widths_layer(sized, study.system, terrain_crs, inputs.crs)
         progress(0, 1, "writing")
-        package, record = folder / RESULT_NAME, folder / RECORD_NAME
         # the rasters wait beside their places until the layers are there
-        with flood_rasters(folder, floods, study.system, terrain.crs) as rasters:
-            write_geopackage(
-                package,
-                layers,
-                units=study.system,
-                crs=inputs.crs,
-                description=f"{study.study.name or 'terrain2q study'}: sections, ratings, design stages",
-                metadata={"settings": study.as_dict()},
-                overwrite=study.output.overwrite,
-            )
+        with flood_rasters(folder, floods, study.system, terrain_crs) as rasters:
+            write_geopackage(package, layers, **_package(study, inputs))
     about_crossings = []
     if screened is not None:
         about_crossings = write_crossings(screened, layers["crossings"], study, folder)
     pictures = [] if not sized else write_benches(folder / PICTURES_NAME, sized, study.system)
-    if kept is not None:
-        kept.remove()
-    seconds = time.perf_counter() - began
-    write_run_record(
-        record,
-        run_record(
-            inputs=study.inputs(),
-            settings=study.as_dict(),
-            units=study.system.name,
-            crs=inputs.crs.to_string(),
-            counts={name: len(table) for name, table in layers.items()},
-            findings=findings,
-            seconds=seconds,
-            outputs=[package, *rasters, *about_crossings, *pictures],
-            earlier=earlier,
-        ),
-    )
-    pages = write_pages(folder, study.as_dict()["output"])
-    files = (package, *rasters, *about_crossings, *pictures, record, *pages)
-    # only now that all is there: what a run before wrote and this one did not would be taken for its own
-    left = remove_earlier(folder, earlier, files)
-    note_pages(folder, pages, alone=True)
-    progress(1, 1, "writing")
-    return Results(
-        layers,
-        tuple(findings),
-        study.system,
-        inputs.crs,
-        folder,
-        files,
-        time.perf_counter() - began,
-        study.study.name,
-        failed,
-        tuple(left),
-    )
+    files = (package, *rasters, *about_crossings, *pictures)
+    counts = {name: len(table) for name, table in layers.items()}
+    return _Made(layers, counts, findings, failed, files, earlier)
 
 
 def run(

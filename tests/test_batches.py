@@ -11,15 +11,18 @@ import sqlite3
 import subprocess
 import sys
 import time
+from dataclasses import replace
 from pathlib import Path
 
 import geopandas
 import numpy as np
+import pyarrow as pa
 import pytest
 import rasterio
 from rasterio.transform import from_origin
 from shapely import linestrings
 
+from terrain2q import process
 from terrain2q.batches import engines, work
 from terrain2q.batches.kept import KeptParts, study_hash
 from terrain2q.errors import InputError
@@ -107,12 +110,21 @@ def options(to: Path) -> dict:
     return {"output.folder": str(to)}
 
 
+def run_in_batches(folder: Path, to: Path, size: int) -> dict[str, list]:
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(work.plan_batches, "__defaults__", (size,))
+        run(folder / "study.toml", options(to), jobs=1)
+    return tables(to / "results.gpkg")
+
+
 @pytest.fixture(scope="module")
 def undisturbed(folder, tmp_path_factory):
-    """The tables of a run without batches."""
-    to = tmp_path_factory.mktemp("undisturbed") / "out"
-    run(folder / "study.toml", options(to), jobs=1)
-    return tables(to / "results.gpkg")
+    """The tables of a run of one process that nothing interrupts."""
+    return run_in_batches(folder, tmp_path_factory.mktemp("undisturbed") / "out", SIZE)
+
+
+def without_order(found: dict[str, list]) -> dict[str, list]:
+    return {name: sorted(repr(row[1:]) for row in rows) for name, rows in found.items()}
 
 
 def test_one_process_and_several_give_the_same_rows(folder, tmp_path, undisturbed):
@@ -120,15 +132,43 @@ def test_one_process_and_several_give_the_same_rows(folder, tmp_path, undisturbe
         results = run(folder / "study.toml", options(tmp_path / str(jobs)), jobs=jobs)
         assert tables(tmp_path / str(jobs) / "results.gpkg") == undisturbed
         assert results.failed_sections == 1
-        assert list(results.sections["section_id"]) == [f"s{i}" for i in range(COUNT)]
+        assert sorted(results.sections["section_id"]) == sorted(f"s{i}" for i in range(COUNT))
         assert not list((tmp_path / str(jobs)).glob(".*"))
     assert len(undisturbed["design_stages"]) == 2 * COUNT
 
 
+def test_batches_give_the_rows_and_layers_of_a_run_without(folder, tmp_path, undisturbed):
+    whole = run_in_batches(folder, tmp_path / "whole", COUNT)
+    assert without_order(whole) == without_order(undisturbed)
+    one = run(folder / "study.toml", options(tmp_path / "batches"))
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(work.plan_batches, "__defaults__", (COUNT,))
+        other = run(folder / "study.toml", options(tmp_path / "whole2"))
+    assert list(one.layers) == list(other.layers)
+    for name, table in other.layers.items():
+        got = one.layers[name]
+        assert list(got.columns) == list(table.columns)
+        assert got.dtypes.astype(str).tolist() == table.dtypes.astype(str).tolist()
+        assert len(got) == len(table)
+    assert one.summary()["findings"] == other.summary()["findings"]
+    assert one.summary_text().splitlines()[0] == other.summary_text().splitlines()[0]
+
+
+def test_lines_that_are_neighbours_keep_their_order(folder):
+    terrain = Terrain(folder / "dem.tif")
+    down = [
+        CutLine(f"s{i}", np.array([500300.0, 500100.0]), np.full(2, 4499990.0 - 11 * i)) for i in range(100)
+    ]
+    assert np.concatenate(work.plan_batches(down, terrain, 20)).tolist() == list(range(100))
+    mixed = [down[i] for i in np.random.default_rng(2).permutation(100)]
+    batches = work.plan_batches(mixed, terrain, 20)
+    assert np.concatenate(batches).tolist() != list(range(100))
+    assert all((np.diff(places) > 0).all() for places in batches)
+
+
 def test_compiled_code_gives_the_answers_of_the_arrays(folder, tmp_path, monkeypatch):
     plain = run(folder / "study.toml", options(tmp_path / "plain"), jobs=1)
-    monkeypatch.setattr(work, "MANY", 1)
-    assert work.wants_compiled([None])
+    monkeypatch.setattr(process, "worth_compiling", lambda sections: True)
     fast = run(folder / "study.toml", options(tmp_path / "fast"), jobs=1)
     for name in ("sections", "subareas", "ratings", "design_stages", "subarea_flows"):
         one, other = plain.layers[name], fast.layers[name]
@@ -207,8 +247,8 @@ def test_a_part_is_data_and_never_code(tmp_path):
             return os.mkdir, (str(tmp_path / "made"),)
 
     parts = KeptParts(tmp_path / "out", "x")
-    parts.keep(0, work.Part((0,), {"sections": {"n": np.arange(3)}}, ((),), ((),), ()))
-    assert parts.load(0, [0]).layers["sections"]["n"].tolist() == [0, 1, 2]
+    parts.keep(0, work.Part((0,), {"sections": pa.table({"n": np.arange(3)})}, ((),), ((),), ()))
+    assert parts.load(0, [0]).layers["sections"]["n"].to_pylist() == [0, 1, 2]
     assert parts.load(0, [1]) is None
     parts._path(0).write_bytes(pickle.dumps(Evil()))
     assert parts.load(0, [0]) is None
@@ -241,11 +281,20 @@ def test_an_error_in_a_worker_is_the_same_error_here(folder, tmp_path):
     batch = (0, [line], [0])
     ((number, part),) = engines.processes(job, [batch], 1)
     assert number == 0
-    assert part.layers["sections"]["section_id"].tolist() == ["a"]
-    moved.unlink()
-    with pytest.raises(InputError) as raised:
-        list(engines.processes(job, [batch], 1))
-    assert raised.value.code == "file-unreadable"
+    assert part.layers["sections"]["section_id"].to_pylist() == ["a"]
+    worker = engines._Worker()
+    try:
+        worker.send(pickle.dumps((job, None)))
+        there = worker.answer(batch)
+        assert {n: work._to_bytes(t) for n, t in there.layers.items()} == {
+            n: work._to_bytes(t) for n, t in part.layers.items()
+        }
+        moved.unlink()
+        with pytest.raises(InputError) as raised:
+            worker.answer((1, [replace(line, section_id="b")], [1]))
+        assert raised.value.code == "file-unreadable"
+    finally:
+        worker.close()
 
 
 KILLED = """
@@ -257,7 +306,7 @@ run(sys.argv[1], {"output.folder": sys.argv[2], "output.overwrite": True}, jobs=
 """
 
 
-def test_killed_at_random_and_resumed(folder, tmp_path, undisturbed):
+def test_killed_at_random_and_resumed(folder, tmp_path):
     """Killed ten times: what is there at last are the rows of an undisturbed run, and nothing else."""
     out = tmp_path / "out"
     chance = random.Random(6)
@@ -283,7 +332,7 @@ def test_killed_at_random_and_resumed(folder, tmp_path, undisturbed):
         parts.append(now)
     assert progress >= 2, parts
     subprocess.run([*command, "2"], check=True, env=environment)
-    assert tables(out / "results.gpkg") == undisturbed
+    assert tables(out / "results.gpkg") == run_in_batches(folder, tmp_path / "undisturbed", 12)
     assert sorted(p.name for p in out.iterdir()) == ["results.gpkg", "run.json"]
 
 

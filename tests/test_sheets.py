@@ -400,8 +400,8 @@ def test_a_crossing_with_a_section_of_its_name_shows_it(tmp_path):
 def test_what_is_asked_for_is_written(tmp_path, monkeypatch):
     """The report command makes sheets also where the run asked for none."""
     asked = []
-    monkeypatch.setattr("terrain2q.output.pages.write_report", lambda source: tmp_path / "report.html")
-    monkeypatch.setattr("terrain2q.output.pages.write_sheets", lambda source, which: asked.append(which))
+    monkeypatch.setattr("terrain2q.output.report.write_report", lambda source: tmp_path / "report.html")
+    monkeypatch.setattr("terrain2q.output.sheets.write_sheets", lambda source, which: asked.append(which))
     for of_run in ({"sheets": "none"}, {"sheets": "all"}, {}):
         source = folder_of([built("A", VALLEY, THREE)], FLOWS, settings={"output": of_run})
         monkeypatch.setattr("terrain2q.output.pages.read_folder", lambda folder, source=source: source)

@@ -1,31 +1,44 @@
 """Who works on the batches: this process, several on this machine, or a Dask cluster.
 
-Each gives the parts as they come, in any order; what they hold is the same.
+Each gives the parts as they come, in any order, and keeps each before that; what they hold is the same. A
+part that is not at hand comes as None, to be read where it is kept.
 """
 
 from __future__ import annotations
 
+import gc
 import os
 import pickle
 import subprocess
 import sys
 import threading
 from collections.abc import Iterator, Sequence
-from concurrent.futures import FIRST_COMPLETED, ThreadPoolExecutor, wait
+from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from contextlib import contextmanager
 
-from terrain2q.batches.work import Part, Work, answer_batch, one_thread_each
+from terrain2q.batches.kept import KeptParts
+from terrain2q.batches.work import Part, Work, answer_batch
 from terrain2q.errors import InputError, Terrain2qError
+from terrain2q.ground import tiles
 from terrain2q.ground.cut_lines import CutLine
 
 Batch = tuple[int, Sequence[CutLine], Sequence[int]]
 """Number of a batch, its lines, and their places among all lines."""
 
 
-def serial(work: Work, batches: Sequence[Batch]) -> Iterator[tuple[int, Part]]:
+def serial(
+    work: Work, batches: Sequence[Batch], kept: KeptParts | None = None
+) -> Iterator[tuple[int, Part | None]]:
     """Work on one batch after another in this process."""
     for number, lines, places in batches:
-        yield number, answer_batch(work, lines, places)
+        yield number, _answered(work, number, lines, places, kept)
+
+
+def _answered(work: Work, number: int, lines, places, kept: KeptParts | None) -> Part:
+    part = answer_batch(work, lines, places)
+    if kept is not None:
+        kept.keep(number, part)
+    return part
 
 
 # --- processes ----------------------------------------------------------------------------------------
@@ -52,7 +65,7 @@ class _Worker:
         self._process.stdin.write(message)
         self._process.stdin.flush()
 
-    def answer(self, batch: Batch) -> Part:
+    def answer(self, batch: Batch) -> Part | None:
         try:
             self.send(pickle.dumps(batch, protocol=5))
             part = pickle.load(self._process.stdout)
@@ -72,21 +85,44 @@ class _Worker:
         self._process.wait()
 
 
-def processes(work: Work, batches: Sequence[Batch], jobs: int) -> Iterator[tuple[int, Part]]:
-    """Work on several batches at once, each in a process of its own."""
-    message = pickle.dumps(work, protocol=5)
-    workers: list[_Worker] = []
+class _Here:
+    """The process itself as one of the workers: it is at work while the others still start."""
+
+    def __init__(self, work: Work, kept: KeptParts | None) -> None:
+        self._work, self._kept = work, kept
+        # one thread reads the terrain for each that works
+        self._threads, tiles.MOST_THREADS = tiles.MOST_THREADS, 1
+
+    def answer(self, batch: Batch) -> Part:
+        number, lines, places = batch
+        return _answered(self._work, number, lines, places, self._kept)
+
+    def close(self) -> None:
+        tiles.MOST_THREADS = self._threads
+
+
+def processes(
+    work: Work, batches: Sequence[Batch], jobs: int, kept: KeptParts | None = None
+) -> Iterator[tuple[int, Part | None]]:
+    """Work on several batches at once: this process, and others of which each keeps its parts itself."""
+    message = pickle.dumps((work, kept), protocol=5)
+    workers: list[_Worker | _Here] = [_Here(work, kept)]
+    first = threading.Lock()
     mine = threading.local()
 
     def begin() -> None:
+        if first.acquire(blocking=False):
+            mine.worker = workers[0]
+            return
         mine.worker = _Worker()
         workers.append(mine.worker)
         mine.worker.send(message)
 
-    def one(batch: Batch) -> tuple[int, Part]:
+    def one(batch: Batch) -> tuple[int, Part | None]:
         return batch[0], mine.worker.answer(batch)
 
     pool = ThreadPoolExecutor(min(jobs, len(batches)), initializer=begin)
+    asked: set[Future] = set()
     try:
         waiting = iter(batches)
         # few are asked for ahead, so that parts do not pile up where they are taken slowly
@@ -99,9 +135,12 @@ def processes(work: Work, batches: Sequence[Batch], jobs: int) -> Iterator[tuple
                     asked.add(pool.submit(one, following))
                 yield future.result()
     finally:
-        for worker in workers:
+        pool.shutdown(wait=False, cancel_futures=True)
+        for worker in workers[1:]:
             worker.close()
-        pool.shutdown(cancel_futures=True)
+        pool.shutdown()
+        for worker in workers:  # one may have begun meanwhile
+            worker.close()
 
 
 def _serve() -> None:
@@ -109,15 +148,19 @@ def _serve() -> None:
     source, target = sys.stdin.buffer, os.fdopen(os.dup(sys.stdout.fileno()), "wb")
     # what libraries print must not get between the parts
     os.dup2(sys.stderr.fileno(), sys.stdout.fileno())
-    one_thread_each()
-    work = pickle.load(source)
+    tiles.MOST_THREADS = 1
+    work, kept = pickle.load(source)
+    # what stays to the end need not be looked through again and again for what can go
+    gc.freeze()
     while True:
         try:
-            _, lines, places = pickle.load(source)
+            number, lines, places = pickle.load(source)
         except EOFError:
             return
         try:
-            answer: object = answer_batch(work, lines, places)
+            answer: object = _answered(work, number, lines, places, kept)
+            if kept is not None:
+                answer = None
         except Terrain2qError as error:
             answer = error
         except Exception as error:
@@ -130,7 +173,9 @@ def _serve() -> None:
 # --- a cluster ----------------------------------------------------------------------------------------
 
 
-def cluster(work: Work, batches: Sequence[Batch], address: str) -> Iterator[tuple[int, Part]]:
+def cluster(
+    work: Work, batches: Sequence[Batch], address: str, kept: KeptParts | None = None
+) -> Iterator[tuple[int, Part]]:
     """Work on a Dask cluster; a batch whose worker dies is given to another.
 
     Raises
@@ -151,6 +196,8 @@ def cluster(work: Work, batches: Sequence[Batch], address: str) -> Iterator[tupl
             number = futures.pop(future)
             part = future.result()
             future.release()  # the cluster need not hold what has been taken
+            if kept is not None:
+                kept.keep(number, part)
             yield number, part
 
 

@@ -22,6 +22,15 @@ from terrain2q.output.whole_file import not_writable
 
 _PREFIX = ".unfinished-"
 
+_NO_PART = (OSError, EOFError, LookupError, ValueError, TypeError, AttributeError, pickle.UnpicklingError)
+"""What reading a file that is no part raises."""
+
+_FORM = 2
+"""Of the parts; those of another form are not taken up."""
+
+_LENGTH = 8
+"""Bytes at the head of a part that say how long the rest is."""
+
 
 def study_hash(settings: Mapping, inputs: Mapping[str, Sequence[str]], batches: int) -> str:
     """Return what tells one run from another: settings, inputs and versions.
@@ -47,7 +56,7 @@ def study_hash(settings: Mapping, inputs: Mapping[str, Sequence[str]], batches: 
         "settings": {name: table for name, table in settings.items() if name != "output"},
         "files": files,
         "batches": batches,
-        "versions": [__version__, np.__version__],
+        "versions": [__version__, np.__version__, _FORM],
     }
     return hashlib.sha256(json.dumps(about, sort_keys=True, default=str).encode()).hexdigest()[:16]
 
@@ -80,12 +89,22 @@ class KeptParts:
     def _path(self, number: int) -> Path:
         return self._folder / f"{number:06d}.part"
 
+    def __contains__(self, number: int) -> bool:
+        """Whether a part is there, as long as it was when it was written."""
+        try:
+            with self._path(number).open("rb") as file:
+                length = int.from_bytes(file.read(_LENGTH), "little")
+                return os.fstat(file.fileno()).st_size == _LENGTH + length
+        except OSError:
+            return False
+
     def load(self, number: int, places: Sequence[int]) -> Part | None:
         """Return a kept part, None where it is not there or not whole."""
         try:
             with self._path(number).open("rb") as file:
+                file.seek(_LENGTH)
                 part = _PartUnpickler(file).load()
-        except (OSError, EOFError, ValueError, TypeError, AttributeError, IndexError, pickle.UnpicklingError):
+        except _NO_PART:
             return None
         same = isinstance(part, Part) and np.array_equal(part.places, places)
         return part if same else None
@@ -103,7 +122,11 @@ class KeptParts:
         try:
             self._folder.mkdir(parents=True, exist_ok=True)
             with temporary.open("wb") as file:
+                file.write(bytes(_LENGTH))
                 pickle.dump(part, file, protocol=5)
+                length = file.tell() - _LENGTH
+                file.seek(0)
+                file.write(length.to_bytes(_LENGTH, "little"))
             temporary.replace(target)
         except OSError as error:
             raise not_writable(target, error) from error

@@ -2,18 +2,23 @@
 
 from __future__ import annotations
 
+import gc
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import closing, contextmanager
 from itertools import chain
 
 from terrain2q.batches.engines import Batch, cluster, processes, serial
 from terrain2q.batches.kept import KeptParts
-from terrain2q.batches.work import Part, Work
+from terrain2q.batches.work import Part, Work, answer_batch
 from terrain2q.errors import Finding
 from terrain2q.ground.cut_lines import CutLine
 from terrain2q.jobs.design_flows import SectionAnswer
 
 LABEL = "sections"
+
+_HELD = 4
+"""Parts that came before their turn and are held; more are read again from where they are kept."""
 
 
 def answer_lines(
@@ -24,8 +29,10 @@ def answer_lines(
     jobs: int,
     scheduler: str | None,
     progress: Callable[[int, int, str], None],
-) -> list[Part]:
-    """Return the parts of all batches, in their order.
+) -> Iterator[Part]:
+    """Give the parts of all batches, one after another in the order of the batches.
+
+    Where parts are kept, no more than a few are held at a time.
 
     Parameters
     ----------
@@ -42,32 +49,48 @@ def answer_lines(
     progress : callable
         ``progress(done, total, label)``; the label tells the rate and the findings so far.
     """
-    parts: list[Part | None] = [None] * len(batches)
-    if kept is not None:
-        parts = [kept.load(number, places) for number, places in enumerate(batches)]
+    ready = {number for number in range(len(batches)) if kept is not None and number in kept}
     pace = _Pace(len(lines), progress)
-    for part in parts:
-        if part is not None:
-            pace.take(part, fresh=False)
+    if ready:
+        pace.take(sum(len(batches[number]) for number in ready), fresh=False)
     waiting: list[Batch] = [
         (number, [lines[i] for i in places], places)
         for number, places in enumerate(batches)
-        if parts[number] is None
+        if number not in ready
     ]
-    if not waiting:
-        return parts
-    if scheduler is not None:
-        coming = cluster(work, waiting, scheduler)
+    if scheduler is not None and waiting:
+        coming = cluster(work, waiting, scheduler, kept)
     elif jobs > 1 and len(waiting) > 1:
-        coming = processes(work, waiting, jobs)
+        coming = processes(work, waiting, jobs, kept)
     else:
-        coming = serial(work, waiting)
-    for number, part in coming:
-        parts[number] = part
-        if kept is not None:
-            kept.keep(number, part)
-        pace.take(part)
-    return parts
+        coming = serial(work, waiting, kept)
+    held: dict[int, Part] = {}
+    with closing(coming), _old_objects_left_alone():
+        for number, places in enumerate(batches):
+            while number not in ready and number not in held:
+                other, part = next(coming)
+                pace.take(len(batches[other]))
+                if part is not None and (kept is None or other == number or len(held) < _HELD):
+                    held[other] = part
+                else:
+                    ready.add(other)
+            part = held.pop(number, None)
+            if part is None:
+                part = kept.load(number, places)
+            if part is None:  # damaged since it was kept
+                part = answer_batch(work, [lines[i] for i in places], places)
+            pace.findings += part.finding_count
+            yield part
+
+
+@contextmanager
+def _old_objects_left_alone() -> Iterator[None]:
+    """Spare what is there already, the lines above all, from being looked through for what can go."""
+    gc.freeze()
+    try:
+        yield
+    finally:
+        gc.unfreeze()
 
 
 class _Pace:
@@ -76,14 +99,13 @@ class _Pace:
     def __init__(self, total: int, progress: Callable[[int, int, str], None]) -> None:
         self._total, self._progress = total, progress
         self._began = time.perf_counter()
-        self._done = self._fresh = self._findings = 0
+        self._done = self._fresh = self.findings = 0
 
-    def take(self, part: Part, *, fresh: bool = True) -> None:
-        self._done += len(part.places)
-        self._fresh += len(part.places) if fresh else 0
-        self._findings += part.finding_count
+    def take(self, count: int, *, fresh: bool = True) -> None:
+        self._done += count
+        self._fresh += count if fresh else 0
         taken = time.perf_counter() - self._began
-        label = f"{LABEL}: {self._findings} findings"
+        label = f"{LABEL}: {self.findings} findings"
         if fresh and taken > 0:
             rate = self._fresh / taken
             label += f", {rate:.3g} a second, {_duration((self._total - self._done) / rate)} left"

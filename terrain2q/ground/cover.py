@@ -19,9 +19,8 @@ from dataclasses import dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
 from types import MappingProxyType
-from typing import Protocol
+from typing import TYPE_CHECKING, Protocol
 
-import geopandas
 import numpy as np
 import shapely
 
@@ -29,6 +28,9 @@ from terrain2q.errors import Finding, InputError
 from terrain2q.ground.layers import clean_text, clean_texts, ignored_columns, read_table, require_field
 from terrain2q.ground.streams import Ground, feature_ids, length_text
 from terrain2q.units import SI, UnitSystem, unit_system
+
+if TYPE_CHECKING:
+    import geopandas
 
 SMALLEST = 1e-6
 """Metres below which a piece is nothing, and within which a line runs along an edge."""

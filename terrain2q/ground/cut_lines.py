@@ -22,8 +22,8 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
 
-import geopandas
 import numpy as np
 import shapely
 
@@ -31,6 +31,9 @@ from terrain2q.errors import Finding
 from terrain2q.ground.layers import clean_text, columns_of
 from terrain2q.ground.streams import StreamNetwork, feature_ids, length_text
 from terrain2q.units import SI, UnitSystem, unit_system
+
+if TYPE_CHECKING:
+    import geopandas
 
 OBLIQUE = 30.0
 """Degrees off square from which a line is a finding (common practice; 30° makes a section 15 % too wide)."""

@@ -5,18 +5,21 @@ from __future__ import annotations
 import difflib
 import re
 import warnings
+from collections import Counter
 from collections.abc import Sequence
 from pathlib import Path
+from typing import TYPE_CHECKING
 
-import geopandas
 import numpy as np
-import pandas
-import pyogrio
 import pyproj
 import shapely
 
 from terrain2q.errors import Finding, InputError
 from terrain2q.ground.distances import horizontal_crs
+
+if TYPE_CHECKING:
+    import geopandas
+    import pandas
 
 GEOMETRY_KINDS = {
     "line": ("LineString", "MultiLineString"),
@@ -34,6 +37,9 @@ _COMMON_ID_FIELDS = ("id", "name", "fid")
 _WHOLE_NUMBER = re.compile(r"([+-]?\d+)\.0*")
 _SHOWN = 5
 
+# by name, so that text can be had without loading pandas
+_MISSING = frozenset({"NAType", "NaTType"})
+
 
 def clean_text(value: object) -> str:
     """Return an id or a class as text, the same whether it was stored as text, integer or float.
@@ -48,7 +54,7 @@ def clean_text(value: object) -> str:
     >>> clean_text(41), clean_text(41.0), clean_text(" 41.0 "), clean_text("041"), clean_text(None)
     ('41', '41', '41', '041', '')
     """
-    if value is None or value is pandas.NA or value is pandas.NaT:
+    if value is None or type(value).__name__ in _MISSING:
         return ""
     if isinstance(value, (float, np.floating)):
         if np.isnan(value):
@@ -62,6 +68,8 @@ def clean_text(value: object) -> str:
 
 def clean_texts(values: Sequence | pandas.Series) -> list[str]:
     """Return :func:`clean_text` of many values, each distinct value looked at once."""
+    import pandas
+
     codes, distinct = pandas.factorize(np.asarray(values, dtype=object), use_na_sentinel=True)
     texts = [clean_text(value) for value in distinct]
     return [texts[code] if code >= 0 else "" for code in codes]
@@ -146,6 +154,9 @@ def read_layer(
         Codes ``file-missing``, ``file-unreadable``, ``layer-missing``, ``layer-empty``, ``geometry-kind``,
         ``crs-missing``, ``crs-unknown``, ``field-missing``, ``id-duplicate``, ``id-missing``.
     """
+    import geopandas
+    import pyogrio
+
     path, layer = split_spec(spec)
     where = f"{purpose}: {spec}"
     if not path.exists():
@@ -195,6 +206,9 @@ def read_layer(
 
 
 def _read(path: Path, layer: str, where: str):
+    import geopandas
+    import pyogrio
+
     try:
         with warnings.catch_warnings():
             # A note on m values and the like: plan geometry is all that is used here.
@@ -262,6 +276,8 @@ def reproject(frame: geopandas.GeoDataFrame, crs: object, where: str = "") -> ge
 
 def columns_of(frame: pandas.DataFrame) -> list[str]:
     """Return the columns a user knows: without the geometry and without what was added on reading."""
+    import geopandas
+
     hidden = {"feature_id"}
     if isinstance(frame, geopandas.GeoDataFrame):
         hidden.add(frame.geometry.name)
@@ -309,8 +325,7 @@ def _ids(frame, id_field: str | None, fid_column: str, repeated: bool, purpose: 
                 f"{len(missing)} of {len(ids)} features have no {id_field!r}: feature {_first(missing)}",
                 where=where,
             )
-        counts = pandas.Series(ids).value_counts(sort=False)
-        doubles = [f"{text!r} ({count} times)" for text, count in counts.items() if count > 1]
+        doubles = [f"{text!r} ({count} times)" for text, count in Counter(ids).items() if count > 1]
         if doubles and not repeated:
             raise InputError(
                 "id-duplicate",
@@ -363,6 +378,8 @@ def read_table(
     InputError
         Codes ``file-missing``, ``file-unreadable``, ``field-missing``, ``layer-empty``.
     """
+    import pandas
+
     path = Path(path)
     where = f"{purpose}: {path}"
     if not path.is_file():

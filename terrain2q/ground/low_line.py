@@ -23,17 +23,19 @@ from __future__ import annotations
 from collections.abc import Collection
 from dataclasses import dataclass, field
 from functools import cache, cached_property
+from typing import TYPE_CHECKING
 
-import geopandas
 import numpy as np
 import shapely
-from scipy.ndimage import maximum_filter1d, median_filter, minimum_filter1d
 
 from terrain2q.errors import Finding
 from terrain2q.ground.stream_slope import robust_slope
 from terrain2q.ground.streams import StreamNetwork, feature_ids, length_text
 from terrain2q.ground.terrain import POINTS_AT_ONCE, Terrain
 from terrain2q.units import SI, UnitSystem
+
+if TYPE_CHECKING:
+    import geopandas
 
 SNAP_CELLS, SNAP_LEAST = 5.0, 15.0
 """The snap distance where none is given: so many cells, and so many metres at least."""
@@ -58,6 +60,10 @@ LEAST_FALL = 0.3
 
 CLEAR_FALL, AGREEING = 2.0, 0.9
 """Metres of fall, and share of pairs of points that agree, that tell it even where the profile is bent."""
+
+SPOTS, PLAIN_FALL, LONG = 6, 3.0 * CLEAR_FALL, 200
+"""A stream so many cells long runs as drawn beyond doubt where the ground at so many spots along it falls
+from each to the next, by so many metres in all: then it need not be read from end to end (ours)."""
 
 _LAYER = "streams"
 
@@ -206,6 +212,8 @@ def opening(values: np.ndarray, window: int) -> np.ndarray:
     """
     window = 2 * (window // 2) + 1
     padded = np.pad(values, window, constant_values=np.inf)
+    from scipy.ndimage import maximum_filter1d, minimum_filter1d
+
     lowest = minimum_filter1d(padded, window, mode="nearest")
     lowest[~np.isfinite(lowest)] = -np.inf
     return maximum_filter1d(lowest, window, mode="nearest")[window:-window]
@@ -235,6 +243,8 @@ def find_humps(
     count = elevations.size
     if count < 5 or spacing <= 0:
         return []
+    from scipy.ndimage import median_filter
+
     smooth = median_filter(elevations, 5, mode="nearest")
     above = smooth - opening(smooth, max(round(longest / spacing), 4))
     middle = np.median(above)
@@ -288,6 +298,8 @@ def free_of_humps(
     def bridge() -> None:
         # From the middle of a few points on each side, so that the noise of one point does not tilt it.
         inside = np.flatnonzero(usable)
+        from scipy.ndimage import median_filter
+
         level = median_filter(elevations[inside], 5, mode="nearest")
         gone = ~usable & (place >= first) & (place <= last)
         bed[gone] = np.interp(place[gone], inside, level)
@@ -403,6 +415,8 @@ def low_line(line, terrain: Terrain, snap: float, stream: str = "", start: float
 def shift_finding(line: LowLine, snap: float, cell: float, units: UnitSystem) -> Finding | None:
     """Return a finding where the lowest path lies well beside the drawn line and well below it."""
     # Over a few points, as noise alone makes one place lower than another.
+    from scipy.ndimage import median_filter
+
     gain = median_filter(np.nan_to_num(line.drawn - line.low), 11, mode="nearest")
     beside = (np.abs(line.shift) >= NOTABLE_CELLS * cell * (1 - 1e-9)) & (gain > NOTABLE_GAIN)
     # The path leaves a fill by its side, which says nothing about the stream line.
@@ -461,7 +475,8 @@ def turn_streams(
     Parts of one id that join end to end, whichever way each is drawn, are judged together. They are turned
     only where the 98 % interval of the slope over their whole length is against the drawn direction, with a
     fall of :data:`LEAST_FALL` in all, or where the fall is so clear (:data:`CLEAR_FALL`, :data:`AGREEING`)
-    that a bend in the profile cannot hide it. Else the drawn direction stays.
+    that a bend in the profile cannot hide it. Else the drawn direction stays. A stream that plainly falls as
+    it is drawn (:data:`SPOTS`) is not looked at further.
 
     Parameters
     ----------
@@ -490,10 +505,13 @@ def turn_streams(
     xy, owner = shapely.get_coordinates(shapes, return_index=True)
     good = ~shapely.is_missing(shapes)
     good[owner[~np.isfinite(xy).all(axis=1)]] = False
+    members = _Groups(ids)
+    drawn = []
     for name in dict.fromkeys(ids[good].tolist()):
         if names is not None and name not in names:
             continue
-        rows = np.flatnonzero(good & (ids == name))
+        rows = members.of(name)
+        rows = rows[good[rows]]
         parts, row = shapely.get_parts(shapes[rows], return_index=True)
         parts = shapely.remove_repeated_points(shapely.force_2d(parts))
         has_length = shapely.length(parts) > 0.0
@@ -502,7 +520,18 @@ def turn_streams(
             continue
         wholes = shapely.get_parts(shapely.line_merge(shapely.multilinestrings(parts)))
         member, along = _members(parts, wholes)
-        for number, whole in enumerate(wholes):
+        # +1 where all parts of a whole run as it does, -1 where none does, else 0
+        ways = [along[member == number] for number in range(len(wholes))]
+        way = np.array([w[0] if w.size and (w == w[0]).all() else 0.0 for w in ways])
+        drawn.append((name, parts, row, wholes, member, along, way))
+    plain = _plainly_fall([w for one in drawn for w in one[3]], terrain, reach)
+    begin = 0
+    for name, parts, row, wholes, member, along, way in drawn:
+        as_drawn = (way != 0.0) & (plain[begin : begin + len(wholes)] == way)
+        begin += len(wholes)
+        turned_here = False
+        for number in np.flatnonzero(~as_drawn).tolist():
+            whole = wholes[number]
             mine = np.flatnonzero(member == number)
             verdict = _fall(whole, terrain, reach, str(name))
             if not mine.size or verdict is None:
@@ -517,19 +546,69 @@ def turn_streams(
                     Finding("stream-direction-uncertain", message, _LAYER, str(name)).at(middle.x, middle.y)
                 )
             elif against.size:
-                turned = True
+                turned_here = True
                 for part in against:
                     parts[part] = shapely.reverse(parts[part])
                 whose = "" if against.size == mine.size else f"{against.size} of {mine.size} parts of "
                 message = f"{whose}stream {name} ran upstream: the ground falls {lost} the other way"
                 findings.append(Finding("stream-turned", message, _LAYER, str(name)).at(middle.x, middle.y))
-        if turned:
+        if turned_here:
+            turned = True
             for one in np.unique(row):
                 own = parts[row == one]
                 shapes[one] = own[0] if own.size == 1 else shapely.multilinestrings(own)
     if not turned:
         return streams, findings
+    import geopandas
+
     return streams.set_geometry(geopandas.GeoSeries(shapes, index=streams.index, crs=streams.crs)), findings
+
+
+class _Groups:
+    """Rows by their id."""
+
+    def __init__(self, ids: np.ndarray) -> None:
+        self._rows: dict[object, list[int]] = {}
+        for row, name in enumerate(ids.tolist()):
+            self._rows.setdefault(name, []).append(row)
+
+    def of(self, name: object) -> np.ndarray:
+        return np.array(self._rows[name])
+
+
+def _plainly_fall(wholes: list, terrain: Terrain, snap: float) -> np.ndarray:
+    """Return +1 for lines whose ground plainly falls along them, -1 against them, 0 where that is not plain.
+
+    At each of :data:`SPOTS` spots the lowest ground across the line counts, within the snap distance.
+    """
+    plain = np.zeros(len(wholes))
+    if not wholes:
+        return plain
+    cell = min(terrain.cell_size)
+    lines = np.array(wholes, dtype=object)
+    share = (np.arange(SPOTS) + 0.5) / SPOTS
+    spots = shapely.line_interpolate_point(lines[:, None], share[None, :], normalized=True)
+    ahead = shapely.line_interpolate_point(lines[:, None], share[None, :] + 1e-3, normalized=True)
+    at = shapely.get_coordinates(spots).reshape(len(wholes), SPOTS, 2)
+    course = shapely.get_coordinates(ahead).reshape(at.shape) - at
+    size = np.hypot(course[..., 0], course[..., 1])
+    # ground metres in a map unit; near enough the same in every direction to look this far aside
+    unit = terrain.distances.step_lengths(at[..., 0], at[..., 1], np.full(size.shape, 1e-6), 0.0) / 1e-6
+    sides = round(snap / cell)
+    offset = np.arange(-sides, sides + 1) * cell
+    with np.errstate(invalid="ignore", divide="ignore"):
+        across = np.stack([-course[..., 1], course[..., 0]], axis=-1) / (size * unit)[..., None]
+        points = at[:, :, None, :] + across[:, :, None, :] * offset[:, None]
+        ground = terrain.elevations(points[..., 0].ravel(), points[..., 1].ravel())
+        low = ground.reshape(*size.shape, offset.size).min(axis=2)
+        length = shapely.length(lines) * unit.min(axis=1)
+        steps = np.diff(low, axis=1)
+        long = length >= LONG * cell
+        for way in (1.0, -1.0):
+            plain[long & (way * steps < 0.0).all(axis=1) & (way * (low[:, 0] - low[:, -1]) >= PLAIN_FALL)] = (
+                way
+            )
+    return plain
 
 
 def _members(parts: np.ndarray, wholes: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

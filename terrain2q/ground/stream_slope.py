@@ -24,7 +24,6 @@ from dataclasses import dataclass, replace
 from functools import cache
 
 import numpy as np
-from scipy.stats import t as student
 
 CONFIDENCE = 0.90
 
@@ -127,6 +126,8 @@ def robust_slope(distance, elevation, confidence: float = CONFIDENCE) -> SlopeEs
 
 @cache
 def _critical(confidence: float) -> float:
+    from scipy.stats import t as student  # slow to load, and most runs do not come here
+
     return float(student.ppf(0.5 + 0.5 * confidence, WAVES))
 
 

@@ -5,18 +5,18 @@ from __future__ import annotations
 from collections import defaultdict
 from collections.abc import Collection
 from functools import cached_property
+from typing import TYPE_CHECKING
 
-import geopandas
 import numpy as np
 import pyproj
 import shapely
-from scipy.sparse import coo_array
-from scipy.sparse.csgraph import connected_components
-from scipy.spatial import cKDTree
 
 from terrain2q.errors import Finding
 from terrain2q.ground.distances import GroundDistances
 from terrain2q.units import SI, UnitSystem
+
+if TYPE_CHECKING:
+    import geopandas
 
 JOIN_TOLERANCE = 1e-3
 """Metres within which two ends, or an end and a line, are taken to meet."""
@@ -243,6 +243,9 @@ class StreamNetwork:
     def _bridges(self, source, target, place) -> list[tuple[int, int, float]]:
         """Return straight ways over the gaps between parts of one stream that lie apart."""
         count = len(place)
+        from scipy.sparse import coo_array
+        from scipy.sparse.csgraph import connected_components
+
         graph = coo_array((np.ones(len(source)), (source, target)), shape=(count, count))
         group = connected_components(graph, directed=False)[1] if count else np.empty(0, dtype=int)
         members = defaultdict(list)
@@ -399,6 +402,10 @@ def _nodes(xy: np.ndarray, names: np.ndarray, tolerance: float) -> tuple[np.ndar
     count = len(xy)
     if not count:
         return np.empty(0, dtype=int), np.empty((0, 2))
+    from scipy.sparse import coo_array
+    from scipy.sparse.csgraph import connected_components
+    from scipy.spatial import cKDTree
+
     pairs = cKDTree(xy).query_pairs(tolerance, output_type="ndarray")
     pairs = pairs[names[pairs[:, 0]] == names[pairs[:, 1]]]
     graph = coo_array((np.ones(len(pairs)), (pairs[:, 0], pairs[:, 1])), shape=(count, count))

@@ -24,7 +24,7 @@ COLUMNS = (
 )  # fmt: skip
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _conveyance(area, perimeter, factor):
     if perimeter > 0.0:
         radius = area / perimeter
@@ -32,45 +32,15 @@ def _conveyance(area, perimeter, factor):
     return 0.0
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _over(top, bottom):
     return top / bottom if bottom > 0.0 else 0.0
 
 
-@njit(cache=True)
-def _wet(stage, ground, owner, out):
-    """Fill `out` (area, perimeter, width by subarea) with what is wet, before a ridge is passed."""
-    low, rise, rate, width, length, threshold = ground
-    out[:, :] = 0.0
-    for i in range(low.size):
-        if stage > threshold[i]:
-            depth = stage - low[i]
-            part = min(depth * rate[i], 1.0)
-            s = owner[i]
-            out[AREA, s] += part * width[i] * (depth - 0.5 * part * rise[i])
-            out[PERIMETER, s] += part * length[i]
-            out[WIDTH, s] += part * width[i]
-
-
-@njit(cache=True)
-def _wet_after(stage, ground, owner, before, out):
-    """Fill `out` with `before` and what gets wet at the stage itself: level ground, and behind a ridge."""
-    low, rise, rate, width, length, threshold = ground
-    out[:, :] = before
-    for i in range(low.size):
-        if stage == threshold[i]:
-            depth = stage - low[i]
-            part = 1.0 if rise[i] == 0.0 else min(depth * rate[i], 1.0)
-            s = owner[i]
-            out[AREA, s] += part * width[i] * (depth - 0.5 * part * rise[i])
-            out[PERIMETER, s] += part * length[i]
-            out[WIDTH, s] += part * width[i]
-
-
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _wet_between(first, last, stage, ground, owner, out):
     """Fill `out` with what is wet between two points under one level, wherever it lies below it."""
-    low, rise, rate, width, length, _ = ground
+    low, rise, rate, width, length, _, _ = ground
     out[:, :] = 0.0
     for i in range(first, last):
         depth = stage - low[i]
@@ -82,7 +52,7 @@ def _wet_between(first, last, stage, ground, owner, out):
             out[WIDTH, s] += part * width[i]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _convey(wet, factor):
     """Fill the row of conveyances and return their sum."""
     total = 0.0
@@ -92,31 +62,45 @@ def _convey(wet, factor):
     return total
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _ground(x, z, sources):
-    """Return what is asked of every segment of a profile: see `Ground`."""
+    """Return what is asked of every segment of a profile, see `Ground`, and its elevations in order.
+
+    The ranks are places among the breaks: of the higher end of each segment, and of the stage above which
+    water gets to it.
+    """
     m = z.size - 1
+    order = np.argsort(z)
+    breaks, rank = np.empty(z.size), np.empty(z.size, dtype=np.int64)
+    kept = 0
+    for i in order:
+        if kept == 0 or z[i] > breaks[kept - 1]:
+            breaks[kept] = z[i]
+            kept += 1
+        rank[i] = kept - 1
     low, rise, rate = np.empty(m), np.empty(m), np.empty(m)
-    width, length, threshold = np.empty(m), np.empty(m), np.full(m, np.inf)
+    width, length = np.empty(m), np.empty(m)
+    high_rank, rank_reached = np.empty(m, dtype=np.int64), np.full(m, kept)
     for i in range(m):
         low[i] = min(z[i], z[i + 1])
         rise[i] = abs(z[i + 1] - z[i])
         rate[i] = 1e300 if rise[i] < 1e-300 else 1.0 / rise[i]
         width[i] = x[i + 1] - x[i]
         length[i] = np.hypot(width[i], rise[i])
+        high_rank[i] = max(rank[i], rank[i + 1])
     for source in sources:
-        high = z[source]
+        high = rank[source]
         for i in range(source, m):
-            high = max(high, z[i])
-            threshold[i] = min(threshold[i], high)
-        high = z[source]
+            high = max(high, rank[i])
+            rank_reached[i] = min(rank_reached[i], high)
+        high = rank[source]
         for i in range(source - 1, -1, -1):
-            high = max(high, z[i + 1])
-            threshold[i] = min(threshold[i], high)
-    return low, rise, rate, width, length, threshold
+            high = max(high, rank[i + 1])
+            rank_reached[i] = min(rank_reached[i], high)
+    return breaks[:kept].copy(), (low, rise, rate, width, length, high_rank, rank_reached)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _spread(wet):
     """Return alpha / A², infinite where there is no water."""
     total = 0.0
@@ -132,22 +116,91 @@ def _spread(wet):
     return spread
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
+def _add_wet(i, stage, ground, s, out):
+    """Add a segment that water has reached to its subarea."""
+    low, rise, rate, width, length, _, _ = ground
+    depth = stage - low[i]
+    part = 1.0 if rise[i] == 0.0 else min(depth * rate[i], 1.0)
+    out[AREA, s] += part * width[i] * (depth - 0.5 * part * rise[i])
+    out[PERIMETER, s] += part * length[i]
+    out[WIDTH, s] += part * width[i]
+
+
+@njit(cache=True, error_model="numpy")
 def _laws(breaks, ground, owner, factor):
-    """Return hydraulics just above and below each break, rates to the next, and where K surely rises."""
-    b, count = breaks.size, factor.size
+    """Return hydraulics just above and below each break, rates to the next, and where K surely rises.
+
+    The water rises from break to break: what is wholly wet only grows deeper, and no more than the segments
+    that are wet in part are looked at. Everything that is summed is positive, so no digit is lost.
+    """
+    low, rise, _, width, length, high_rank, rank_reached = ground
+    b, count, m = breaks.size, factor.size, low.size
     above, below = np.zeros((b, 4, count)), np.zeros((b, 4, count))
     total_above, total_below = np.empty(b), np.empty(b)
+    # the segments that water reaches at each break, one after another
+    first, following = np.full(b, -1), np.full(m, -1)
+    for i in range(m - 1, -1, -1):
+        k = rank_reached[i]
+        if k < b:
+            following[i], first[k] = first[k], i
+    whole, in_part, parts = np.zeros((3, count)), np.empty(m, dtype=np.int64), 0
+    gained = np.zeros(count, dtype=np.bool_)
     for k in range(b):
-        _wet(breaks[k], ground, owner, below[k])
-        _wet_after(breaks[k], ground, owner, below[k], above[k])
-        total_below[k] = _convey(below[k], factor)
-        total_above[k] = _convey(above[k], factor)
+        stage = breaks[k]
+        if k > 0:
+            span = stage - breaks[k - 1]
+            for s in range(count):
+                whole[AREA, s] += span * whole[WIDTH, s]
+        here, then = below[k], above[k]
+        for s in range(count):
+            here[AREA, s], here[PERIMETER, s] = whole[AREA, s], whole[PERIMETER, s]
+            here[WIDTH, s] = whole[WIDTH, s]
+            gained[s] = False
+        p = 0
+        while p < parts:
+            i = in_part[p]
+            s = owner[i]
+            _add_wet(i, stage, ground, s, here)
+            if high_rank[i] <= k:
+                whole[AREA, s] += width[i] * (stage - low[i] - 0.5 * rise[i])
+                whole[PERIMETER, s] += length[i]
+                whole[WIDTH, s] += width[i]
+                parts -= 1
+                in_part[p] = in_part[parts]
+            else:
+                p += 1
+        total_below[k] = _convey(here, factor)
+        for s in range(count):
+            then[AREA, s], then[PERIMETER, s] = here[AREA, s], here[PERIMETER, s]
+            then[WIDTH, s], then[CONVEYANCE, s] = here[WIDTH, s], here[CONVEYANCE, s]
+        i = first[k]
+        while i >= 0:
+            s = owner[i]
+            gained[s] = True
+            _add_wet(i, stage, ground, s, then)
+            if high_rank[i] <= k:
+                whole[AREA, s] += width[i] * (stage - low[i] - 0.5 * rise[i])
+                whole[PERIMETER, s] += length[i]
+                whole[WIDTH, s] += width[i]
+            else:
+                in_part[parts] = i
+                parts += 1
+            i = following[i]
+        total = 0.0
+        for s in range(count):
+            if gained[s]:
+                then[CONVEYANCE, s] = _conveyance(then[AREA, s], then[PERIMETER, s], factor[s])
+            total += then[CONVEYANCE, s]
+        total_above[k] = total
     width_rate, perimeter_rate = np.zeros((b, count)), np.zeros((b, count))
     rising = np.ones(b, dtype=np.bool_)
+    least, most = np.zeros(b), np.full(b, np.inf)
     for k in range(b - 1):
         span = breaks[k + 1] - breaks[k]
         for s in range(count):
+            if not below[k + 1, PERIMETER, s] > 0.0:
+                continue
             width_rate[k, s] = max((below[k + 1, WIDTH, s] - above[k, WIDTH, s]) / span, 0.0)
             perimeter_rate[k, s] = max((below[k + 1, PERIMETER, s] - above[k, PERIMETER, s]) / span, 0.0)
             sign = (
@@ -156,10 +209,21 @@ def _laws(breaks, ground, owner, factor):
             )
             if not sign >= 0.0:
                 rising[k] = False
-    return above, below, total_above, total_below, width_rate, perimeter_rate, rising
+        if not rising[k]:
+            # between the two breaks area and perimeter only grow: rough bounds of the conveyance
+            slow = fast = 0.0
+            for s in range(count):
+                before, after = above[k, PERIMETER, s], below[k + 1, PERIMETER, s]
+                if before > 0.0:
+                    slow += above[k, CONVEYANCE, s] * (before / after)
+                    fast += below[k + 1, CONVEYANCE, s] * (after / before)
+                else:
+                    fast += below[k + 1, CONVEYANCE, s]
+            least[k], most[k] = slow * (1.0 - 1e-9), fast * (1.0 + 1e-9)
+    return above, below, total_above, total_below, width_rate, perimeter_rate, rising, least, most
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _between(above, width_rate, perimeter_rate, offset, factor, out):
     """Fill `out` with the hydraulics at an offset above a break; return the conveyance."""
     total = 0.0
@@ -172,7 +236,7 @@ def _between(above, width_rate, perimeter_rate, offset, factor, out):
     return total
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _growth(wet, perimeter_rate, s):
     """Return the derivative of the logarithm of a subarea's conveyance with stage; 0 where it is dry."""
     if wet[AREA, s] <= 0.0:
@@ -180,7 +244,7 @@ def _growth(wet, perimeter_rate, s):
     return 5 / 3 * (wet[WIDTH, s] / wet[AREA, s]) - _over(2 / 3 * perimeter_rate[s], wet[PERIMETER, s])
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _solve(above, width_rate, perimeter_rate, low, high, target, falling, factor, wet):
     x = 0.5 * (low + high)
     for _ in range(200):
@@ -204,7 +268,7 @@ def _solve(above, width_rate, perimeter_rate, low, high, target, falling, factor
     return x
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _bounds(low, high, perimeter_rate, factor):
     """Return bounds of the conveyance between two offsets, and whether it surely only rises or falls."""
     least = most = lower = upper = 0.0
@@ -226,10 +290,10 @@ def _bounds(low, high, perimeter_rate, factor):
     return least, most, lower > 0.0 or upper < 0.0
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _stages(target, breaks, laws, factor, near):
     """Return every stage that carries a conveyance, from the lowest, and whether it is a bank's top."""
-    above, _, total_above, total_below, width_rate, perimeter_rate, rising = laws
+    above, _, total_above, total_below, width_rate, perimeter_rate, rising, rough_least, rough_most = laws
     b, count = breaks.size, factor.size
     found, banks = [0.0 for _ in range(0)], [False for _ in range(0)]
     wet, other = np.empty((4, count)), np.empty((4, count))
@@ -245,17 +309,25 @@ def _stages(target, breaks, laws, factor, near):
                 found.append(breaks[k])
                 banks.append(False)
         last = k == b - 1
+        if rising[k]:
+            if not (short_above and (last or not total_below[k + 1] < target)):
+                continue
+        elif not (
+            min(rough_least[k], total_above[k], total_below[k + 1])
+            <= target
+            <= max(rough_most[k], total_above[k], total_below[k + 1])
+        ):
+            continue
         pieces = [(0.0, 0.0, False) for _ in range(0)]
         if rising[k]:
-            if short_above and (last or not total_below[k + 1] < target):
-                span = 0.0
-                if last:
-                    span = max(1.0, breaks[-1] - breaks[0])
-                    while _between(above[k], width_rate[k], perimeter_rate[k], span, factor, wet) < target:
-                        span *= 2.0
-                else:
-                    span = breaks[k + 1] - breaks[k]
-                pieces.append((0.0, span, False))
+            span = 0.0
+            if last:
+                span = max(1.0, breaks[-1] - breaks[0])
+                while _between(above[k], width_rate[k], perimeter_rate[k], span, factor, wet) < target:
+                    span *= 2.0
+            else:
+                span = breaks[k + 1] - breaks[k]
+            pieces.append((0.0, span, False))
         else:
             # halved until each piece surely only rises or only falls
             waiting = [(0.0, breaks[k + 1] - breaks[k], total_above[k], total_below[k + 1], 0)]
@@ -296,7 +368,7 @@ def _stages(target, breaks, laws, factor, near):
     return np.array(found[:kept]), np.array(banks[:kept])
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _energy_slope(above, width_rate, perimeter_rate, offset, head, factor, wet):
     total = _between(above, width_rate, perimeter_rate, offset, factor, wet)
     if not total > 0.0:
@@ -315,7 +387,7 @@ def _energy_slope(above, width_rate, perimeter_rate, offset, head, factor, wet):
     return 1.0 + head * slope
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _flat_energy(above, width_rate, perimeter_rate, low, high, at_low, at_high, head, factor, wet):
     kept = 0
     x = low
@@ -340,34 +412,46 @@ def _flat_energy(above, width_rate, perimeter_rate, low, high, at_low, at_high, 
     return x
 
 
-@njit(cache=True)
-def _energy_at_breaks(breaks, laws, factor):
-    """Return alpha / A² just above and below each break, and its lower bound up to the next."""
-    above, below, _, _, width_rate, perimeter_rate, _ = laws
-    b, count = breaks.size, factor.size
-    just_above, just_below, least = np.empty(b), np.empty(b), np.zeros(b)
-    end = np.empty((4, count))
+@njit(cache=True, error_model="numpy")
+def _areas_at_breaks(breaks, laws):
+    """Return the area of all subareas just above and just below each break."""
+    above, below = laws[0], laws[1]
+    b, count = breaks.size, above.shape[2]
+    just_above, just_below = np.zeros(b), np.zeros(b)
     for k in range(b):
-        just_above[k], just_below[k] = _spread(above[k]), _spread(below[k])
-        if k == b - 1:
-            continue
-        _between(above[k], width_rate[k], perimeter_rate[k], breaks[k + 1] - breaks[k], factor, end)
-        fast = whole = by_share = 0.0
         for s in range(count):
-            fast += _conveyance(end[AREA, s], above[k, PERIMETER, s], factor[s])
-            whole += end[AREA, s]
-        for s in range(count):
-            slow = _conveyance(above[k, AREA, s], end[PERIMETER, s], factor[s])
-            by_share += _over(_over(slow, fast) ** 3, end[AREA, s] * end[AREA, s])
-        least[k] = max(by_share, 1.0 / (whole * whole) if whole > 0.0 else np.inf)
-    return just_above, just_below, least
+            just_above[k] += above[k, AREA, s]
+            just_below[k] += below[k, AREA, s]
+    return just_above, just_below
 
 
-@njit(cache=True)
-def _critical(discharge, gravity, breaks, laws, energy, factor):
+@njit(cache=True, error_model="numpy")
+def _least_spread(k, laws):
+    """Return a lower bound of alpha / A² between a break and the next, where all that is wet only grows."""
+    above, below = laws[0], laws[1]
+    count = above.shape[2]
+    fast = by_share = 0.0
+    for s in range(count):
+        before, after = above[k, PERIMETER, s], below[k + 1, PERIMETER, s]
+        fast += below[k + 1, CONVEYANCE, s] * (after / before if before > 0.0 else 1.0)
+    for s in range(count):
+        before, after = above[k, PERIMETER, s], below[k + 1, PERIMETER, s]
+        if before > 0.0 and below[k + 1, AREA, s] > 0.0:
+            slow = above[k, CONVEYANCE, s] * (before / after)
+            by_share += (slow / fast) ** 3 / (below[k + 1, AREA, s] * below[k + 1, AREA, s])
+    return by_share * (1.0 - 1e-9)
+
+
+@njit(cache=True, error_model="numpy")
+def _over_square(area):
+    return 1.0 / (area * area) if area > 0.0 else np.inf
+
+
+@njit(cache=True, error_model="numpy")
+def _critical(discharge, gravity, breaks, laws, areas, factor):
     """Return the stage of least specific energy."""
-    above, _, _, _, width_rate, perimeter_rate, _ = laws
-    just_above, just_below, least = energy
+    above, below, width_rate, perimeter_rate = laws[0], laws[1], laws[4], laws[5]
+    area_above, area_below = areas
     b, count = breaks.size, factor.size
     wet = np.empty((4, count))
     head = discharge * discharge / (2.0 * gravity)
@@ -376,15 +460,25 @@ def _critical(discharge, gravity, breaks, laws, energy, factor):
         width += above[b - 1, WIDTH, s]
     parts = max(1, count) ** 2
     reach = max(1.0, np.cbrt(2.0 * head * parts / (width * width))) * 2.0
-    best, place = np.inf, breaks[0]
+    # alpha is one at least: where the energy is least by that, it is near its least
+    likely, lowest = 0, np.inf
     for k in range(b):
-        tried = breaks[k] - breaks[0] + head * just_above[k]
-        if tried < best:
-            best, place = tried, breaks[k]
+        bound = breaks[k] - breaks[0] + head * _over_square(area_above[k])
+        if bound < lowest:
+            likely, lowest = k, bound
+    best, place = breaks[likely] - breaks[0] + head * _spread(above[likely]), breaks[likely]
+    for k in range(b):
+        height = breaks[k] - breaks[0]
+        if height + head * _over_square(area_above[k]) < best:
+            tried = height + head * _spread(above[k])
+            if tried < best:
+                best, place = tried, breaks[k]
     for k in range(1, b):
-        tried = breaks[k] - breaks[0] + head * just_below[k]
-        if tried < best:
-            best, place = tried, breaks[k]
+        height = breaks[k] - breaks[0]
+        if height + head * _over_square(area_below[k]) < best:
+            tried = height + head * _spread(below[k])
+            if tried < best:
+                best, place = tried, breaks[k]
     _between(above[b - 1], width_rate[b - 1], perimeter_rate[b - 1], reach, factor, wet)
     area_top = 0.0
     for s in range(count):
@@ -395,14 +489,20 @@ def _critical(discharge, gravity, breaks, laws, energy, factor):
     limit = best
     for k in range(b):
         height = breaks[k] - breaks[0]
-        bound = height + head * (least[k] if k < b - 1 else 1.0 / (area_top * area_top))
-        if not bound < limit:
+        if not height < limit:
+            break
+        # the area is no more than at the next break
+        area = area_below[k + 1] if k < b - 1 else area_top
+        if not height + head * _over_square(area) < limit:
+            continue
+        if k < b - 1 and not height + head * _least_spread(k, laws) < limit:
             continue
         span = reach if k == b - 1 else breaks[k + 1] - breaks[k]
         before, at_before = 0.0, 0.0
+        here, here_width, here_perimeter = above[k], width_rate[k], perimeter_rate[k]
         for j in range(_SAMPLES):
             offset = j / (_SAMPLES - 1) * span
-            value = _energy_slope(above[k], width_rate[k], perimeter_rate[k], offset, head, factor, wet)
+            value = _energy_slope(here, here_width, here_perimeter, offset, head, factor, wet)
             if j > 0 and at_before < 0.0 and value > 0.0:
                 inside = _flat_energy(
                     above[k], width_rate[k], perimeter_rate[k], before, offset, at_before, value, head,
@@ -416,7 +516,7 @@ def _critical(discharge, gravity, breaks, laws, energy, factor):
     return place
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _columns(area, perimeter, width, conveyance, root, gravity, out):
     """Fill one row of hydraulic columns (`COLUMNS`) from its parts."""
     whole = around = top = total = 0.0
@@ -445,33 +545,41 @@ def _columns(area, perimeter, width, conveyance, root, gravity, out):
     out[6], out[7], out[8], out[9] = froude, total, alpha, beta
 
 
-@njit(cache=True)
-def _bank_tops(ground, owner, factor):
-    """Return the tops of banks, and whether the hollow behind adds more than a hundredth."""
-    low, threshold = ground[0], ground[5]
-    behind = threshold[threshold > low]
-    crossed = np.unique(behind)
-    tops, telling = np.empty(crossed.size), np.empty(crossed.size, dtype=np.bool_)
-    before, after = np.empty((4, factor.size)), np.empty((4, factor.size))
+@njit(cache=True, error_model="numpy")
+def _bank_tops(breaks, ground, laws):
+    """Return the tops of banks, their places among the breaks, and whether the hollow behind tells."""
+    low, rank_reached = ground[0], ground[6]
+    above, below, total_above, total_below = laws[0], laws[1], laws[2], laws[3]
+    b, count = breaks.size, above.shape[2]
+    behind = np.zeros(b, dtype=np.bool_)
+    for i in range(low.size):
+        k = rank_reached[i]
+        if k < b and breaks[k] > low[i]:
+            behind[k] = True
+    tops, places, telling = np.empty(b), np.empty(b, dtype=np.int64), np.empty(b, dtype=np.bool_)
     kept = 0
-    for stage in crossed:
-        _wet(stage, ground, owner, before)
-        _wet_after(stage, ground, owner, before, after)
-        if after[AREA].sum() > before[AREA].sum():
-            at_first, then = _convey(before, factor), _convey(after, factor)
-            tops[kept], telling[kept] = stage, then - at_first > 0.01 * then
+    for k in range(b):
+        if not behind[k]:
+            continue
+        before = after = 0.0
+        for s in range(count):
+            before += below[k, AREA, s]
+            after += above[k, AREA, s]
+        if after > before:
+            tops[kept], places[kept] = breaks[k], k
+            telling[kept] = total_above[k] - total_below[k] > 0.01 * total_above[k]
             kept += 1
-    return tops[:kept], telling[:kept]
+    return tops[:kept].copy(), places[:kept].copy(), telling[:kept].copy()
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _edge(x, z, dry, wet, stage):
     if wet < 0 or wet >= z.size or z[dry] <= stage or z[wet] >= stage:
         return x[dry]
     return x[dry] + (z[dry] - stage) / (z[dry] - z[wet]) * (x[wet] - x[dry])
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _pools(z, sources, stage):
     """Return first and last point of every stretch of water: the first source's, then from left to right."""
     out = np.empty((sources.size, 2), dtype=np.int64)
@@ -497,7 +605,7 @@ def _pools(z, sources, stage):
     return out[:kept]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def rating_and_events(x, z, owner, sources, factor, channel, root, gravity, steps, top, discharges):
     """Return the rating and the answers at discharges of one section.
 
@@ -540,11 +648,12 @@ def rating_and_events(x, z, owner, sources, factor, channel, root, gravity, step
     parts : ndarray, shape (paths, 4, subareas)
         Area, perimeter, width and conveyance of every path.
     """
-    ground = _ground(x, z, sources)
+    breaks, ground = _ground(x, z, sources)
     count = factor.size
-    breaks = np.unique(z)
     near = _ROUNDING * max(1.0, breaks[-1] - breaks[0])
-    tops, telling = _bank_tops(ground, owner, factor)
+    laws = _laws(breaks, ground, owner, factor)
+    above, below, width_rate, perimeter_rate = laws[0], laws[1], laws[4], laws[5]
+    tops, top_places, telling = _bank_tops(breaks, ground, laws)
 
     lowest = z[sources[0]]
     level = np.empty(steps + tops.size)
@@ -556,27 +665,33 @@ def rating_and_events(x, z, owner, sources, factor, channel, root, gravity, step
             level[size] = tops[i]
             size += 1
     level = np.unique(level[:size])
-    rows = np.empty(2 * level.size)
+    rows, at_break = np.empty(2 * level.size), np.empty(2 * level.size, dtype=np.int64)
     passed = np.zeros(2 * level.size, dtype=np.bool_)
     size = k = 0
+    last = -1  # the last break below the stage
     for stage in level:
         while k < tops.size and tops[k] < stage:
             k += 1
-        rows[size] = stage
+        while last + 1 < breaks.size and breaks[last + 1] < stage:
+            last += 1
+        rows[size], at_break[size] = stage, last
         size += 1
         if k < tops.size and tops[k] == stage:
-            rows[size], passed[size] = stage, True
+            rows[size], at_break[size], passed[size] = stage, top_places[k], True
             size += 1
     level = rows[:size].copy()
     rating = np.empty((10, size))
-    row, wet, before = np.empty(10), np.empty((4, count)), np.empty((4, count))
+    row, wet = np.empty(10), np.zeros((4, count))
     for i in range(size):
-        _wet(level[i], ground, owner, before)
+        k = at_break[i]
         if passed[i]:
-            _wet_after(level[i], ground, owner, before, wet)
+            wet[:, :] = above[k]
+        elif k + 1 < breaks.size and level[i] == breaks[k + 1]:
+            wet[:, :] = below[k + 1]
+        elif k < 0:
+            wet[:, :] = 0.0
         else:
-            wet[:, :] = before
-        _convey(wet, factor)
+            _between(above[k], width_rate[k], perimeter_rate[k], level[i] - breaks[k], factor, wet)
         _columns(wet[AREA], wet[PERIMETER], wet[WIDTH], wet[CONVEYANCE], root, gravity, row)
         rating[:, i] = row
 
@@ -587,15 +702,14 @@ def rating_and_events(x, z, owner, sources, factor, channel, root, gravity, step
     places = np.empty((k * sources.size, 6))
     parts = np.empty((k * sources.size, 4, count))
     paths = 0
-    laws = _laws(breaks, ground, owner, factor)
-    energy = _energy_at_breaks(breaks, laws, factor)
+    areas = _areas_at_breaks(breaks, laws)
     divided = channel.any()
     for i in range(k):
         target = discharges[i] / root
         found, banks = _stages(target, breaks, laws, factor, near)
         stages.append(found)
         at_bank.append(banks)
-        critical[i] = _critical(discharges[i], gravity, breaks, laws, energy, factor)
+        critical[i] = _critical(discharges[i], gravity, breaks, laws, areas, factor)
         if banks[-1]:
             continue
         stage = found[-1]

@@ -24,7 +24,7 @@ _COLUMNS = len(compiled.COLUMNS)
 _LONGEST_CODE = 2**61
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _room(values, need):
     """Return `values` with room for `need` columns, what is there kept."""
     if need <= values.shape[1]:
@@ -34,7 +34,7 @@ def _room(values, need):
     return more
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _station_at(x, y, station, distance):
     """Return the station of a map distance along a line, as `Profile.station_at` does."""
     if np.isnan(distance):
@@ -50,7 +50,7 @@ def _station_at(x, y, station, distance):
     return station[-1]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _onto(value, one, other, smallest):
     if abs(value - one) < smallest:
         return one
@@ -59,7 +59,7 @@ def _onto(value, one, other, smallest):
     return value
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _split(
     starts, ends, classes, class_n, divided, bank_left, bank_right, channel_n, smallest, base, out, codes
 ):
@@ -106,7 +106,7 @@ def _split(
     return kept
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _cut(x, z, subareas):
     """Return the profile with a point at every limit of the subareas, and each segment's subarea."""
     count = subareas.shape[0]
@@ -138,7 +138,7 @@ def _cut(x, z, subareas):
     return out_x[:size], out_z[:size], owner[: size - 1]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _sources(z, owner, mine):
     """Return the low points of the ground in some subareas, one of each stretch of equally low ground."""
     n = z.size
@@ -157,7 +157,7 @@ def _sources(z, owner, mine):
     return found[:kept]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _has_sliver(subareas, x):
     count = subareas.shape[0]
     whole = subareas[count - 1, 1] - subareas[0, 0]
@@ -171,7 +171,7 @@ def _has_sliver(subareas, x):
     return False
 
 
-@njit(cache=True, nogil=True)
+@njit(cache=True, nogil=True, error_model="numpy")
 def answer_plain(
     wanted, bounds, x, y, station, z, crossing, along, piece_bounds, piece_start, piece_end, piece_class,
     class_n, source, banks, channel_n, slope, discharge, steps, top, manning, gravity, smallest,

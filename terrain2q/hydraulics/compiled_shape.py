@@ -30,7 +30,7 @@ _SHELF_WIDTH, _SHELF_DROP, _EDGE, _TELLING = (
 # --- tops of bank ------------------------------------------------------------------------------------
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _last_not_above(values, value):
     """Return the last place whose value is not above `value`, within all but the last place."""
     low, high = 0, values.size
@@ -43,7 +43,7 @@ def _last_not_above(values, value):
     return min(max(low - 1, 0), values.size - 2)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _first_not_below(values, value):
     low, high = 0, values.size
     while low < high:
@@ -55,7 +55,7 @@ def _first_not_below(values, value):
     return low
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _height_at(x, z, at):
     if at <= x[0]:
         return z[_last_not_above(x, x[0])] if at == x[0] else z[0]
@@ -65,14 +65,25 @@ def _height_at(x, z, at):
     return (z[k + 1] - z[k]) / (x[k + 1] - x[k]) * (at - x[k]) + z[k]
 
 
-@njit(cache=True)
-def _area(at, long_x, long_z, slope, area):
-    k = _last_not_above(long_x, at)
+@njit(cache=True, error_model="numpy")
+def _area(at, long_x, long_z, slope, area, per_point):
+    """Return the area below the ground up to a station; `per_point` is points per length, a first guess."""
+    last = long_x.size - 2
+    k = min(max(int((at - long_x[0]) * per_point), 0), last)
+    steps = 0
+    while k < last and long_x[k + 1] <= at and steps < 8:
+        k += 1
+        steps += 1
+    while k > 0 and long_x[k] > at and steps < 8:
+        k -= 1
+        steps += 1
+    if steps == 8:
+        k = _last_not_above(long_x, at)
     run = at - long_x[k]
     return area[k] + run * (long_z[k] + slope[k] * run / 2)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _reach(d, h, highest, k, share):
     limit = (1 + share) * h[k] * (1 - _SAME)
     beyond = _first_not_below(highest, limit)
@@ -83,16 +94,19 @@ def _reach(d, h, highest, k, share):
     return d[beyond - 1] + part * (d[beyond] - d[beyond - 1]) - d[k]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _side(x, z, start, step, least_height):
-    """Return what one side offers as tops, a row each: point, height, low bench, high bench, is an end."""
+    """Return what one side offers as tops, a row each.
+
+    Its columns: point, height, low bench, high bench, is an end, distance, logarithm of the height.
+    """
     n = start + 1 if step < 0 else x.size - start
     d, h, highest = np.empty(n), np.empty(n), np.empty(n)
     for i in range(n):
         p = start + step * i
         d[i], h[i] = abs(x[p] - x[start]), z[p] - z[start]
         highest[i] = h[i] if i == 0 else max(highest[i - 1], h[i])
-    found = np.empty((n, 6))
+    found = np.empty((n, 7))
     kept = 0
     for i in range(n - 1):
         rise = h[i + 1] - h[i]
@@ -107,7 +121,7 @@ def _side(x, z, start, step, least_height):
         found[kept, 2] = _reach(d, h, highest, k, _LOW_BENCH)
         found[kept, 3] = _reach(d, h, highest, k, _HIGH_BENCH)
         found[kept, 4] = 1.0 if k == n - 1 else 0.0
-        found[kept, 5] = d[k]
+        found[kept, 5], found[kept, 6] = d[k], np.log(h[k])
         kept += 1
     if kept > _MOST_TOPS:
         widest = np.argsort(-found[:kept, 2] / found[:kept, 5], kind="mergesort")[:_MOST_TOPS]
@@ -118,53 +132,109 @@ def _side(x, z, start, step, least_height):
     return found[:kept]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
+def _reachable(left, right, width):
+    """Return what a pair reaches if its banks are as steep as can be and nothing climbs behind them."""
+    share = 1.0 / width
+    low = min(left[2] * share, _WIDEST_BENCH) + min(right[2] * share, _WIDEST_BENCH)
+    high = min(left[3] * share, _WIDEST_BENCH) + min(right[3] * share, _WIDEST_BENCH)
+    uneven = left[6] - right[6]
+    return (
+        left[6] + right[6] - np.log(width) - uneven * uneven + _STEEP * 2 * _STEEPEST
+        + _LOW * low + _HIGH * high - _END * (left[4] + right[4])
+    )  # fmt: skip
+
+
+@njit(cache=True, error_model="numpy")
+def _most(tops, nearest):
+    """Return each top's share of the most a pair reaches; `nearest` is the other side's least distance.
+
+    The width of a pair is no less than the two distances, and its logarithm no less than that of two plus
+    half of each of theirs.
+    """
+    most = np.full(tops.shape[0], np.inf)
+    for i in range(tops.shape[0]):
+        if tops[i, 5] > 0.0:
+            width = tops[i, 5] + nearest
+            most[i] = tops[i, 6] - 0.5 * np.log(tops[i, 5]) - _END * tops[i, 4]
+            most[i] += _LOW * min(tops[i, 2] / width, _WIDEST_BENCH)
+            most[i] += _HIGH * min(tops[i, 3] / width, _WIDEST_BENCH)
+    return most
+
+
+@njit(cache=True, error_model="numpy")
+def _best_alone(tops):
+    best, place = -np.inf, 0
+    for i in range(tops.shape[0]):
+        if not tops[i, 5] > 0.0:
+            continue
+        reached = _reachable(tops[i], tops[i], 2 * tops[i, 5])
+        if reached > best:
+            best, place = reached, i
+    return place
+
+
+@njit(cache=True, error_model="numpy")
+def _score(base, long_x, long_z, slope, area, per_point, left, right, xl, xr, reachable, best):
+    """Return the score of a pair of tops, of which the most it can be is known; -inf where it is none.
+
+    Where one bank alone shows that it is not the best, -inf too.
+    """
+    width, score = xr - xl, reachable
+    inner, outer = _INNER * width, _OUTER * width
+    for side in range(2):
+        at, h, is_end = (xl, left[1], left[4]) if side == 0 else (xr, right[1], right[4])
+        inward = inner if side == 0 else -inner
+        outward = -outer if side == 0 else outer
+        here = _area(at, long_x, long_z, slope, area, per_point)
+        inside = (_area(at + inward, long_x, long_z, slope, area, per_point) - here) / inward
+        outside = (_area(at + outward, long_x, long_z, slope, area, per_point) - here) / outward
+        gain, climb = 1 - (inside - base) / h, (outside - base) / h - 1
+        if is_end == 0.0 and not (gain > _SAME and climb / _OUTER < _KNEE * gain / _INNER + _SAME):
+            return -np.inf
+        score -= _STEEP * (_STEEPEST - min(gain, _STEEPEST)) + _CLIMB * max(climb, 0.0)
+        if score < best - 1e-6:
+            return -np.inf
+    return score
+
+
+@njit(cache=True, error_model="numpy")
 def _best_tops(x, z, long_x, long_z, slope, area, least_height, pit_left, pit_right):
     """Return the score and the points of the best pair of tops about a low point; no point where none is."""
     left, right = _side(x, z, pit_left, -1, least_height), _side(x, z, pit_right, 1, least_height)
     base = z[pit_left]
-    score = np.full((left.shape[0], right.shape[0]), -np.inf)
+    n, m = left.shape[0], right.shape[0]
+    score = np.full((n, m), -np.inf)
     best = -np.inf
-    for i in range(left.shape[0]):
-        xl, hl = x[int(left[i, 0])], left[i, 1]
-        for j in range(right.shape[0]):
-            xr, hr = x[int(right[j, 0])], right[j, 1]
-            width = xr - xl
-            if not width > 0:
+    per_point = (long_x.size - 1) / (long_x[-1] - long_x[0])
+    if n == 0 or m == 0:
+        return best, -1, -1
+    # two tops that do well each with its own image may well be the best: what is surely worse is passed over
+    i, j = _best_alone(left), _best_alone(right)
+    xl, xr = x[int(left[i, 0])], x[int(right[j, 0])]
+    if xr > xl:
+        reachable = _reachable(left[i], right[j], xr - xl)
+        best = _score(
+            base, long_x, long_z, slope, area, per_point, left[i], right[j], xl, xr, reachable, -np.inf
+        )
+    from_left, from_right = _most(left, right[0, 5]), _most(right, left[0, 5])
+    log_left, log_right = left[:, 6].copy(), right[:, 6].copy()
+    sure = _STEEP * 2 * _STEEPEST - np.log(2.0) + 1e-6
+    for i in range(n):
+        xl = x[int(left[i, 0])]
+        for j in range(m):
+            uneven = log_left[i] - log_right[j]
+            if from_left[i] + from_right[j] - uneven * uneven + sure < best:
                 continue
-            benches = _LOW * (
-                min(left[i, 2] / width, _WIDEST_BENCH) + min(right[j, 2] / width, _WIDEST_BENCH)
+            xr = x[int(right[j, 0])]
+            if not xr > xl:
+                continue
+            reachable = _reachable(left[i], right[j], xr - xl)
+            if reachable < best - 1e-6:
+                continue
+            score[i, j] = _score(
+                base, long_x, long_z, slope, area, per_point, left[i], right[j], xl, xr, reachable, best
             )
-            benches += _HIGH * (
-                min(left[i, 3] / width, _WIDEST_BENCH) + min(right[j, 3] / width, _WIDEST_BENCH)
-            )
-            first = np.log(hl * hr / width) - np.log(hl / hr) ** 2
-            last = benches - _END * (left[i, 4] + right[j, 4])
-            # not even the steepest banks make it the best
-            if first + _STEEP * 2 * _STEEPEST + last < best - 1e-6:
-                continue
-            inner, outer = _INNER * width, _OUTER * width
-            to_left = _area(xl, long_x, long_z, slope, area)
-            to_right = _area(xr, long_x, long_z, slope, area)
-            inside = (_area(xl + inner, long_x, long_z, slope, area) - to_left) / inner
-            gain_left = 1 - (inside - base) / hl
-            inside = (to_right - _area(xr - inner, long_x, long_z, slope, area)) / inner
-            gain_right = 1 - (inside - base) / hr
-            outside = (to_left - _area(xl - outer, long_x, long_z, slope, area)) / outer
-            climb_left = (outside - base) / hl - 1
-            outside = (_area(xr + outer, long_x, long_z, slope, area) - to_right) / outer
-            climb_right = (outside - base) / hr - 1
-            if left[i, 4] == 0.0 and not (
-                gain_left > _SAME and climb_left / _OUTER < _KNEE * gain_left / _INNER + _SAME
-            ):
-                continue
-            if right[j, 4] == 0.0 and not (
-                gain_right > _SAME and climb_right / _OUTER < _KNEE * gain_right / _INNER + _SAME
-            ):
-                continue
-            steep = min(gain_left, _STEEPEST) + min(gain_right, _STEEPEST)
-            climb = max(climb_left, 0.0) + max(climb_right, 0.0)
-            score[i, j] = first + _STEEP * steep - _CLIMB * climb + last
             best = max(best, score[i, j])
     at_left = at_right = -1
     if best > -np.inf:
@@ -176,7 +246,7 @@ def _best_tops(x, z, long_x, long_z, slope, area, least_height, pit_left, pit_ri
     return best, -1, -1
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _lowest(z):
     low = z.min()
     pits = np.empty((z.size, 2), dtype=np.int64)
@@ -191,7 +261,7 @@ def _lowest(z):
     return pits[:kept]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _beside(x, z, origin):
     """Return the low points that can be seen from `origin`, the deepest first."""
     here = _height_at(x, z, origin)
@@ -248,7 +318,7 @@ def _beside(x, z, origin):
     return pits[:kept][order]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def tops_of_bank(x, z, origin):
     """Return the points of the two tops of bank as stations and heights, and whether there are any.
 
@@ -328,7 +398,7 @@ def tops_of_bank(x, z, origin):
 # --- water ------------------------------------------------------------------------------------------
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def level_water(x, z, low_limit, high_limit):
     """Return whether a section's lowest ground is water, its first and last point, its height and tolerance.
 
@@ -394,7 +464,7 @@ def level_water(x, z, low_limit, high_limit):
 # --- shelves ----------------------------------------------------------------------------------------
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _shelf(x, depth):
     """Whether ground that begins at the first point is a shelf beside deeper water."""
     whole = x[-1] - x[0]
@@ -417,7 +487,7 @@ def _shelf(x, depth):
     return False
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def may_have_shelf(x, z, stage, start, end):
     """Whether the ground between two stations may hold a shelf; where not, it surely does not."""
     n = x.size

@@ -15,7 +15,7 @@ from terrain2q.hydraulics import review
 _WIDTH, _DROP, _EDGE, _TELLING = review.SHELF_WIDTH, review.SHELF_DROP, review._EDGE, review._TELLING
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _height(x, z, at):
     if at <= x[0]:
         return z[0]
@@ -25,7 +25,7 @@ def _height(x, z, at):
     return (z[k + 1] - z[k]) / (x[k + 1] - x[k]) * (at - x[k]) + z[k]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _shelf(x, depth, first, last, step):
     """Return how many points from the first the most shelf-like ground ends; 0 where there is none."""
     whole = abs(x[last] - x[first])
@@ -54,7 +54,7 @@ def _shelf(x, depth, first, last, step):
     return found
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _part(x, depth, first, last):
     area = perimeter = 0.0
     for i in range(first, last):
@@ -65,7 +65,7 @@ def _part(x, depth, first, last):
     return area, perimeter
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def most_gained(x, z, stage, start, end):
     """Return by what share at most the conveyance between two stations rises by dividing at a shelf's edge.
 

@@ -23,8 +23,8 @@ from terrain2q.hydraulics.wetted import check_profile
 
 Floats = NDArray[np.float64]
 
-MANY = 300
-"""Sections from which on compiled code is worth its loading."""
+MANY, VERY_MANY = 300, 4000
+"""Sections from which on compiled code is worth its loading, and its compiling of most of a minute."""
 
 
 @cache
@@ -35,6 +35,25 @@ def can_compile() -> bool:
     except ImportError:
         return False
     return True
+
+
+@cache
+def is_compiled() -> bool:
+    """Whether compiled code lies ready on this machine, from an earlier run of this version."""
+    if not can_compile():
+        return False
+    from terrain2q.hydraulics.compiled_batch import answer_plain
+
+    try:
+        # an index made from other source code counts as empty
+        return bool(answer_plain._cache._cache_file._load_index())
+    except (AttributeError, OSError, ValueError, EOFError):
+        return False
+
+
+def worth_compiling(sections: int) -> bool:
+    """Whether so many sections are answered sooner by compiled code, its loading or compiling counted in."""
+    return can_compile() and (sections >= VERY_MANY or (sections >= MANY and is_compiled()))
 
 
 def compiled_banks(stations: Floats, elevations: Floats, origin: float | None = None) -> Banks:

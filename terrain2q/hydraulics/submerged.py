@@ -11,8 +11,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import ArrayLike
-from scipy.ndimage import median_filter
-from scipy.optimize import brentq
 
 from terrain2q.errors import InputError, NoAnswerError
 from terrain2q.hydraulics.conveyance import manning_conveyance
@@ -90,6 +88,8 @@ def find_water(
     # The second difference of independent noise of one variance has six times that variance.
     noise = 1.4826 * float(np.median(np.abs(bend - np.median(bend)))) / np.sqrt(6.0)
     within = float(np.clip(2.5 * noise, LEVEL, MOST_LEVEL))
+    from scipy.ndimage import median_filter
+
     smooth = median_filter(z, 3, mode="nearest")
     first_inside, last_inside = np.flatnonzero(inside)[[0, -1]]
     low = first_inside + int(np.argmin(smooth[first_inside : last_inside + 1]))
@@ -231,4 +231,6 @@ def depth_for_flow(
     least = 1e-6 * width
     if discharge <= carried(least):
         return least
+    from scipy.optimize import brentq
+
     return float(brentq(lambda depth: carried(depth) - discharge, least, deepest, xtol=1e-9))

@@ -14,7 +14,6 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 import shapely
 import shapely.ops
-from scipy.stats import norm
 
 from terrain2q.errors import DOUBTFUL, FAILED, NOTE, Finding, NoAnswerError, Terrain2qError
 from terrain2q.flows import Flow, event_names, flow_for
@@ -1063,6 +1062,8 @@ def _probability(discharge: float, flows: Sequence[Flow]) -> float:
     q, p = (np.array(v) for v in zip(*known, strict=True))
     if not q[0] <= discharge <= q[-1] or (np.diff(q) <= 0).any() or (np.diff(p) >= 0).any():
         return float("nan")
+    from scipy.stats import norm  # slow to load
+
     return float(norm.sf(np.interp(np.log(discharge), np.log(q), norm.isf(p))))
 
 

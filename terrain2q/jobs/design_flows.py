@@ -11,7 +11,7 @@ from terrain2q.errors import CATALOGUE, DOUBTFUL, FAILED, NOTE, Finding, Terrain
 from terrain2q.flows import AREA_RATIOS, Flow, event_names, flow_for
 from terrain2q.ground.streams import length_text
 from terrain2q.ground.terrain import Profile
-from terrain2q.hydraulics.many import MANY, EventSolution, Solution, can_compile, solve
+from terrain2q.hydraulics.many import EventSolution, Solution, solve, worth_compiling
 from terrain2q.hydraulics.section import CHANNEL, FlowState, Section, hydraulic_columns
 from terrain2q.jobs.remarks import Remark, section_remarks, state_remarks
 from terrain2q.jobs.sections import BuiltSection
@@ -124,7 +124,7 @@ def answer_sections(
     """
     events = event_names(flows)
     if compiled is None:
-        compiled = len(built) >= MANY and can_compile()
+        compiled = worth_compiling(len(built))
     answers = []
     for done, one in enumerate(built, 1):
         answers.append(answer_section(one, flows, events, stages, top, units, compiled=compiled))

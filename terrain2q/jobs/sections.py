@@ -13,7 +13,7 @@ from terrain2q.ground.cut_lines import CutLine
 from terrain2q.ground.streams import length_text
 from terrain2q.ground.terrain import Profile, Terrain
 from terrain2q.hydraulics.banks import find_banks
-from terrain2q.hydraulics.many import MANY, can_compile, compiled_banks, compiled_water
+from terrain2q.hydraulics.many import compiled_banks, compiled_water, worth_compiling
 from terrain2q.hydraulics.section import DepthRoughness, Section, Subarea
 from terrain2q.hydraulics.submerged import find_water
 from terrain2q.jobs.slopes import Slopes
@@ -123,7 +123,7 @@ def build_sections(
         One for each line, in order. A line that gives no section has findings that say why.
     """
     if compiled is None:
-        compiled = len(lines) >= MANY and can_compile()
+        compiled = worth_compiling(len(lines))
     usable = [i for i, line in enumerate(lines) if line.usable]
     sampled = inputs.terrain.sample(
         [np.column_stack([lines[i].x, lines[i].y]) for i in usable], spacing=inputs.spacing

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
+from typing import TYPE_CHECKING
 
 import geopandas
 import numpy as np
@@ -13,10 +14,12 @@ from terrain2q.columns import COLUMNS, LAYERS
 from terrain2q.errors import Finding
 from terrain2q.ground.terrain import Profile
 from terrain2q.jobs.design_flows import SUBAREA_COLUMNS, SectionAnswer
-from terrain2q.jobs.extent import EventExtent
 from terrain2q.output.arrow_tables import to_crs
 from terrain2q.output.geopackage import linestring_zm
 from terrain2q.units import UnitSystem
+
+if TYPE_CHECKING:
+    from terrain2q.jobs.extent import EventExtent
 
 
 class _Projected:

@@ -8,10 +8,9 @@ from pathlib import Path
 from typing import Any
 
 from terrain2q.output.folder import read_folder
-from terrain2q.output.report import write_report
 from terrain2q.output.run_record import note_pages
-from terrain2q.output.sheets import FLAGGED, NONE, write_sheets
-from terrain2q.output.tables import write_tables
+
+FLAGGED, NONE = "flagged", "none"
 
 
 def write_pages(folder: str | os.PathLike, asked: Mapping[str, Any] | None = None) -> list[Path]:
@@ -41,6 +40,11 @@ def write_pages(folder: str | os.PathLike, asked: Mapping[str, Any] | None = Non
         asked.get("sheets", FLAGGED), asked.get("tables", NONE)
     } - {NONE}:  # fmt: skip
         return []  # nothing to read the layers for
+    # the page and the sheets load much, which runs without them need not
+    from terrain2q.output.report import write_report
+    from terrain2q.output.sheets import write_sheets
+    from terrain2q.output.tables import write_tables
+
     source = read_folder(folder)
     if asked is None:
         sheets = source.settings.get("output", {}).get("sheets", NONE)

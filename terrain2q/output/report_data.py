@@ -17,7 +17,7 @@ import pandas as pd
 import shapely
 
 from terrain2q.columns import CAUTION, COLUMNS
-from terrain2q.errors import CATALOGUE, FAILED, SEVERITIES
+from terrain2q.errors import CATALOGUE, FAILED, SEVERITIES, worst_first
 from terrain2q.output.folder import OutputFolder
 from terrain2q.output.looks import EARTHS, EXAGGERATIONS, GROUND_EDGE, INK, WALL, WATERS, water_tones
 from terrain2q.output.report_map import make_map
@@ -100,24 +100,6 @@ def report_data(source: OutputFolder) -> dict[str, Any]:
             "looks": {"earths": EARTHS, "exaggerations": EXAGGERATIONS, "waters": WATERS},
         },
     }
-
-
-def worst_first(findings: Iterable[Any]) -> list[Any]:
-    """Return findings in order of severity, within each at first one for each feature.
-
-    Parameters
-    ----------
-    findings : iterable
-        Of anything with ``severity`` and ``feature_id``.
-    """
-    ordered = sorted(findings, key=lambda f: SEVERITIES.index(f.severity))
-    seen: set[tuple[str, str]] = set()
-    first, later = [], []
-    for finding in ordered:
-        feature = (finding.severity, finding.feature_id)
-        (later if feature in seen else first).append(finding)
-        seen.add(feature)
-    return sorted(first + later, key=lambda f: SEVERITIES.index(f.severity))
 
 
 # --------------------------------------------------------------------------------------------------

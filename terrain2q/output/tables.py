@@ -29,10 +29,6 @@ TABLE_CHOICES = (NONE, CSV, PARQUET, BOTH)
 COLUMNS_NAME = "results_columns.csv"
 
 
-def check_tables(asked: str) -> None:
-    """Find nothing missing: what writes Parquet comes with the package."""
-
-
 def write_tables(source: OutputFolder | str | os.PathLike, asked: str) -> list[Path]:
     """Write every layer of an output folder as a table beside it.
 
