@@ -29,6 +29,7 @@ import numpy as np
 import shapely
 
 from terrain2q.errors import Finding
+from terrain2q.ground.plain_fall import plain_ways
 from terrain2q.ground.stream_slope import robust_slope
 from terrain2q.ground.streams import StreamNetwork, feature_ids, length_text
 from terrain2q.ground.terrain import POINTS_AT_ONCE, Terrain
@@ -60,10 +61,6 @@ LEAST_FALL = 0.3
 
 CLEAR_FALL, AGREEING = 2.0, 0.9
 """Metres of fall, and share of pairs of points that agree, that tell it even where the profile is bent."""
-
-SPOTS, PLAIN_FALL, LONG = 6, 3.0 * CLEAR_FALL, 200
-"""A stream so many cells long runs as drawn beyond doubt where the ground at so many spots along it falls
-from each to the next, by so many metres in all: then it need not be read from end to end (ours)."""
 
 _LAYER = "streams"
 
@@ -475,8 +472,8 @@ def turn_streams(
     Parts of one id that join end to end, whichever way each is drawn, are judged together. They are turned
     only where the 98 % interval of the slope over their whole length is against the drawn direction, with a
     fall of :data:`LEAST_FALL` in all, or where the fall is so clear (:data:`CLEAR_FALL`, :data:`AGREEING`)
-    that a bend in the profile cannot hide it. Else the drawn direction stays. A stream that plainly falls as
-    it is drawn (:data:`SPOTS`) is not looked at further.
+    that a bend in the profile cannot hide it. Else the drawn direction stays. Parts that plainly fall as they
+    are drawn (:mod:`terrain2q.ground.plain_fall`) are not looked at further.
 
     Parameters
     ----------
@@ -502,38 +499,21 @@ def turn_streams(
     reach = snap_distance(terrain, snap)
     findings: list[Finding] = []
     turned = False
-    xy, owner = shapely.get_coordinates(shapes, return_index=True)
-    good = ~shapely.is_missing(shapes)
-    good[owner[~np.isfinite(xy).all(axis=1)]] = False
-    members = _Groups(ids)
-    drawn = []
-    for name in dict.fromkeys(ids[good].tolist()):
-        if names is not None and name not in names:
-            continue
-        rows = members.of(name)
-        rows = rows[good[rows]]
-        parts, row = shapely.get_parts(shapes[rows], return_index=True)
-        parts = shapely.remove_repeated_points(shapely.force_2d(parts))
-        has_length = shapely.length(parts) > 0.0
-        parts, row = parts[has_length], rows[row[has_length]]
-        if not len(parts):
-            continue
-        wholes = shapely.get_parts(shapely.line_merge(shapely.multilinestrings(parts)))
-        member, along = _members(parts, wholes)
-        # +1 where all parts of a whole run as it does, -1 where none does, else 0
-        ways = [along[member == number] for number in range(len(wholes))]
-        way = np.array([w[0] if w.size and (w == w[0]).all() else 0.0 for w in ways])
-        drawn.append((name, parts, row, wholes, member, along, way))
-    plain = _plainly_fall([w for one in drawn for w in one[3]], terrain, reach)
-    begin = 0
-    for name, parts, row, wholes, member, along, way in drawn:
-        as_drawn = (way != 0.0) & (plain[begin : begin + len(wholes)] == way)
-        begin += len(wholes)
+    found = _drawn(shapes, ids, names)
+    ways = plain_ways(
+        np.array([whole for one in found for whole in one.wholes], dtype=object), terrain, reach
+    )
+    first = 0
+    for stream in found:
+        name, parts, along = stream.name, stream.parts, stream.along
+        way = ways[first : first + len(stream.wholes)]
+        first += len(stream.wholes)
         turned_here = False
-        for number in np.flatnonzero(~as_drawn).tolist():
-            whole = wholes[number]
-            mine = np.flatnonzero(member == number)
-            verdict = _fall(whole, terrain, reach, str(name))
+        for number, whole in enumerate(stream.wholes):
+            mine = np.flatnonzero(stream.member == number)
+            if way[number] and (along[mine] == way[number]).all():
+                continue
+            verdict = _fall(whole, terrain, reach, name)
             if not mine.size or verdict is None:
                 continue
             fall, sure, length = verdict
@@ -543,7 +523,7 @@ def turn_streams(
             if not sure:
                 message = f"the ground along stream {name} falls {lost}, which does not tell its direction"
                 findings.append(
-                    Finding("stream-direction-uncertain", message, _LAYER, str(name)).at(middle.x, middle.y)
+                    Finding("stream-direction-uncertain", message, _LAYER, name).at(middle.x, middle.y)
                 )
             elif against.size:
                 turned_here = True
@@ -551,11 +531,11 @@ def turn_streams(
                     parts[part] = shapely.reverse(parts[part])
                 whose = "" if against.size == mine.size else f"{against.size} of {mine.size} parts of "
                 message = f"{whose}stream {name} ran upstream: the ground falls {lost} the other way"
-                findings.append(Finding("stream-turned", message, _LAYER, str(name)).at(middle.x, middle.y))
+                findings.append(Finding("stream-turned", message, _LAYER, name).at(middle.x, middle.y))
         if turned_here:
             turned = True
-            for one in np.unique(row):
-                own = parts[row == one]
+            for one in np.unique(stream.row):
+                own = parts[stream.row == one]
                 shapes[one] = own[0] if own.size == 1 else shapely.multilinestrings(own)
     if not turned:
         return streams, findings
@@ -564,51 +544,55 @@ def turn_streams(
     return streams.set_geometry(geopandas.GeoSeries(shapes, index=streams.index, crs=streams.crs)), findings
 
 
-class _Groups:
-    """Rows by their id."""
+@dataclass(frozen=True, eq=False)
+class _Drawn:
+    """A stream as it is drawn.
 
-    def __init__(self, ids: np.ndarray) -> None:
-        self._rows: dict[object, list[int]] = {}
-        for row, name in enumerate(ids.tolist()):
-            self._rows.setdefault(name, []).append(row)
-
-    def of(self, name: object) -> np.ndarray:
-        return np.array(self._rows[name])
-
-
-def _plainly_fall(wholes: list, terrain: Terrain, snap: float) -> np.ndarray:
-    """Return +1 for lines whose ground plainly falls along them, -1 against them, 0 where that is not plain.
-
-    At each of :data:`SPOTS` spots the lowest ground across the line counts, within the snap distance.
+    Attributes
+    ----------
+    name : str
+    parts : ndarray of LineString, shape (p,)
+    row : ndarray of int, shape (p,)
+        The row of the layer that each part comes from.
+    wholes : ndarray of LineString, shape (w,)
+        Parts that join end to end, whichever way each is drawn, as one.
+    member : ndarray of int, shape (p,)
+        The whole that each part belongs to, -1 where there is none.
+    along : ndarray, shape (p,)
+        +1 where a part runs as its whole does, else -1.
     """
-    plain = np.zeros(len(wholes))
-    if not wholes:
-        return plain
-    cell = min(terrain.cell_size)
-    lines = np.array(wholes, dtype=object)
-    share = (np.arange(SPOTS) + 0.5) / SPOTS
-    spots = shapely.line_interpolate_point(lines[:, None], share[None, :], normalized=True)
-    ahead = shapely.line_interpolate_point(lines[:, None], share[None, :] + 1e-3, normalized=True)
-    at = shapely.get_coordinates(spots).reshape(len(wholes), SPOTS, 2)
-    course = shapely.get_coordinates(ahead).reshape(at.shape) - at
-    size = np.hypot(course[..., 0], course[..., 1])
-    # ground metres in a map unit; near enough the same in every direction to look this far aside
-    unit = terrain.distances.step_lengths(at[..., 0], at[..., 1], np.full(size.shape, 1e-6), 0.0) / 1e-6
-    sides = round(snap / cell)
-    offset = np.arange(-sides, sides + 1) * cell
-    with np.errstate(invalid="ignore", divide="ignore"):
-        across = np.stack([-course[..., 1], course[..., 0]], axis=-1) / (size * unit)[..., None]
-        points = at[:, :, None, :] + across[:, :, None, :] * offset[:, None]
-        ground = terrain.elevations(points[..., 0].ravel(), points[..., 1].ravel())
-        low = ground.reshape(*size.shape, offset.size).min(axis=2)
-        length = shapely.length(lines) * unit.min(axis=1)
-        steps = np.diff(low, axis=1)
-        long = length >= LONG * cell
-        for way in (1.0, -1.0):
-            plain[long & (way * steps < 0.0).all(axis=1) & (way * (low[:, 0] - low[:, -1]) >= PLAIN_FALL)] = (
-                way
-            )
-    return plain
+
+    name: str
+    parts: np.ndarray
+    row: np.ndarray
+    wholes: np.ndarray
+    member: np.ndarray
+    along: np.ndarray
+
+
+def _drawn(shapes: np.ndarray, ids: np.ndarray, names: set[str] | None) -> list[_Drawn]:
+    """Return the streams, or those of some names, that have some length."""
+    xy, owner = shapely.get_coordinates(shapes, return_index=True)
+    good = ~shapely.is_missing(shapes)
+    good[owner[~np.isfinite(xy).all(axis=1)]] = False
+    if names is not None:
+        good &= [name in names for name in ids.tolist()]
+    parts, row = shapely.get_parts(shapes[good], return_index=True)
+    parts, row = shapely.remove_repeated_points(shapely.force_2d(parts)), np.flatnonzero(good)[row]
+    has_length = shapely.length(parts) > 0.0
+    parts, row = parts[has_length], row[has_length]
+    members: dict[object, list[int]] = {}
+    for number, name in enumerate(ids[row].tolist()):
+        members.setdefault(name, []).append(number)
+    found = []
+    for name, numbers in members.items():
+        own = wholes = parts[numbers]
+        member, along = np.zeros(1, dtype=int), np.ones(1)
+        if len(own) > 1:
+            wholes = shapely.get_parts(shapely.line_merge(shapely.multilinestrings(own)))
+            member, along = _members(own, wholes)
+        found.append(_Drawn(str(name), own, row[numbers], wholes, member, along))
+    return found
 
 
 def _members(parts: np.ndarray, wholes: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

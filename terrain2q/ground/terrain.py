@@ -293,6 +293,22 @@ class Terrain:
         values = self._mosaic.elevations(column, row, bilinear=self.sampling == "bilinear")
         return values if self.metres_per_unit == 1.0 else values * self.metres_per_unit
 
+    def blocks_at(self, x, y) -> np.ndarray:
+        """Return the number of the block of the raster that must be read for points.
+
+        Parameters
+        ----------
+        x, y : array_like
+            In the terrain's CRS.
+
+        Returns
+        -------
+        ndarray of int
+            -1 outside.
+        """
+        column, row = self._to_grid(np.asarray(x, dtype=float), np.asarray(y, dtype=float))
+        return self._mosaic.blocks_at(column, row)
+
     def read_window(self, bounds, dtype=np.float64) -> tuple[np.ndarray, Affine]:
         """Return the cells about some bounds.
 

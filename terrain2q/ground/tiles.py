@@ -477,6 +477,19 @@ class Mosaic:
         down = (row - self._row[tile]) // self._chunk_rows[tile]
         return self._first_chunk[tile] + down * self._across[tile] + across
 
+    def blocks_at(self, column: np.ndarray, row: np.ndarray) -> np.ndarray:
+        """Return the number of what is read at once for places in the grid, -1 where no tile is.
+
+        Where tiles overlap, that of the first counts.
+        """
+        column, row = np.floor(column), np.floor(row)
+        inside = (column >= 0) & (column < self.width) & (row >= 0) & (row < self.height)
+        numbers = np.full(column.shape, -1, dtype=np.int64)
+        column, row = column[inside].astype(np.int64), row[inside].astype(np.int64)
+        tile = self._cover[0][self._piece(column, row)]
+        numbers[inside] = np.where(tile >= 0, self._chunk_number(tile, column, row), -1)
+        return numbers
+
     def elevations(self, column: np.ndarray, row: np.ndarray, *, bilinear: bool = True) -> np.ndarray:
         """Return elevations at places in the grid.
 
