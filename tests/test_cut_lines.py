@@ -430,3 +430,41 @@ def test_attributes_leave_out_what_was_added():
 
 def test_layer_without_lines():
     assert orient_cut_lines(layer([]), layer([NORTHWARD]), UTM) == ([], [])
+
+
+def test_groups_of_pairs_are_those_of_a_library():
+    from scipy.sparse import coo_array
+    from scipy.sparse.csgraph import connected_components
+
+    from terrain2q.ground.streams import _components
+
+    random = np.random.default_rng(7)
+    for count, pairs in ((1, 0), (30, 12), (200, 150), (500, 499)):
+        some = random.integers(0, count, (pairs, 2))
+        if pairs == 499:
+            some = np.stack([np.arange(499), np.arange(1, 500)], 1)[random.permutation(499)]  # one long chain
+        graph = coo_array((np.ones(pairs), (some[:, 0], some[:, 1])), shape=(count, count))
+        assert _components(count, some).tolist() == connected_components(graph, directed=False)[1].tolist()
+
+
+def test_many_lines_are_placed_as_each_alone():
+    """Lines that cross once, never or more often, drawn either way: none minds the others."""
+    random = np.random.default_rng(11)
+    course = np.stack([np.linspace(0.0, 2000.0, 400), random.normal(0.0, 3.0, 400).cumsum()], axis=1)
+    streams = layer([LineString(course)])
+    lines, own = [], []
+    for number in range(40):
+        middle = course[random.integers(20, 380)] + [0.0, (0.0, 30.0, 400.0)[number % 3]]
+        way = random.normal(0.0, 1.0, 2) * 120.0
+        lines.append(LineString([middle - way, middle + way]))
+        own.append((None, "1", "other")[number % 4 % 3])
+    whole, _ = orient_cut_lines(layer(lines, stream=own), streams, UTM)
+    assert {line.turned for line in whole} == {True, False}
+    for number, line in enumerate(whole):
+        (alone,), _ = orient_cut_lines(layer([lines[number]], stream=own[number : number + 1]), streams, UTM)
+        assert (line.stream, line.turned) == (alone.stream, alone.turned)
+        np.testing.assert_array_equal(line.stream_distance, alone.stream_distance)
+        np.testing.assert_array_equal(line.crossing, alone.crossing)
+        np.testing.assert_array_equal(line.x, alone.x)
+        ends = (np.array(lines[number].coords) + ORIGIN)[:: -1 if line.turned else 1]
+        np.testing.assert_array_equal(np.stack([line.x, line.y], axis=1), ends)

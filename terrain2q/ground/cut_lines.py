@@ -128,57 +128,69 @@ def orient_cut_lines(
     if not attributes:
         attributes = [{} for _ in ids]
 
-    for number in np.flatnonzero(~shapely.is_simple(lines)) if len(lines) else ():
-        findings.append(
-            _at_middle(
-                Finding(
-                    "line-crosses-itself", f"cut line {names[number]} crosses itself", _LAYER, names[number]
-                ),
-                lines[number],
-            )
-        )
+    itself = np.flatnonzero(~shapely.is_simple(lines)) if len(lines) else np.empty(0, dtype=int)
+    for number, place in zip(itself.tolist(), _middles(lines[itself]), strict=True):
+        name = names[number]
+        finding = Finding("line-crosses-itself", f"cut line {name} crosses itself", _LAYER, name)
+        findings.append(finding.at(*place))
     network = None
     if streams is not None:
         network = StreamNetwork(streams, crs, units)
         findings += network.findings
     if network is None or not len(network):
         placed = [_Placed() for _ in rows]
-        for name, line in zip(names, lines, strict=True):
+        for name, place in zip(names, _middles(lines), strict=True):
             message = f"no stream line tells which way cut line {name} runs; it is taken as drawn"
-            findings.append(_at_middle(Finding("direction-unknown", message, _LAYER, name), line))
+            findings.append(Finding("direction-unknown", message, _LAYER, name).at(*place))
         findings += _meetings(lines, names, None)
     else:
-        wanted = [_own_stream(attributes[row], network) for row in rows]
+        wanted = [""] * len(rows)
+        if any(str(name).lower() in _STREAM_FIELDS for name in cut_lines.columns):
+            wanted = [_own_stream(attributes[row], network) for row in rows]
         placed = _place(lines, names, wanted, network, units, findings)
         findings += _meetings(lines, names, [place.stream for place in placed])
 
-    found = dict(zip(rows.tolist(), zip(lines, placed, strict=True), strict=True))
+    xs, ys = _vertices(lines, np.array([place.turned for place in placed], dtype=bool))
+    lengths = shapely.length(lines).tolist() if len(lines) else []
+    number = dict(zip(rows.tolist(), range(len(rows)), strict=True))
     answer = []
     for row, name in enumerate(ids):
-        if row not in found:
+        at = number.get(row)
+        if at is None:
             empty = np.empty(0)
             answer.append(CutLine(name, empty, empty.copy(), usable=False, attributes=attributes[row]))
             continue
-        line, place = found[row]
-        xy = shapely.get_coordinates(line)
-        crossing = place.crossing
-        if place.turned:
-            xy = xy[::-1]
-            crossing = line.length - crossing
+        place = placed[at]
+        crossing = lengths[at] - place.crossing if place.turned else place.crossing
         answer.append(
             CutLine(
-                name,
-                xy[:, 0].copy(),
-                xy[:, 1].copy(),
-                place.stream,
-                float(place.stream_distance),
-                float(crossing),
-                place.turned,
-                True,
+                name, xs[at], ys[at], place.stream, place.stream_distance, crossing, place.turned, True,
                 attributes[row],
             )
-        )
+        )  # fmt: skip
     return answer, findings
+
+
+def _vertices(lines: np.ndarray, turned: np.ndarray) -> tuple[list[np.ndarray], list[np.ndarray]]:
+    """Return x and y of each line, those of turned lines from their last vertex to the first."""
+    xy, owner = shapely.get_coordinates(lines, return_index=True)
+    count = np.bincount(owner, minlength=len(lines))
+    ends = np.cumsum(count)
+    order = np.arange(len(xy))
+    back = turned[owner]
+    # the first and the last place of a line add up to the same as any two that change places
+    order[back] = (2 * ends - count - 1)[owner[back]] - order[back]
+    x, y = xy[order].T
+    return tuple(
+        [v[a:b].copy() for a, b in zip((ends - count).tolist(), ends.tolist(), strict=True)] for v in (x, y)
+    )
+
+
+def _middles(lines: np.ndarray) -> list[list[float]]:
+    """Return x and y half way along each line."""
+    if not len(lines):
+        return []
+    return shapely.get_coordinates(shapely.line_interpolate_point(lines, 0.5, normalized=True)).tolist()
 
 
 def _at_middle(finding: Finding, line) -> Finding:
@@ -195,9 +207,16 @@ def _single_lines(frame, ids: list[str], findings: list[Finding]) -> list:
     lengths = np.zeros(len(shapes))
     sound = ~broken & ~shapely.is_missing(shapes)
     lengths[sound] = shapely.length(shapes[sound])
+    # a plain line needs no more than this
+    plain = sound & (lengths > 0.0) & (shapely.get_type_id(shapes) == 1)
+    tidy = np.full(len(shapes), None, dtype=object)
+    tidy[plain] = shapely.remove_repeated_points(shapely.force_2d(shapes[plain]))
     answer = []
     for row, (shape, name) in enumerate(zip(shapes, ids, strict=True)):
         line = None
+        if plain[row]:
+            answer.append(tidy[row])
+            continue
         if broken[row]:
             findings.append(
                 Finding(
@@ -365,7 +384,9 @@ def _place(lines, names, wanted, network: StreamNetwork, units, findings: list[F
     first = np.searchsorted(found.line, np.arange(len(lines)))
     last = np.searchsorted(found.line, np.arange(len(lines)), side="right")
     chosen = np.full(len(lines), -1)
-    for number, (place, name) in enumerate(zip(placed, names, strict=True)):
+    done = _place_plain(placed, wanted, found, passage, first, last, chosen)
+    for number in np.flatnonzero(~done & (last > first)).tolist():
+        place, name = placed[number], names[number]
         here = np.arange(first[number], last[number])
         streams_here = found.stream[here]
         if wanted[number]:
@@ -417,12 +438,34 @@ def _place(lines, names, wanted, network: StreamNetwork, units, findings: list[F
             )
 
     _place_missing(lines, names, np.flatnonzero(chosen < 0), placed, lengths, network, units, findings)
-    for number, place in enumerate(placed):
-        if place.turned:
-            message = f"cut line {names[number]} was drawn right to left and has been turned"
-            findings.append(_at_middle(Finding("line-turned", message, _LAYER, names[number]), lines[number]))
+    turned = np.flatnonzero([place.turned for place in placed])
+    for number, at in zip(turned.tolist(), _middles(lines[turned]), strict=True):
+        message = f"cut line {names[number]} was drawn right to left and has been turned"
+        findings.append(Finding("line-turned", message, _LAYER, names[number]).at(*at))
     _oblique(lines, names, chosen, found, lengths, network, findings)
     return placed
+
+
+def _place_plain(placed, wanted, found: _Crossings, passage, first, last, chosen) -> np.ndarray:
+    """Place the lines that cross one stream, their own, once and clearly; return which these are.
+
+    Lines that cross no stream are given the stream they name.
+    """
+    done = np.zeros(len(placed), dtype=bool)
+    for number in np.flatnonzero(first == last).tolist():
+        placed[number].stream = wanted[number]
+    number = np.flatnonzero(last - first == 1)
+    at = first[number]
+    named = np.array(wanted, dtype=object)[number]
+    plain = (passage[at] != 0.0) & ((named == "") | (named == found.stream[at]))
+    number, at = number[plain], at[plain]
+    done[number], chosen[number] = True, at
+    columns = (found.stream[at], found.distance[at], found.at[at], passage[at] < 0.0)
+    for line, stream, distance, crossing, turned in zip(
+        number.tolist(), *(column.tolist() for column in columns), strict=True
+    ):
+        placed[line] = _Placed(str(stream), distance, crossing, turned)
+    return done
 
 
 def _general_passage(found: _Crossings, own, line, network: StreamNetwork) -> float:
@@ -449,33 +492,36 @@ def _decided(course: np.ndarray, chord: np.ndarray) -> float:
 
 
 def _place_missing(lines, names, missing, placed, lengths, network: StreamNetwork, units, findings) -> None:
-    for number in missing:
-        place, line, name = placed[number], lines[number], names[number]
-        if place.stream:
-            mine = np.flatnonzero(network.chain_stream[network.piece_chain] == place.stream)
-            piece = mine[np.argmin(shapely.distance(line, network.pieces[mine]))]
-        else:
-            piece = network.tree.nearest(line)
-        chain = network.piece_chain[piece]
-        stream = str(network.chain_stream[chain])
-        way = shapely.get_coordinates(shapely.shortest_line(line, network.pieces[piece]))
-        gap = float(network.ground.inverse(*way[0], *way[1])[0][0])
-        near = np.hypot(*(way[1] - way[0])) <= lengths[number]
+    if not len(missing):
+        return
+    lines, lengths = lines[missing], lengths[missing]
+    pieces = network.tree.nearest(lines)
+    pieces_of: dict[str, np.ndarray] = {}
+    for index, number in enumerate(missing.tolist()):
+        if name := placed[number].stream:
+            if name not in pieces_of:
+                pieces_of[name] = np.flatnonzero(network.chain_stream[network.piece_chain] == name)
+            mine = pieces_of[name]
+            pieces[index] = mine[np.argmin(shapely.distance(lines[index], network.pieces[mine]))]
+    chains = network.piece_chain[pieces]
+    ways = shapely.get_coordinates(shapely.shortest_line(lines, network.pieces[pieces])).reshape(-1, 2, 2)
+    gaps = network.ground.inverse(*ways[:, 0].T, *ways[:, 1].T)[0].tolist()
+    near = np.hypot(*(ways[:, 1] - ways[:, 0]).T) <= lengths
+    along = network.locate(pieces, shapely.points(ways[:, 1]))
+    distances = network.distance_at(chains, along).tolist()
+    reach = 0.25 * lengths
+    up, down = network.stretch(chains, along - reach, along + reach)
+    first, last = (shapely.get_coordinates(shapely.get_point(lines, place)) for place in (0, -1))
+    for index, (number, middle) in enumerate(zip(missing.tolist(), _middles(lines), strict=True)):
+        place, name, stream = placed[number], names[number], str(network.chain_stream[chains[index]])
         what = f"its own stream {stream}, which" if place.stream else f"any stream; the nearest, {stream},"
-        message = f"cut line {name} does not cross {what} is {length_text(gap, units)} away"
-        if near or place.stream:
-            along = network.locate(np.array([piece]), shapely.points(way[1:]))
-            place.stream = stream
-            place.stream_distance = float(network.distance_at(np.array([chain]), along)[0])
-        net = 0.0
-        if near:
-            reach = 0.25 * lengths[number]
-            up, down = network.stretch(np.array([chain]), along - reach, along + reach)
-            xy = shapely.get_coordinates(line)
-            net = _decided((down - up)[0], xy[-1] - xy[0])
+        message = f"cut line {name} does not cross {what} is {length_text(gaps[index], units)} away"
+        if near[index] or place.stream:
+            place.stream, place.stream_distance = stream, distances[index]
+        net = _decided((down - up)[index], (last - first)[index]) if near[index] else 0.0
         place.turned = bool(net < 0.0)
         message += "" if net else "; it is taken as drawn"
-        findings.append(_at_middle(Finding("line-misses-stream", message, _LAYER, name), line))
+        findings.append(Finding("line-misses-stream", message, _LAYER, name).at(*middle))
 
 
 def _oblique(lines, names, chosen, found, lengths, network: StreamNetwork, findings) -> None:

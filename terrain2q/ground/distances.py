@@ -18,7 +18,6 @@ exact to about 1e-9 of the length below 85° of latitude, at two coordinate tran
 from __future__ import annotations
 
 from dataclasses import dataclass
-from itertools import pairwise
 
 import numpy as np
 import pyproj
@@ -27,6 +26,9 @@ from terrain2q.errors import InputError
 
 PANEL_LENGTH = 1000.0
 """Longest panel, in metres of map."""
+
+_SHORT = 50
+"""Panels of lines that are summed together, a panel of each at a time."""
 
 
 def horizontal_crs(crs) -> pyproj.CRS:
@@ -237,9 +239,14 @@ class GroundDistances:
 
         # Summed line by line, so that a line's stations do not depend on its neighbours, to the last bit.
         panel_station = np.zeros(owner.size)
-        bounds = np.append(first_panel[first_vertex], owner.size).tolist()
-        for begin, end in pairwise(bounds):
-            np.cumsum(lengths[begin : end - 1], out=panel_station[begin + 1 : end])
+        begins = first_panel[first_vertex]
+        sizes = np.diff(begins, append=owner.size)
+        short = sizes <= _SHORT
+        for step in range(1, int(sizes[short].max(initial=0))):
+            at = begins[short & (sizes > step)] + step
+            panel_station[at] = panel_station[at - 1] + lengths[at - 1]
+        for begin, size in zip(begins[~short].tolist(), sizes[~short].tolist(), strict=True):
+            np.cumsum(lengths[begin : begin + size - 1], out=panel_station[begin + 1 : begin + size])
         return MeasuredLines(first_panel, panels, panel_station, speeds)
 
     def along(self, x, y) -> np.ndarray:

@@ -243,11 +243,7 @@ class StreamNetwork:
     def _bridges(self, source, target, place) -> list[tuple[int, int, float]]:
         """Return straight ways over the gaps between parts of one stream that lie apart."""
         count = len(place)
-        from scipy.sparse import coo_array
-        from scipy.sparse.csgraph import connected_components
-
-        graph = coo_array((np.ones(len(source)), (source, target)), shape=(count, count))
-        group = connected_components(graph, directed=False)[1] if count else np.empty(0, dtype=int)
+        group = _components(count, np.stack([source, target], axis=1))
         members = defaultdict(list)
         for chain, name in enumerate(self.chain_stream):
             members[name].append(chain)
@@ -369,25 +365,33 @@ class StreamNetwork:
         chains, along = np.atleast_1d(chains), np.atleast_1d(along)
         if not len(chains):
             return np.empty(0)
+        return self.chain_start[chains] + self._measured.stations(*self._segments(chains, along))
+
+    @cached_property
+    def _key(self) -> np.ndarray:
+        return self._map_at + np.repeat(self._base, np.diff(self._offsets))
+
+    def _segments(self, chains: np.ndarray, along: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return the vertex before each place at a map distance along a chain, and how far on to the next."""
         begin, end = self._offsets[chains], self._offsets[chains + 1]
-        key = self._map_at + np.repeat(self._base, np.diff(self._offsets))
-        segment = np.clip(np.searchsorted(key, self._base[chains] + along, side="right") - 1, begin, end - 2)
+        place = np.searchsorted(self._key, self._base[chains] + along, side="right") - 1
+        segment = np.clip(place, begin, end - 2)
         step = self._map_at[segment + 1] - self._map_at[segment]
-        share = np.clip((along - self._map_at[segment]) / step, 0.0, 1.0)
-        return self.chain_start[chains] + self._measured.stations(segment, share)
+        return segment, np.clip((along - self._map_at[segment]) / step, 0.0, 1.0)
 
     def stretch(self, chains: np.ndarray, low: np.ndarray, high: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return the places at two map distances along a chain, upstream and downstream, each shape (n, 2).
 
         Distances beyond a chain's end are taken at its end.
         """
-        lengths = self.lengths[chains]
-        return tuple(
-            shapely.get_coordinates(
-                shapely.line_interpolate_point(self.chains[chains], np.clip(v, 0.0, lengths))
-            )
-            for v in (low, high)
-        )
+        if not len(chains):
+            return np.empty((0, 2)), np.empty((0, 2))
+        places = []
+        for along in (low, high):
+            segment, share = self._segments(chains, along)
+            start, end = self._xy[segment], self._xy[segment + 1]
+            places.append(start + share[:, None] * (end - start))
+        return tuple(places)
 
 
 def feature_ids(frame: geopandas.GeoDataFrame) -> list[str]:
@@ -402,14 +406,28 @@ def _nodes(xy: np.ndarray, names: np.ndarray, tolerance: float) -> tuple[np.ndar
     count = len(xy)
     if not count:
         return np.empty(0, dtype=int), np.empty((0, 2))
-    from scipy.sparse import coo_array
-    from scipy.sparse.csgraph import connected_components
-    from scipy.spatial import cKDTree
-
-    pairs = cKDTree(xy).query_pairs(tolerance, output_type="ndarray")
-    pairs = pairs[names[pairs[:, 0]] == names[pairs[:, 1]]]
-    graph = coo_array((np.ones(len(pairs)), (pairs[:, 0], pairs[:, 1])), shape=(count, count))
-    total, nodes = connected_components(graph, directed=False)
-    place = np.empty((total, 2))
+    points = shapely.points(xy)
+    pairs = shapely.STRtree(points).query(points, predicate="dwithin", distance=tolerance).T
+    pairs = pairs[(pairs[:, 0] < pairs[:, 1]) & (names[pairs[:, 0]] == names[pairs[:, 1]])]
+    nodes = _components(count, pairs)
+    place = np.empty((nodes.max() + 1, 2))
     place[nodes] = xy
     return nodes, place
+
+
+def _components(count: int, pairs: np.ndarray) -> np.ndarray:
+    """Return the number of the group of each of `count` things of which some pairs belong together.
+
+    Groups are numbered as they first appear. (Written out, as loading a library for it takes longer than the
+    work.)
+    """
+    least = np.arange(count)
+    a, b = np.asarray(pairs, dtype=np.int64).reshape(-1, 2).T
+    while (least[a] != least[b]).any():
+        low = np.minimum(least[a], least[b])
+        np.minimum.at(least, least[a], low)
+        np.minimum.at(least, least[b], low)
+        np.minimum.at(least, a, low)
+        np.minimum.at(least, b, low)
+        least = least[least]
+    return np.unique(least, return_inverse=True)[1]
