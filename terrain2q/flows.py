@@ -7,9 +7,12 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from terrain2q.errors import InputError, raise_together
-from terrain2q.study import Study, nearest
+
+if TYPE_CHECKING:
+    from terrain2q.study import Study
 
 NEEDED = ("event", "discharge")
 COLUMNS = (*NEEDED, "probability", "stream", "section", "distance", "area", "crossing", "volume")
@@ -221,6 +224,9 @@ def _check_header(header: list[str], where: str) -> None:
     for name in header:
         if name not in COLUMNS:
             known = f"columns are {', '.join(COLUMNS)}"
+            # processes that know flows as they are read need no study file
+            from terrain2q.study import nearest
+
             what = f'unknown column "{name}"; the nearest known is {nearest(name, COLUMNS)}'
             if ";" in name:
                 known = f"separate the columns by commas; {known}"

@@ -2,6 +2,8 @@
 
 import ast
 import importlib
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
@@ -88,3 +90,21 @@ def test_every_module_imports():
         )
         if not name.endswith("__main__"):
             importlib.import_module(name)
+
+
+@pytest.mark.parametrize(
+    ("module", "not_loaded"),
+    [
+        # what every process that works on batches loads
+        (
+            "terrain2q.batches.engines",
+            {"pandas", "geopandas", "pyogrio", "matplotlib", "scipy", "fontTools", "jinja2", "numba"},
+        ),
+        # what a run loads that writes no pages and draws nothing
+        ("terrain2q.process", {"matplotlib", "scipy", "fontTools", "jinja2", "numba"}),
+    ],
+)
+def test_what_is_slow_to_load_is_not_loaded_before_it_is_needed(module, not_loaded):
+    code = f"import sys, {module}; print(*{{name.split('.')[0] for name in sys.modules}})"
+    loaded = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout
+    assert not not_loaded & set(loaded.split())

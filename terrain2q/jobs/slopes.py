@@ -4,17 +4,19 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Protocol
+from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 import shapely
 
 from terrain2q.errors import Finding
 from terrain2q.ground.cut_lines import CutLine
-from terrain2q.ground.low_line import LowLine, LowLines
 from terrain2q.ground.stream_slope import SlopeEstimate, robust_slope
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.units import SI, UnitSystem
+
+if TYPE_CHECKING:
+    from terrain2q.ground.low_line import LowLine, LowLines
 
 WINDOW, WINDOW_CELLS = 304.8, 60.0
 """Metres (1000 ft), and cells at least, over which a stream's slope is taken where nothing is said."""
