@@ -7,7 +7,7 @@ import os
 import time
 from collections import Counter
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from contextlib import closing
+from contextlib import closing, suppress
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -16,18 +16,20 @@ import geopandas
 import numpy as np
 import pandas as pd
 import pyarrow as pa
+import pyogrio
 import pyproj
 from pyproj.exceptions import CRSError
 
+from terrain2q.batches.engines import Crew
 from terrain2q.batches.kept import KeptParts, study_hash
 from terrain2q.batches.run import answer_lines, in_order
-from terrain2q.batches.work import LAYER_NAMES, Part, Work, cores, is_failed, plan_batches
+from terrain2q.batches.work import BATCH, LAYER_NAMES, Part, Work, cores, is_failed, plan_batches
 from terrain2q.columns import CAUTION
 from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError, worst_first
 from terrain2q.flows import Flow, event_names, read_flows
 from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
-from terrain2q.ground.layers import read_layer, require_field
+from terrain2q.ground.layers import read_layer, require_field, split_spec
 from terrain2q.ground.low_line import LowLines, streams_near, turn_streams
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
@@ -44,6 +46,7 @@ from terrain2q.output.layers import findings_layer, make_layers
 from terrain2q.output.pages import write_pages
 from terrain2q.output.run_record import (
     files_of_record,
+    hashed_ahead,
     note_pages,
     remove_earlier,
     run_record,
@@ -469,6 +472,20 @@ def _findings_of(answers: Sequence[SectionAnswer]) -> list[Finding]:
     return [f for a in answers for f in a.built.findings] + [f for a in answers for f in a.findings]
 
 
+def _crew(study: Study, jobs: int, scheduler: str | None) -> Crew:
+    """Call other processes at once where there are lines for several batches."""
+    count = 0
+    if scheduler is None and study.cut_lines is not None and study.cut_lines.path is not None:
+        path, layer = split_spec(study.cut_lines.path)
+        with suppress(Exception):  # what is wrong with the file is said where it is read
+            count = pyogrio.read_info(path, layer=layer)["features"]
+    return Crew(min(jobs - 1, count // (2 * BATCH)))
+
+
+def _files_of(study: Study) -> list[str]:
+    return [path for paths in study.inputs().values() for path in paths]
+
+
 def _begin(
     study: Study, inputs: _Inputs, flows: Sequence[Flow], as_rows: bool, progress: Progress
 ) -> tuple[Work, list, KeptParts | None]:
@@ -668,19 +685,21 @@ def run_study(
     check_output(folder, study.output.overwrite)
     flows = read_flows(study)
     events = _extent_events(study, flows)
-    inputs = _read_inputs(study)
-    # the flood extent and the benches need the answers themselves, the layers only their rows
-    work, batches, kept = _begin(study, inputs, flows, not (events or widths), progress)
-    parts = answer_lines(work, inputs.lines, batches, kept, jobs or cores(), scheduler, progress)
-    try:
-        if work.as_layers:
-            made = _finish_rows(study, inputs, flows, parts, progress)
-        else:
-            made = _finish_answers(study, inputs, flows, events, widths, parts, progress)
-    except InputError:
-        if kept is not None:
-            kept.remove(all_new=True)
-        raise
+    jobs = jobs or cores()
+    with closing(_crew(study, jobs, scheduler)) as crew, hashed_ahead(_files_of(study)):
+        inputs = _read_inputs(study)
+        # the flood extent and the benches need the answers themselves, the layers only their rows
+        work, batches, kept = _begin(study, inputs, flows, not (events or widths), progress)
+        parts = answer_lines(work, inputs.lines, batches, kept, jobs, scheduler, progress, crew)
+        try:
+            if work.as_layers:
+                made = _finish_rows(study, inputs, flows, parts, progress)
+            else:
+                made = _finish_answers(study, inputs, flows, events, widths, parts, progress)
+        except InputError:
+            if kept is not None:
+                kept.remove(all_new=True)
+            raise
     if kept is not None:
         kept.remove()
     record = folder / RECORD_NAME

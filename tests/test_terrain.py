@@ -814,3 +814,48 @@ def test_tiles_off_by_round_off_fit_together(tmp_path):
 def test_importing_the_names_does_not_open_anything():
     code = "import sys, terrain2q; sys.exit('rasterio' in sys.modules)"
     assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0
+
+
+@pytest.mark.parametrize("sampling", ["bilinear", "nearest"])
+@pytest.mark.parametrize("kind", ["float32", "int16", "masked", "rotated"])
+def test_many_points_are_those_of_few(tmp_path, monkeypatch, kind, sampling):
+    """Compiled code and arrays give the same numbers to the last bit: gaps, edges, blocks, outside."""
+    random = np.random.default_rng(12)
+    values = random.normal(300, 40, (200, 260))
+    values[random.random(values.shape) < 0.03] = -9999
+    transform = Affine(2.0, 0.0, 500000.0, 0.0, -2.0, 4500000.0)
+    if kind == "rotated":
+        transform = chain(transform, Affine.rotation(20))
+    path = tmp_path / "dem.tif"
+    dtype = "int16" if kind == "int16" else "float32"
+    with rasterio.open(
+        path, "w", driver="GTiff", width=260, height=200, count=1, dtype=dtype, crs=UTM, transform=transform,
+        tiled=True, blockxsize=32, blockysize=16, nodata=None if kind == "masked" else -9999,
+    ) as out:  # fmt: skip
+        out.write(values.astype(dtype), 1)
+        if kind == "masked":
+            out.write_mask(values > 0)
+        if kind == "int16":
+            out.scales, out.offsets = (0.1,), (5.0,)
+
+    def place(column, row):
+        a, b, c, d, e, f = transform[:6]
+        return a * column + b * row + c, d * column + e * row + f
+
+    (x0, y0), (x1, y1) = place(0, 0), place(260, 200)
+    lines = [
+        np.stack([random.uniform(min(x0, x1) - 9, max(x0, x1) + 9, n), random.uniform(y1 - 9, y0 + 9, n)], 1)
+        for n in random.integers(2, 6, 60)
+    ]
+    # along cell centres, edges of cells and the outer edge
+    lines += [np.array([place(0, r), place(260, r)]) for r in (0.0, 0.5, 16.0, 16.5, 200.0)]
+    terrain = Terrain(path, "m", sampling=sampling)
+    few = terrain.sample(lines)
+    for module in (terrain_module, tiles_module):
+        monkeypatch.setattr(module, "MANY", 1)
+    many = terrain.sample(lines)
+    assert sum(np.isnan(p.elevations).sum() for p in few) > 100
+    for one, other in zip(few, many, strict=True):
+        for name in ("stations", "elevations", "x", "y", "is_vertex"):
+            np.testing.assert_array_equal(getattr(one, name), getattr(other, name), err_msg=name)
+            assert not getattr(other, name).flags.writeable

@@ -14,7 +14,7 @@ import sys
 import threading
 from collections.abc import Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 
 from terrain2q.batches.kept import KeptParts
 from terrain2q.batches.work import Part, Work, answer_batch
@@ -39,6 +39,27 @@ def _answered(work: Work, number: int, lines, places, kept: KeptParts | None) ->
     if kept is not None:
         kept.keep(number, part)
     return part
+
+
+class Crew:
+    """Other processes, called before there is work, so that they are there when there is.
+
+    Parameters
+    ----------
+    count : int
+    """
+
+    def __init__(self, count: int) -> None:
+        self._workers = [_Worker() for _ in range(count)]
+
+    def one(self) -> _Worker:
+        """Return a worker, which is then the caller's to close."""
+        return self._workers.pop() if self._workers else _Worker()
+
+    def close(self) -> None:
+        """Send those home that nobody wanted."""
+        for worker in self._workers:
+            worker.close()
 
 
 # --- processes ----------------------------------------------------------------------------------------
@@ -102,9 +123,10 @@ class _Here:
 
 
 def processes(
-    work: Work, batches: Sequence[Batch], jobs: int, kept: KeptParts | None = None
+    work: Work, batches: Sequence[Batch], jobs: int, kept: KeptParts | None = None, crew: Crew | None = None
 ) -> Iterator[tuple[int, Part | None]]:
     """Work on several batches at once: this process, and others of which each keeps its parts itself."""
+    crew = crew or Crew(0)
     message = pickle.dumps((work, kept), protocol=5)
     workers: list[_Worker | _Here] = [_Here(work, kept)]
     first = threading.Lock()
@@ -114,7 +136,7 @@ def processes(
         if first.acquire(blocking=False):
             mine.worker = workers[0]
             return
-        mine.worker = _Worker()
+        mine.worker = crew.one()
         workers.append(mine.worker)
         mine.worker.send(message)
 
@@ -149,7 +171,14 @@ def _serve() -> None:
     # what libraries print must not get between the parts
     os.dup2(sys.stderr.fileno(), sys.stdout.fileno())
     tiles.MOST_THREADS = 1
-    work, kept = pickle.load(source)
+    # what is sure to be needed is loaded while the inputs are still read
+    with suppress(ImportError):
+        import terrain2q.hydraulics.compiled_batch
+        import terrain2q.output.compiled_wkb  # noqa: F401
+    try:
+        work, kept = pickle.load(source)
+    except EOFError:
+        return
     # what stays to the end need not be looked through again and again for what can go
     gc.freeze()
     while True:

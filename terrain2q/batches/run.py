@@ -8,7 +8,7 @@ from collections.abc import Callable, Iterator, Sequence
 from contextlib import closing, contextmanager
 from itertools import chain
 
-from terrain2q.batches.engines import Batch, cluster, processes, serial
+from terrain2q.batches.engines import Batch, Crew, cluster, processes, serial
 from terrain2q.batches.kept import KeptParts
 from terrain2q.batches.work import Part, Work, answer_batch
 from terrain2q.errors import Finding
@@ -29,6 +29,7 @@ def answer_lines(
     jobs: int,
     scheduler: str | None,
     progress: Callable[[int, int, str], None],
+    crew: Crew | None = None,
 ) -> Iterator[Part]:
     """Give the parts of all batches, one after another in the order of the batches.
 
@@ -48,6 +49,8 @@ def answer_lines(
         Address of a Dask scheduler, whose cluster then does the work.
     progress : callable
         ``progress(done, total, label)``; the label tells the rate and the findings so far.
+    crew : Crew, optional
+        Processes that were called already.
     """
     ready = {number for number in range(len(batches)) if kept is not None and number in kept}
     pace = _Pace(len(lines), progress)
@@ -61,7 +64,7 @@ def answer_lines(
     if scheduler is not None and waiting:
         coming = cluster(work, waiting, scheduler, kept)
     elif jobs > 1 and len(waiting) > 1:
-        coming = processes(work, waiting, jobs, kept)
+        coming = processes(work, waiting, jobs, kept, crew)
     else:
         coming = serial(work, waiting, kept)
     held: dict[int, Part] = {}

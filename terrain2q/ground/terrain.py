@@ -8,7 +8,8 @@ laid along the lines and the elevation unit is settled.
 from __future__ import annotations
 
 import os
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -20,7 +21,7 @@ from rasterio.transform import Affine
 
 from terrain2q.errors import Finding, InputError
 from terrain2q.ground.distances import GroundDistances, horizontal_crs
-from terrain2q.ground.tiles import Mosaic, Tile, open_tile, shifted
+from terrain2q.ground.tiles import MANY, Mosaic, Tile, in_threads, open_tile, shifted
 from terrain2q.units import ELEVATION_UNITS
 
 SAMPLINGS = ("bilinear", "nearest")
@@ -289,7 +290,12 @@ class Terrain:
         ndarray, shape (n,)
             Metres; NaN in gaps and outside.
         """
-        column, row = self._to_grid(np.asarray(x, dtype=float), np.asarray(y, dtype=float))
+        x, y = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
+        if x.size >= MANY and len(self._mosaic.tiles) == 1:
+            values = np.full(x.size, np.nan)
+            self._fill_elevations(x, y, values)
+            return values
+        column, row = self._to_grid(x, y)
         values = self._mosaic.elevations(column, row, bilinear=self.sampling == "bilinear")
         return values if self.metres_per_unit == 1.0 else values * self.metres_per_unit
 
@@ -308,6 +314,13 @@ class Terrain:
         """
         column, row = self._to_grid(np.asarray(x, dtype=float), np.asarray(y, dtype=float))
         return self._mosaic.blocks_at(column, row)
+
+    def _fill_elevations(self, x: np.ndarray, y: np.ndarray, values: np.ndarray) -> None:
+        """Fill in the elevations of many points where there is one tile; `values` are NaN."""
+        place = (*self._inverse, self.transform.c, self.transform.f)
+        self._mosaic.many_elevations(x, y, place, self.sampling == "bilinear", values)
+        if self.metres_per_unit != 1.0:
+            values *= self.metres_per_unit
 
     def read_window(self, bounds, dtype=np.float64) -> tuple[np.ndarray, Affine]:
         """Return the cells about some bounds.
@@ -515,6 +528,18 @@ class Terrain:
     ) -> None:
         """Work out the profiles of some lines; `vertex` are the numbers of all their vertices."""
         parts = intervals[vertex]
+        ends = np.cumsum(points).tolist()
+        starts = [0, *ends[:-1]]
+        if ends[-1] >= MANY:
+            columns, read = self._many_points(vertex, parts, x, y, drawn, measured)
+            with ThreadPoolExecutor(1) as pool:
+                # the profiles are made of the arrays while these are filled
+                reading = pool.submit(read) if elevations else None
+                for line, start, end in zip(lines.tolist(), starts, ends, strict=True):
+                    profiles[line] = Profile(*[column[start:end] for column in columns])
+                if reading is not None:
+                    reading.result()
+            return
         owner = np.repeat(vertex, parts)
         number = np.arange(owner.size) - np.repeat(np.cumsum(parts) - parts, parts)
         fraction = number / np.repeat(parts, parts)
@@ -531,10 +556,37 @@ class Terrain:
         ]
         for column in columns:
             column.flags.writeable = False
-        ends = np.cumsum(points).tolist()
-        starts = [0, *ends[:-1]]
         for line, start, end in zip(lines.tolist(), starts, ends, strict=True):
             profiles[line] = Profile(*[column[start:end] for column in columns])
+
+    def _many_points(self, vertex, parts, x, y, drawn, measured) -> tuple[list[np.ndarray], Callable]:
+        """Return what profiles have of each point, by compiled code, and what fills in the elevations."""
+        from terrain2q.ground.compiled_sampling import lay_points
+
+        begin = np.cumsum(parts) - parts
+        count = int(begin[-1] + parts[-1])
+        station, point_x, point_y = np.empty((3, count))
+        is_vertex = np.empty(count, dtype=bool)
+
+        def lay(part: slice) -> None:
+            lay_points(
+                vertex[part], parts[part], begin[part], x, y, drawn, measured.panels, measured.first_panel,
+                measured.panel_station, measured.speeds, station, point_x, point_y, is_vertex,
+            )  # fmt: skip
+
+        in_threads(lay, vertex.size)
+        ground = np.full(count, np.nan)
+
+        def read() -> None:
+            if len(self._mosaic.tiles) == 1:
+                self._fill_elevations(point_x, point_y, ground)
+            else:
+                ground[:] = self.elevations(point_x, point_y)
+
+        columns = [column.view() for column in (station, ground, point_x, point_y, is_vertex)]
+        for column in columns:
+            column.flags.writeable = False
+        return columns, read
 
 
 def _no_points() -> Profile:

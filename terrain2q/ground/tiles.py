@@ -17,6 +17,7 @@ import threading
 import unicodedata
 import warnings
 from collections import OrderedDict
+from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -48,6 +49,9 @@ CHUNK_CELLS = 2**18
 MOST_THREADS = 16
 """Threads that read at once at most; 1 where several processes share a machine."""
 
+MANY = 50_000
+"""Points from which on compiled code is worth its loading."""
+
 MEMORY = 2**30
 """Bytes of decoded blocks that all threads together may hold; one block is held in any case."""
 
@@ -64,6 +68,17 @@ _UNIT_WORDS = {
     "surveyfoot": US_SURVEY_FOOT, "surveyfeet": US_SURVEY_FOOT,
     "ussurveyfoot": US_SURVEY_FOOT, "ussurveyfeet": US_SURVEY_FOOT, "ussurveyft": US_SURVEY_FOOT,
 }  # fmt: skip
+
+
+def in_threads(work: Callable[[slice], None], count: int) -> None:
+    """Let a few threads work on the parts of a range each, as far as others leave them room."""
+    threads = max(1, min(os.cpu_count() or 1, MOST_THREADS, 4))
+    if threads == 1:
+        work(slice(0, count))
+        return
+    share = -(-count // threads)
+    with ThreadPoolExecutor(threads) as pool:
+        list(pool.map(work, [slice(i, min(i + share, count)) for i in range(0, count, share)]))
 
 
 def metres_in(unit: str) -> float | None:
@@ -519,6 +534,10 @@ class Mosaic:
                 values[inside] = self.elevations(column[inside], row[inside], bilinear=bilinear)
             return values
 
+        return _Gathering(self, *self._cells_about(column, row, bilinear)).run()
+
+    def _cells_about(self, column: np.ndarray, row: np.ndarray, bilinear: bool):
+        """Return columns and rows of the cells about places within the grid, and the parts of a cell."""
         if bilinear:
             left, top = np.floor(column - 0.5), np.floor(row - 0.5)
             right, down = column - 0.5 - left, row - 0.5 - top
@@ -528,7 +547,29 @@ class Mosaic:
         step = 1 if bilinear else 0
         columns = [np.clip(left + side, 0, self.width - 1).astype(np.int32) for side in (0, step)]
         rows = [np.clip(top + side, 0, self.height - 1).astype(np.int32) for side in (0, step)]
-        return _Gathering(self, columns, rows, right, down).run()
+        return columns, rows, right, down
+
+    def many_elevations(
+        self, x: np.ndarray, y: np.ndarray, place: tuple, bilinear: bool, values: np.ndarray
+    ) -> None:
+        """Find elevations at many places of the map, by compiled code; there is one tile.
+
+        Parameters
+        ----------
+        x, y : ndarray, shape (n,)
+        place : tuple of six floats
+            a, b, d, e, c and f: the column is a (x - c) + b (y - f), the row d (x - c) + e (y - f).
+        bilinear : bool
+            See :meth:`elevations`, which gives the same numbers.
+        values : ndarray, shape (n,)
+            NaN everywhere; filled.
+        """
+        many = _ManyPoints(self, x, y, place, bilinear, values)
+        a, b, d, e, c, f = place
+        open_x, open_y = x[many.open] - c, y[many.open] - f
+        left, top, right, down = self._cells_about(a * open_x + b * open_y, d * open_x + e * open_y, bilinear)
+        gathering = _Gathering(self, left, top, right, down, many)
+        values[many.open] = gathering.run()
 
     def window(self, row: int, column: int, rows: int, columns: int, dtype=np.float64) -> np.ndarray:
         """Return elevations of a block of cells in the raster's unit, NaN for gaps and where no tile is."""
@@ -554,6 +595,68 @@ class Mosaic:
         return out
 
 
+class _ManyPoints:
+    """Very many points over one tile, worked out by compiled code where their cells lie in one chunk.
+
+    Attributes
+    ----------
+    chunks : ndarray of int
+        Numbers of the chunks that hold such points.
+    open : ndarray of int
+        The other points within the grid.
+    """
+
+    def __init__(self, mosaic: Mosaic, x, y, place: tuple, bilinear: bool, values: np.ndarray) -> None:
+        from terrain2q.ground import compiled_sampling as compiled
+
+        self._compiled, self._values = compiled, values
+        tile = mosaic.tiles[0]
+        self._tile = tile
+        self._points = x, y, *map(float, place), bilinear, mosaic.width, mosaic.height
+        self._nodata = np.nan if tile.nodata is None else float(tile.nodata)
+        self._no_mask = np.zeros((0, 0), dtype=np.uint8)
+        chunks = int(mosaic._first_chunk[-1])
+        keys, counts = np.empty(x.size, dtype=np.int32), {}
+
+        def find(part: slice) -> None:
+            counts[part.start] = np.zeros(chunks, dtype=np.int64)
+            compiled.find_chunks(
+                part.start, part.stop, *self._points, EDGE_TOLERANCE, tile.chunk_rows, tile.chunk_columns,
+                int(mosaic._across[0]), keys, counts[part.start],
+            )  # fmt: skip
+
+        def sort(part: slice) -> None:
+            compiled.sort_by_chunk(part.start, part.stop, keys, free[part.start], self._order)
+
+        in_threads(find, x.size)
+        # where each chunk begins, and in each chunk the points of each thread's part
+        each = np.stack([counts[start] for start in sorted(counts)])
+        self._first = np.concatenate([[0], np.cumsum(each.sum(axis=0))])
+        free = dict(zip(sorted(counts), self._first[:-1] + np.cumsum(each, axis=0) - each, strict=True))
+        self._order = np.empty(self._first[-1], dtype=np.int32)
+        in_threads(sort, x.size)
+        self.chunks = np.flatnonzero(np.diff(self._first))
+        self.open = np.flatnonzero(keys == compiled.OPEN)
+
+    def _here(self, chunk: int) -> np.ndarray:
+        return self._order[self._first[chunk] : self._first[chunk + 1]]
+
+    def serve(self, chunk: int, readers: _Readers, columns: np.ndarray, rows: np.ndarray) -> np.ndarray:
+        """Read a chunk, fill in the elevations of its points, and return those of single cells in it."""
+        tile, here = self._tile, self._here(chunk)
+        left, top, right, bottom = self._compiled.extent_of(here, columns, rows, *self._points)
+        width, height = right - left + 1, bottom - top + 1
+        cells = readers.read(tile, top - tile.row, left - tile.column, height, width)
+        if here.size:
+            self._compiled.interpolate(
+                cells.values.reshape(height, width),
+                self._no_mask if cells.mask is None else cells.mask.reshape(height, width),
+                top, left, here, *self._points, self._nodata, IMPOSSIBLE, EDGE_TOLERANCE, float(tile.scale),
+                float(tile.offset), self._values,
+            )  # fmt: skip
+        return cells.elevations((rows - top).astype(np.int64) * width + (columns - left))
+
+
 class _Gathering:
     """One pass over the blocks that some points need.
 
@@ -562,10 +665,22 @@ class _Gathering:
     may fill) are *open*: they keep their four corners until all are there.
     """
 
-    def __init__(self, mosaic: Mosaic, columns, rows, right, down) -> None:
+    def __init__(self, mosaic: Mosaic, columns, rows, right, down, many: _ManyPoints | None = None) -> None:
         self.mosaic, self.columns, self.rows, self.right, self.down = mosaic, columns, rows, right, down
         self.values = np.full(right.size, np.nan)
         self.several = len(mosaic.tiles) > 1
+        self.many = many
+        self.simple, self.simple_keys, open_points = self._sorted()
+        self.found: list[tuple[np.ndarray, np.ndarray]] = []
+        self.open = np.zeros(0, dtype=np.int64)
+        self.corners = np.zeros((0, 4))
+        self.pieces = np.zeros((0, 4), dtype=np.int64)
+        self.depth = np.zeros((0, 4), dtype=np.int32)
+        self._add_open(open_points, None)
+
+    def _sorted(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Return the simple points by their chunks, the chunk of each, and the open points."""
+        mosaic, columns, rows = self.mosaic, self.columns, self.rows
         pairs = ((0, 0), (1, 0), (0, 1), (1, 1))
         if self.several:
             tiles = [mosaic._cover[0][mosaic._piece(columns[i], rows[j])] for i, j in pairs]
@@ -576,19 +691,12 @@ class _Gathering:
             tiles, one_tile = [0], True  # numbers instead of arrays, for speed
         first = mosaic._chunk_number(tiles[0], columns[0], rows[0])
         simple = one_tile & (first == mosaic._chunk_number(tiles[0], columns[1], rows[1]))
-        self.simple = np.flatnonzero(simple)
-        keys = first[self.simple]
+        points = np.flatnonzero(simple)
+        keys = first[points]
         if mosaic._first_chunk[-1] < 2**16:
             keys = keys.astype(np.uint16)  # these are sorted by counting
         order = np.argsort(keys, kind="stable")
-        self.simple, self.simple_keys = self.simple[order], keys[order].astype(np.int64)
-
-        self.found: list[tuple[np.ndarray, np.ndarray]] = []
-        self.open = np.zeros(0, dtype=np.int64)
-        self.corners = np.zeros((0, 4))
-        self.pieces = np.zeros((0, 4), dtype=np.int64)
-        self.depth = np.zeros((0, 4), dtype=np.int32)
-        self._add_open(np.flatnonzero(~simple), None)
+        return points[order], keys[order].astype(np.int64), np.flatnonzero(~simple)
 
     def _add_open(self, points: np.ndarray, corners: np.ndarray | None) -> None:
         """Take points among the open ones; `corners` as far as their first tile had them."""
@@ -646,6 +754,8 @@ class _Gathering:
         chunks = np.union1d(
             *(some[np.flatnonzero(np.diff(some, prepend=-1))] for some in (keys, request_keys))
         )
+        if self.many is not None:
+            chunks = np.union1d(chunks, self.many.chunks)
         if not chunks.size:
             return
         tiles = np.searchsorted(mosaic._first_chunk, chunks, side="right") - 1
@@ -654,7 +764,7 @@ class _Gathering:
             for sorted_keys in (keys, request_keys)
             for side in ("left", "right")
         ]
-        jobs = list(zip(tiles.tolist(), *bounds, strict=True))
+        jobs = list(zip(chunks.tolist(), tiles.tolist(), *bounds, strict=True))
         columns, rows, right, down, corners = (
             self.columns,
             self.rows,
@@ -663,8 +773,15 @@ class _Gathering:
             self.corners.ravel(),
         )
 
-        def serve(tile_number: int, begin: int, end: int, request_begin: int, request_end: int) -> None:
+        def serve(
+            chunk: int, tile_number: int, begin: int, end: int, request_begin: int, request_end: int
+        ) -> None:
             tile = mosaic.tiles[tile_number]
+            if self.many is not None:
+                # all points but the open ones are there
+                single = slice(request_begin, request_end)
+                corners[request[single]] = self.many.serve(chunk, readers, column[single], row[single])
+                return
             here = points[begin:end]
             first_column, last_column = columns[0][here], columns[1][here]
             first_row, last_row = rows[0][here], rows[1][here]
@@ -703,7 +820,7 @@ class _Gathering:
             return
         # Neighbouring chunks go to one thread, and long runs of them in a VRT, as they share blocks of its
         # sources, which each thread decodes for itself.
-        runs = workers * (2 if any(tile.is_virtual for tile in mosaic.tiles) else 8)
+        runs = workers * (2 if any(tile.is_virtual for tile in mosaic.tiles) else 16)
         share = -(-len(jobs) // runs)
         with ThreadPoolExecutor(workers) as pool:
             for _ in pool.map(serve_all, [jobs[i : i + share] for i in range(0, len(jobs), share)]):

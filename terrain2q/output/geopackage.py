@@ -30,7 +30,7 @@ from pyproj import CRS
 from terrain2q.columns import CAUTION, COLUMNS, FID, LAYERS, Column, Layer, column_description, column_title
 from terrain2q.errors import OutputError
 from terrain2q.output.arrow_tables import GEOMETRY
-from terrain2q.output.run_record import plain
+from terrain2q.output.run_record import hashed_ahead, plain
 from terrain2q.output.spatial_index import fill_index
 from terrain2q.output.styles import EVENT_MEASURES, STYLES_TABLE, write_styles
 from terrain2q.output.whole_file import not_writable, whole_file
@@ -324,7 +324,9 @@ class GeoPackageWriter:
             with self._saying_why():
                 _bring_back(self._temporary, self._put_off, self.counts)
                 styled = _describe(self._temporary, self._events(), self.units, self._about, self._date)
-                _check(self._temporary, self.counts | styled)
+                # the record of a run will ask for the hash, and this looks at every byte as well
+                with hashed_ahead([self._temporary]):
+                    _check(self._temporary, self.counts | styled)
             check_output(self.path.parent, self._overwrite, self.path.name)
             _settle(self.path)
         return None

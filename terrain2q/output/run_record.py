@@ -9,7 +9,9 @@ import math
 import os
 import platform
 from collections import Counter
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Iterator, Mapping
+from concurrent.futures import Future, ThreadPoolExecutor
+from contextlib import contextmanager, suppress
 from datetime import UTC, date, datetime
 from importlib import metadata
 from pathlib import Path
@@ -86,8 +88,52 @@ def _files_of(path: Path) -> list[Path]:
 
 
 def _sha256_of_file(path: Path) -> str:
+    ahead = _AHEAD.pop(_same_file(path), None)
+    if ahead is not None and (digest := ahead.result()) is not None:
+        return digest
     with path.open("rb") as file:
         return hashlib.file_digest(file, "sha256").hexdigest()
+
+
+# Digests of files that a thread is at, each taken once.
+_AHEAD: dict[tuple, Future] = {}
+
+
+@contextmanager
+def hashed_ahead(paths: Iterable[str | os.PathLike]) -> Iterator[None]:
+    """Let a thread hash files while the block does something else; :func:`sha256_of` then has them at once.
+
+    A file that changes meanwhile is hashed again when it is asked for.
+    """
+    pool = ThreadPoolExecutor(1)
+    mine = []
+    for path in paths:
+        with suppress(OSError):
+            for file in _files_of(Path(path)):
+                key = _same_file(file)
+                _AHEAD[key] = pool.submit(_hash_unless_changed, file, key)
+                mine.append(key)
+    try:
+        yield
+    finally:
+        pool.shutdown(wait=False, cancel_futures=True)
+        for key in mine:
+            if (future := _AHEAD.get(key)) is not None and future.cancelled():
+                del _AHEAD[key]
+
+
+def _same_file(path: Path) -> tuple:
+    about = path.stat()
+    return about.st_dev, about.st_ino, about.st_size, about.st_mtime_ns
+
+
+def _hash_unless_changed(path: Path, key: tuple) -> str | None:
+    try:
+        with path.open("rb") as file:
+            digest = hashlib.file_digest(file, "sha256").hexdigest()
+        return digest if _same_file(path) == key else None
+    except OSError:
+        return None
 
 
 def versions() -> dict[str, str]:
