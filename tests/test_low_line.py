@@ -16,6 +16,7 @@ from terrain2q.ground.low_line import (
     LEAST_FALL,
     LONGEST_FILL,
     LowLines,
+    _low_lines,
     find_humps,
     free_of_humps,
     low_line,
@@ -367,3 +368,22 @@ def test_compiled_path_is_that_of_the_arrays():
         rows = random.normal(0.0, 0.3, (6000, 21)).cumsum(axis=0).round(digits) / 10
         rows[random.random(rows.shape) < 0.01] = np.nan
         np.testing.assert_array_equal(lowest_path(rows), lowest_path(rows, compiled=False))
+
+
+def test_low_lines_of_many_streams_are_those_of_each_alone(tmp_path, monkeypatch):
+    valley = Valley(70.0, size=500.0, noise=0.1, fill=(20.0, 10.0, 3.0))
+    terrain = Terrain(valley.write(tmp_path / "v.tif"))
+    far = LineString([(EAST + 9000.0, NORTH), (EAST + 9100.0, NORTH)])
+    lines = [valley.line((-200.0, off), (0.0, -off), (100.0 + 10 * off, off)) for off in range(-8, 9, 2)]
+    lines = [*lines[:4], far, LineString([far.coords[0], far.coords[0]]), *lines[4:]]
+    alone = [low_line(line, terrain, 15.0) for line in lines]
+    for most in (2_000_000, 100_000):  # all of them together, and some at a time
+        monkeypatch.setattr("terrain2q.ground.low_line.POINTS_AT_ONCE", most)
+        together = list(_low_lines(lines, terrain, 15.0))
+        assert [line is None for line in together] == [n == 5 for n in range(len(lines))]
+        for one, other in zip(together, alone, strict=True):
+            if one is not None:
+                for name in ("distance", "x", "y", "drawn", "low", "bed", "usable", "shift"):
+                    np.testing.assert_array_equal(getattr(one, name), getattr(other, name))
+                assert one.humps == other.humps
+    assert list(_low_lines([], terrain, 15.0)) == []

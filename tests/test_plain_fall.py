@@ -110,7 +110,8 @@ def test_a_stream_is_told_either_way_and_turned_with_the_same_words(azimuth, tmp
     assert plain_ways(np.array([line, line.reverse()]), terrain, 20.0).tolist() == [1, -1]
     down = made.streams(line)
     asked = []
-    monkeypatch.setattr(low_line, "_fall", lambda *a, real=low_line._fall: asked.append(a) or real(*a))
+    real = low_line._falls
+    monkeypatch.setattr(low_line, "_falls", lambda wholes, *more: asked.extend(wholes) or real(wholes, *more))
     assert turn_streams(down, terrain) == (down, [])
     assert not asked, "it need not be looked at further"
     up = down.set_geometry(down.geometry.reverse())
@@ -193,8 +194,7 @@ def test_lines_across_real_terrain_are_told_only_what_their_low_lines_tell(tmp_p
     ways = plain_ways(lines, terrain, snap)
     told = np.flatnonzero(ways)
     assert told.size >= 5
-    for number in told:
-        fall, sure, _ = low_line._fall(lines[number], terrain, snap, "")
+    for number, (fall, sure, _) in zip(told, low_line._falls(lines[told], terrain, snap), strict=True):
         assert sure
         assert np.sign(fall) == ways[number]
 

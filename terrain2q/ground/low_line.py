@@ -20,7 +20,7 @@ are not bed: road fills over culverts, pits, noise. Four steps bring out the bed
 
 from __future__ import annotations
 
-from collections.abc import Collection
+from collections.abc import Collection, Iterator, Sequence
 from dataclasses import dataclass, field
 from functools import cache, cached_property
 from typing import TYPE_CHECKING
@@ -353,11 +353,58 @@ def low_line(line, terrain: Terrain, snap: float, stream: str = "", start: float
     LowLine or None
         None where the line has no length.
     """
-    # the line's own ground is in the rows laid across it below
-    profile = terrain.sample([line], elevations=False)[0]
-    if len(profile) < 2:
-        return None
+    return next(_low_lines([line], terrain, snap, stream, start))
+
+
+def _low_lines(
+    lines: Sequence, terrain: Terrain, snap: float, stream: str = "", start: float = 0.0
+) -> Iterator[LowLine | None]:
+    """Give the low line of each of some lines, in order; the terrain is read for many of them at once."""
     cell = min(terrain.cell_size)
+    sides = round(snap / cell)
+    offsets = np.arange(-sides, sides + 1) * cell
+    most = max(POINTS_AT_ONCE // (8 * offsets.size), 1)
+    for some in _groups(lines, terrain, most):
+        # the lines' own ground is in the rows laid across them below
+        profiles = terrain.sample(some, elevations=False)
+        laid = [_across(p, terrain, cell, snap) if len(p) > 1 else None for p in profiles]
+        _, x, y, left_x, left_y = (np.concatenate(v) for v in zip(_NOWHERE, *filter(None, laid), strict=True))
+        rows = np.empty((x.size, offsets.size))
+        for at in range(0, x.size, most):
+            part = slice(at, at + most)
+            at_x = x[part, None] + offsets * left_x[part, None]
+            at_y = y[part, None] + offsets * left_y[part, None]
+            rows[part] = terrain.elevations(at_x.ravel(), at_y.ravel()).reshape(at_x.shape)
+        first = 0
+        for one in laid:
+            if one is None:
+                yield None
+                continue
+            end = first + one[0].size
+            yield _of_rows(*one, rows[first:end], offsets, stream, start)
+            first = end
+
+
+_NOWHERE = tuple(np.empty((5, 0)))
+
+
+def _groups(lines: Sequence, terrain: Terrain, most: int) -> Iterator[list]:
+    """Give lines in their order, as many at a time as are about so many cells long together."""
+    a, _, _, d, _, _ = terrain.transform[:6]
+    group, cells = [], 0.0
+    for line in lines:
+        long = 1.0 + line.length / np.hypot(a, d)
+        if group and cells + long > most:
+            yield group
+            group, cells = [], 0.0
+        group.append(line)
+        cells += long
+    if group:
+        yield group
+
+
+def _across(profile, terrain: Terrain, cell: float, snap: float) -> tuple[np.ndarray, ...]:
+    """Return stations at each cell's length, their places, and a metre to the left there in map units."""
     length = float(profile.stations[-1])
     station = np.linspace(0.0, length, max(round(length / cell), 1) + 1)
     x, y = profile.place_at(station)
@@ -373,20 +420,25 @@ def low_line(line, terrain: Terrain, snap: float, stream: str = "", start: float
     course = np.stack([(x1 - x0) * east, (y1 - y0) * north])
     size = np.hypot(*course)
     course = np.where(size > 0.0, course / np.where(size > 0.0, size, 1.0), [[1.0], [0.0]])
-    sides = round(snap / cell)
-    offsets = np.arange(-sides, sides + 1) * cell
-    left_x, left_y = -course[1] / east, course[0] / north
-    rows = np.empty((station.size, offsets.size))
-    batch = max(POINTS_AT_ONCE // (8 * offsets.size), 1)
-    for at in range(0, station.size, batch):
-        part = slice(at, at + batch)
-        at_x = x[part, None] + offsets * left_x[part, None]
-        at_y = y[part, None] + offsets * left_y[part, None]
-        rows[part] = terrain.elevations(at_x.ravel(), at_y.ravel()).reshape(at_x.shape)
+    return station, x, y, -course[1] / east, course[0] / north
+
+
+def _of_rows(
+    station: np.ndarray,
+    x: np.ndarray,
+    y: np.ndarray,
+    left_x: np.ndarray,
+    left_y: np.ndarray,
+    rows: np.ndarray,
+    offsets: np.ndarray,
+    stream: str,
+    start: float,
+) -> LowLine:
+    """Return the low line through rows of ground, shape (stations, offsets)."""
     path = lowest_path(rows)
     shift = offsets[path]
     low = rows[np.arange(station.size), path]
-    spacing = length / max(station.size - 1, 1)
+    spacing = float(station[-1]) / max(station.size - 1, 1)
     bed, usable, stretches = free_of_humps(low, spacing)
     low_x, low_y = x + shift * left_x, y + shift * left_y
     humps = []
@@ -404,9 +456,8 @@ def low_line(line, terrain: Terrain, snap: float, stream: str = "", start: float
                 float(low_y[top]),
             )
         )
-    return LowLine(
-        stream, start + station, low_x, low_y, rows[:, sides], low, bed, usable, shift, tuple(humps)
-    )  # fmt: skip
+    drawn = rows[:, offsets.size // 2].copy()
+    return LowLine(stream, start + station, low_x, low_y, drawn, low, bed, usable, shift, tuple(humps))
 
 
 def shift_finding(line: LowLine, snap: float, cell: float, units: UnitSystem) -> Finding | None:
@@ -503,17 +554,24 @@ def turn_streams(
     ways = plain_ways(
         np.array([whole for one in found for whole in one.wholes], dtype=object), terrain, reach
     )
-    first = 0
+    plain, doubtful, first = [], [], 0
     for stream in found:
-        name, parts, along = stream.name, stream.parts, stream.along
         way = ways[first : first + len(stream.wholes)]
         first += len(stream.wholes)
+        as_drawn = [
+            w != 0 and bool((stream.along[stream.member == n] == w).all()) for n, w in enumerate(way.tolist())
+        ]
+        plain.append(as_drawn)
+        doubtful += [whole for whole, done in zip(stream.wholes, as_drawn, strict=True) if not done]
+    verdicts = _falls(doubtful, terrain, reach)
+    for stream, as_drawn in zip(found, plain, strict=True):
+        name, parts, along = stream.name, stream.parts, stream.along
         turned_here = False
         for number, whole in enumerate(stream.wholes):
-            mine = np.flatnonzero(stream.member == number)
-            if way[number] and (along[mine] == way[number]).all():
+            if as_drawn[number]:
                 continue
-            verdict = _fall(whole, terrain, reach, name)
+            mine = np.flatnonzero(stream.member == number)
+            verdict = next(verdicts)
             if not mine.size or verdict is None:
                 continue
             fall, sure, length = verdict
@@ -613,18 +671,19 @@ def _members(parts: np.ndarray, wholes: np.ndarray) -> tuple[np.ndarray, np.ndar
     return member, along
 
 
-def _fall(whole, terrain: Terrain, snap: float, name: str) -> tuple[float, bool, float] | None:
-    """Return slope, whether its sign is sure, and length; None where too little ground is known."""
-    line = low_line(whole, terrain, snap, name)
-    if line is None:
-        return None
-    estimate = robust_slope(line.distance[line.usable], line.bed[line.usable], confidence=0.98)
-    if estimate is None:
-        return None
-    fall = abs(estimate.slope) * estimate.length
-    sure = fall >= LEAST_FALL and not estimate.low <= 0.0 <= estimate.high
-    sure |= fall >= CLEAR_FALL and estimate.agreeing >= AGREEING
-    return estimate.slope, bool(sure), estimate.length
+def _falls(wholes: Sequence, terrain: Terrain, snap: float) -> Iterator[tuple[float, bool, float] | None]:
+    """Give slope, whether its sign is sure, and length of each line; None where ground is hardly known."""
+    for line in _low_lines(wholes, terrain, snap):
+        estimate = None
+        if line is not None:
+            estimate = robust_slope(line.distance[line.usable], line.bed[line.usable], confidence=0.98)
+        if estimate is None:
+            yield None
+            continue
+        fall = abs(estimate.slope) * estimate.length
+        sure = fall >= LEAST_FALL and not estimate.low <= 0.0 <= estimate.high
+        sure |= fall >= CLEAR_FALL and estimate.agreeing >= AGREEING
+        yield estimate.slope, bool(sure), estimate.length
 
 
 class LowLines:
