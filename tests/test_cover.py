@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import pickle
 from itertools import pairwise
 
 import geopandas
@@ -492,6 +493,22 @@ def test_invalid_polygons_are_mended_or_dropped(table):
     pieces, _ = cover.pieces(profile([(5, -9), (5, 9)]))
     # The two triangles of the bow tie meet at (10, 0): at x = 5 the left one reaches from y = -5 to 5.
     assert_spans(pieces, [("", 0, 4), ("wood", 4, 14), ("", 14, 18)])
+
+
+@pytest.mark.parametrize("kind", ["plain", "with holes and parts", "none that can be used"])
+def test_a_cover_that_is_sent_elsewhere_is_the_same_there(table, kind):
+    holed = Polygon([(0, -9), (9, -9), (9, 9), (0, 9)], [[(2, -3), (4, -3), (4, 3), (2, 3)]])
+    parts = shapely.MultiPolygon([box(9, -9, 11, 9), box(13, -9, 14.3, 9)])
+    shapes = {
+        "plain": [box(0, -9, 1 / 3, 9), box(1 / 3, -9, 11, 9)],
+        "with holes and parts": [holed, parts],
+        "none that can be used": [None, Polygon([(0, 0), (9, 0), (4, 0)])],
+    }[kind]
+    cover = Cover(layer(shapes, ["wood", "water"]), "class", table, 0.05)
+    there = pickle.loads(pickle.dumps(cover))
+    lines = [profile([(-1, 0), (20, 1)]), profile([(3, -5), (10, 5)])]
+    assert repr(there.pieces_many(lines, ["a", "b"])) == repr(cover.pieces_many(lines, ["a", "b"]))
+    assert repr(there.findings) == repr(cover.findings)
 
 
 def test_uniform_cover_is_one_piece():

@@ -18,6 +18,7 @@ from terrain2q.ground.layers import (
     clean_text,
     clean_texts,
     ignored_columns,
+    in_plan,
     read_layer,
     read_table,
     reproject,
@@ -323,3 +324,17 @@ def test_columns_that_look_misspelled_are_named():
     assert finding.code == "column-ignored"
     assert "'sorce'" in finding.message
     assert "'source'" in finding.message
+
+
+def test_only_shapes_with_heights_or_measures_are_made_anew():
+    texts = [
+        "LINESTRING (0 0, 1 1)", "LINESTRING Z (0 0 5, 1 1 6)", "POLYGON M ((0 0 1, 1 0 1, 1 1 1, 0 0 1))",
+        "POLYGON ZM ((0 0 1 2, 1 0 1 2, 1 1 1 2, 0 0 1 2))", "LINESTRING EMPTY",
+    ]  # fmt: skip
+    shapes = np.array([*shapely.from_wkt(texts), None], dtype=object)
+    flat = in_plan(shapes)
+    assert flat is not shapes
+    assert shapely.get_coordinate_dimension(flat).tolist() == [2, 2, 2, 2, 2, -1]
+    assert shapely.equals_exact(flat[:5], shapely.force_2d(shapes[:5])).all()
+    assert flat[0] is shapes[0]
+    assert shapely.get_coordinate_dimension(shapes).tolist() == [2, 3, 3, 4, 2, -1]

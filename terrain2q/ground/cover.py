@@ -25,7 +25,14 @@ import numpy as np
 import shapely
 
 from terrain2q.errors import Finding, InputError
-from terrain2q.ground.layers import clean_text, clean_texts, ignored_columns, read_table, require_field
+from terrain2q.ground.layers import (
+    clean_text,
+    clean_texts,
+    ignored_columns,
+    in_plan,
+    read_table,
+    require_field,
+)
 from terrain2q.ground.streams import Ground, feature_ids, length_text
 from terrain2q.units import SI, UnitSystem, unit_system
 
@@ -469,10 +476,10 @@ class Cover:
         self.default_n = None if default_n is None else float(default_n)
         self.roughness = roughness
         self.findings: list[Finding] = list(roughness.findings)
-        ids = feature_ids(polygons)
         shapes, kept = mended(polygons, "land_cover", self.findings)
         blank = kept & (classes == "")
         if blank.any():
+            ids = feature_ids(polygons)
             rows = np.flatnonzero(blank)
             first = shapes[rows[0]].representative_point()
             named = ", ".join(ids[row] for row in rows[:5]) + (" ..." if len(rows) > 5 else "")
@@ -796,20 +803,24 @@ def mended(
     kept : ndarray of bool, shape (n,)
         Which of them can be used.
     """
-    shapes = shapely.force_2d(polygons.geometry.to_numpy())
-    ids = feature_ids(polygons)
-    coordinates, owner = shapely.get_coordinates(shapes, return_index=True)
-    broken = np.zeros(len(shapes), dtype=bool)
-    broken[owner[~np.isfinite(coordinates).all(axis=1)]] = True
+    shapes = in_plan(polygons.geometry.to_numpy())
     missing = shapely.is_missing(shapes) | shapely.is_empty(shapes)
+    # a polygon with coordinates that are not numbers is never valid, so only these need be looked at
+    invalid = np.flatnonzero(~missing)[~shapely.is_valid(shapes[~missing])]
+    coordinates, owner = shapely.get_coordinates(shapes[invalid], return_index=True)
+    broken = np.zeros(len(shapes), dtype=bool)
+    broken[invalid[owner[~np.isfinite(coordinates).all(axis=1)]]] = True
     kept = ~broken & ~missing
-    invalid = np.flatnonzero(kept)[~shapely.is_valid(shapes[kept])]
+    if kept.all() and not invalid.size:
+        return shapes, kept
+    ids = feature_ids(polygons)
+    places = coordinates[np.searchsorted(owner, np.arange(len(invalid)))][kept[invalid]]
+    invalid = invalid[kept[invalid]]
     reasons = shapely.is_valid_reason(shapes[invalid])
-    for row, reason in zip(invalid, reasons, strict=True):
+    for row, reason, place in zip(invalid, reasons, places, strict=True):
         parts = shapely.get_parts(shapely.make_valid(shapes[row]))
         parts = [part for group in parts for part in shapely.get_parts(group) if part.geom_type == "Polygon"]
         parts = [part for part in parts if part.area > 0.0]
-        place = coordinates[np.searchsorted(owner, row)]
         if not parts:
             kept[row] = False
             message = f"polygon {ids[row]} is invalid and has no area: {reason}"
@@ -1015,9 +1026,24 @@ class _PolygonsUnderLines:
     """Finds the polygons under profiles, exactly and many at a time."""
 
     def __init__(self, polygons: np.ndarray, crs: object) -> None:
-        self._polygons, self._owner = shapely.get_parts(np.asarray(polygons, dtype=object), return_index=True)
+        self._polygons, self._owner = np.asarray(polygons, dtype=object), np.arange(len(polygons))
+        if (shapely.get_type_id(self._polygons) != shapely.GeometryType.POLYGON).any():
+            self._polygons, self._owner = shapely.get_parts(self._polygons, return_index=True)
         self._tree = shapely.STRtree(self._polygons)
         self._tolerance = SMALLEST / (1.0 if crs is None else Ground(crs).metres_per_map_unit)
+
+    def __getstate__(self) -> dict:
+        # as arrays of coordinates: polygons pickled one by one take several times as long
+        state = self.__dict__ | {"_tree": None}
+        if len(self._polygons):
+            state["_polygons"] = shapely.to_ragged_array(self._polygons)[1:]
+        return state
+
+    def __setstate__(self, state: dict) -> None:
+        self.__dict__.update(state)
+        if isinstance(self._polygons, tuple):
+            self._polygons = shapely.from_ragged_array(shapely.GeometryType.POLYGON, *self._polygons)
+        self._tree = shapely.STRtree(self._polygons)
 
     def cut(self, profiles: Sequence[_Profile]) -> _Cut:
         """Cut profiles at polygon edges and find the polygons under each interval."""

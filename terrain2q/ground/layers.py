@@ -216,10 +216,18 @@ def _read(path: Path, layer: str, where: str):
             fid_column = pyogrio.read_info(path, layer=layer)["fid_column"]
             frame = pyogrio.read_dataframe(path, layer=layer, force_2d=True, fid_as_index=True)
             if isinstance(frame, geopandas.GeoDataFrame):
-                frame = frame.set_geometry(shapely.force_2d(frame.geometry.to_numpy()), crs=frame.crs)
+                frame = frame.set_geometry(in_plan(frame.geometry.to_numpy()), crs=frame.crs)
     except Exception as error:  # the reader's own exceptions differ by format
         raise InputError("file-unreadable", f"{path.name} cannot be read: {error}", where=where) from error
     return frame, fid_column
+
+
+def in_plan(shapes: np.ndarray) -> np.ndarray:
+    """Return a copy of an array of shapes without z and m; only shapes that have these are made anew."""
+    shapes = shapes.copy()
+    more = shapely.get_coordinate_dimension(shapes) > 2
+    shapes[more] = shapely.force_2d(shapes[more])
+    return shapes
 
 
 def _check_geometry(frame, geometry: str, purpose: str, layer: str, path: Path, where: str) -> None:

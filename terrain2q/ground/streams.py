@@ -397,7 +397,7 @@ class StreamNetwork:
 def feature_ids(frame: geopandas.GeoDataFrame) -> list[str]:
     """Return the ids of a layer's features: the column ``feature_id``, else a running number from 1."""
     if "feature_id" in frame.columns:
-        return [str(value) for value in frame["feature_id"]]
+        return [str(value) for value in frame["feature_id"].tolist()]
     return [str(number) for number in range(1, len(frame) + 1)]
 
 
