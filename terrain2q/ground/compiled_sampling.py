@@ -185,15 +185,24 @@ def interpolate(
         Filled at `here`.
     """
     scaled = scale != 1.0 or offset != 0.0
+    masked = mask.shape[0] > 0
     corner, gap = np.empty(4), np.zeros(4, dtype=np.bool_)
     for p in here:
         c0, c1, r0, r1, u, v = _cell(x[p], y[p], a, b, d, e, c, f, bilinear, width, height)
         c0, c1, r0, r1 = c0 - first_column, c1 - first_column, r0 - first_row, r1 - first_row
+        n, m = np.float64(cells[r0, c0]), np.float64(cells[r0, c1])
+        o, q = np.float64(cells[r1, c0]), np.float64(cells[r1, c1])
+        known = abs(n) < impossible and abs(m) < impossible and abs(o) < impossible and abs(q) < impossible
+        known = known and n != nodata and m != nodata and o != nodata and q != nodata
+        if known and not masked and not scaled:  # as nearly all are
+            upper, lower = n + u * (m - n), o + u * (q - o)
+            out[p] = upper + v * (lower - upper)
+            continue
         gaps = False
         for k in range(4):
             i, j = r0 if k < 2 else r1, c0 if k % 2 == 0 else c1
             value = np.float64(cells[i, j])
-            gap[k] = not abs(value) < impossible or value == nodata or (mask.shape[0] > 0 and mask[i, j] == 0)
+            gap[k] = not abs(value) < impossible or value == nodata or (masked and mask[i, j] == 0)
             gaps |= gap[k]
             corner[k] = value * scale + offset if scaled else value
         if not gaps:
