@@ -104,13 +104,16 @@ def find_chunks(
         Added to.
     """
     per_row, per_column = 1.0 / chunk_rows, 1.0 / chunk_columns
+    half, step = (0.5, 1.0) if bilinear else (0.0, 0.0)
     for i in range(begin, end):
         u, v = x[i] - c, y[i] - f
         column, row = a * u + b * v, d * u + e * v
         if not (-tolerance <= column <= width + tolerance and -tolerance <= row <= height + tolerance):
             keys[i] = OUTSIDE
             continue
-        c0, c1, r0, r1, _, _ = _cell(x[i], y[i], a, b, d, e, c, f, bilinear, width, height)
+        left, top = np.floor(column - half), np.floor(row - half)
+        c0, r0 = int(min(max(left, 0.0), width - 1.0)), int(min(max(top, 0.0), height - 1.0))
+        c1, r1 = int(min(max(left + step, 0.0), width - 1.0)), int(min(max(top + step, 0.0), height - 1.0))
         # a half keeps the quotient off whole numbers, where rounding would tell
         down, right = int((r0 + 0.5) * per_row), int((c0 + 0.5) * per_column)
         if r1 < (down + 1) * chunk_rows and c1 < (right + 1) * chunk_columns:
@@ -143,23 +146,21 @@ def sort_by_chunk(begin, end, keys, free, order):
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def extent_of(here, columns, rows, x, y, a, b, d, e, c, f, bilinear, width, height):
-    """Return first column and row, last column and row of the cells about places and of single cells."""
-    left = top = 2**31 - 1
-    right = bottom = 0
-    for p in here:
-        c0, c1, r0, r1, _, _ = _cell(x[p], y[p], a, b, d, e, c, f, bilinear, width, height)
-        left, top, right, bottom = min(left, c0), min(top, r0), max(right, c1), max(bottom, r1)
+def cells_at(cells, mask, first_row, first_column, columns, rows, nodata, impossible, scale, offset, out):
+    """Fill `out` with the elevations of single cells; see `interpolate`."""
     for i in range(columns.size):
-        left, right = min(left, columns[i]), max(right, columns[i])
-        top, bottom = min(top, rows[i]), max(bottom, rows[i])
-    return left, top, right, bottom
+        row, column = rows[i] - first_row, columns[i] - first_column
+        value = np.float64(cells[row, column])
+        if not abs(value) < impossible or value == nodata or (mask.shape[0] > 0 and mask[row, column] == 0):
+            out[i] = np.nan
+        else:
+            out[i] = value * scale + offset if scale != 1.0 or offset != 0.0 else value
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def interpolate(
-    cells, mask, first_row, first_column, here, x, y, a, b, d, e, c, f, bilinear, width, height, nodata,
-    impossible, tolerance, scale, offset, out,
+    cells, mask, first_row, first_column, here, x, y, a, b, d, e, c, f, bilinear, width, height, tolerance,
+    nodata, impossible, scale, offset, out,
 ):  # fmt: skip
     """Interpolate at places whose cells lie in one piece of a raster.
 
@@ -173,12 +174,12 @@ def interpolate(
         Numbers of the places.
     x, y, a, b, d, e, c, f, bilinear, width, height
         See `find_chunks`.
+    tolerance : float
+        Parts of a cell that are rounding.
     nodata : float
         Value of gaps; NaN where there is none.
     impossible : float
         Values not below it in size are gaps.
-    tolerance : float
-        Parts of a cell that are rounding.
     scale, offset : float
         From values to elevations.
     out : ndarray
