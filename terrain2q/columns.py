@@ -174,6 +174,35 @@ LAYERS: MappingProxyType[str, Layer] = _by_name(
         ("code", "severity", "layer", "feature_id", "message", "remedy"),
         "The place; empty where a finding has none.",
     ),
+    Layer(
+        "road_profiles",
+        "",
+        "Road profiles",
+        "One row for each point of the road at a crossing, in crossing_sections.gpkg.",
+        ("crossing_id", "station", "road_elevation"),
+    ),
+    Layer(
+        "crossing_steps",
+        "",
+        "Steps at crossings",
+        "One row for each crossing at an event, in crossing_sections.gpkg: what its numbers are worked out "
+        "with.",
+        (
+            "crossing_id", "event", "discharge", "event_probability", "weir_coefficient",
+            "tailwater_distance", "allowed_stage", "opening_start", "opening_end", "opening_width",
+        ),
+    ),
+    Layer(
+        "opening_parts",
+        "",
+        "Required openings by subarea",
+        "One row for each subarea of the approach section within the required opening, in "
+        "crossing_sections.gpkg.",
+        (
+            "crossing_id", "event", "subarea", "n", "flow_area", "wetted_perimeter", "conveyance",
+            "discharge",
+        ),
+    ),
 )  # fmt: skip
 """The layers in the order in which they are written."""
 
@@ -444,6 +473,64 @@ COLUMNS: MappingProxyType[str, Column] = _by_name(
         "Probability at crest",
         "Annual exceedance probability of the discharge at the crest, between events; empty beyond them and "
         "where no probabilities are given.",
+    ),
+    Column(
+        "station",
+        float,
+        "length",
+        "Station along the road",
+        "Distance along the road from the crossing, positive to the right looking downstream.",
+    ),
+    Column("road_elevation", float, "length", "Road", "Elevation of the road's surface."),
+    Column(
+        "event_probability",
+        float,
+        "probability",
+        "Probability of the event",
+        "Annual exceedance probability of the event, as the flows give it; empty where they do not.",
+    ),
+    Column(
+        "weir_coefficient",
+        float,
+        "weir_coefficient",
+        "Weir coefficient",
+        "C of the flow over the road, C L H^1.5.",
+    ),
+    Column(
+        "tailwater_distance",
+        float,
+        "length",
+        "Tailwater section below the road",
+        "Distance along the stream from the road's downstream edge to the tailwater section; empty where "
+        "there is none.",
+    ),
+    Column(
+        "allowed_stage",
+        float,
+        "length",
+        "Allowed stage",
+        "Stage at the approach section that leaves the freeboard at the road.",
+    ),
+    Column(
+        "opening_start",
+        float,
+        "length",
+        "Left wall of the opening",
+        "Station of its left wall in the approach section; empty where no opening passes the flow.",
+    ),
+    Column(
+        "opening_end",
+        float,
+        "length",
+        "Right wall of the opening",
+        "Station of its right wall in the approach section; empty where no opening passes the flow.",
+    ),
+    Column(
+        "opening_width",
+        float,
+        "length",
+        "Existing opening",
+        "Clear width of the opening that is there, as its field gives it; empty where it does not.",
     ),
     Column(
         "opening_share",

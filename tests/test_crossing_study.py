@@ -183,7 +183,7 @@ def test_each_number_of_a_crossing_follows_from_its_sheet(folder, results, units
             assert same == stage
             assert (stage, crest, room) == pytest.approx((row.stage, row.crest, row.freeboard), abs=6e-4)
         crest, down, level = map(value, re.search(
-            rf"crest reached: {number} \+ {number} = {number}", sheet
+            rf"reaches the crest at {number} \+ {number} = {number}", sheet
         ).groups())  # fmt: skip
         assert crest + down == pytest.approx(level, abs=0.0021)
         assert level == pytest.approx(value(at_section["crest reached"]), abs=0.006)
@@ -278,3 +278,111 @@ def test_the_demonstration_has_three_verdicts(tmp_path):
     crest = table.drop_duplicates("crossing_id").set_index("crossing_id")["crest"]
     assert crest["C-3"] == 832.63  # surveyed
     assert table.loc[table["crossing_id"] == "C-1", "rank"].tolist() == [1, 1, 1]
+
+
+def test_every_number_of_the_demonstration_can_be_worked_out_from_the_sheets(tmp_path):
+    """Weir, opening, tailwater and probability again from what is printed, by formulas written out here."""
+    from scipy.integrate import quad
+    from scipy.stats import norm
+
+    options = {"output.folder": str(tmp_path), "output.report": "false", "output.sheets": "flagged"}
+    table = run(SAMPLE / "study.toml", options).crossings
+    text = text_of(tmp_path / "calculation_sheets.pdf")
+    _, *parts = re.split(r"^\f?Crossing (.+?)(?: \(continued\))?\s{2,}Ambersole.*$", text, flags=re.M)
+    sheets: dict[str, str] = {}
+    for name, page in zip(parts[::2], parts[1::2], strict=True):
+        sheets[name] = sheets.get(name, "") + page
+    assert set(sheets) == {"C-1", "C-2", "C-3"}
+
+    def value(text: str) -> float:
+        return float(text.replace("−", "-"))
+
+    checked = {"weir": 0, "opening": 0, "tailwater": 0, "probability": 0, "jump": 0}
+    for name, rows in table.groupby("crossing_id"):
+        sheet, flat = sheets[name], " ".join(sheets[name].split())
+        slope, distance = map(value, re.search(r"S × distance = (\S+) × (\S+) =", flat).groups())
+        fall, crest = slope * distance, rows["crest"].iloc[0]
+
+        listed = sheet[sheet.find("Water over the road") : sheet.find("Tailwater at the road")]
+        profile = np.array(
+            [(value(a), value(b)) for a, b in re.findall(r"(−?\d+\.\d\d) (\d+\.\d{3})(?=;?\s)", listed)]
+        )
+        for row in rows.itertuples():
+            if not row.weir_discharge > 0:
+                assert row.stage <= crest
+                assert row.road_width_under_water == row.largest_depth_on_road == 0
+                continue
+            stage = value(re.search(rf"{row.event}: stage (\S+);", flat)[1])
+            coefficient = value(re.search(r"C = (\S+) ft", flat)[1])
+            assert stage == pytest.approx(row.stage, abs=6e-4)
+            depth = stage - profile[:, 1]
+            assert depth.max() == pytest.approx(row.largest_depth_on_road, abs=2e-3)
+            flow = width = 0.0
+            for (x1, d1), (x2, d2) in zip(
+                np.c_[profile[:, 0], depth][:-1], np.c_[profile[:, 0], depth][1:], strict=True
+            ):
+                if max(d1, d2) <= 0:
+                    continue
+                wet = (x2 - x1) * (max(d1, d2) / abs(d1 - d2) if min(d1, d2) < 0 else 1.0)
+                low, high = max(min(d1, d2), 0.0), max(d1, d2)
+                mean = quad(lambda t, low=low, high=high: (low + t * (high - low)) ** 1.5, 0, 1)[0]
+                width += wet
+                flow += coefficient * wet * mean
+            assert width == pytest.approx(row.road_width_under_water, rel=2e-3)
+            assert flow == pytest.approx(row.weir_discharge, rel=2e-3)
+            checked["weir"] += 1
+
+        wanted = re.search(r"freeboard wanted \+ fall = (\S+) − (\S+) \+ (\S+) = (\S+) ft", flat)
+        if wanted:
+            assert value(wanted[1]) - value(wanted[2]) + fall == pytest.approx(value(wanted[4]), abs=2e-3)
+            assert value(wanted[2]) == 1.0  # as the study file asks
+        answered = rows[rows["required_opening"].notna()]
+        assert bool(wanted) == bool(len(answered))
+        for row in answered.itertuples():
+            start, end, width = map(value, re.search(
+                rf"{row.event}\s+(\S+) – (\S+)\s+(\S+)\s+\d+\s+0\.", sheet
+            ).groups())  # fmt: skip
+            assert width == pytest.approx(row.required_opening, abs=6e-3)
+            assert end - start == pytest.approx(width, abs=0.011)
+            block = sheet[sheet.index(f"{row.event}", sheet.index("walls at")) :]
+            carried = 0.0
+            for number, line in enumerate(block.splitlines()):
+                found = re.search(r"(\d+)\s+(0\.\d+)\s+(\S+)\s+(\S+)\s+(\S+)\s+(\S+)$", line.strip())
+                if not found or (number and "–" in line):
+                    break
+                n, area, around, conveyance, flow = map(value, found.groups()[1:])
+                if area > 0.01:
+                    again = 1.48592 / n * area * (area / around) ** (2 / 3)
+                    assert again == pytest.approx(conveyance, rel=2e-3)
+                assert conveyance * slope**0.5 == pytest.approx(flow, rel=2e-3, abs=1e-3)
+                carried += flow
+            assert carried >= row.discharge * (1 - 1e-3)
+            checked["jump"] += carried > row.discharge * (1 + 1e-3)
+            checked["opening"] += 1
+            share = re.search(rf"{row.event} (\S+) / (\S+) = (\d\.\d+)", flat)
+            assert value(share[1]) / value(share[2]) == pytest.approx(row.opening_share, rel=2e-3)
+
+        for row in rows.itertuples():
+            below, rise, there = map(value, re.search(
+                rf"{row.event} (\S+) \+ (\S+) = (\S+) ft[;.]", flat[flat.index("Tailwater at the road") :]
+            ).groups())  # fmt: skip
+            reach = value(re.search(r"S × distance, (\S+) ft", flat)[1])
+            assert rise == pytest.approx(slope * reach, abs=1.1e-3)
+            assert below + rise == pytest.approx(there, abs=2e-3)
+            assert there == pytest.approx(row.tailwater_stage, abs=1e-3)
+            checked["tailwater"] += 1
+
+        over = [r.event for r in rows.itertuples() if r.freeboard <= 0]
+        assert rows["first_event_over"].iloc[0] == (over[0] if over else "")
+        if rows["probability"].notna().any():
+            q1, p1, q2, p2 = map(value, re.search(
+                r"Between \S+ \((\S+) ft³/s, (\S+)\) and \S+ \((\S+) ft³/s, (\S+)\)", flat
+            ).groups())  # fmt: skip
+            share = np.log(rows["crest_discharge"].iloc[0] / q1) / np.log(q2 / q1)
+            z = norm.isf(p1) + share * (norm.isf(p2) - norm.isf(p1))
+            assert norm.sf(z) == pytest.approx(rows["probability"].iloc[0], rel=1e-3)
+            assert value(re.search(r"probability (0\.\d+) a year", flat)[1]) == pytest.approx(
+                norm.sf(z), abs=1e-4
+            )
+            checked["probability"] += 1
+    assert checked == {"weir": 2, "opening": 6, "tailwater": 9, "probability": 1, "jump": 1}

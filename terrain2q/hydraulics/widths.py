@@ -891,6 +891,45 @@ class _Opening:
         )
 
 
+@dataclass(frozen=True)
+class OpeningParts:
+    """An opening in a section at one stage, taken apart by subarea.
+
+    Attributes
+    ----------
+    start, end : float
+        Stations of its walls.
+    flow_area, wetted_perimeter, n, conveyance : ndarray, shape (subareas,)
+        Each wall is wetted perimeter of the subarea it stands in.
+    """
+
+    start: float
+    end: float
+    flow_area: Floats
+    wetted_perimeter: Floats
+    n: Floats
+    conveyance: Floats
+
+
+def opening_parts(section: Section, width: float, stage: float) -> OpeningParts:
+    """Return what an opening of a clear width is made of; see :func:`required_opening`.
+
+    Parameters
+    ----------
+    section : Section
+    width : float
+        >= 0.
+    stage : float
+    """
+    opening = _Opening(section, stage)
+    left, right = opening.walls(np.array([width]))
+    parts = opening.parts(np.array([width]))
+    area, perimeter, n = parts.area[0], parts.perimeter[0], np.broadcast_to(parts.n, parts.area.shape)[0]
+    radius = np.divide(area, perimeter, out=np.zeros_like(area), where=perimeter > 0)
+    conveyance = section.system.manning / n * area * radius ** (2 / 3)
+    return OpeningParts(float(left[0]), float(right[0]), area, perimeter, n, conveyance)
+
+
 def required_opening(section: Section, discharge: ArrayLike, stage: ArrayLike, slope: ArrayLike):
     """Return the least clear width about the channel, between vertical walls, that passes a discharge.
 

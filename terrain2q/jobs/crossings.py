@@ -168,7 +168,8 @@ class CrossingEvent:
         `verdict` is empty where `status` is ``failed``.
     values : mapping of str to float
         ``discharge, stage, freeboard, probability, required_opening, opening_share,
-        road_width_under_water, largest_depth_on_road, weir_discharge, tailwater_stage``.
+        road_width_under_water, largest_depth_on_road, weir_discharge, tailwater_stage``, and
+        ``weir_coefficient, allowed_stage`` (at the approach section) from which they come.
     """
 
     event: str
@@ -235,6 +236,8 @@ class CrossingAnswer:
     findings : tuple of Finding
     rank : int
         From 1, the first to look at.
+    reach : float
+        Metres of road to each side that were searched for the crest and for water on the road.
     """
 
     crossing: Crossing
@@ -255,6 +258,7 @@ class CrossingAnswer:
     events: tuple[CrossingEvent, ...] = ()
     findings: tuple[Finding, ...] = ()
     rank: int = 0
+    reach: float = REACH
 
     @property
     def status(self) -> str:
@@ -896,7 +900,7 @@ def _answer(ready: _Ready, made: list[BuiltSection], inputs: CrossingInputs, eve
     return CrossingAnswer(
         crossing, ready.road, crest, ready.crest.station, float(ready.crest_xy[0]), float(ready.crest_xy[1]),
         _light(approach), _light(tailwater), to_road, from_road, slope, ready.slope_source,
-        crest_discharge, probability, first, answered, _once(findings),
+        crest_discharge, probability, first, answered, _once(findings), reach=inputs.reach,
     )  # fmt: skip
 
 
@@ -951,10 +955,13 @@ def _row(
         "tailwater_stage": np.nan,
         "required_opening": np.nan,
         "opening_share": np.nan,
+        "opening_width": opening if opening > 0 else np.nan,
+        "weir_coefficient": inputs.weir_coefficient,
+        "allowed_stage": crest - inputs.freeboard + slope * to_road,
     }
     if tailwater is not None and tailwater.section is not None:
         row["tailwater_stage"] = float(tailwater.section.normal_stage(q, slope)) + slope * from_road
-    allowed = crest - inputs.freeboard + slope * to_road
+    allowed = row["allowed_stage"]
     try:
         row["required_opening"] = float(section.required_opening(q, allowed, slope))
         if opening > 0:

@@ -7,9 +7,11 @@ from pathlib import Path
 
 import geopandas
 import numpy as np
+import pandas as pd
 import shapely
 
 from terrain2q.columns import COLUMNS, LAYERS
+from terrain2q.hydraulics.widths import opening_parts
 from terrain2q.jobs.crossings import CrossingAnswer, answered_sections
 from terrain2q.output.folder import CROSSING_SECTIONS_NAME as SECTIONS_NAME
 from terrain2q.output.geopackage import write_geopackage
@@ -20,6 +22,7 @@ from terrain2q.units import UnitSystem
 CSV_NAME = "crossings.csv"
 
 _SECTION_LAYERS = ("sections", "subareas", "ratings", "design_stages", "subarea_flows")
+_STEP_LAYERS = ("road_profiles", "crossing_steps", "opening_parts")
 
 
 def crossings_layer(
@@ -92,6 +95,63 @@ def write_crossings_csv(folder: Path, layer: geopandas.GeoDataFrame) -> Path:
     return target
 
 
+def step_layers(answers: Sequence[CrossingAnswer], units: UnitSystem) -> dict[str, pd.DataFrame]:
+    """Return what the numbers of crossings are worked out with, beside the approach and tailwater sections.
+
+    Parameters
+    ----------
+    answers : sequence of CrossingAnswer
+        In SI.
+    units : UnitSystem
+        The study's.
+    """
+    rows: dict[str, dict[str, list]] = {
+        layer: {name: [] for name in LAYERS[layer].columns} for layer in _STEP_LAYERS
+    }
+
+    def add(layer: str, **values) -> None:
+        for name, column in rows[layer].items():
+            column.append(values.get(name, np.nan))
+
+    for answer in sorted(answers, key=lambda a: a.rank):
+        name, section = answer.crossing.crossing_id, answer.approach and answer.approach.section
+        if section is None or answer.road is None:
+            continue
+        near = np.abs(answer.road.stations) <= answer.reach
+        for station, height in zip(answer.road.stations[near], answer.road.heights[near], strict=True):
+            add("road_profiles", crossing_id=name, station=station, road_elevation=height)
+        for event in (e for e in answer.events if e.values):
+            values = event.values
+            known = {
+                "crossing_id": name,
+                "event": event.event,
+                "discharge": values["discharge"],
+                "event_probability": values["probability"],
+                "weir_coefficient": values["weir_coefficient"],
+                "tailwater_distance": answer.from_road,
+                "allowed_stage": values["allowed_stage"],
+                "opening_width": values["opening_width"],
+            }
+            if np.isfinite(values["required_opening"]):
+                parts = opening_parts(section, values["required_opening"], values["allowed_stage"])
+                known |= {"opening_start": parts.start, "opening_end": parts.end}
+                # a wall just over a limit of subareas stands in next to no water
+                for i in np.flatnonzero(parts.conveyance > 1e-9 * parts.conveyance.sum()):
+                    add(
+                        "opening_parts",
+                        crossing_id=name,
+                        event=event.event,
+                        subarea=i + 1,
+                        n=parts.n[i],
+                        flow_area=parts.flow_area[i],
+                        wetted_perimeter=parts.wetted_perimeter[i],
+                        conveyance=parts.conveyance[i],
+                        discharge=parts.conveyance[i] * np.sqrt(answer.slope),
+                    )
+            add("crossing_steps", **known)
+    return {layer: table_in_units(layer, columns, units) for layer, columns in rows.items()}
+
+
 def write_crossing_sections(
     folder: Path,
     answers: Sequence[CrossingAnswer],
@@ -105,8 +165,9 @@ def write_crossing_sections(
 
     It has the very sections from which the numbers of the crossings come, in the layers of the results
     (``sections`` to ``subarea_flows``), for each event of the crossing and at the discharge that reaches the
-    crest; and their lines in the layer ``cut_lines``, which another study can take. None where no crossing
-    has a section. `stages` and `top` are those of a rating.
+    crest; what else the numbers are worked out with (:func:`step_layers`); and the lines of the sections in
+    the layer ``cut_lines``, which another study can take. None where no crossing has a section. `stages` and
+    `top` are those of a rating.
     """
     rows: dict[str, list] = {
         name: []
@@ -132,7 +193,7 @@ def write_crossing_sections(
     with whole_file(target) as temporary:
         write_geopackage(
             temporary,
-            {name: layers[name] for name in _SECTION_LAYERS},
+            {name: layers[name] for name in _SECTION_LAYERS} | step_layers(answers, units),
             units=units,
             crs=crs,
             description="Sections above and below the roads of crossings",

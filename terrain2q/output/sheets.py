@@ -23,6 +23,7 @@ from terrain2q.errors import FAILED, InputError
 from terrain2q.ground.layers import read_layer
 from terrain2q.jobs.crossings import AT_CREST
 from terrain2q.output.calculation import Calculation, Part, area_below, calculate, stretches
+from terrain2q.output.crossing_steps import CrossingSteps, write_steps
 from terrain2q.output.folder import OutputFolder, read_folder
 from terrain2q.output.geopackage import RESULT_NAME
 from terrain2q.output.looks import INK, WATERS, water_tones
@@ -152,7 +153,8 @@ class _Sheets:
         self.rows = _Rows()
         for layer in ("subareas", "design_stages", "subarea_flows"):
             self.rows.take(layer, layers.get(layer))
-        self.rows.take("crossings", layers.get("crossings"), "crossing_id")
+        for layer in ("crossings", "road_profiles", "crossing_steps", "opening_parts"):
+            self.rows.take(layer, layers.get(layer), "crossing_id")
         self.findings: dict[tuple[bool, str], list[dict]] = {}
         for row in () if "findings" not in layers else layers["findings"].to_dict("records"):
             known = row["layer"] in _SECTION_LAYERS
@@ -626,6 +628,9 @@ class _Sheets:
         section = self._section_of(name, first)
         approach = f"{name} approach"
         found: list[Calculation] = []
+        steps = self._steps_of(name, rows)
+        if steps is not None:
+            write_steps(sheet, steps, self.units)
         if self.of_crossings is not None and approach in self.of_crossings.sections:
             self._approach_part(sheet, approach, rows)
         elif section is not None:
@@ -647,7 +652,32 @@ class _Sheets:
         entry = self._entry(f"Crossing {name}", first["road"], found, findings, anchor)
         statuses = {r["status"] for r in rows}
         entry.status = next((s for s in ("failed", "doubtful", "ok") if s in statuses), entry.status)
+        if math.isfinite(first["stage"]):
+            entry.stage = f"{first['stage']:.2f} at the road"
         return sheet, entry
+
+    def _steps_of(self, name: str, rows: Sequence[Mapping]) -> CrossingSteps | None:
+        """Return what the crossing's numbers are worked out with; None where the run kept none."""
+        if self.of_crossings is None:
+            return None
+        kept = self.of_crossings.rows
+        steps = {row["event"]: row for row in kept.of("crossing_steps", name)}
+        if not steps:
+            return None
+        parts: dict[str, list[dict]] = {}
+        for row in kept.of("opening_parts", name):
+            parts.setdefault(row["event"], []).append(row)
+        profile = kept.of("road_profiles", name)
+
+        def stages(which: str) -> dict[str, float]:
+            found = kept.of("design_stages", f"{name} {which}")
+            return {row["event"]: float(row["stage"]) for row in found if math.isfinite(row["stage"])}
+
+        return CrossingSteps(
+            rows, steps, parts, np.array([p["station"] for p in profile], dtype=float),
+            np.array([p["road_elevation"] for p in profile], dtype=float), stages("approach"),
+            stages("tailwater"),
+        )  # fmt: skip
 
     def _approach_part(self, sheet: Sheet, section: str, rows: Sequence[Mapping]) -> None:
         """Write the section that gives the stages, and how each is carried down to the road."""
@@ -673,8 +703,9 @@ class _Sheets:
         at = stages.get(AT_CREST)
         if at is not None:
             sheet.lines(
-                f"{AT_CREST}: {crest:.3f} + {fall:.3f} = {crest + fall:.3f} at the section, where it carries "
-                f"{figures(float(at['discharge']))} {self.flow}; worked out below.",
+                f"Water just reaches the crest at {crest:.3f} + {fall:.3f} = {crest + fall:.3f} at the "
+                f"section, which then carries {figures(float(at['discharge']))} {self.flow} "
+                f"(below as “{AT_CREST}”).",
                 7.2,
                 indent=8,
             )
