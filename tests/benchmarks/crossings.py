@@ -30,6 +30,7 @@ from terrain2q.ground.tiles import Mosaic
 from terrain2q.jobs.crossings import CrossingInputs, screen_crossings
 from terrain2q.jobs.sections import SectionInputs
 from terrain2q.jobs.slopes import OneSlope
+from terrain2q.output.crossing_table import write_crossing_sections
 from terrain2q.units import SI
 
 VALLEYS_A_TILE = 100
@@ -100,12 +101,19 @@ def main(count: int, folder: Path) -> None:
     sections = SectionInputs(terrain, UniformCover(N), None, "none", None, OneSlope(1.0), None, SI)
     inputs = CrossingInputs(crossings, network, sections, flows, 1.6, roads=lines)
     clock = Clock()
-    for name in ("window", "elevations"):
+    for name in ("window", "elevations", "many_elevations"):
         clock.watch(Mosaic, name)
     few = peak_memory()
     began = time.perf_counter()
     answers = screen_crossings(inputs)
     seconds = time.perf_counter() - began
+    most = peak_memory()
+    began = time.perf_counter()
+    kept = write_crossing_sections(folder, answers, SI, CRS, CRS)
+    print(
+        f"sections and steps of all written in {time.perf_counter() - began:.1f} s: "
+        f"{kept.stat().st_size / 1e6:.0f} MB; memory then {peak_memory():.0f} MB"
+    )
     failed = [a.crossing.crossing_id for a in answers if a.status == "failed"]
     off = np.array([
         a.crest_discharge / every[int(a.crossing.stream[1:])].crest_discharge - 1.0
@@ -116,7 +124,7 @@ def main(count: int, folder: Path) -> None:
     ])  # fmt: skip
     print(f"{len(answers)} crossings at 3 events in {seconds:.1f} s: {len(answers) / seconds:.1f} a second")
     print(f"reading the DEM took {100 * clock.seconds / seconds:.0f} % of the time")
-    print(f"memory at the most {peak_memory():.0f} MB, of which {few:.0f} MB before the first crossing")
+    print(f"memory of the screening {most:.0f} MB, of which {few:.0f} MB before the first crossing")
     print(f"failed: {', '.join(failed) or 'none'}")
     print(
         f"crest off by {1000 * np.abs(crest).max():.0f} mm at the most, "
