@@ -55,7 +55,8 @@ def bytes_of(shapes) -> list[bytes | None]:
 
 def test_each_layer_of_the_sample_comes_back_as_it_was(sample):
     stored = StoredLayers(sample.folder / "results.gpkg")
-    assert set(stored) == set(LAYERS)
+    # but for those of crossing_sections.gpkg
+    assert set(stored) == set(LAYERS) - {"road_profiles", "crossing_steps", "opening_parts"}
     for name in stored:
         assert_same(stored[name], sample.layers[name])
     line = stored["sections"].geometry.iloc[0]
