@@ -189,7 +189,8 @@ LAYERS: MappingProxyType[str, Layer] = _by_name(
         "with.",
         (
             "crossing_id", "event", "discharge", "event_probability", "weir_coefficient",
-            "tailwater_distance", "allowed_stage", "opening_start", "opening_end", "opening_width",
+            "tailwater_distance", "allowed_stage", "opening_start", "opening_end", "opening_narrower",
+            "opening_most", "opening_width",
         ),
     ),
     Layer(
@@ -524,6 +525,22 @@ COLUMNS: MappingProxyType[str, Column] = _by_name(
         "length",
         "Right wall of the opening",
         "Station of its right wall in the approach section; empty where no opening passes the flow.",
+    ),
+    Column(
+        "opening_narrower",
+        float,
+        "flow",
+        "Flow of a narrower opening",
+        "Flow at the allowed stage through an opening a thousandth narrower than the required one; empty "
+        "where no opening passes the event.",
+    ),
+    Column(
+        "opening_most",
+        float,
+        "flow",
+        "Most of any opening",
+        "Most that an opening of any width passes at the allowed stage, where none passes the event; else "
+        "empty.",
     ),
     Column(
         "opening_width",

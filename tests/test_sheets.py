@@ -43,7 +43,7 @@ def make(tmp_path, source, which="all") -> str:
 
 
 NUMBER = r"([\d.]+)"
-EVENT = re.compile(rf"^(\S.*?): Q = {NUMBER} (?:ft³/s|m³/s), stage found {NUMBER}", re.M)
+EVENT = re.compile(rf"^(\S.*?): Q = {NUMBER} (?:ft³/s|m³/s), (?:stage found|carried at stage) {NUMBER}", re.M)
 ROW = re.compile(r"^\s*(\d+) .*?(\d\.\d{3,})([*†]?)\s+(?:\[\d+\]\s+)?([\d.]+(?:\s+[\d.]+){5})\s*$", re.M)
 
 
@@ -382,7 +382,7 @@ def test_a_crossing_has_its_sheet(tmp_path):
     path = write_sheets(source, "flagged", tmp_path / "a.pdf")
     assert titles(path)[-2:] == ["Crossings", ["Crossing C-7"]]
     text = text_of(path)
-    assert "4.50 − 5.20 = −0.70" in text
+    assert "4.500 − 5.200 = −0.700" in text
     assert re.search(r"First event over\s+100-year", text)
     assert re.search(r"Discharge at crest\s+150.0 m³/s", text)
     assert "crossing_sections.gpkg" in text

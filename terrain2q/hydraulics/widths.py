@@ -900,7 +900,8 @@ class OpeningParts:
     start, end : float
         Stations of its walls.
     flow_area, wetted_perimeter, n, conveyance : ndarray, shape (subareas,)
-        Each wall is wetted perimeter of the subarea it stands in.
+        Each wall is wetted perimeter of the subarea it stands in. Under a composite n the subareas of the
+        channel share its conveyance by their areas.
     """
 
     start: float
@@ -925,8 +926,7 @@ def opening_parts(section: Section, width: float, stage: float) -> OpeningParts:
     left, right = opening.walls(np.array([width]))
     parts = opening.parts(np.array([width]))
     area, perimeter, n = parts.area[0], parts.perimeter[0], np.broadcast_to(parts.n, parts.area.shape)[0]
-    radius = np.divide(area, perimeter, out=np.zeros_like(area), where=perimeter > 0)
-    conveyance = section.system.manning / n * area * radius ** (2 / 3)
+    conveyance = section._roughness.conveyance(area, perimeter, n, section.system.manning)
     return OpeningParts(float(left[0]), float(right[0]), area, perimeter, n, conveyance)
 
 

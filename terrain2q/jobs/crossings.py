@@ -169,7 +169,8 @@ class CrossingEvent:
     values : mapping of str to float
         ``discharge, stage, freeboard, probability, required_opening, opening_share,
         road_width_under_water, largest_depth_on_road, weir_discharge, tailwater_stage``, and
-        ``weir_coefficient, allowed_stage`` (at the approach section) from which they come.
+        ``weir_coefficient, allowed_stage`` (at the approach section) from which they come; ``opening_most``,
+        what passes at that stage at the most, where no opening passes the event.
     """
 
     event: str
@@ -911,6 +912,11 @@ def _light(built: BuiltSection | None) -> BuiltSection | None:
     return replace(built, section=built.section.reached(()))
 
 
+def without_workings(answer: CrossingAnswer) -> CrossingAnswer:
+    """Return the same answer with sections of its own, so that what is worked out in them goes with them."""
+    return replace(answer, approach=_light(answer.approach), tailwater=_light(answer.tailwater))
+
+
 def _ours(crossing: Crossing, built: BuiltSection, finding: Finding) -> Finding:
     """Return a finding about a section as one about its crossing."""
     name = built.section_id.removeprefix(crossing.crossing_id).strip()
@@ -955,6 +961,7 @@ def _row(
         "tailwater_stage": np.nan,
         "required_opening": np.nan,
         "opening_share": np.nan,
+        "opening_most": np.nan,
         "opening_width": opening if opening > 0 else np.nan,
         "weir_coefficient": inputs.weir_coefficient,
         "allowed_stage": crest - inputs.freeboard + slope * to_road,
@@ -967,6 +974,7 @@ def _row(
         if opening > 0:
             row["opening_share"] = opening / row["required_opening"]
     except NoAnswerError as error:
+        row["opening_most"] = float(error.nearest)
         most = error.nearest * inputs.units.per_si("flow")
         level = length_text(allowed - slope * to_road, inputs.units)
         notes.add(

@@ -11,15 +11,23 @@ import pandas as pd
 import shapely
 
 from terrain2q.columns import COLUMNS, LAYERS
+from terrain2q.errors import DOUBTFUL
 from terrain2q.hydraulics.widths import opening_parts
-from terrain2q.jobs.crossings import CrossingAnswer, answered_sections
+from terrain2q.jobs.crossings import CrossingAnswer, answered_sections, without_workings
+from terrain2q.output.arrow_tables import table_of_frame
 from terrain2q.output.folder import CROSSING_SECTIONS_NAME as SECTIONS_NAME
-from terrain2q.output.geopackage import write_geopackage
+from terrain2q.output.geopackage import GeoPackageWriter
 from terrain2q.output.layers import make_layers, table_in_units, to_crs
 from terrain2q.output.whole_file import whole_file
 from terrain2q.units import UnitSystem
 
 CSV_NAME = "crossings.csv"
+
+_NARROWER = 0.999
+"""How much narrower an opening is that must not pass the event."""
+
+_PIECE = 50
+"""Crossings whose rows are made together, so that thousands are not held at once."""
 
 _SECTION_LAYERS = ("sections", "subareas", "ratings", "design_stages", "subarea_flows")
 _STEP_LAYERS = ("road_profiles", "crossing_steps", "opening_parts")
@@ -130,11 +138,19 @@ def step_layers(answers: Sequence[CrossingAnswer], units: UnitSystem) -> dict[st
                 "weir_coefficient": values["weir_coefficient"],
                 "tailwater_distance": answer.from_road,
                 "allowed_stage": values["allowed_stage"],
+                "opening_most": values["opening_most"],
                 "opening_width": values["opening_width"],
             }
             if np.isfinite(values["required_opening"]):
                 parts = opening_parts(section, values["required_opening"], values["allowed_stage"])
-                known |= {"opening_start": parts.start, "opening_end": parts.end}
+                narrower = opening_parts(
+                    section, _NARROWER * values["required_opening"], values["allowed_stage"]
+                )
+                known |= {
+                    "opening_start": parts.start,
+                    "opening_end": parts.end,
+                    "opening_narrower": narrower.conveyance.sum() * np.sqrt(answer.slope),
+                }
                 # a wall just over a limit of subareas stands in next to no water
                 for i in np.flatnonzero(parts.conveyance > 1e-9 * parts.conveyance.sum()):
                     add(
@@ -163,11 +179,12 @@ def write_crossing_sections(
 ) -> Path | None:
     """Write the approach and tailwater sections into ``crossing_sections.gpkg``; return the file.
 
-    It has the very sections from which the numbers of the crossings come, in the layers of the results
-    (``sections`` to ``subarea_flows``), for each event of the crossing and at the discharge that reaches the
-    crest; what else the numbers are worked out with (:func:`step_layers`); and the lines of the sections in
-    the layer ``cut_lines``, which another study can take. None where no crossing has a section. `stages` and
-    `top` are those of a rating.
+    It has the very sections from which the numbers of the crossings come, in layers as of the results
+    (``sections`` to ``subarea_flows``, and ``findings`` with what is doubtful in their rows), for each event
+    of the crossing and at the discharge that reaches the crest; what else the numbers are worked out with
+    (:func:`step_layers`); and the lines of the sections in the layer ``cut_lines``, which another study can
+    take. None where no crossing has a section. `stages` and `top` are those of a rating. Rows are made some
+    crossings at a time.
     """
     rows: dict[str, list] = {
         name: []
@@ -189,15 +206,24 @@ def write_crossing_sections(
     if not lines:
         return None
     target = Path(folder) / SECTIONS_NAME
-    layers = make_layers(answered_sections(answers, units, stages, top), (), units, terrain_crs, crs)
+    ordered = sorted(answers, key=lambda a: a.rank)
     with whole_file(target) as temporary:
-        write_geopackage(
+        with GeoPackageWriter(
             temporary,
-            {name: layers[name] for name in _SECTION_LAYERS} | step_layers(answers, units),
+            (*_SECTION_LAYERS, *_STEP_LAYERS, "findings"),
             units=units,
             crs=crs,
             description="Sections above and below the roads of crossings",
-        )
+        ) as writer:
+            for start in range(0, len(ordered), _PIECE):
+                piece = [without_workings(a) for a in ordered[start : start + _PIECE]]
+                answered = answered_sections(piece, units, stages, top)
+                # why a section's row is doubtful; what is only good to know is left out
+                doubts = [f for a in answered for f in a.findings if f.severity == DOUBTFUL]
+                layers = make_layers(answered, doubts, units, terrain_crs, crs)
+                layers |= step_layers(piece, units)
+                for name in writer.counts:
+                    writer.append(name, table_of_frame(name, layers[name]))
         geopandas.GeoDataFrame(rows, geometry=lines, crs=crs).to_file(
             temporary, layer="cut_lines", driver="GPKG", engine="pyogrio", mode="a"
         )

@@ -50,6 +50,7 @@ def draw_section(
     waters: Sequence[Water],
     unit: str,
     marks: Mapping[str, float] | None = None,
+    along: str = "",
 ) -> float:
     """Draw ground, subareas and water; return the height used.
 
@@ -61,13 +62,15 @@ def draw_section(
     profile : ndarray, shape (n, 4)
         x, y, elevation and station.
     subareas : sequence of mapping
-        Rows of `subareas`.
+        Rows of `subareas`; the ground has one tone where there are none.
     waters : sequence of Water
         The lowest first.
     unit : str
         Of length.
     marks : mapping of str to float, optional
         Levels to mark, such as the crest of a road.
+    along : str, optional
+        What stands below the axis, where it is not the stations of a section.
     """
     marks = marks or {}
     station, z = profile[:, 3], profile[:, 2]
@@ -90,6 +93,10 @@ def draw_section(
         for stretch in water.stretches:
             page.area(_thin(place(outline(profile, stretch))), water.tone)
     line = np.column_stack([station, z])
+    if not subareas:
+        page.area(
+            _thin(place(np.vstack([line, [[station[-1], floor], [station[0], floor]]]))), EARTHS[0]
+        )  # fmt: skip
     _subareas(page, line, subareas, place, floor, across)
     page.line(_thin(place(line)), 1.5, GROUND_EDGE)
     page.unclip()
@@ -102,8 +109,11 @@ def draw_section(
         if np.isfinite(level):
             y = y0 + (level - floor) * up
             page.line([(x0, y), (x1, y)], 0.9, WALL, (5, 2))
-            page.text(x1 - 2, y + 2, name, 6.3, colour=WALL, align="right")
-    _axes(page, (x0, y0, x1, y1), (station[0], station[-1]), (floor, ceiling), low, unit)
+            wide = text_width(name, 6.3)
+            page.box(x1 - wide - 4, y + 0.8, wide + 4, 7.4, "#ffffff")
+            page.text(x1 - 2, y + 2.4, name, 6.3, colour=WALL, align="right")
+    along = along or f"Station [{unit}], from left to right looking downstream"
+    _axes(page, (x0, y0, x1, y1), (station[0], station[-1]), (floor, ceiling), low, unit, along)
     page.text(
         x1, y1 + 4, f"vertical scale {exaggeration:.3g} times the horizontal", 6.3, colour=GREY, align="right"
     )
@@ -184,7 +194,7 @@ def nice_steps(low: float, high: float, about: int) -> list[float]:
     return [i * step for i in range(first, last + 1)]
 
 
-def _axes(page: Page, frame, across, up, low: float, unit: str) -> None:
+def _axes(page: Page, frame, across, up, low: float, unit: str, along: str) -> None:
     x0, y0, x1, y1 = frame
     page.line([(x0, y1), (x0, y0), (x1, y0)], 0.6, INK)
     for level in nice_steps(low, up[1], 5):
@@ -195,10 +205,7 @@ def _axes(page: Page, frame, across, up, low: float, unit: str) -> None:
         x = x0 + (station - across[0]) / (across[1] - across[0]) * (x1 - x0)
         page.line([(x, y0 - 3), (x, y0)], 0.5, INK)
         page.text(x, y0 - 10, f"{station:g}", 6.3, colour=INK, align="center")
-    page.text(
-        0.5 * (x0 + x1), y0 - 20, f"Station [{unit}], from left to right looking downstream", 6.8,
-        colour=INK, align="center",
-    )  # fmt: skip
+    page.text(0.5 * (x0 + x1), y0 - 20, along, 6.8, colour=INK, align="center")
     page.text(x0 - 32, 0.5 * (y0 + y1), f"Elevation [{unit}]", 6.8, colour=INK, align="center", turned=True)
 
 

@@ -124,6 +124,8 @@ class Sheet:
         The line at the foot of every page.
     anchor : str
         The name by which links find the sheet; none where empty.
+    signed_first : bool
+        Whether it is signed on its first page, where a long sheet has what it comes to, not on its last.
     """
 
     def __init__(
@@ -134,8 +136,10 @@ class Sheet:
         beside: str,
         foot: str,
         anchor: str = "",
+        *,
+        signed_first: bool = False,
     ) -> None:
-        self._writer, self._size = writer, size
+        self._writer, self._size, self._signed_first = writer, size, signed_first
         self._heading, self._beside, self._foot = heading, beside, foot
         self.pages: list[Page] = []
         self.y = 0.0
@@ -164,7 +168,8 @@ class Sheet:
     @property
     def room(self) -> float:
         """Height left on the page."""
-        return self.y - MARGIN - _FOOT
+        kept = _SIGN if self._signed_first and len(self.pages) == 1 else 0.0
+        return self.y - MARGIN - _FOOT - kept
 
     def need(self, height: float) -> None:
         """Turn the page where less than `height` is left."""
@@ -251,6 +256,32 @@ class Sheet:
             self._row(columns, edges, last, size, "bold")
         self.y -= 0.5 * step
 
+    def beside(
+        self, columns: Sequence[TableColumn], rows: Sequence[Sequence[str]], *, size: float = 6.8,
+        gap: float = 14.0,
+    ) -> None:  # fmt: skip
+        """Draw a long, narrow table in blocks beside one another, each read down before the next."""
+        wide = sum(c.width for c in columns)
+        blocks = max(1, int((self.width + gap) // (wide + gap)))
+        step, head = size * 1.55, size * 2.6 + 4
+        empty = [""] * len(columns)
+        all_columns = list(columns)
+        for _ in range(blocks - 1):
+            all_columns += [TableColumn("", "", gap), *columns]
+        at = 0
+        while at < len(rows):
+            self.need(head + 6 * step)
+            fits = max(1, int((self.room - head - 2 * size) / step))
+            count = min(math.ceil((len(rows) - at) / blocks), fits)
+            lines = []
+            for i in range(at, at + count):
+                line: list[str] = []
+                for j in range(i, i + blocks * count, count):
+                    line += [*([""] if line else []), *(rows[j] if j < len(rows) else empty)]
+                lines.append(line)
+            self.table(all_columns, lines, size=size)
+            at += blocks * count
+
     def _head(self, columns, edges, size: float, two: bool) -> None:
         step = size * 1.3
         height = step * (2 if two else 1) + 4
@@ -283,15 +314,19 @@ class Sheet:
     # --- the end ---------------------------------------------------------------------------------
 
     def sign(self) -> None:
-        """Leave room for who made and who checked the sheet, at the foot of its last page."""
-        self.need(_SIGN)
+        """Leave room for who made and who checked the sheet, at the foot of its last page, or its first."""
+        if self._signed_first:
+            page = self.pages[0]
+        else:
+            self.need(_SIGN)
+            page = self.page
         bottom = MARGIN + _FOOT - 4
         parts = (("Made by", 0.38), ("Checked by", 0.38), ("Date", 0.24))
         x = self.left
         for name, share in parts:
             width = self.width * share
-            self.page.box(x, bottom, width, 30, None, RULE)
-            self.page.text(x + 4, bottom + 21, name, 6.8, colour=GREY)
+            page.box(x, bottom, width, 30, None, RULE)
+            page.text(x + 4, bottom + 21, name, 6.8, colour=GREY)
             x += width
 
     def finish(self, number: int, *, front: bool = False) -> int:

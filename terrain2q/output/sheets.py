@@ -21,13 +21,19 @@ import shapely
 from terrain2q.columns import CAUTION, COLUMNS
 from terrain2q.errors import FAILED, InputError
 from terrain2q.ground.layers import read_layer
-from terrain2q.jobs.crossings import AT_CREST
+from terrain2q.jobs.crossings import AT_CREST, DEFAULT_RANK
 from terrain2q.output.calculation import Calculation, Part, area_below, calculate, stretches
-from terrain2q.output.crossing_steps import CrossingSteps, write_steps
+from terrain2q.output.crossing_steps import (
+    CrossingSteps,
+    write_opening,
+    write_probability,
+    write_road,
+    write_tailwater,
+)
 from terrain2q.output.folder import OutputFolder, read_folder
 from terrain2q.output.geopackage import RESULT_NAME
 from terrain2q.output.looks import INK, WATERS, water_tones
-from terrain2q.output.pdf import PdfWriter
+from terrain2q.output.pdf import PdfWriter, text_width
 from terrain2q.output.run_record import sha256_of
 from terrain2q.output.sheet_drawings import Plan, Water, draw_plan, draw_section, stroke
 from terrain2q.output.sheet_layout import GREY, SIZES, Sheet, TableColumn, figures, fitted, roughness_text
@@ -62,7 +68,13 @@ _CROSSING_NUMBERS = (
     "required_opening", "opening_share",
 )  # fmt: skip
 
+_SHORT = {"opening_share": "Share there is", "required_opening": "Required opening"}
+"""Titles for narrow columns."""
+
 _INDEX_FIRST, _INDEX_NEXT, _INDEX_SIZE = 30, 56, 7.0
+
+_STAGES_WIDTH = 145.0
+"""Room for the stages of a crossing in the index, in points."""
 
 
 def write_sheets(
@@ -143,8 +155,9 @@ class _Rows:
 class _Sheets:
     """All sheets of an output folder."""
 
-    def __init__(self, source: OutputFolder, which: str) -> None:
+    def __init__(self, source: OutputFolder, which: str, *, inside: bool = False) -> None:
         self.source, self.units = source, source.units
+        self.inside = inside  # sections on the sheets of crossings
         layers = source.layers
         self.length, self.area, self.flow, self.velocity = (
             source.units.symbol(q) for q in ("length", "area", "flow", "velocity")
@@ -153,8 +166,9 @@ class _Sheets:
         self.rows = _Rows()
         for layer in ("subareas", "design_stages", "subarea_flows"):
             self.rows.take(layer, layers.get(layer))
-        for layer in ("crossings", "road_profiles", "crossing_steps", "opening_parts"):
+        for layer in ("crossings", "crossing_steps", "opening_parts"):
             self.rows.take(layer, layers.get(layer), "crossing_id")
+        self.roads = _roads(layers.get("road_profiles"))
         self.findings: dict[tuple[bool, str], list[dict]] = {}
         for row in () if "findings" not in layers else layers["findings"].to_dict("records"):
             known = row["layer"] in _SECTION_LAYERS
@@ -220,7 +234,7 @@ class _Sheets:
     def of_crossings(self) -> _Sheets | None:
         """The sections that were laid out for crossings; None where the run kept none."""
         layers = self.source.crossing_layers
-        return _Sheets(replace(self.source, layers=layers), ALL) if layers else None
+        return _Sheets(replace(self.source, layers=layers), ALL, inside=True) if layers else None
 
     @cached_property
     def tones(self) -> dict[str, tuple[str, int]]:
@@ -229,6 +243,8 @@ class _Sheets:
         if stages is None or not len(stages):
             return {}
         typical = stages.groupby("event")["discharge"].median()
+        # water that just reaches the crest is of no event: it is a line, and takes no tone from them
+        typical = typical[typical.index != AT_CREST] if self.inside else typical
         order = sorted(typical.index, key=lambda e: (not np.isfinite(typical[e]), typical[e]))
         return {e: (tone, i) for i, (e, tone) in enumerate(zip(order, water_tones(len(order)), strict=True))}
 
@@ -242,7 +258,16 @@ class _Sheets:
             calculate(row, subareas, flows.get(row["event"], ()), self.units, self.composite)
             for row in self.rows.of("design_stages", name)
         ]
-        return sorted(found, key=lambda c: (not c.answered, -c.row["discharge"] if c.answered else 0.0))
+        return sorted(
+            found,
+            key=lambda c: (
+                self._is_at_crest(c), not c.answered, -c.row["discharge"] if c.answered else 0.0
+            ),
+        )  # fmt: skip
+
+    def _is_at_crest(self, one: Calculation) -> bool:
+        """Return whether a calculation is of the water that just reaches a crest, not of an event."""
+        return self.inside and one.event == AT_CREST
 
     def _length(self, value: float, decimals: int = 2) -> str:
         return f"{value:.{decimals}f} {self.length}" if math.isfinite(value) else "–"
@@ -271,7 +296,7 @@ class _Sheets:
         """Draw all that a sheet has about a section; a crossing's sheet has it too."""
         row = self.sections[name]
         profile = _profile(row["geometry"])
-        waters = [self._water(c, profile) for c in found if c.answered]
+        waters = [self._water(c, profile) for c in found if c.answered and not self._is_at_crest(c)]
         self._facts(sheet, row, found, point)
         if len(profile) > 1:
             sheet.need(160)
@@ -284,6 +309,8 @@ class _Sheets:
         else:
             sheet.title("No section")
             sheet.lines("The cut line gave no profile; the findings say why.")
+        if self.inside:
+            self._doubts(sheet, name)
         for place, one in enumerate(found):
             self._event(sheet, one, profile, first=place == 0)
         if not found:
@@ -349,17 +376,9 @@ class _Sheets:
     # --- an event ---------------------------------------------------------------------------------
 
     def _event(self, sheet: Sheet, one: Calculation, profile: np.ndarray, *, first: bool) -> None:
-        row = one.row
+        self._title(sheet, one)
         if not one.answered:
-            sheet.title(f"{one.event}: no answer", row["status"])
-            sheet.lines("There is no stage at this event; the findings say why.")
             return
-        sheet.title(
-            f"{one.event}: Q = {figures(row['discharge'])} {self.flow}, stage found "
-            f"{self._length(row['stage'])}, depth {self._length(row['depth'])}",
-            f"status: {row['status']}",
-            keep=30 + _ROW * (min(len(one.parts), _UNBROKEN) + 2),  # a short table is not broken,
-        )
         sources = self._table(sheet, one, first)
         if first:
             for number, source in enumerate(sources, 1):
@@ -369,6 +388,20 @@ class _Sheets:
             self._worked(sheet, one)
         self._whole(sheet, one)
         self._checks(sheet, one, profile, whole=first)
+
+    def _title(self, sheet: Sheet, one: Calculation) -> None:
+        row = one.row
+        if not one.answered:
+            sheet.title(f"{one.event}: no answer", row["status"])
+            sheet.lines("There is no stage at this event; the findings say why.")
+            return
+        found = "carried at stage" if self._is_at_crest(one) else "stage found"
+        sheet.title(
+            f"{one.event}: Q = {figures(row['discharge'])} {self.flow}, {found} "
+            f"{self._length(row['stage'])}, depth {self._length(row['depth'])}",
+            f"status: {row['status']}",
+            keep=30 + _ROW * (min(len(one.parts), _UNBROKEN) + 2),  # a short table is not broken
+        )
 
     def _table(self, sheet: Sheet, one: Calculation, first: bool) -> list[str]:
         """Draw the table by subarea; return the sources of n in the order of their numbers."""
@@ -532,7 +565,7 @@ class _Sheets:
         asked, carried = float(row["discharge"]), one.total("discharge")
         off = abs(carried / asked - 1.0)
         yield [
-            "Sum of subareas, design flow",
+            f"Sum of subareas, {'discharge above' if self._is_at_crest(one) else 'design flow'}",
             f"{figures(carried, 5)} against {figures(asked, 5)} {self.flow}: {100 * off:.2f} % apart",
             verdict(off < _SUM_TOLERANCE),
         ]
@@ -599,13 +632,20 @@ class _Sheets:
             sheet.lines(one["remedy"], 6.8, colour=GREY, indent=10)
         sheet.space(4)
 
+    def _doubts(self, sheet: Sheet, name: str) -> None:
+        """Say below the drawing of a crossing's section why some of its events are doubtful."""
+        for one in self.findings.get((True, name), []):
+            sheet.lines(f"{one['severity']}: {one['message']}  [{one['code']}]", 7.2, hang=10)
+            sheet.space(3)
+
     # --- a crossing -------------------------------------------------------------------------------
 
     def _crossing_sheet(self, writer: PdfWriter, name: str, anchor: str) -> tuple[Sheet, _Entry]:
         rows = self.rows.of("crossings", name)
         sheet = Sheet(
-            writer, self.size, f"Crossing {name}", fitted(self.source.name, 260, 8), CAUTION, anchor
-        )
+            writer, self.size, f"Crossing {name}", fitted(self.source.name, 260, 8), CAUTION, anchor,
+            signed_first=True,
+        )  # fmt: skip
         first = max(rows, key=lambda r: r["discharge"] if math.isfinite(r["discharge"]) else -math.inf)
         self._crossing_facts(sheet, first)
         sheet.title("Verdict by event", keep=50)
@@ -614,23 +654,25 @@ class _Sheets:
             TableColumn("Q", self.flow, 50),
             TableColumn("stage at road", self.length, 60),
             TableColumn("crest − stage = freeboard", self.length, 130),
-            TableColumn("verdict", "", 110, words=True),
+            TableColumn("", "", 10),
+            TableColumn("verdict", "", 100, words=True),
             TableColumn("status", "", 50, words=True),
         ]
         sheet.table(columns, [self._crossing_row(r) for r in rows])
+        steps = self._steps_of(name, rows)
+        self._verdict_rule(sheet, rows, steps)
         about = [n for n in _CROSSING_NUMBERS if n in first and any(math.isfinite(r[n]) for r in rows)]
         if about:
-            sheet.title("Water on the road and the opening it needs", keep=50)
-            columns = [TableColumn("event", "", 80, words=True)] + [
-                TableColumn(COLUMNS[n].title, self._unit(n), 30 + 3.2 * len(COLUMNS[n].title)) for n in about
+            sheet.title("Water on the road, tailwater and opening", keep=50)
+            columns = [TableColumn("event", "", 60, words=True)] + [
+                TableColumn(_SHORT.get(n, COLUMNS[n].title), self._unit(n), 76) for n in about
             ]
             sheet.table(columns, [[r["event"], *(_shown(n, float(r[n])) for n in about)] for r in rows])
+        findings = self.findings.get((False, name), [])
+        self._findings(sheet, findings)
         section = self._section_of(name, first)
         approach = f"{name} approach"
         found: list[Calculation] = []
-        steps = self._steps_of(name, rows)
-        if steps is not None:
-            write_steps(sheet, steps, self.units)
         if self.of_crossings is not None and approach in self.of_crossings.sections:
             self._approach_part(sheet, approach, rows)
         elif section is not None:
@@ -646,14 +688,18 @@ class _Sheets:
                 "gives the section a sheet on which its stage can be followed.",
                 7.3,
             )
+        if steps is not None:
+            write_probability(sheet, steps, self.units)
+            write_road(sheet, steps, self.units)
+            write_opening(sheet, steps, self.units)
+            if write_tailwater(sheet, steps, self.units):
+                self.of_crossings._short_part(sheet, f"{name} tailwater", float(first["crest"]))
         findings = self.findings.get((False, name), [])
-        self._findings(sheet, findings)
         sheet.sign()
         entry = self._entry(f"Crossing {name}", first["road"], found, findings, anchor)
         statuses = {r["status"] for r in rows}
         entry.status = next((s for s in ("failed", "doubtful", "ok") if s in statuses), entry.status)
-        if math.isfinite(first["stage"]):
-            entry.stage = f"{first['stage']:.2f} at the road"
+        entry.stage = _stages_at_road(rows)
         return sheet, entry
 
     def _steps_of(self, name: str, rows: Sequence[Mapping]) -> CrossingSteps | None:
@@ -667,17 +713,33 @@ class _Sheets:
         parts: dict[str, list[dict]] = {}
         for row in kept.of("opening_parts", name):
             parts.setdefault(row["event"], []).append(row)
-        profile = kept.of("road_profiles", name)
+        stations, road = self.of_crossings.roads.get(name, (np.zeros(0), np.zeros(0)))
 
         def stages(which: str) -> dict[str, float]:
             found = kept.of("design_stages", f"{name} {which}")
             return {row["event"]: float(row["stage"]) for row in found if math.isfinite(row["stage"])}
 
+        zones = {int(r["subarea"]): r["zone"] for r in kept.of("subareas", f"{name} approach")}
         return CrossingSteps(
-            rows, steps, parts, np.array([p["station"] for p in profile], dtype=float),
-            np.array([p["road_elevation"] for p in profile], dtype=float), stages("approach"),
-            stages("tailwater"),
+            rows, steps, parts, stations, road, stages("approach"), stages("tailwater"), zones,
+            self.composite, self.of_crossings.tones,
         )  # fmt: skip
+
+    def _verdict_rule(self, sheet: Sheet, rows: Sequence[Mapping], steps: CrossingSteps | None) -> None:
+        """Say how verdicts follow from freeboard, and which event is the first over."""
+        wanted = ""
+        if steps is not None:
+            step, row = next(iter(steps.steps.values())), rows[0]
+            room = row["crest"] + row["slope"] * row["approach_distance"] - step["allowed_stage"]
+            wanted = f" of {room:.2f} {self.length}"
+        sheet.lines(
+            "Over the crest: freeboard of 0 or less; within freeboard: less than the freeboard wanted"
+            f"{wanted}; else crest not reached. The first event over is that of least discharge over the "
+            "crest.",
+            7.0,
+            colour=GREY,
+        )
+        sheet.space(3)
 
     def _approach_part(self, sheet: Sheet, section: str, rows: Sequence[Mapping]) -> None:
         """Write the section that gives the stages, and how each is carried down to the road."""
@@ -688,8 +750,9 @@ class _Sheets:
         fall = slope * distance
         sheet.title("From the approach section to the road", keep=70)
         sheet.lines(
-            f"Fall to the road = S × distance = {figures(slope, 4)} × {distance:.1f} = {fall:.2f} "
-            f"{self.length}; freeboard = crest − (stage at the section − fall), crest {crest:.2f}:",
+            f"Fall to the road = S × distance = {figures(slope, 4)} × {distance:.1f} = {fall:.3f} "
+            f"{self.length}. Stage at the section − fall = stage at the road; crest − stage at the road = "
+            "freeboard:",
             7.3,
         )
         for row in rows:
@@ -709,28 +772,72 @@ class _Sheets:
                 7.2,
                 indent=8,
             )
+        sheet.space(4)
         sheet.title(f"Section {section}", keep=120)
-        self.of_crossings._section_part(sheet, section, found)
+        # the crest as seen from the section: as much higher as the water falls to the road
+        marks = {"water just reaches the crest": crest + fall}
+        self.of_crossings._section_part(sheet, section, found, marks)
+
+    def _short_part(self, sheet: Sheet, name: str, crest: float) -> None:
+        """Draw a section that gives no more than stages: its ground and water, and each discharge."""
+        row = self.sections.get(name)
+        if row is None:
+            return
+        found, profile = self._calculations(name), _profile(row["geometry"])
+        # the heading, a line, the drawing and a table that is not broken stay together
+        sheet.title(f"Section {name}", keep=180)
+        sheet.lines(
+            f"{self._length(row['length'], 1)} long, {int(row['points'])} points; lowest ground "
+            f"{self._length(row['lowest_ground'])}; S = {figures(row['slope'], 4)}. In each subarea "
+            f"K = (k/n) · A · R^(2/3), k = {self._k}; Σ K · √S is the discharge.",
+            7.2,
+        )
+        sheet.space(10)
+        waters = sorted(
+            (self._water(c, profile) for c in found if c.answered), key=lambda w: (w.stage, w.area)
+        )
+        if len(profile) > 1:
+            sheet.space(4 + draw_section(
+                sheet.page, sheet.left, sheet.y, sheet.width, 150.0, profile, self.rows.of("subareas", name),
+                waters, self.length, {"crest of the road": crest},
+            ))  # fmt: skip
+        self._doubts(sheet, name)
+        for one in found:
+            self._title(sheet, one)
+            if not one.answered:
+                continue
+            self._table(sheet, one, False)
+            self._remarks(sheet, one)
+            k = figures(one.total("conveyance"), 5)
+            sheet.lines(
+                f"Q = ΣK · √S = {k} × √{figures(one.row['slope'], 4)} = "
+                f"{figures(one.total('discharge'), 5)} {self.flow}",
+                7.2,
+            )
+            sheet.space(4)
 
     def _crossing_facts(self, sheet: Sheet, row: Mapping) -> None:
         """Write where the crossing is, and draw a piece of map about it."""
         facts = [
             ("Road", row["road"] or "not named"),
             ("Stream", row["stream"] or "not named"),
-            ("Crest", f"{self._length(row['crest'])}, where water would first pass the road"),
+            ("Crest", f"{self._length(row['crest'], 3)}, where water would first pass the road"),
             ("First event over", row["first_event_over"] or "none"),
             ("Discharge at crest", f"{figures(float(row['crest_discharge']))} {self.flow}"),
         ]
-        for word, name, where in (
-            ("Crest from stream", "overflow_station", "along the road, positive to the right"),
-            ("Approach section", "approach_distance", "above the road"),
-        ):
-            if name in row and math.isfinite(row[name]):
-                facts.append((word, f"{self._length(row[name], 1)} {where}"))
+        if math.isfinite(place := row.get("overflow_station", math.nan)):
+            side = "right" if place > 0 else "left"
+            where = "at the stream" if place == 0 else f"to the {side} along the road, looking downstream"
+            facts.append(("Crest from stream", f"{self._length(abs(place), 1)} {where}"))
+        if math.isfinite(distance := row.get("approach_distance", math.nan)):
+            facts.append(("Approach section", f"{self._length(distance, 1)} above the road"))
         if "slope" in row and math.isfinite(row["slope"]):
             facts.append(("Slope", figures(row["slope"], 4)))
         if math.isfinite(row.get("rank", float("nan"))):
-            facts.append(("Rank", f"{int(row['rank'])} of {len(self.crossings)}"))
+            rule = ", then ".join(self.source.settings.get("crossings", {}).get("rank") or DEFAULT_RANK)
+            facts.append(("Rank", f"{int(row['rank'])} of {len(self.crossings)}, by {rule}"))
+        if math.isfinite(chance := row.get("probability", math.nan)):
+            facts.insert(5, ("Exceeded", f"with probability {figures(chance, 3)} in any year"))
         point = row.get("geometry")
         line, length = (None, 0.0) if point is None else self._about(point)
         self._fact_list(sheet, facts, None if line is None else (line, length, None, WATERS[2], point, False))
@@ -756,10 +863,10 @@ class _Sheets:
         crest, stage, free = (float(row[n]) for n in ("crest", "stage", "freeboard"))
         numbers = "–"
         if row["status"] != FAILED and all(math.isfinite(v) for v in (crest, stage, free)):
-            numbers = f"{crest:.2f} − {stage:.2f} = {free:.2f}".replace("-", "−")
+            numbers = f"{crest:.3f} − {stage:.3f} = {free:.3f}".replace("-", "−")
         return [
-            row["event"], figures(float(row["discharge"])), f"{stage:.2f}" if math.isfinite(stage) else "–",
-            numbers, row["verdict"] or "–", row["status"],
+            row["event"], figures(float(row["discharge"])), f"{stage:.3f}" if math.isfinite(stage) else "–",
+            numbers, "", row["verdict"] or "–", row["status"],
         ]  # fmt: skip
 
     # --- the index --------------------------------------------------------------------------------
@@ -799,15 +906,22 @@ class _Sheets:
         sheet.space(3)
         sheet.lines(CAUTION, 7.4, face="bold")
         sheet.space(6)
+        stages = ["of a section that of its largest event"] if self.chosen else []
+        if self.crossings:
+            events = [row["event"] for row in self.rows.of("crossings", self.crossings[0])]
+            stages.append(f"of a crossing those at the road, of {', '.join(events)} in turn")
+        if stages:
+            sheet.lines(f"Stages are: {'; '.join(stages)}.", 7.0, colour=GREY)
+            sheet.space(3)
         if not self.entries:
             sheet.lines("No section has a finding or a crossing, so that there are no sheets.", 8)
         columns = [
             TableColumn("sheet", "", 130, words=True),
             TableColumn("stream or road", "", 130, words=True),
-            TableColumn("status", "", 60, words=True),
-            TableColumn("findings", "", 50),
-            TableColumn(f"stage of the largest event [{self.length}]", "", 120),
-            TableColumn("page", "", 40),
+            TableColumn("status", "", 50, words=True),
+            TableColumn("findings", "", 40),
+            TableColumn(f"stage [{self.length}]", "", 150),
+            TableColumn("page", "", 35),
         ]
         first, rest = self.entries[:_INDEX_FIRST], self.entries[_INDEX_FIRST:]
         blocks = [first, *(rest[i : i + _INDEX_NEXT] for i in range(0, len(rest), _INDEX_NEXT))]
@@ -828,9 +942,32 @@ class _Sheets:
         sheet.table(columns, rows, size=_INDEX_SIZE, on_row=link)
 
 
+def _stages_at_road(rows: Sequence[Mapping]) -> str:
+    """Return the stage at the road of each event; the lowest and the highest where all would not fit."""
+    texts = [f"{r['stage']:.2f}" if math.isfinite(r["stage"]) else "–" for r in rows]
+    text = ", ".join(texts)
+    known = [float(r["stage"]) for r in rows if math.isfinite(r["stage"])]
+    if known and text_width(text, _INDEX_SIZE) > _STAGES_WIDTH:
+        return f"{min(known):.2f} to {max(known):.2f}"
+    return text if known else "–"
+
+
+def _roads(table) -> dict[str, tuple[np.ndarray, np.ndarray]]:
+    """Return stations and elevations of each crossing's road; its rows stand together."""
+    if table is None or not len(table):
+        return {}
+    names = table["crossing_id"].to_numpy(dtype=object)
+    starts = np.flatnonzero(np.concatenate([[True], names[1:] != names[:-1]]))
+    ends = [*starts[1:], len(names)]
+    x, z = table["station"].to_numpy(dtype=float), table["road_elevation"].to_numpy(dtype=float)
+    return {names[a]: (x[a:b], z[a:b]) for a, b in zip(starts, ends, strict=True)}
+
+
 def _shown(column: str, value: float) -> str:
-    """Return a number with four figures, a level of water with two decimals."""
-    return f"{value:.2f}" if column.endswith("stage") and math.isfinite(value) else figures(value)
+    """Return a number with four figures, a level of water with three decimals."""
+    if not math.isfinite(value):
+        return "–"
+    return f"{value:.3f}" if column.endswith("stage") else figures(value)
 
 
 def _is_line(geometry: Any) -> bool:
