@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from contextlib import closing
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -24,7 +25,6 @@ from terrain2q.jobs.crossings import (
     SNAP,
     CrossingAnswer,
     CrossingInputs,
-    screen_crossings,
 )
 from terrain2q.jobs.sections import SectionInputs
 from terrain2q.study import Study, nearest
@@ -160,7 +160,9 @@ def screen_study(
     sections: SectionInputs,
     streams: geopandas.GeoDataFrame,
     flows: Sequence[Flow],
-    progress: Callable | None = None,
+    progress: Callable[[int, int, str], None],
+    jobs: int = 1,
+    scheduler: str | None = None,
 ) -> Screened:
     """Screen the crossings of a study.
 
@@ -168,27 +170,39 @@ def screen_study(
     ----------
     study, sections, streams, flows
         As for :func:`crossing_inputs`.
-    progress : callable, optional
+    progress : callable
         ``progress(done, total, label)``.
+    jobs : int
+        Processes on this machine.
+    scheduler : str, optional
+        Address of a Dask scheduler, whose cluster then does the work.
     """
+    from terrain2q.batches.crossings import screen_in_batches
+
     inputs, findings = crossing_inputs(study, sections, streams, flows)
-    answers = tuple(screen_crossings(inputs, progress))
+    answers = tuple(screen_in_batches(inputs, jobs, scheduler, progress))
     findings = [*findings, *(f for a in answers for f in a.findings)]
     return Screened(inputs, answers, tuple(findings))
 
 
 def write_crossings(
-    screened: Screened, layer: geopandas.GeoDataFrame, study: Study, folder: Path
+    screened: Screened,
+    layer: geopandas.GeoDataFrame,
+    study: Study,
+    folder: Path,
+    jobs: int = 1,
+    scheduler: str | None = None,
 ) -> list[Path]:
     """Write the crossings' CSV, their sections and their pages into the output folder; return the files."""
+    from terrain2q.batches.crossings import SectionRows, rows_in_batches
     from terrain2q.output.crossing_panels import write_crossings_pdf
     from terrain2q.output.crossing_table import write_crossing_sections, write_crossings_csv
 
     crs = screened.inputs.sections.terrain.crs
     files = [write_crossings_csv(folder, layer)]
-    sections = write_crossing_sections(
-        folder, screened.answers, study.system, crs, layer.crs, study.rating.stages, study.in_si("rating.top")
-    )
+    rows = SectionRows(study.system, crs, layer.crs, study.rating.stages, study.in_si("rating.top"))
+    with closing(rows_in_batches(screened.answers, rows, jobs, scheduler)) as tables:
+        sections = write_crossing_sections(folder, screened.answers, study.system, crs, layer.crs, tables)
     files += [] if sections is None else [sections]
     if study.crossings.panels:
         files.append(

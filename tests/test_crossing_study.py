@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+import sqlite3
 from pathlib import Path
 
 import geopandas
@@ -16,9 +17,13 @@ from scipy.stats import norm
 from test_sheets import EVENT, text_of, worked_out_again
 
 from terrain2q import Section, Subarea, run
+from terrain2q.batches import crossings as crossing_batches
+from terrain2q.batches import engines
+from terrain2q.batches import run as run_module
 from terrain2q.columns import COLUMNS, LAYERS
 from terrain2q.errors import InputError
 from terrain2q.hydraulics.widths import opening_parts
+from terrain2q.jobs import crossings as crossing_job
 from terrain2q.output.sheets import _stages_at_road, write_sheets
 from terrain2q.process import check_study
 from terrain2q.study import load_study
@@ -99,6 +104,37 @@ def test_a_study_of_roads_alone_needs_no_cut_lines(folder, results):
         assert row.first_event_over == "100-year"
         assert 0.01 < row.probability < 0.1
         assert row.geometry.distance(shapely.Point(v.centre, v.road.centroid.y)) < 6.0
+
+
+def rows_of(path: Path) -> dict[str, list]:
+    """Return the rows of every layer of a package, in their order."""
+    with sqlite3.connect(path) as database:
+        names = [n for (n,) in database.execute("SELECT table_name FROM gpkg_contents")]
+        names = [n for n in names if n != "layer_styles"]  # these hold the time of writing
+        return {name: database.execute(f'SELECT * FROM "{name}"').fetchall() for name in names}
+
+
+@pytest.mark.parametrize("who", ["processes", "cluster"])
+def test_several_processes_and_a_cluster_give_the_same_rows(folder, results, tmp_path, monkeypatch, who):
+    # a crossing is a batch, and so are its rows; so far all three were one
+    monkeypatch.setattr(crossing_job, "BATCH", 1)
+    monkeypatch.setattr(crossing_batches, "ROWS", 1)
+    monkeypatch.setattr(crossing_batches, "_WORTH_ANOTHER", 1)
+    options = {"output.folder": str(tmp_path)}
+    asked = []
+    engine = getattr(engines, who)
+    monkeypatch.setattr(run_module, who, lambda work, *more: asked.append(type(work)) or engine(work, *more))
+    if who == "processes":
+        run(folder[0] / "study.toml", options, jobs=2)
+    else:
+        distributed = pytest.importorskip("distributed")
+        with distributed.LocalCluster(2, threads_per_worker=1, dashboard_address=None) as two:
+            run(folder[0] / "study.toml", options, scheduler=two.scheduler_address)
+    assert crossing_batches.Screening in asked
+    assert crossing_batches.SectionRows in asked
+    for name in ("results.gpkg", "crossing_sections.gpkg"):
+        assert rows_of(tmp_path / name) == rows_of(folder[0] / "out" / name)
+    assert (tmp_path / "crossings.csv").read_bytes() == (folder[0] / "out" / "crossings.csv").read_bytes()
 
 
 def test_rank_goes_by_the_field_named(results):

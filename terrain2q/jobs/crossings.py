@@ -335,35 +335,56 @@ def screen_crossings(inputs: CrossingInputs, progress: Callable | None = None) -
     -----
     Ground is read about one crossing at a time, in an order in which neighbours follow each other.
     """
-    crossings = list(inputs.crossings)
-    events = event_names(inputs.flows)
+    batches = neighbouring_crossings(inputs.crossings, inputs.sections.terrain)
     courses = Courses(inputs.network)
-    answers: list[CrossingAnswer | None] = [None] * len(crossings)
-    order = _neighbours(crossings, inputs)
-    for start in range(0, len(order), BATCH):
-        batch = order[start : start + BATCH]
-        prepared = {}
-        for i in batch:
-            try:
-                prepared[i] = _prepare(crossings[i], inputs, courses)
-            except _EXPECTED as error:
-                answers[i] = _failed(crossings[i], events, _reason(error))
-        own = replace(
-            inputs.sections,
-            terrain=_Strips(inputs.sections.terrain),
-            slopes=_AttributeSlopes(),
-            area_field=None,
-        )
-        for i, made in _sections_of(prepared, own).items():
-            try:
-                if isinstance(made, Exception):
-                    raise made
-                answers[i] = _answer(prepared[i], made, inputs, events)
-            except _EXPECTED as error:
-                answers[i] = _failed(crossings[i], events, _reason(error), prepared[i].findings)
+    answers: list[CrossingAnswer | None] = [None] * len(inputs.crossings)
+    done = 0
+    for batch in batches:
+        found = answer_crossings([inputs.crossings[i] for i in batch], inputs, courses)
+        for i, answer in zip(batch, found, strict=True):
+            answers[i] = answer
+        done += len(batch)
         if progress is not None:
-            progress(min(start + BATCH, len(order)), len(order), "crossings")
+            progress(done, len(answers), "crossings")
     return ranked([a for a in answers if a is not None], inputs.rank)
+
+
+def answer_crossings(
+    crossings: Sequence[Crossing], inputs: CrossingInputs, courses: Courses
+) -> list[CrossingAnswer]:
+    """Answer some crossings that lie near each other, not ranked; see :func:`screen_crossings`.
+
+    Parameters
+    ----------
+    crossings : sequence of Crossing
+        Of which there are few, as the ground of all their sections is held at once.
+    inputs : CrossingInputs
+        Its own crossings are not used.
+    courses : Courses
+        Of the inputs' network.
+    """
+    events = event_names(inputs.flows)
+    answers: dict[int, CrossingAnswer] = {}
+    prepared = {}
+    for i, crossing in enumerate(crossings):
+        try:
+            prepared[i] = _prepare(crossing, inputs, courses)
+        except _EXPECTED as error:
+            answers[i] = _failed(crossing, events, _reason(error))
+    own = replace(
+        inputs.sections,
+        terrain=_Strips(inputs.sections.terrain),
+        slopes=_AttributeSlopes(),
+        area_field=None,
+    )
+    for i, made in _sections_of(prepared, own).items():
+        try:
+            if isinstance(made, Exception):
+                raise made
+            answers[i] = _answer(prepared[i], made, inputs, events)
+        except _EXPECTED as error:
+            answers[i] = _failed(crossings[i], events, _reason(error), prepared[i].findings)
+    return [answers[i] for i in range(len(crossings))]
 
 
 @dataclass(frozen=True, eq=False)
@@ -395,7 +416,7 @@ def places_beside(inputs: CrossingInputs, progress: Callable | None = None) -> l
     courses = Courses(inputs.network)
     crossings = list(inputs.crossings)
     found: dict[int, Beside] = {}
-    for done, i in enumerate(_neighbours(crossings, inputs), 1):
+    for done, i in enumerate(_neighbours(crossings, inputs.sections.terrain), 1):
         try:
             ready = _prepare(crossings[i], inputs, courses)
         except _EXPECTED as error:
@@ -433,9 +454,15 @@ def _reason(error: Exception) -> str:
     return error.what if isinstance(error, Terrain2qError) else f"{type(error).__name__}: {error}"
 
 
-def _neighbours(crossings: Sequence[Crossing], inputs: CrossingInputs) -> list[int]:
+def neighbouring_crossings(crossings: Sequence[Crossing], terrain: Terrain) -> list[list[int]]:
+    """Return the places of crossings in batches that lie together, for :func:`answer_crossings`."""
+    order = _neighbours(crossings, terrain)
+    return [order[start : start + BATCH] for start in range(0, len(order), BATCH)]
+
+
+def _neighbours(crossings: Sequence[Crossing], terrain: Terrain) -> list[int]:
     """Return an order in which crossings that lie together follow each other."""
-    _, bottom, _, top = inputs.sections.terrain.bounds
+    _, bottom, _, top = terrain.bounds
     x = np.array([c.x for c in crossings])
     y = np.array([c.y for c in crossings])
     band = np.floor(np.nan_to_num((y - bottom) / max(top - bottom, 1e-12) * 40.0))
