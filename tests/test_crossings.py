@@ -17,7 +17,7 @@ from shapely.geometry import LineString, Point
 from terrain2q.flows import Flow
 from terrain2q.ground.cover import UniformCover
 from terrain2q.ground.local_ground import LocalGround
-from terrain2q.ground.road_surface import find_crest, find_road_surface
+from terrain2q.ground.road_surface import _outline, find_crest, find_road_surface
 from terrain2q.ground.roads import RoadNetwork, crossings_from_points, crossings_from_roads, structure_of
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
@@ -347,6 +347,25 @@ def test_numbers_can_be_worked_out_by_hand(county):
     assert last["required_opening"] == pytest.approx(
         section.required_opening(last["discharge"], allowed, answer.slope)
     )
+
+
+@pytest.mark.parametrize("radius", [200.0, 30.0, 4.0])
+def test_the_ground_under_a_fill_is_that_of_its_pieces(radius):
+    # a road round half a circle, its fill up to 20 m wide: about a bend of 4 m its outline crosses itself
+    angle = np.linspace(0.0, np.pi, 60)
+    normals = np.column_stack([np.cos(angle), np.sin(angle)])
+    points = radius * normals
+    up = 6.0 + 2.0 * np.sin(5 * angle)
+    down = 12.0 + 8.0 * np.cos(3 * angle)
+    fill = _outline(points, normals, up, down)
+    a, b = points + normals * up[:, None], points - normals * down[:, None]
+    pieces = [
+        shapely.convex_hull(shapely.MultiPoint([a[i], a[i + 1], b[i + 1], b[i]])) for i in range(len(a) - 1)
+    ]
+    whole = shapely.union_all(pieces)
+    assert fill.is_valid
+    assert fill.symmetric_difference(whole).area < 1e-3 * whole.area
+    assert (shapely.Polygon(np.vstack([a, b[::-1]])).is_valid) == (radius > 20.0)
 
 
 def test_a_line_drawn_aside_gives_the_same_crest(county):

@@ -115,7 +115,10 @@ def _outline(points, normals, upstream: np.ndarray, downstream: np.ndarray) -> s
     """Return the ground from one distance to another beside a line."""
     up = points + normals * upstream[:, None]
     down = points - normals * downstream[:, None]
-    # piece by piece: at a sharp bend a single outline would cross itself
+    whole = shapely.Polygon(np.concatenate([up, down[::-1]]))
+    if whole.is_valid:
+        return whole
+    # piece by piece: at a sharp bend a single outline crosses itself
     corners = np.stack([up[:-1], up[1:], down[1:], down[:-1], up[:-1]], axis=1)
     return shapely.union_all(shapely.convex_hull(shapely.linestrings(corners)))
 
