@@ -14,7 +14,7 @@ import shapely
 from _county import CRS, N, make_valleys, roads, streams, write_dem
 from scipy.integrate import quad
 from scipy.stats import norm
-from test_sheets import EVENT, text_of, worked_out_again
+from test_sheets import EVENT, ROW, text_of, worked_out_again
 
 from terrain2q import Section, Subarea, run
 from terrain2q.batches import crossings as crossing_batches
@@ -560,20 +560,34 @@ def test_a_wrong_number_would_not_pass(demonstration, column):
         assert_by_hand(wrong, worked)
 
 
-@pytest.mark.parametrize(
-    ("crossing", "place"),
-    [
-        ("C-1", r"(?<=\s)831\.078(?=\s)"),  # a point of the road
-        ("C-1", r"(?<=\s)773\.19(?=\s)"),  # an area of the approach section
-        ("C-1", r"(?<=\s)815\.19(?=\s)"),  # of the tailwater section
-        ("C-2", r"(?<=\s)401\.65(?=\s)"),  # of the opening
-    ],
-)
-def test_a_number_misprinted_would_not_pass(demonstration, crossing, place):
+def largest_area(sheet: str) -> str:
+    """Return the largest area in the tables of a sheet by subarea."""
+    return max((numbers.split()[0] for *_, numbers in ROW.findall(sheet)), key=float)
+
+
+MISPRINTS = {
+    "a point of the road": ("C-1", lambda sheet: f"{road_of(sheet, 2)[60, 1]:.3f}"),
+    "an area of the approach section": ("C-1", largest_area),
+    "an area of the tailwater section": (
+        "C-1", lambda sheet: largest_area(sheet[sheet.index("C-1 tailwater") :]),
+    ),
+    "an area of the opening": (
+        "C-2", lambda sheet: re.search(r"\n10-year +\S+ – \S+ +\S+ +\d+ +0\.\d+ +([\d.]+) ", sheet)[1],
+    ),
+}  # fmt: skip
+"""By what is misprinted, the crossing and the number as its sheet has it."""
+
+
+@pytest.mark.parametrize("what", MISPRINTS)
+def test_a_number_misprinted_would_not_pass(demonstration, what):
     table, sheets = demonstration
+    crossing, find = MISPRINTS[what]
     sheet = sheets[crossing]
-    assert re.search(place, sheet)
-    wrong = re.sub(place, lambda found: f"{1.005 * float(found[0]):.3f}", sheet, count=1)
+    printed = find(sheet)
+    wrong = re.sub(
+        rf"(?<=\s){re.escape(printed)}(?=\s)", lambda found: f"{1.005 * float(found[0]):.3f}", sheet, count=1
+    )
+    assert wrong != sheet
     with pytest.raises(AssertionError):
         assert_by_hand(table[table["crossing_id"] == crossing], by_hand(wrong))
 

@@ -368,6 +368,30 @@ def test_the_ground_under_a_fill_is_that_of_its_pieces(radius):
     assert (shapely.Polygon(np.vstack([a, b[::-1]])).is_valid) == (radius > 20.0)
 
 
+def test_a_short_fill_between_steep_hillsides_has_its_crest(tmp_path):
+    """The drawn line runs on up hillsides of 1 in 2.5 to 1 in 4.5, on which there is no road to see."""
+    valleys = [
+        replace(v, side=2.5 + 0.1 * v.number, sag=0.0, crest=v.crest + 1.0, drawn_off=0.5 * v.drawn_off)
+        for v in make_valleys(20)
+    ]
+    write_dem(tmp_path / "dem.tif", valleys, noise=0.1, seed=4)
+    terrain = Terrain(tmp_path / "dem.tif")
+    off, middle = {}, {}
+    for v in valleys:
+        ground = LocalGround(terrain, v.centre, NORTH - ROAD_AT, 200.0)
+        line = LineString(ground.to_local(shapely.get_coordinates(v.road)))
+        at = line.project(Point(0.0, 0.0))
+        surface = find_road_surface(
+            ground, line, at, np.array([0.0, -1.0]), reach=110.0, width=6.0, search=12.0
+        )
+        assert (surface.deck is not None) == bool(v.opening), v
+        off[v.number] = find_crest(surface, ground, 100.0).height - v.crest_height
+        x, y = surface.place(0.0)
+        middle[v.number] = v.along_and_across(v.centre + x, NORTH - ROAD_AT + y)[1]
+    assert max(map(abs, off.values())) < 0.05, off
+    assert max(map(abs, middle.values())) < 1.0, middle
+
+
 def test_a_line_drawn_aside_gives_the_same_crest(county):
     valleys, inputs, _ = county
     v = valleys[12]
