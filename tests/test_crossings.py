@@ -23,7 +23,7 @@ from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
 from terrain2q.hydraulics.weir import greatest_coefficient, road_overflow, weir_discharge, wetted_road
 from terrain2q.jobs import crossings as crossing_job
-from terrain2q.jobs.crossings import CrossingInputs, _probability, ranked, screen_crossings
+from terrain2q.jobs.crossings import CrossingInputs, _probability, field_findings, ranked, screen_crossings
 from terrain2q.jobs.sections import SectionInputs
 from terrain2q.jobs.slopes import OneSlope
 from terrain2q.units import SI, US
@@ -180,10 +180,49 @@ def test_a_tunnel_is_a_finding_and_a_bridge_a_flag():
     assert structure_of({"tunnel": 0, "bridge": None, "structure": "pipes"}) == ""
 
 
+@pytest.mark.parametrize(
+    ("fields", "expected"),
+    [
+        ({"IsBridge": True}, "bridge"),
+        ({"BRIDGE_FLAG": "Y"}, "bridge"),
+        ({"bridge": -1}, "bridge"),
+        ({"bridge": "Bridge No. 12"}, "bridge"),
+        ({"STRUCT_TYPE": "Bridge, steel"}, "bridge"),
+        ({"structure": "RAIL-BRIDGE"}, "bridge"),
+        ({"structure": "Viaduct"}, "bridge"),
+        ({"structure_type": "Tunnel;box"}, "tunnel"),
+        ({"brunnel": "tunnel"}, "tunnel"),
+        ({"tunnel": "unknown"}, ""),
+        ({"tunnel": "N/A"}, ""),
+        ({"tunnel": "-"}, ""),
+        ({"tunnel": "culvert"}, ""),
+        ({"bridge": "no bridge"}, ""),
+        ({"bridge": float("nan")}, ""),
+        ({"structure": "not a bridge"}, ""),
+        ({"structure": "bridge/culvert"}, ""),
+        ({"type": "residential"}, ""),
+    ],
+)
+def test_flags_are_read_as_they_are_spelled(fields, expected):
+    assert structure_of(fields) == expected
+
+
 def points(places, **columns):
     shapes = [None if p is None else Point(np.add(p, (WEST, NORTH))) for p in places]
     ids = [f"C{k}" for k in range(1, len(places) + 1)]
     return geopandas.GeoDataFrame({"feature_id": ids, **columns}, geometry=shapes, crs=CRS)
+
+
+def test_a_point_on_a_road_in_a_tunnel_keeps_its_row_without_an_answer():
+    table = lines(A=[(204, -100), (204, 100)], B=[(604, -100), (604, 100)])
+    table["tunnel"] = ["yes", "no"]
+    found = crossings_from_points(
+        points([(200, 2), (600, 2)]), network(Mill=STRAIGHT), RoadNetwork(table), 30.0, 30.0
+    )
+    assert [[(f.code, f.severity) for f in c.findings] for c in found] == [
+        [("road-in-tunnel", "failed")],
+        [],
+    ]
 
 
 def test_points_are_brought_to_stream_and_road_and_keep_their_places():
@@ -561,6 +600,45 @@ def test_tide_and_surveyed_crest_and_opening(tmp_path):
     assert answer.crest == valley.crest_height + 0.5
     values = answer.events[0].values
     assert values["opening_share"] == pytest.approx(12.0 / values["required_opening"])
+
+
+def test_a_filler_is_no_surveyed_crest(tmp_path):
+    valley, inputs = one_valley(tmp_path, crest=2.0)
+    (plain,) = screen_crossings(inputs)
+    for filler in (-9999.0, 0.0, valley.bed - 1.0):
+        one = replace(inputs.crossings[0], attributes={"crest": filler})
+        (answer,) = screen_crossings(replace(inputs, crossings=[one], crest_field="crest"))
+        assert answer.crest == plain.crest
+        (finding,) = [f for f in answer.findings if f.code == "crest-survey-differs"]
+        assert finding.severity == "doubtful"
+        assert "the one in the ground was used" in finding.message
+
+
+def test_fields_that_hold_no_number_are_findings(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=2.0)
+    fields = {
+        "crest": "498.2 ft",
+        "traffic": "1,200",
+        "width": 0.0,
+        "gap": -3,
+        "full": " 12.5 ",
+        "empty": None,
+    }
+    one = replace(inputs.crossings[0], attributes=fields)
+    opening = [(name, "the opening", True) for name in ("width", "gap", "full", "empty")]
+    wanted = [("crest", "the surveyed crest", False), ("traffic", "the rank", False), *opening]
+    found = [(f.message.split()[0], f.severity) for f in field_findings(one, wanted)]
+    assert found == [("crest", "doubtful"), ("traffic", "note"), ("width", "note"), ("gap", "doubtful")]
+
+
+def test_an_empty_field_of_a_point_leaves_room_for_the_roads(tmp_path):
+    table = lines(A=[(204, -100), (204, 100)])
+    table["crest"], table["traffic"] = [101.5], [900]
+    found = crossings_from_points(
+        points([(200, 2)], crest=[None], traffic=[40]),
+        network(Mill=STRAIGHT), RoadNetwork(table), 30.0, 30.0,
+    )  # fmt: skip
+    assert (found[0].attributes["crest"], found[0].attributes["traffic"]) == (101.5, 40)
 
 
 def test_a_section_cut_by_a_road_is_a_finding(tmp_path):

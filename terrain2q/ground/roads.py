@@ -15,6 +15,7 @@
 from __future__ import annotations
 
 import itertools
+import re
 from collections import defaultdict
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
@@ -42,8 +43,14 @@ BRIDGE, TUNNEL = "bridge", "tunnel"
 _LAYER = "crossings"
 _ROAD_NAMES = ("road", "road_name", "name", "street", "ref", "road_id")
 _STREAM_NAMES = ("stream", "stream_id")
-_STRUCTURES = ("structure", "structure_type", "type", "kind")
-_NO = ("", "0", "no", "n", "false", "f", "none")
+_STRUCTURES = ("structure", "structuretype", "structtype", "type", "kind", "brunnel")
+_FLAGS = ("{}", "is{}", "has{}", "on{}", "in{}", "{}flag", "{}yn")
+_NO = ("no", "n", "false", "f", "none", "not")
+_UNKNOWN = ("unknown", "unk", "null", "na", "nan")
+_WORDS = {
+    "tunnel": ("tunnel", "tunnels"),
+    "bridge": ("bridge", "bridges", "roadbridge", "footbridge", "viaduct", "viaducts", "overpass"),
+}
 
 
 @dataclass(frozen=True)
@@ -99,22 +106,48 @@ class Crossing:
 def structure_of(attributes: Mapping) -> str:
     """Return ``bridge``, ``tunnel`` or an empty string from the fields of a road or crossing.
 
-    A field called ``tunnel`` or ``bridge`` (or ``is_tunnel``, ``is_bridge``) that says anything but no
-    counts; so does a field ``structure`` that names one.
+    A field called ``tunnel`` or ``bridge`` (or ``is_tunnel``, ``IsBridge``, ``bridge_flag``) counts unless it
+    says no, or that nobody knows; so does a field ``structure`` that names one. A culvert is neither: it is
+    the stream that is in the pipe, and the road runs over it.
 
     Examples
     --------
     >>> [structure_of(f) for f in ({"bridge": "yes"}, {"bridge": "F"}, {"Structure": "Box bridge"})]
     ['bridge', '', 'bridge']
+    >>> [structure_of(f) for f in ({"IsTunnel": True}, {"tunnel": "unknown"}, {"tunnel": "culvert"})]
+    ['tunnel', '', '']
     """
-    texts = {str(name).lower(): clean_text(value).lower() for name, value in attributes.items()}
+    texts = {
+        "".join(c for c in str(name).lower() if c.isalnum()): clean_text(value).lower()
+        for name, value in attributes.items()
+    }
     for kind in (TUNNEL, BRIDGE):
-        if any(texts.get(name, "") not in _NO for name in (kind, f"is_{kind}", f"{kind}_flag")):
+        if any(says_so(texts.get(name.format(kind), "")) for name in _FLAGS):
             return kind
     for kind in (TUNNEL, BRIDGE):
-        if any(kind in texts.get(name, "").split() for name in _STRUCTURES):
-            return kind
+        for name in _STRUCTURES:
+            words = _words(texts.get(name, ""))
+            if says_so(texts.get(name, "")) and any(word in words for word in _WORDS[kind]):
+                return kind
     return ""
+
+
+def _words(text: str) -> list[str]:
+    return re.findall(r"[^\W\d_]+", text)
+
+
+def says_so(text: str) -> bool:
+    """Whether a flag says anything but no, that nobody knows, or that the stream is piped.
+
+    Examples
+    --------
+    >>> [says_so(t) for t in ("yes", "-1", "Bridge no. 5", "", "0", "N/A", "not here", "box culvert")]
+    [True, True, True, False, False, False, False, False]
+    """
+    words = _words(text.lower().replace("n/a", "na"))
+    if not words:
+        return any(c in "123456789" for c in text)
+    return words[0] not in (*_NO, *_UNKNOWN) and not {"culvert", "culverts"} & {*words}
 
 
 class RoadNetwork:
@@ -332,7 +365,9 @@ def _from_point(name, shape, fields, network: StreamNetwork, roads, snap, units)
         if away <= snap:
             line = nearest
             part = roads.part_at(shape)
-            fields = {**roads.attributes(part), **fields}
+            about = roads.attributes(part)
+            # an empty field of the point leaves room for the road's
+            fields = {**about, **{k: v for k, v in fields.items() if k not in about or clean_text(v)}}
             reach = 2.0 * snap / network.ground.metres_per_map_unit * 1.5
             near = shapely.intersection(
                 shapely.clip_by_rect(
@@ -349,6 +384,9 @@ def _from_point(name, shape, fields, network: StreamNetwork, roads, snap, units)
                 road=blank.road or _named(roads.attributes(part), _ROAD_NAMES),
                 structure=blank.structure or structure_of(roads.attributes(part)),
             )
+            if blank.structure == TUNNEL:
+                name = blank.road or "the road"
+                return blank.noted(blank.finding("road-in-tunnel", f"{name} runs in a tunnel here", "failed"))
     along = float(network.chains[chain].project(place))
     return replace(
         blank, stream=str(network.chain_stream[chain]), x=place.x, y=place.y, chain=chain, along=along,

@@ -31,7 +31,7 @@ from terrain2q.ground.cut_lines import CutLine
 from terrain2q.ground.layers import clean_text
 from terrain2q.ground.local_ground import LocalGround
 from terrain2q.ground.road_surface import Crest, RoadSurface, fill_about, find_crest, find_road_surface
-from terrain2q.ground.roads import BRIDGE, Crossing, RoadNetwork
+from terrain2q.ground.roads import BRIDGE, Crossing, RoadNetwork, says_so
 from terrain2q.ground.stream_slope import robust_slope
 from terrain2q.ground.streams import StreamNetwork, length_text
 from terrain2q.ground.terrain import Profile, Terrain
@@ -466,7 +466,8 @@ class _Ready:
 
 def _failed(crossing: Crossing, events, why: str, findings: Sequence[Finding] = ()) -> CrossingAnswer:
     found = [*crossing.findings, *findings]
-    if why:
+    # where the place itself is wrong, that says it all
+    if why and not any(f.severity == FAILED for f in crossing.findings):
         found.append(crossing.finding("crossing-failed", why))
     return CrossingAnswer(
         crossing, events=tuple(CrossingEvent(e, FAILED) for e in events), findings=_once(found)
@@ -479,12 +480,50 @@ def _once(findings: Sequence[Finding]) -> tuple[Finding, ...]:
 
 def _number(crossing: Crossing, name: str | None) -> float:
     """Return the number in a field of a crossing, NaN where there is none."""
-    if name is None:
-        return float("nan")
+    return float("nan") if name is None else number_in(crossing.attributes.get(name))
+
+
+def number_in(value: object) -> float:
+    """Return a field's value as a number; NaN where it is empty, infinite or no plain number.
+
+    Examples
+    --------
+    >>> number_in(" 12.5 "), number_in("1,200"), number_in(None)
+    (12.5, nan, nan)
+    """
     try:
-        return float(clean_text(crossing.attributes.get(name)) or "nan")
+        number = float(clean_text(value) or "nan")
     except ValueError:
         return float("nan")
+    return number if np.isfinite(number) else float("nan")
+
+
+def field_findings(crossing: Crossing, wanted: Sequence[tuple[str, str, bool]]) -> list[Finding]:
+    """Return what is wrong with the numbers in a crossing's fields.
+
+    Parameters
+    ----------
+    crossing : Crossing
+    wanted : sequence of (str, str, bool)
+        Name of a field, what it is for, and whether it must be above zero.
+    """
+    found = []
+    for name, purpose, positive in wanted:
+        text = clean_text(crossing.attributes.get(name))
+        if not text or text.lower() == "nan":
+            continue
+        number = number_in(text)
+        if np.isnan(number):
+            wrong = "is not a plain number"
+        elif positive and number <= 0:
+            wrong = "is not above zero"
+        else:
+            continue
+        # nothing but its place in the list hangs on the rank, and many tables write 0 for nothing
+        mild = purpose == "the rank" or number == 0
+        message = f"{name} = {text!r} {wrong}; it was left out for {purpose}"
+        found.append(crossing.finding("field-not-number", message, NOTE if mild else ""))
+    return found
 
 
 # --- the ground at one crossing ----------------------------------------------------------------------
@@ -515,8 +554,8 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     fill_at = _leaves(stream, at, own, ground.cell)
     bed = bed.without(fill_at[0] - 3.0, fill_at[1] + 3.0)
     slope, source = _slope(crossing, inputs, bed, fill_at, findings)
-    crest, surface = _surveyed(crossing, inputs, crest, surface, findings)
     low = bed.near(edges_at[0])
+    crest, surface, surveyed = _surveyed(crossing, inputs, crest, surface, low, findings)
     top = crest.height + max(CLEAR_ABOVE, crest.height - low)
     clear = (STRIP + 2) * ground.cell
     places, over = [], []
@@ -556,7 +595,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
             )
         )
     crest_xy = ground.to_map(surface.place(crest.station))
-    _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, findings)
+    _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, surveyed, findings)
     made = [
         _cut_line(
             crossing,
@@ -763,20 +802,32 @@ def _slope(crossing, inputs: CrossingInputs, bed: Bed, fill_at, findings) -> tup
     return found.slope, source
 
 
-def _surveyed(crossing, inputs: CrossingInputs, crest: Crest, surface: RoadSurface, findings):
-    """Return crest and surface at the surveyed height, where there is one."""
+def _surveyed(crossing, inputs: CrossingInputs, crest: Crest, surface: RoadSurface, low: float, findings):
+    """Return crest and surface at the surveyed height, and whether there is one that can be used."""
     survey = _number(crossing, inputs.crest_field) / inputs.units.per_si("length")
     if not np.isfinite(survey):
-        return crest, surface
+        return crest, surface, False
+    if survey <= low:
+        # a filler for "not known", another datum or another unit
+        bed, given = (length_text(v, inputs.units) for v in (low, survey))
+        message = (
+            f"the surveyed crest, {given}, is no higher than the stream's bed, {bed}; the one in the ground "
+            "was used"
+        )
+        findings.append(crossing.finding("crest-survey-differs", message))
+        return crest, surface, False
     off = survey - crest.height
     if abs(off) > SURVEY_DIFFERS:
         text = length_text(abs(off), inputs.units)
-        message = f"the surveyed crest is {text} {'above' if off > 0 else 'below'} the one in the ground"
+        message = (
+            f"the surveyed crest is {text} {'above' if off > 0 else 'below'} the one in the ground; the "
+            "surveyed one was used"
+        )
         findings.append(crossing.finding("crest-survey-differs", message))
-    return replace(crest, height=float(survey)), surface.raised(off)
+    return replace(crest, height=float(survey)), surface.raised(off), True
 
 
-def _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, findings) -> None:
+def _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, survey: bool, findings) -> None:
     def text(metres: float) -> str:
         return length_text(metres, inputs.units)
 
@@ -793,7 +844,6 @@ def _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, fi
         findings.append(
             crossing.finding("deck-bridged", message, NOTE if crossing.structure == BRIDGE else "")
         )
-    survey = np.isfinite(_number(crossing, inputs.crest_field))
     if abs(crest.station) > 30.0:
         here = float(np.interp(0.0, surface.stations, surface.heights))
         side = "right" if crest.station > 0 else "left"
@@ -1057,8 +1107,8 @@ def _wrong_question(ready: _Ready, inputs: CrossingInputs, row, flow: Flow | Non
             message += f", {100 * share:.0f} % of the water of {flow.event}"
             severity = NOTE if share < SMALL_STORAGE else ""
         found.append(crossing.finding("culvert-ponds", message, severity))
-    tide = clean_text(crossing.attributes.get(inputs.tide_field)).lower() if inputs.tide_field else ""
-    if tide not in ("", "0", "no", "n", "false", "f", "none"):
+    tide = clean_text(crossing.attributes.get(inputs.tide_field)) if inputs.tide_field else ""
+    if says_so(tide):
         found.append(crossing.finding("tidal", f"field {inputs.tide_field} says {tide}"))
     return found
 
