@@ -14,6 +14,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from shapely.geometry import LineString, Point
 
+from terrain2q.columns import CAUTION
 from terrain2q.flows import Flow
 from terrain2q.ground.cover import UniformCover
 from terrain2q.ground.local_ground import LocalGround
@@ -26,6 +27,7 @@ from terrain2q.jobs import crossings as crossing_job
 from terrain2q.jobs.crossings import CrossingInputs, _probability, field_findings, ranked, screen_crossings
 from terrain2q.jobs.sections import SectionInputs
 from terrain2q.jobs.slopes import OneSlope
+from terrain2q.output.crossing_panels import draw_map, draw_panel, draw_table
 from terrain2q.units import SI, US
 
 EVENTS = {"10-year": 0.1, "50-year": 0.02, "100-year": 0.01}
@@ -677,3 +679,64 @@ def test_a_crossing_without_a_flow_keeps_its_place(tmp_path):
     own = [Flow("flood", 5.0, crossing=inputs.crossings[0].crossing_id), *flows]
     (answer,) = screen_crossings(replace(inputs, flows=own))
     assert answer.events[0].values["discharge"] == 5.0
+
+
+# --- pages for people --------------------------------------------------------------------------------
+
+
+def words(figure):
+    return "\n".join(text.get_text() for text in figure.texts)
+
+
+def test_every_page_says_that_it_is_a_screening_estimate(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=2.0)
+    answers = screen_crossings(inputs)
+    lost = replace(answers[0], road=None, approach=None, events=())
+    pages = [draw_table(answers, SI), draw_map(answers, inputs), draw_panel(answers[0], inputs)]
+    for page in (*pages, draw_panel(lost, inputs)):
+        assert CAUTION in words(page)
+
+
+def test_a_page_has_the_largest_events_however_many_there_are(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=2.0)
+    flows = [Flow(f"event {k}", 4.0 * k) for k in range(1, 16)]
+    (answer,) = screen_crossings(replace(inputs, flows=flows))
+    text = words(draw_panel(answer, inputs))
+    assert "event 15: 60.0 m³/s" in text
+    assert "event 14: 56.0 m³/s" in text
+    assert "event 1: " not in text
+    assert "smaller events in crossings.csv" in text
+    assert f"first event over: {answer.first_event_over}" in text
+
+
+def test_a_page_without_an_answer_says_why(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=2.0)
+    why = "the ground ends here, " * 30
+    one = replace(inputs.crossings[0], findings=(inputs.crossings[0].finding("crossing-failed", why),))
+    (answer,) = screen_crossings(replace(inputs, crossings=[one]))
+    text = words(draw_panel(answer, inputs))
+    assert "No answer" in text
+    assert " ".join(why.split()) in " ".join(text.split())
+
+
+def test_labels_of_a_map_do_not_lie_over_each_other(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=2.0)
+    (answer,) = screen_crossings(inputs)
+    one = answer.crossing
+    places = [(0.0, 0.0), (25.0, 0.0), (0.0, 20.0), (600.0, 5.0)]
+    moved = [
+        replace(one, crossing_id=f"crossing {k}", x=one.x + x, y=one.y + y)
+        for k, (x, y) in enumerate(places, 1)
+    ]
+    many = [replace(answer, rank=k, crossing=at) for k, at in enumerate(moved, 1)]
+    figure = draw_map(many, inputs)
+    figure.draw_without_rendering()
+    ax = figure.axes[0]
+    boxes = [t.get_window_extent() for t in ax.texts if "crossing" in t.get_text()]
+    assert len(boxes) == 4
+    assert not any(a.overlaps(b) for k, a in enumerate(boxes) for b in boxes[:k])
+    frame = ax.get_window_extent()
+    assert all(b.x0 >= frame.x0 and b.x1 <= frame.x1 for b in boxes)
+    lengths = [t.get_text() for t in ax.texts if t.get_text().endswith(" m")]
+    (bar,) = [line for line in ax.lines if line.get_zorder() == 9]
+    assert lengths == [f"{np.ptp(bar.get_xdata()):.0f} m"]

@@ -785,7 +785,7 @@ def _slope(crossing, inputs: CrossingInputs, bed: Bed, fill_at, findings) -> tup
     found = robust_slope(bed.at[away], bed.heights[away]) if away.sum() >= 5 else None
     if found is None:
         raise NoAnswerError("too little ground is known along the stream to take a slope from")
-    source = f"ground away from the fill, 90 % interval {found.low:.2g} to {found.high:.2g}"
+    source = f"ground away from the fill, 90 % interval {found.low:.3g} to {found.high:.3g}"
     if not found.slope > 0:
         raise NoAnswerError(
             f"the ground along the stream does not fall away from the fill: slope {found.slope:.2g}"
@@ -794,7 +794,7 @@ def _slope(crossing, inputs: CrossingInputs, bed: Bed, fill_at, findings) -> tup
         findings.append(
             crossing.finding(
                 "slope-uncertain",
-                f"the slope is {found.slope:.2g}, 90 % interval {found.low:.2g} to {found.high:.2g}",
+                f"the slope is {found.slope:.2g}, 90 % interval {found.low:.3g} to {found.high:.3g}",
             )
         )
     if found.slope < FLAT:
