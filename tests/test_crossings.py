@@ -7,6 +7,7 @@ from dataclasses import replace
 
 import geopandas
 import numpy as np
+import pandas
 import pytest
 import shapely
 from _county import CRS, HALF_TOP, LONG, NORTH, ROAD_AT, WEST, N, make_valleys, roads, streams, write_dem
@@ -602,6 +603,52 @@ def test_tide_and_surveyed_crest_and_opening(tmp_path):
     assert answer.crest == valley.crest_height + 0.5
     values = answer.events[0].values
     assert values["opening_share"] == pytest.approx(12.0 / values["required_opening"])
+
+
+@pytest.mark.parametrize(("off", "side"), [(25.0, "downstream"), (-25.0, "upstream")])
+def test_a_fill_beside_a_line_drawn_far_off_is_told_of(tmp_path, off, side):
+    valley, inputs = one_valley(tmp_path, crest=2.5)
+    table = roads([valley])
+    table.geometry = table.geometry.translate(0.0, off)
+    found, _ = crossings_from_roads(RoadNetwork(table), inputs.network, 30.0)
+    (answer,) = screen_crossings(replace(inputs, crossings=found))
+    (finding,) = [f for f in answer.findings if "where no road is drawn" in f.message]
+    assert finding.code == "crest-doubtful"
+    assert f"{side}, where" in finding.message
+    assert finding.y == pytest.approx(NORTH - ROAD_AT, abs=HALF_TOP + 1.0)
+    # the valley falls less than the height that is told
+    told = float(finding.message.split(" m higher")[0].split()[-1])
+    assert answer.crest + told == pytest.approx(valley.crest_height, abs=0.1)
+    # where that road is drawn too, nothing is to be told
+    both = RoadNetwork(pandas.concat([table, roads([valley]).assign(name="the fill's own")]))
+    (answer,) = screen_crossings(replace(inputs, crossings=found, roads=both))
+    assert not any("where no road is drawn" in f.message for f in answer.findings)
+
+
+def test_a_steep_stream_is_no_fill(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=1.0, slope=0.05)
+    (answer,) = screen_crossings(inputs)
+    assert "crest-doubtful" not in codes(answer)
+
+
+def test_a_crossing_without_a_place_for_its_section_says_why(tmp_path):
+    valley, inputs = one_valley(tmp_path, crest=2.0)
+    short = streams([valley])
+    top = NORTH - ROAD_AT + HALF_TOP + 4.0
+    short.geometry = [LineString([(valley.centre, top), (valley.centre, NORTH - LONG + 2.0)])]
+    net = StreamNetwork(short.assign(feature_id=short["stream_id"]), CRS)
+    found, _ = crossings_from_roads(RoadNetwork(roads([valley])), net, 30.0)
+    (answer,) = screen_crossings(replace(inputs, network=net, crossings=found))
+    (finding,) = [f for f in answer.findings if f.code == "crossing-failed"]
+    assert "the stream line begins" in finding.message
+
+    def gap(z, x, y):
+        return np.where((np.abs(x - valley.centre) < 3.0) & (y > NORTH - ROAD_AT + 5.0), np.nan, z)
+
+    _, inputs = one_valley(tmp_path, change=gap, crest=2.0)
+    (answer,) = screen_crossings(inputs)
+    (finding,) = [f for f in answer.findings if f.code == "crossing-failed"]
+    assert "the terrain has a gap along the stream there" in finding.message
 
 
 def test_a_filler_is_no_surveyed_crest(tmp_path):

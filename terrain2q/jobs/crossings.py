@@ -14,6 +14,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 import shapely
 import shapely.ops
+from scipy.ndimage import minimum_filter1d
 
 from terrain2q.errors import DOUBTFUL, FAILED, NOTE, Finding, NoAnswerError, Terrain2qError
 from terrain2q.flows import Flow, event_names, flow_for
@@ -88,6 +89,9 @@ LOOKS_DOWNSTREAM = 500.0
 
 SURVEY_DIFFERS = 0.3
 """Metres between a surveyed crest and the one in the ground that are worth a finding."""
+
+CLOSED_WITHIN = 60.0
+"""Metres up- and downstream of a road within which higher ground across the stream is looked for."""
 
 STRIP = 2
 """Cells to each side of a section, along the stream, over which its ground is averaged."""
@@ -580,7 +584,10 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
             )
         )
     if places[0] is None:
-        raise NoAnswerError("there is no place for an approach section upstream", where=crossing.crossing_id)
+        why = _no_place(ground, stream, fill_at[0], own, clear, units)
+        raise NoAnswerError(
+            f"there is no place for an approach section upstream: {why}", where=crossing.crossing_id
+        )
     cut = [
         f"the {name} section"
         for name, p in zip(("approach", "tailwater"), places, strict=True)
@@ -595,6 +602,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
             )
         )
     crest_xy = ground.to_map(surface.place(crest.station))
+    _closed_beside(crossing, inputs, ground, stream, bed, fills, fill_at, slope, crest, findings)
     _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, surveyed, findings)
     made = [
         _cut_line(
@@ -632,6 +640,26 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
         crossing, surface, road, crest, crest_xy, slope, source, bed, edges_at, places, made, storage, water,
         joins, shapely.transform(fills.buffer(clear - ground.cell), ground.to_map), findings,
     )  # fmt: skip
+
+
+def _no_place(ground: LocalGround, stream, start: float, own, clear: float, units: UnitSystem) -> str:
+    """Return why no section can stand upstream of a fill that the stream enters at `start`."""
+    room = start - clear
+    if room <= 0.0:
+        return (
+            f"the stream line begins {length_text(max(start, 0.0), units)} above the road's fill, and a "
+            f"section keeps {length_text(clear, units)} clear of it; draw the stream further up"
+        )
+    at = np.arange(max(room - FARTHEST, 0.0), room, max(2.0, ground.cell))
+    points = shapely.get_coordinates(shapely.line_interpolate_point(stream, at))
+    if not np.isfinite(ground.at(points)).any():
+        return "the terrain has a gap along the stream there, or ends; fill the gap or add the tile"
+    if shapely.contains_xy(own.buffer(clear), *points.T).all():
+        return "the stream runs along the road's own fill; correct the road or the stream line"
+    return (
+        "the stream line does not run in a valley, or a road leaves too little of it; look at the stream "
+        "line on the hillshade"
+    )
 
 
 def _read(crossing: Crossing, inputs: CrossingInputs, course):
@@ -825,6 +853,35 @@ def _surveyed(crossing, inputs: CrossingInputs, crest: Crest, surface: RoadSurfa
         )
         findings.append(crossing.finding("crest-survey-differs", message))
     return replace(crest, height=float(survey)), surface.raised(off), True
+
+
+def _closed_beside(crossing, inputs, ground, stream, bed, fills, fill_at, slope, crest, findings) -> None:
+    """Find ground that closes the valley higher than the crest beside a road, where no road is drawn."""
+    known = np.isfinite(bed.heights)
+    at, heights = bed.at[known], bed.heights[known]
+    if not at.size:
+        return
+    # a steep stream is soon higher than the crest, but its bed never rises on the way down
+    steps = max(1, round(CLOSED_WITHIN / (bed.at[1] - bed.at[0])))
+    rise = heights - minimum_filter1d(heights, steps, origin=(steps - 1) // 2, mode="nearest")
+    level = crest.height + slope * np.maximum(fill_at[0] - at, 0.0)
+    higher = (at >= fill_at[0] - CLOSED_WITHIN) & (at <= fill_at[1] + CLOSED_WITHIN)
+    higher &= (heights > level + 0.1) & (rise > 0.5)
+    at, heights = at[higher], heights[higher]
+    points = shapely.get_coordinates(shapely.line_interpolate_point(stream, at))
+    undrawn = ~shapely.contains_xy(fills.buffer(3.0 * ground.cell), *points.T)
+    if not undrawn.any():
+        return
+    k = int(np.argmax(np.where(undrawn, heights, -np.inf)))
+    up = at[k] < fill_at[0]
+    away = fill_at[0] - at[k] if up else at[k] - fill_at[1]
+    higher, distance = (length_text(v, inputs.units) for v in (heights[k] - crest.height, max(away, 0.0)))
+    message = (
+        f"the ground across the stream is {higher} higher than the crest {distance} {'up' if up else 'down'}"
+        "stream, where no road is drawn; if the road is there, correct its line or set a larger `search`"
+    )
+    place = ground.to_map(points[k])
+    findings.append(crossing.finding("crest-doubtful", message).at(*place))
 
 
 def _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, survey: bool, findings) -> None:
