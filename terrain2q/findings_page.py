@@ -648,8 +648,8 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
         ),
         "crest-doubtful": (
             "The road does not stand out well: it is uneven, slopes across, is narrower than the cells, or "
-            "lies hardly above the bed. Or higher ground closes the valley beside it where no road is drawn: the "
-            "road's line may be far off.",
+            "lies hardly above the bed. Or higher ground closes the valley beside it where no road is drawn: "
+            "the road's line may be far off.",
             "The discharge that reaches the crest goes with more than its square; a foot of error decides "
             "the verdict.",
             "A farm track on 3 m cells.",
