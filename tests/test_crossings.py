@@ -122,6 +122,14 @@ def test_two_carriageways_are_one_crossing_and_say_so():
     assert len(apart) == 2
 
 
+@pytest.mark.parametrize("crs", [CRS, "EPSG:4269", "EPSG:3857", "EPSG:5070"])
+def test_the_same_one_of_two_carriageways_stays_in_any_crs(crs):
+    pair = {"East": [(200, -100), (200, 100)], "West": [(218, -100), (218, 100)]}
+    stream = StreamNetwork(lines(Mill=STRAIGHT).to_crs(crs), crs)
+    found, _ = crossings_from_roads(RoadNetwork(lines(**pair).to_crs(crs)), stream, 30.0)
+    assert [c.crossing_id for c in found] == ["East at Mill"]
+
+
 def test_a_road_split_at_its_bridge_is_one_road():
     table = lines(a=[(200, -100), (200, -8)], b=[(200, -8), (200, 8)], c=[(200, 8), (200, 100)])
     table["bridge"] = ["no", "yes", "no"]

@@ -423,7 +423,10 @@ def merged(
         furthest = max(members, key=lambda i: crossings[i].stream_distance)
         own = [i for i in members if crossings[i].chain == crossings[furthest].chain]
         middle = np.mean([[crossings[i].x, crossings[i].y] for i in members], axis=0)
-        kept = min(own, key=lambda i: np.hypot(crossings[i].x - middle[0], crossings[i].y - middle[1]))
+        off = {i: np.hypot(crossings[i].x - middle[0], crossings[i].y - middle[1]) for i in own}
+        # two lie equally far from their middle, but for rounding: the first of them, whatever the CRS
+        least = (1.0 + 1e-6) * min(off.values())
+        kept = next(i for i in own if off[i] <= least)
         others = [i for i in members if i != kept]
         gone.update(others)
         one = crossings[kept]
