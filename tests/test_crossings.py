@@ -10,6 +10,7 @@ import numpy as np
 import pandas
 import pytest
 import shapely
+import shapely.affinity
 from _county import CRS, HALF_TOP, LONG, NORTH, ROAD_AT, WEST, N, make_valleys, roads, streams, write_dem
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -669,6 +670,27 @@ def test_a_filler_is_no_surveyed_crest(tmp_path):
         (finding,) = [f for f in answer.findings if f.code == "crest-survey-differs"]
         assert finding.severity == "doubtful"
         assert "the one in the ground was used" in finding.message
+
+
+@pytest.mark.parametrize(
+    ("surveys", "added"),
+    [
+        ((None, 0.25), 0.25),
+        ((0.1, 0.25), 0.25),
+        ((0.25, 0.1), 0.25),
+        ((0.2, None), 0.2),
+        ((-9999.0, 0.1), 0.1),
+    ],
+)
+def test_of_two_surveyed_carriageways_the_higher_one_counts(tmp_path, surveys, added):
+    valley, inputs = one_valley(tmp_path, crest=2.0)
+    pair = pandas.concat([roads([valley]).assign(name=name) for name in ("East", "West")])
+    # two lines along one fill, so that their surveys alone tell them apart
+    pair.geometry = [valley.road, shapely.affinity.translate(valley.road, 0.0, -2.0)]
+    pair["crest"] = [np.nan if s is None else valley.crest_height + s for s in surveys]
+    found, _ = crossings_from_roads(RoadNetwork(pair), inputs.network, 30.0)
+    (answer,) = screen_crossings(replace(inputs, crossings=found, crest_field="crest"))
+    assert answer.crest == pytest.approx(valley.crest_height + added, abs=1e-6)
 
 
 def test_fields_that_hold_no_number_are_findings(tmp_path):

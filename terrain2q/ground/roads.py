@@ -73,6 +73,8 @@ class Crossing:
         The road, in the terrain's CRS; None where only the point is known.
     others : tuple of shapely.LineString
         Roads of the crossings that were merged into this one.
+    other_attributes : tuple of mapping
+        The fields of each of these.
     structure : str
         ``bridge``, ``tunnel`` or empty, as an attribute says.
     attributes : mapping
@@ -90,6 +92,7 @@ class Crossing:
     stream_distance: float
     line: shapely.LineString | None = None
     others: tuple[shapely.LineString, ...] = ()
+    other_attributes: tuple[Mapping, ...] = ()
     structure: str = ""
     attributes: Mapping = field(default_factory=dict)
     findings: tuple[Finding, ...] = ()
@@ -251,7 +254,7 @@ def crossings_from_roads(
             one = Crossing(
                 "", _named(fields, _ROAD_NAMES), stream, point.x, point.y, chain, along,
                 float(network.distance_at(np.array([chain]), np.array([along]))[0]),
-                roads.lines[line], (), structure_of(fields), fields,
+                roads.lines[line], structure=structure_of(fields), attributes=fields,
             )  # fmt: skip
             if one.structure == TUNNEL:
                 message = f"{one.road or 'a road'} runs in a tunnel at stream {stream}"
@@ -431,13 +434,16 @@ def merged(
         gone.update(others)
         one = crossings[kept]
         lines: list[shapely.LineString] = []
+        fields: list[Mapping] = []
         for i in others:
             line = crossings[i].line
             if line is not None and line is not one.line and all(line is not known for known in lines):
                 lines.append(line)
+                fields.append(crossings[i].attributes)
         listed = ", ".join(crossings[i].crossing_id for i in others)
         message = f"{listed} within {length_text(distance, units)} of it is counted with this crossing"
-        answer[kept] = replace(one, others=tuple(lines)).noted(one.finding("crossings-merged", message))
+        one = one.noted(one.finding("crossings-merged", message))
+        answer[kept] = replace(one, others=tuple(lines), other_attributes=tuple(fields))
     return [one for i, one in enumerate(answer) if i not in gone]
 
 

@@ -546,7 +546,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
         raise NoAnswerError("there is no ground at the crossing", where=crossing.crossing_id)
     downstream = along_line(stream, np.array([at]))[1][0]
     bed = bed_along(ground, stream)
-    surface, lines = _surface(crossing, inputs, ground, stream, at, downstream, findings)
+    surface, lines, survey = _surface(crossing, inputs, ground, stream, bed, at, downstream, findings)
     drawn_at, at = at, _meeting(surface, stream, at)
     crest = find_crest(surface, ground, inputs.reach)
     if crest is None:
@@ -559,7 +559,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     bed = bed.without(fill_at[0] - 3.0, fill_at[1] + 3.0)
     slope, source = _slope(crossing, inputs, bed, fill_at, findings)
     low = bed.near(edges_at[0])
-    crest, surface, surveyed = _surveyed(crossing, inputs, crest, surface, low, findings)
+    crest, surface, surveyed = _surveyed(crossing, inputs, crest, surface, survey, low, findings)
     top = crest.height + max(CLEAR_ABOVE, crest.height - low)
     clear = (STRIP + 2) * ground.cell
     places, over = [], []
@@ -683,8 +683,8 @@ def _read(crossing: Crossing, inputs: CrossingInputs, course):
     return ground, shapely.LineString(far.coords), float(at - upper)
 
 
-def _surface(crossing, inputs: CrossingInputs, ground, stream, at, downstream, findings):
-    """Return the road's surface, and those of the roads merged into the crossing."""
+def _surface(crossing, inputs: CrossingInputs, ground, stream, bed: Bed, at, downstream, findings):
+    """Return the road's surface, those of the roads merged into the crossing, and the surveyed crest, m."""
     reach = max(inputs.reach, ALONG_ROADS)
     options = {"reach": reach, "width": inputs.road_width, "search": inputs.search}
     if crossing.line is None:
@@ -704,19 +704,32 @@ def _surface(crossing, inputs: CrossingInputs, ground, stream, at, downstream, f
     surface = find_road_surface(ground, line, place, downstream, **options)
     if surface is None or not np.isfinite(surface.heights).any():
         raise NoAnswerError("there is no ground under the road", where=crossing.crossing_id)
+    surveys = [_survey(crossing.attributes, inputs)]
     others = []
-    for other in crossing.others:
+    for other, fields in zip(crossing.others, crossing.other_attributes, strict=True):
         line = _clipped(shapely.LineString(ground.to_local(shapely.get_coordinates(other))), reach + 60.0)
         found = find_road_surface(
             ground, line, float(line.project(stream.interpolate(at))), downstream, **options
         )
         if found is not None:
             others.append(found)
+            surveys.append(_survey(fields, inputs))
     # of two carriageways the higher one is passed last
     every = [surface, *others]
     crests = [find_crest(s, ground, inputs.reach) for s in every]
-    best = max(range(len(every)), key=lambda i: -np.inf if crests[i] is None else crests[i].height)
-    return every[best], [s for i, s in enumerate(every) if i != best]
+    heights = [-np.inf if c is None else c.height for c in crests]
+    # a filler for "not known" is no height
+    lowest = np.nanmin(bed.heights) if np.isfinite(bed.heights).any() else -np.inf
+    heights = [s if s > lowest else h for h, s in zip(heights, surveys, strict=True)]
+    best = int(np.argmax(heights))
+    return every[best], [s for i, s in enumerate(every) if i != best], surveys[best]
+
+
+def _survey(fields: Mapping, inputs: CrossingInputs) -> float:
+    """Return the surveyed crest in a road's fields, m; NaN where there is none."""
+    if inputs.crest_field is None:
+        return float("nan")
+    return number_in(fields.get(inputs.crest_field)) / inputs.units.per_si("length")
 
 
 def _fills_beside(crossing, inputs: CrossingInputs, ground: LocalGround) -> list[shapely.Geometry]:
@@ -830,9 +843,8 @@ def _slope(crossing, inputs: CrossingInputs, bed: Bed, fill_at, findings) -> tup
     return found.slope, source
 
 
-def _surveyed(crossing, inputs: CrossingInputs, crest: Crest, surface: RoadSurface, low: float, findings):
+def _surveyed(crossing, inputs, crest: Crest, surface: RoadSurface, survey: float, low: float, findings):
     """Return crest and surface at the surveyed height, and whether there is one that can be used."""
-    survey = _number(crossing, inputs.crest_field) / inputs.units.per_si("length")
     if not np.isfinite(survey):
         return crest, surface, False
     if survey <= low:
