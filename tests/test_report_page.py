@@ -672,8 +672,8 @@ def test_a_study_of_crossings_alone_shows_them(open_page, tmp_path):
     verdicts = {"2-year": "crest not reached", "4-year": "over the crest"}
     place = shapely.Point(512020, 4640137)
     rows = [
-        ("C-1", "Mill Road", "Long Creek", event, 100.0 * (e + 1), 803.21 + e, 805.0, 1.79 - e, 512.0, "4-year",
-         2.5, verdict, 1, "ok", place)
+        ("C-1", "Mill Road", "Long Creek", event, 100.0 * (e + 1), 803.21 + e, 805.0, 1.79 - e, 512.0,
+         "4-year", 2.5, verdict, 1, "ok", place)
         for e, (event, verdict) in enumerate(verdicts.items())
     ]  # fmt: skip
     source.layers["crossings"] = pd.DataFrame(rows, columns=columns.split())
