@@ -250,12 +250,17 @@ class Results:
         table = self.layers["crossings"]
         count = table["crossing_id"].nunique()
         unit, flow = self.units.symbol("length"), self.units.symbol("flow")
-        lines = [f"{count} crossings, {self.failed_crossings} without a full answer; the first by rank:"]
+        head = f"{count} crossings, {self.failed_crossings} without a full answer"
+        lines = [f"{head}; the first by rank:" if count else head]
         for _, rows in list(table.groupby("rank"))[:_SHOWN]:
             one = rows.iloc[0]
-            verdicts = ", ".join(f"{r.event} {r.verdict or '-'}" for r in rows.itertuples())
+            name = f"{one.crossing_id}, {one.road}" if one.road not in one.crossing_id else one.crossing_id
+            if not np.isfinite(one.crest):
+                lines.append(f"  {one['rank']}. {name}: no answer")
+                continue
+            verdicts = ", ".join(f"{r.event} {r.verdict or 'no answer'}" for r in rows.itertuples())
             crest = f"crest {one.crest:.2f} {unit} at {one.crest_discharge:,.0f} {flow}"
-            lines.append(f"  {one['rank']}. {one.crossing_id} {one.road}: {crest}; {verdicts}")
+            lines.append(f"  {one['rank']}. {name}: {crest}; {verdicts}")
         if count > _SHOWN:
             lines.append(f"  ... and {count - _SHOWN} more in crossings")
         return lines
@@ -582,16 +587,17 @@ def _screen(
     return screen_study(study, inputs.sections, inputs.streams, flows, progress, who.jobs, who.scheduler)
 
 
-def _check_crossings(study: Study, inputs: _Inputs) -> list[Finding]:
+def _check_crossings(study: Study, inputs: _Inputs, flows: Sequence[Flow]) -> list[Finding]:
     """Return what is to know about the places of crossings, before any of them is screened."""
     if study.crossings is None:
         return []
-    from terrain2q.screening import crossing_layers, find_crossings
+    from terrain2q.screening import crossing_layers, find_crossings, flow_findings
 
     crs = inputs.sections.terrain.crs
     points, roads = crossing_layers(study, crs)
     network = StreamNetwork(inputs.streams, crs, study.system)
     crossings, findings = find_crossings(study, points, roads, network)
+    findings = [*findings, *flow_findings(study, flows, crossings)]
     return [*findings, *(f for c in crossings for f in c.findings)]
 
 
@@ -648,10 +654,12 @@ def check_study(study: Study, progress: Progress | None = None) -> list[Finding]
     InputError
         An input is wrong.
     """
-    _extent_events(study, read_flows(study))
+    flows = read_flows(study)
+    _extent_events(study, flows)
     inputs = _read_inputs(study)
     built = build_sections(inputs.lines, inputs.sections, progress or _silent)
-    return _all_findings(inputs, [f for b in built for f in b.findings], _check_crossings(study, inputs))
+    about = _check_crossings(study, inputs, flows)
+    return _all_findings(inputs, [f for b in built for f in b.findings], about)
 
 
 def run_study(

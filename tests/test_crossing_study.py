@@ -301,6 +301,68 @@ def test_check_tells_of_the_places(folder):
     assert [f.feature_id for f in found if f.code == "crossing-off-stream"] == ["far"]
 
 
+def test_text_in_the_fields_of_crossings_is_told_of(folder):
+    points = geopandas.read_file(folder[0] / "data.gpkg", layer="crossings")
+    points["opening"] = ["20 m", "", "30", None]
+    points["class"] = ["major", "minor", "minor", None]
+    points.to_file(folder[0] / "text.gpkg", layer="crossings")
+    options = {
+        "crossings.path": str(folder[0] / "text.gpkg|layer=crossings"),
+        "crossings.opening_width_field": "opening",
+        "output.folder": str(folder[0] / "text"),
+        "crossings.panels": 0,
+    }
+    found = run(folder[0] / "study.toml", options)
+    assert [f.feature_id for f in found.findings_list if f.code == "field-not-number"] == ["a"]
+    assert set(found.crossings.loc[found.crossings["crossing_id"] == "a", "status"]) == {"doubtful"}
+    with pytest.raises(InputError) as caught:
+        check_study(load_study(folder[0] / "study.toml", {**options, "crossings.rank": ["class"]}))
+    assert caught.value.code == "value-not-allowed"
+    assert "'major'" in str(caught.value)
+    with pytest.raises(InputError) as caught:
+        check_study(load_study(folder[0] / "study.toml", {**options, "crossings.rank": ["probabilty"]}))
+    assert "'probability'" in caught.value.fix
+
+
+def test_a_slope_field_that_is_not_there_stops_a_study_without_cut_lines(folder):
+    with pytest.raises(InputError) as caught:
+        check_study(load_study(folder[0] / "study.toml", {"slope.field": "slop"}))
+    assert (caught.value.code, caught.value.where) == ("field-missing", "[slope] field")
+
+
+def test_roads_that_meet_no_stream_are_a_finding(folder):
+    far = roads(folder[1])
+    far.geometry = far.geometry.translate(0.0, 2000.0)
+    far.to_file(folder[0] / "far.gpkg", layer="roads")
+    options = {
+        "crossings.roads": str(folder[0] / "far.gpkg|layer=roads"),
+        "crossings.rank": ["probability"],
+        "output.folder": str(folder[0] / "none"),
+    }
+    (finding,) = check_study(load_study(folder[0] / "study.toml", options))
+    assert (finding.code, finding.severity) == ("crossings-none", "failed")
+    assert "apart" in finding.message
+    found = run(folder[0] / "study.toml", options)
+    assert [f.code for f in found.findings_list] == ["crossings-none"]
+    assert "0 crossings, 0 without a full answer\n" in found.summary_text()
+
+
+def test_flows_and_crossings_that_do_not_meet_are_findings(folder):
+    study = folder[0] / "study.toml"
+    text = study.read_text(encoding="utf-8").replace('[flows]\npath = "flows.csv"\n', "")
+    dry = folder[0] / "no_flows.toml"
+    dry.write_text(text, encoding="utf-8")
+    (finding,) = check_study(load_study(dry))
+    assert (finding.code, finding.severity) == ("flow-missing", "failed")
+    assert "[flows]" in finding.message
+    rows = "event,discharge,crossing\n10-year,20,\n10-year,25,R0 at S0\n10-year,30,R1 at S11\n"
+    (folder[0] / "by_crossing.csv").write_text(rows, encoding="utf-8")
+    found = check_study(load_study(study, {"flows.path": str(folder[0] / "by_crossing.csv")}))
+    (finding,) = [f for f in found if f.code == "crossing-unknown"]
+    assert finding.feature_id == "R1 at S11"
+    assert "'R1 at S1'" in finding.message
+
+
 def test_the_demonstration_has_three_verdicts(tmp_path):
     options = {"output.folder": str(tmp_path), "output.report": "false", "output.sheets": "none"}
     found = run(SAMPLE / "study.toml", options)
