@@ -29,7 +29,7 @@ from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError, worst_firs
 from terrain2q.flows import Flow, event_names, read_flows
 from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
-from terrain2q.ground.layers import read_layer, require_field, split_spec
+from terrain2q.ground.layers import read_layer, require_field, split_spec, texts_of
 from terrain2q.ground.low_line import LowLines, streams_near, turn_streams
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
@@ -382,7 +382,7 @@ def _read_inputs(study: Study) -> _Inputs:
             require_field(cut_lines, name, key=key_name, where=study.cut_lines.path)
         lines, line_findings = orient_cut_lines(cut_lines, streams, terrain.crs, study.system)
     findings += line_findings
-    cover = _read_cover(study, terrain)
+    cover = _read_cover(study, terrain, _where_sections_are(study, terrain, lines))
     channel = None
     if study.channel.path is not None:
         polygons = read_layer(study.channel.path, purpose="channel", geometry="polygon", crs=terrain.crs)
@@ -452,17 +452,38 @@ def _submerged(study: Study) -> Submerged | None:
     )
 
 
-def _read_cover(study: Study, terrain: Terrain) -> Cover | UniformCover:
+def _where_sections_are(
+    study: Study, terrain: Terrain, lines: Sequence[CutLine]
+) -> tuple[float, float, float, float]:
+    """Return bounds in the terrain's CRS that hold every section there will be."""
+    x, y = (np.concatenate([np.zeros(0), *(getattr(line, k) for line in lines)]) for k in "xy")
+    known = np.isfinite(x) & np.isfinite(y)
+    bounds = []
+    if known.any():
+        x, y = x[known], y[known]
+        bounds = [(x.min(), y.min(), x.max(), y.max())]
+    if study.crossings is not None or not bounds:
+        # sections of crossings are laid out later, and end where the terrain does
+        bounds.append(terrain.bounds)
+    low, high = np.min(bounds, axis=0), np.max(bounds, axis=0)
+    return float(low[0]), float(low[1]), float(high[2]), float(high[3])
+
+
+def _read_cover(study: Study, terrain: Terrain, within: tuple) -> Cover | UniformCover:
     table = study.land_cover
     if table.path is None:
         return UniformCover(table.default_n)
-    polygons = read_layer(table.path, purpose="land cover", geometry="polygon", crs=terrain.crs)
+    polygons = read_layer(
+        table.path, purpose="land cover", geometry="polygon", crs=terrain.crs, within=within
+    )
     return Cover(
         polygons,
         table.class_field,
         RoughnessTable.from_csv(table.table, study.system, roughness_from_parts),
         table.default_n,
         study.system,
+        # a class that the table lacks is wrong wherever it is
+        texts_of(table.path, table.class_field) if polygons.attrs["in_part"] else None,
     )
 
 

@@ -14,6 +14,7 @@ import shapely
 from shapely.geometry import LineString, MultiLineString, MultiPoint, Point, Polygon
 
 from terrain2q.errors import InputError
+from terrain2q.ground import layers
 from terrain2q.ground.layers import (
     clean_text,
     clean_texts,
@@ -342,3 +343,29 @@ def test_only_shapes_with_heights_or_measures_are_made_anew():
     assert shapely.equals_exact(flat[:5], shapely.force_2d(shapes[:5])).all()
     assert flat[0] is shapes[0]
     assert shapely.get_coordinate_dimension(shapes).tolist() == [2, 3, 3, 4, 2, -1]
+
+
+@pytest.mark.parametrize("crs", [UTM, "EPSG:4326", "EPSG:3857"])
+@pytest.mark.parametrize("kind", ["gpkg", "shp", "fgb"])
+def test_of_a_large_layer_what_is_near_is_read(tmp_path, monkeypatch, crs, kind):
+    squares = [shapely.box(500000 + 100 * i, 4700000 + 100 * j, 500100 + 100 * i, 4700100 + 100 * j)
+               for j in range(40) for i in range(40)]  # fmt: skip
+    frame = geopandas.GeoDataFrame({"c": np.arange(1600)}, geometry=squares, crs=UTM).to_crs(crs)
+    pyogrio.write_dataframe(frame, tmp_path / f"a.{kind}")
+    within = (501010.0, 4702010.0, 501290.0, 4702090.0)
+    options = {"purpose": "land cover", "geometry": "polygon", "crs": UTM, "within": within}
+    whole = read_layer(tmp_path / f"a.{kind}", **options)
+    assert not whole.attrs["in_part"]
+    assert len(whole) == 1600
+    monkeypatch.setattr(layers, "LARGE_LAYER", 1000)
+    part = read_layer(tmp_path / f"a.{kind}", **options)
+    assert part.attrs["in_part"]
+    # three squares are met; some beside them are within the margin, or about bounds that are turned
+    assert 3 <= len(part) <= 30
+    # the same features by the same names, whatever was left out
+    named = dict(zip(whole["feature_id"], whole["c"], strict=True))
+    assert [named[i] for i in part["feature_id"]] == part["c"].tolist()
+    assert {int(c) for c in whole["c"][whole.intersects(shapely.box(*within))]} <= set(part["c"])
+    # where nothing is near, the whole is there to tell
+    far = read_layer(tmp_path / f"a.{kind}", **(options | {"within": (6e5, 4.8e6, 6.1e5, 4.81e6)}))
+    assert len(far) == 1600

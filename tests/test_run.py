@@ -14,9 +14,11 @@ from rasterio.transform import from_origin
 from scipy.optimize import brentq
 from shapely import LineString, Polygon
 
-from terrain2q import Section, Subarea, run
+from terrain2q import Section, Subarea, process, run
 from terrain2q.commands import main
 from terrain2q.errors import InputError, OutputError
+from terrain2q.ground import layers
+from terrain2q.study import load_study
 
 SAMPLE = Path(__file__).parents[1] / "sample_dem"
 
@@ -32,6 +34,45 @@ def test_sample_study_answers_every_section(sample):
     assert set(sample.design_stages["event"]) == {"10-year", "50-year", "100-year"}
     for name, table in sample.layers.items():
         assert len(table), name
+
+
+def test_land_cover_read_only_where_sections_are_gives_the_same(sample, tmp_path, monkeypatch):
+    monkeypatch.setattr(layers, "LARGE_LAYER", 10)
+    # a cover that goes on far beyond the study, and has classes there that no line meets
+    cover = geopandas.read_file(SAMPLE / "valley.gpkg", layer="land_cover")
+    field = load_study(SAMPLE / "study.toml").land_cover.class_field
+    far = geopandas.GeoDataFrame(
+        {field: ["pasture"] * 50},
+        geometry=[Polygon([(x, 0), (x + 90, 0), (x + 90, 90), (x, 90)]) for x in range(0, 5000, 100)],
+        crs=cover.crs,
+    )
+    options = {"output.folder": str(tmp_path / "out"), "output.report": "false", "output.sheets": "none"}
+    options["land_cover.path"] = str(tmp_path / "cover.gpkg")
+    pd.concat([cover, far]).to_file(tmp_path / "cover.gpkg", layer="cover")
+    seen = []
+    read = process.read_layer
+
+    def reading(*args, **how):
+        seen.append(read(*args, **how))
+        return seen[-1]
+
+    monkeypatch.setattr(process, "read_layer", reading)
+    results = run(SAMPLE / "study.toml", options)
+    (part,) = (frame for frame in seen if frame.attrs["in_part"])
+    assert len(part) <= len(cover)
+    for name, table in sample.layers.items():
+        if name != "findings":
+            pd.testing.assert_frame_equal(results.layers[name].drop(columns="geometry", errors="ignore"),
+                                          table.drop(columns="geometry", errors="ignore"))  # fmt: skip
+    assert [(f.code, f.feature_id) for f in results.findings_list] == [
+        (f.code, f.feature_id) for f in sample.findings_list
+    ]
+    # a class without n is wrong wherever it lies
+    far[field] = "salt marsh"
+    pd.concat([cover, far]).to_file(tmp_path / "cover.gpkg", layer="cover")
+    with pytest.raises(InputError) as raised:
+        run(SAMPLE / "study.toml", options | {"output.folder": str(tmp_path / "other")})
+    assert "salt marsh" in str(raised.value)
 
 
 def test_sample_study_finds_the_three_bad_lines(sample):

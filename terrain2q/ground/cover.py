@@ -438,6 +438,8 @@ class Cover:
         Manning's n where the cover has a gap.
     units : str or UnitSystem
         For lengths in the findings' messages.
+    every_class : sequence of str, optional
+        The classes of the whole layer where `polygons` are a part of it.
 
     Attributes
     ----------
@@ -459,12 +461,14 @@ class Cover:
         roughness: RoughnessTable,
         default_n: float | None = None,
         units: str | UnitSystem = SI,
+        every_class: Sequence[str] | None = None,
     ) -> None:
         _check_default(default_n)
         where = f"land cover: {polygons.attrs.get('source', 'polygons')}"
         require_field(polygons, class_field, key="class_field", where=where)
         classes = np.asarray(clean_texts(polygons[class_field]), dtype=object)
-        missing = sorted(set(classes[classes != ""]) - set(roughness.rows), key=_natural)
+        there = set(classes if every_class is None else every_class) - {""}
+        missing = sorted(there - set(roughness.rows), key=_natural)
         if missing:
             raise InputError(
                 "class-missing",

@@ -34,6 +34,9 @@ _ID_FIELDS = {
     "crossings": ("crossing_id",),
 }
 _COMMON_ID_FIELDS = ("id", "name", "fid")
+LARGE_LAYER = 50_000
+"""Features above which a layer is read only where it is needed; fewer are soon read."""
+
 _WHOLE_NUMBER = re.compile(r"([+-]?\d+)\.0*")
 _SHOWN = 5
 
@@ -122,6 +125,7 @@ def read_layer(
     crs: object = None,
     id_field: str | None = None,
     repeated_ids: bool = False,
+    within: tuple[float, float, float, float] | None = None,
 ) -> geopandas.GeoDataFrame:
     """Read one vector layer, checked and brought to one CRS.
 
@@ -142,12 +146,16 @@ def read_layer(
         features are numbered from 1.
     repeated_ids : bool
         Whether several features may share an id, as parts of one stream do.
+    within : tuple of four floats, optional
+        Least x, least y, greatest x, greatest y in `crs`. Of a layer of more than `LARGE_LAYER` features only
+        those near these bounds are read, by the file's spatial index; a smaller one is read whole.
 
     Returns
     -------
     geopandas.GeoDataFrame
         The layer's columns and geometry (z and m dropped), with a column ``feature_id`` (str) added. Rows
-        without geometry are kept. ``attrs["source"]`` holds `spec` as text.
+        without geometry are kept. ``attrs["source"]`` holds `spec` as text, ``attrs["in_part"]`` whether
+        features were left out.
 
     Raises
     ------
@@ -186,7 +194,7 @@ def read_layer(
             "layer-missing", f"{path.name} has no layer {layer!r}; it has {', '.join(layers)}", where=where
         )
 
-    frame, fid_column = _read(path, layer, where)
+    frame, fid_column, in_part = _read(path, layer, where, crs, within)
     if len(frame) == 0:
         raise InputError("layer-empty", f"layer {layer!r} of {path.name} has no features", where=where)
     if not isinstance(frame, geopandas.GeoDataFrame):
@@ -205,10 +213,34 @@ def read_layer(
     if crs is not None:
         frame = reproject(frame, crs, where)
     frame.attrs["source"] = str(spec)
+    frame.attrs["in_part"] = in_part
     return frame
 
 
-def _read(path: Path, layer: str, where: str):
+def texts_of(spec: str | Path, name: str) -> list[str]:
+    """Return a column of a whole layer as clean texts, without reading its geometry."""
+    import pyogrio
+
+    path, layer = split_spec(spec)
+    return clean_texts(pyogrio.read_dataframe(path, layer=layer, columns=[name], read_geometry=False)[name])
+
+
+def _near(info: dict, crs: object, within: tuple | None) -> tuple | None:
+    """Return bounds in a large layer's own CRS, a little wider; None where it is to be read whole."""
+    if within is None or info["features"] <= LARGE_LAYER or info["crs"] is None or crs is None:
+        return None
+    try:
+        back = pyproj.Transformer.from_crs(horizontal_crs(crs), horizontal_crs(info["crs"]), always_xy=True)
+        left, bottom, right, top = back.transform_bounds(*within, densify_pts=21)
+    except (InputError, pyproj.exceptions.ProjError):
+        return None
+    wider = 0.05 * max(right - left, top - bottom)
+    bounds = (left - wider, bottom - wider, right + wider, top + wider)
+    # bounds that reach over the 180th meridian come back with their ends exchanged
+    return bounds if np.isfinite(bounds).all() and left <= right else None
+
+
+def _read(path: Path, layer: str, where: str, crs: object, within: tuple | None):
     import geopandas
     import pyogrio
 
@@ -216,13 +248,19 @@ def _read(path: Path, layer: str, where: str):
         with warnings.catch_warnings():
             # A note on m values and the like: plan geometry is all that is used here.
             warnings.simplefilter("ignore")
-            fid_column = pyogrio.read_info(path, layer=layer)["fid_column"]
-            frame = pyogrio.read_dataframe(path, layer=layer, force_2d=True, fid_as_index=True)
+            info = pyogrio.read_info(path, layer=layer)
+            how = {"layer": layer, "force_2d": True, "fid_as_index": True}
+            near = _near(info, crs, within)
+            frame = pyogrio.read_dataframe(path, bbox=near, **how)
+            if near is not None and not len(frame):  # nothing is there: let it be said of the whole
+                near, frame = None, pyogrio.read_dataframe(path, **how)
             if isinstance(frame, geopandas.GeoDataFrame):
                 frame = frame.set_geometry(in_plan(frame.geometry.to_numpy()), crs=frame.crs)
     except Exception as error:  # the reader's own exceptions differ by format
         raise InputError("file-unreadable", f"{path.name} cannot be read: {error}", where=where) from error
-    return frame, fid_column
+    if near is None and not info["fid_column"]:
+        frame = frame.reset_index(drop=True)  # a format's own numbers may have gaps
+    return frame, info["fid_column"], near is not None
 
 
 def in_plan(shapes: np.ndarray) -> np.ndarray:
@@ -362,7 +400,8 @@ def _ids(frame, id_field: str | None, fid_column: str, repeated: bool, purpose: 
                 return ids
         elif fids and name == fid_column.lower():
             return fids
-    return fids or [str(number) for number in range(1, len(frame) + 1)]
+    # rows count from 0 in the index, also where some were left out
+    return fids or [str(int(row) + 1) for row in frame.index]
 
 
 def _first(items: list) -> str:
