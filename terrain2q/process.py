@@ -29,7 +29,7 @@ from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError, worst_firs
 from terrain2q.flows import Flow, event_names, read_flows
 from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
-from terrain2q.ground.layers import read_layer, require_field, split_spec, texts_of
+from terrain2q.ground.layers import read_layer, require_field, split_spec, texts_in
 from terrain2q.ground.low_line import LowLines, streams_near, turn_streams
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
@@ -483,7 +483,7 @@ def _read_cover(study: Study, terrain: Terrain, within: tuple) -> Cover | Unifor
         table.default_n,
         study.system,
         # a class that the table lacks is wrong wherever it is
-        texts_of(table.path, table.class_field) if polygons.attrs["in_part"] else None,
+        texts_in(table.path, table.class_field) if polygons.attrs["in_part"] else None,
     )
 
 

@@ -217,12 +217,13 @@ def read_layer(
     return frame
 
 
-def texts_of(spec: str | Path, name: str) -> list[str]:
-    """Return a column of a whole layer as clean texts, without reading its geometry."""
+def texts_in(spec: str | Path, name: str) -> list[str]:
+    """Return the different texts in a column of a whole layer, clean, without reading its geometry."""
     import pyogrio
 
     path, layer = split_spec(spec)
-    return clean_texts(pyogrio.read_dataframe(path, layer=layer, columns=[name], read_geometry=False)[name])
+    _, table = pyogrio.read_arrow(path, layer=layer, columns=[name], read_geometry=False)
+    return clean_texts(table[name].unique().to_pylist())
 
 
 def _near(info: dict, crs: object, within: tuple | None) -> tuple | None:
