@@ -166,14 +166,14 @@ def _works_together(command: Callable[..., Any]) -> Callable[..., Any]:
         click.option(
             "--scheduler",
             metavar="ADDRESS",
-            help="Work on the sections of a large study on the Dask cluster of this scheduler, "
+            help="Work on many sections and crossings on the Dask cluster of this scheduler, "
             "such as tcp://10.0.0.5:8786.",
         ),
         click.option(
             "--jobs",
             metavar="WHOLE NUMBER",
             type=click.IntRange(min=1),
-            help="Processes that work on the sections of a large study; one a core if left out.",
+            help="Processes that work on many sections and crossings; one a core if left out.",
         ),
     ):
         command = decorate(command)

@@ -602,6 +602,16 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "valley's.",
             "A culvert of a field ditch that the stream layer does not hold.",
         ),
+        "crossings-none": (
+            "No road of the study meets any of its streams, so there is nothing to screen.",
+            "An empty list of crossings looks like a safe one.",
+            "Roads of the county to the south, or a layer whose CRS was assigned wrongly and lies elsewhere.",
+        ),
+        "crossing-unknown": (
+            "A row of the flows is meant for one crossing, and there is no crossing of that id.",
+            "The crossing that was meant is then held against the flow of its stream, or has none.",
+            "`C-12` in the flows and `C12` in the layer of crossings.",
+        ),
         "crossings-merged": (
             "Crossings lie nearer to each other than the merge distance and are counted as one.",
             "A divided road has one opening under two carriageways; two rows would count it twice.",
@@ -638,8 +648,8 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
         ),
         "crest-doubtful": (
             "The road does not stand out well: it is uneven, slopes across, is narrower than the cells, or "
-            "lies hardly "
-            "above the bed.",
+            "lies hardly above the bed. Or higher ground closes the valley beside it where no road is drawn: "
+            "the road's line may be far off.",
             "The discharge that reaches the crest goes with more than its square; a foot of error decides "
             "the verdict.",
             "A farm track on 3 m cells.",
@@ -651,9 +661,17 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "A road that runs down the valley after it has crossed the stream.",
         ),
         "crest-survey-differs": (
-            "The surveyed crest and the road in the ground are more than 0.3 m (1 ft) apart.",
+            "The surveyed crest and the road in the ground are more than 0.3 m (1 ft) apart. The surveyed "
+            "one was used, unless it is no higher than the stream's bed, as a filler such as -9999 is.",
             "Most such differences are a datum or a unit; some are a road rebuilt since the flight.",
             "A crest surveyed in the datum of 1929 beside a terrain in that of 1988.",
+        ),
+        "field-not-number": (
+            "A field that the study names for a number (crest, opening, slope, rank) holds text, or a number "
+            "that cannot be one of its kind, at this crossing.",
+            "Left out without a word, a surveyed crest would give way to the ground, and a crossing would "
+            "lose its place in the rank.",
+            "`498.2 ft` in the field of the surveyed crest, or `1,200` in that of the traffic.",
         ),
         "overflow-aside": (
             "The road's low point that water can get to is not at the stream.",

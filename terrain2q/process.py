@@ -10,7 +10,7 @@ from collections.abc import Callable, Iterable, Mapping, Sequence
 from contextlib import closing, suppress
 from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, NamedTuple
 
 import geopandas
 import numpy as np
@@ -250,12 +250,17 @@ class Results:
         table = self.layers["crossings"]
         count = table["crossing_id"].nunique()
         unit, flow = self.units.symbol("length"), self.units.symbol("flow")
-        lines = [f"{count} crossings, {self.failed_crossings} without a full answer; the first by rank:"]
+        head = f"{count} crossings, {self.failed_crossings} without a full answer"
+        lines = [f"{head}; the first by rank:" if count else head]
         for _, rows in list(table.groupby("rank"))[:_SHOWN]:
             one = rows.iloc[0]
-            verdicts = ", ".join(f"{r.event} {r.verdict or '-'}" for r in rows.itertuples())
+            name = f"{one.crossing_id}, {one.road}" if one.road not in one.crossing_id else one.crossing_id
+            if not np.isfinite(one.crest):
+                lines.append(f"  {one['rank']}. {name}: no answer")
+                continue
+            verdicts = ", ".join(f"{r.event} {r.verdict or 'no answer'}" for r in rows.itertuples())
             crest = f"crest {one.crest:.2f} {unit} at {one.crest_discharge:,.0f} {flow}"
-            lines.append(f"  {one['rank']}. {one.crossing_id} {one.road}: {crest}; {verdicts}")
+            lines.append(f"  {one['rank']}. {name}: {crest}; {verdicts}")
         if count > _SHOWN:
             lines.append(f"  ... and {count - _SHOWN} more in crossings")
         return lines
@@ -572,24 +577,27 @@ def _map_floods(study: Study, events, flows, inputs: _Inputs, answers, progress)
     return map_floods(answers, wanted, again, progress)
 
 
-def _screen(study: Study, inputs: _Inputs, flows: Sequence[Flow], progress) -> Screened | None:
+def _screen(
+    study: Study, inputs: _Inputs, flows: Sequence[Flow], progress: Progress, who: _Workers
+) -> Screened | None:
     if study.crossings is None:
         return None
     from terrain2q.screening import screen_study
 
-    return screen_study(study, inputs.sections, inputs.streams, flows, progress)
+    return screen_study(study, inputs.sections, inputs.streams, flows, progress, who.jobs, who.scheduler)
 
 
-def _check_crossings(study: Study, inputs: _Inputs) -> list[Finding]:
+def _check_crossings(study: Study, inputs: _Inputs, flows: Sequence[Flow]) -> list[Finding]:
     """Return what is to know about the places of crossings, before any of them is screened."""
     if study.crossings is None:
         return []
-    from terrain2q.screening import crossing_layers, find_crossings
+    from terrain2q.screening import crossing_layers, find_crossings, flow_findings
 
     crs = inputs.sections.terrain.crs
     points, roads = crossing_layers(study, crs)
     network = StreamNetwork(inputs.streams, crs, study.system)
     crossings, findings = find_crossings(study, points, roads, network)
+    findings = [*findings, *flow_findings(study, flows, crossings)]
     return [*findings, *(f for c in crossings for f in c.findings)]
 
 
@@ -646,10 +654,12 @@ def check_study(study: Study, progress: Progress | None = None) -> list[Finding]
     InputError
         An input is wrong.
     """
-    _extent_events(study, read_flows(study))
+    flows = read_flows(study)
+    _extent_events(study, flows)
     inputs = _read_inputs(study)
     built = build_sections(inputs.lines, inputs.sections, progress or _silent)
-    return _all_findings(inputs, [f for b in built for f in b.findings], _check_crossings(study, inputs))
+    about = _check_crossings(study, inputs, flows)
+    return _all_findings(inputs, [f for b in built for f in b.findings], about)
 
 
 def run_study(
@@ -670,7 +680,7 @@ def run_study(
     widths : bool
         Find the required benches too, with their layer and pictures; the study must have [bench].
     jobs : int, optional
-        Processes that work on the sections of a large study; one a core if left out.
+        Processes that work on the sections and crossings of a large study; one a core if left out.
     scheduler : str, optional
         Address of a Dask scheduler, whose cluster works on them instead.
 
@@ -686,6 +696,7 @@ def run_study(
     flows = read_flows(study)
     events = _extent_events(study, flows)
     jobs = jobs or cores()
+    who = _Workers(jobs, scheduler)
     with closing(_crew(study, jobs, scheduler)) as crew, hashed_ahead(_files_of(study)):
         inputs = _read_inputs(study)
         # the flood extent and the benches need the answers themselves, the layers only their rows
@@ -693,9 +704,9 @@ def run_study(
         parts = answer_lines(work, inputs.lines, batches, kept, jobs, scheduler, progress, crew)
         try:
             if work.as_layers:
-                made = _finish_rows(study, inputs, flows, parts, progress)
+                made = _finish_rows(study, inputs, flows, parts, progress, who)
             else:
-                made = _finish_answers(study, inputs, flows, events, widths, parts, progress)
+                made = _finish_answers(study, inputs, flows, events, widths, parts, progress, who)
         except InputError:
             if kept is not None:
                 kept.remove(all_new=True)
@@ -737,6 +748,13 @@ def run_study(
     )
 
 
+class _Workers(NamedTuple):
+    """Who works on sections and crossings: so many processes here, or the cluster of a scheduler."""
+
+    jobs: int
+    scheduler: str | None
+
+
 @dataclass(frozen=True)
 class _Made:
     """What a run has written before its record, and what the record and the results tell of it."""
@@ -760,7 +778,9 @@ def _package(study: Study, inputs: _Inputs) -> dict:
     }
 
 
-def _finish_rows(study: Study, inputs: _Inputs, flows, parts: Iterable[Part], progress: Progress) -> _Made:
+def _finish_rows(
+    study: Study, inputs: _Inputs, flows, parts: Iterable[Part], progress: Progress, who: _Workers
+) -> _Made:
     """Write the rows of many sections as they come, with what there is beside them."""
     folder = Path(study.output.folder)
     package = folder / RESULT_NAME
@@ -769,7 +789,7 @@ def _finish_rows(study: Study, inputs: _Inputs, flows, parts: Iterable[Part], pr
     names = [*LAYER_NAMES, *(["crossings"] if study.crossings is not None else []), "findings"]
     with GeoPackageWriter(package, names, **_package(study, inputs)) as writer:
         about_sections, failed = _write_rows(writer, parts, inputs)
-        screened = _screen(study, inputs, flows, progress)
+        screened = _screen(study, inputs, flows, progress, who)
         others = screened.findings if screened is not None else ()
         findings = _all_findings(inputs, about_sections, others)
         progress(0, 1, "writing")
@@ -786,13 +806,20 @@ def _finish_rows(study: Study, inputs: _Inputs, flows, parts: Iterable[Part], pr
     if screened is not None:
         from terrain2q.screening import write_crossings
 
-        about_crossings = write_crossings(screened, crossings, study, folder)
+        about_crossings = write_crossings(screened, crossings, study, folder, *who)
     layers = StoredLayers(package, writer.counts)
     return _Made(layers, writer.counts, findings, failed, (package, *about_crossings), earlier)
 
 
 def _finish_answers(
-    study: Study, inputs: _Inputs, flows, events, widths: bool, parts: Iterable[Part], progress: Progress
+    study: Study,
+    inputs: _Inputs,
+    flows,
+    events,
+    widths: bool,
+    parts: Iterable[Part],
+    progress: Progress,
+    who: _Workers,
 ) -> _Made:
     """Write what comes of the answers of all sections together."""
     from terrain2q.output.benches import PICTURES_NAME, required_widths_layer, write_benches
@@ -802,7 +829,7 @@ def _finish_answers(
 
     folder = Path(study.output.folder)
     about_sections, answers, failed = in_order(list(parts))
-    screened = _screen(study, inputs, flows, progress)
+    screened = _screen(study, inputs, flows, progress, who)
     terrain_crs = inputs.sections.terrain.crs
     folder.mkdir(parents=True, exist_ok=True)
     earlier = files_of_record(folder)
@@ -829,7 +856,7 @@ def _finish_answers(
             write_geopackage(package, layers, **_package(study, inputs))
     about_crossings = []
     if screened is not None:
-        about_crossings = write_crossings(screened, layers["crossings"], study, folder)
+        about_crossings = write_crossings(screened, layers["crossings"], study, folder, *who)
     pictures = [] if not sized else write_benches(folder / PICTURES_NAME, sized, study.system)
     files = (package, *rasters, *about_crossings, *pictures)
     counts = {name: len(table) for name, table in layers.items()}
@@ -851,7 +878,7 @@ def run(
     options : mapping, optional
         Values by ``table.key`` that go before those of the file.
     jobs : int, optional
-        Processes that work on the sections of a large study; one a core if left out.
+        Processes that work on the sections and crossings of a large study; one a core if left out.
     scheduler : str, optional
         Address of a Dask scheduler, whose cluster works on them instead.
 

@@ -200,7 +200,7 @@ def test_a_run_goes_on_from_the_parts_that_are_there(folder, tmp_path, undisturb
             raise KeyboardInterrupt
         return answer(job, lines, places)
 
-    monkeypatch.setattr(engines, "answer_batch", stopping)
+    monkeypatch.setattr(work, "answer_batch", stopping)
     study = load_study(folder / "study.toml", options(tmp_path / "out"))
     with pytest.raises(KeyboardInterrupt):
         run_study(study, jobs=1)
@@ -263,7 +263,7 @@ def test_wrong_inputs_leave_nothing(folder, tmp_path, monkeypatch):
         return answer(job, lines, places)
 
     tried, answer = [], work.answer_batch
-    monkeypatch.setattr(engines, "answer_batch", broken)
+    monkeypatch.setattr(work, "answer_batch", broken)
     with pytest.raises(InputError):
         run(folder / "study.toml", options(tmp_path / "deep" / "out"), jobs=1)
     assert list(tmp_path.iterdir()) == []

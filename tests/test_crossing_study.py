@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+import sqlite3
 from pathlib import Path
 
 import geopandas
@@ -13,12 +14,16 @@ import shapely
 from _county import CRS, N, make_valleys, roads, streams, write_dem
 from scipy.integrate import quad
 from scipy.stats import norm
-from test_sheets import EVENT, text_of, worked_out_again
+from test_sheets import EVENT, ROW, text_of, worked_out_again
 
 from terrain2q import Section, Subarea, run
+from terrain2q.batches import crossings as crossing_batches
+from terrain2q.batches import engines
+from terrain2q.batches import run as run_module
 from terrain2q.columns import COLUMNS, LAYERS
 from terrain2q.errors import InputError
 from terrain2q.hydraulics.widths import opening_parts
+from terrain2q.jobs import crossings as crossing_job
 from terrain2q.output.sheets import _stages_at_road, write_sheets
 from terrain2q.process import check_study
 from terrain2q.study import load_study
@@ -99,6 +104,37 @@ def test_a_study_of_roads_alone_needs_no_cut_lines(folder, results):
         assert row.first_event_over == "100-year"
         assert 0.01 < row.probability < 0.1
         assert row.geometry.distance(shapely.Point(v.centre, v.road.centroid.y)) < 6.0
+
+
+def rows_of(path: Path) -> dict[str, list]:
+    """Return the rows of every layer of a package, in their order."""
+    with sqlite3.connect(path) as database:
+        names = [n for (n,) in database.execute("SELECT table_name FROM gpkg_contents")]
+        names = [n for n in names if n != "layer_styles"]  # these hold the time of writing
+        return {name: database.execute(f'SELECT * FROM "{name}"').fetchall() for name in names}
+
+
+@pytest.mark.parametrize("who", ["processes", "cluster"])
+def test_several_processes_and_a_cluster_give_the_same_rows(folder, results, tmp_path, monkeypatch, who):
+    # a crossing is a batch, and so are its rows; so far all three were one
+    monkeypatch.setattr(crossing_job, "BATCH", 1)
+    monkeypatch.setattr(crossing_batches, "ROWS", 1)
+    monkeypatch.setattr(crossing_batches, "_WORTH_ANOTHER", 1)
+    options = {"output.folder": str(tmp_path)}
+    asked = []
+    engine = getattr(engines, who)
+    monkeypatch.setattr(run_module, who, lambda work, *more: asked.append(type(work)) or engine(work, *more))
+    if who == "processes":
+        run(folder[0] / "study.toml", options, jobs=2)
+    else:
+        distributed = pytest.importorskip("distributed")
+        with distributed.LocalCluster(2, threads_per_worker=1, dashboard_address=None) as two:
+            run(folder[0] / "study.toml", options, scheduler=two.scheduler_address)
+    assert crossing_batches.Screening in asked
+    assert crossing_batches.SectionRows in asked
+    for name in ("results.gpkg", "crossing_sections.gpkg"):
+        assert rows_of(tmp_path / name) == rows_of(folder[0] / "out" / name)
+    assert (tmp_path / "crossings.csv").read_bytes() == (folder[0] / "out" / "crossings.csv").read_bytes()
 
 
 def test_rank_goes_by_the_field_named(results):
@@ -263,6 +299,68 @@ def test_check_tells_of_the_places(folder):
     options = {"crossings.path": str(folder[0] / "data.gpkg|layer=crossings")}
     found = check_study(load_study(folder[0] / "study.toml", options))
     assert [f.feature_id for f in found if f.code == "crossing-off-stream"] == ["far"]
+
+
+def test_text_in_the_fields_of_crossings_is_told_of(folder):
+    points = geopandas.read_file(folder[0] / "data.gpkg", layer="crossings")
+    points["opening"] = ["20 m", "", "30", None]
+    points["class"] = ["major", "minor", "minor", None]
+    points.to_file(folder[0] / "text.gpkg", layer="crossings")
+    options = {
+        "crossings.path": str(folder[0] / "text.gpkg|layer=crossings"),
+        "crossings.opening_width_field": "opening",
+        "output.folder": str(folder[0] / "text"),
+        "crossings.panels": 0,
+    }
+    found = run(folder[0] / "study.toml", options)
+    assert [f.feature_id for f in found.findings_list if f.code == "field-not-number"] == ["a"]
+    assert set(found.crossings.loc[found.crossings["crossing_id"] == "a", "status"]) == {"doubtful"}
+    with pytest.raises(InputError) as caught:
+        check_study(load_study(folder[0] / "study.toml", {**options, "crossings.rank": ["class"]}))
+    assert caught.value.code == "value-not-allowed"
+    assert "'major'" in str(caught.value)
+    with pytest.raises(InputError) as caught:
+        check_study(load_study(folder[0] / "study.toml", {**options, "crossings.rank": ["probabilty"]}))
+    assert "'probability'" in caught.value.fix
+
+
+def test_a_slope_field_that_is_not_there_stops_a_study_without_cut_lines(folder):
+    with pytest.raises(InputError) as caught:
+        check_study(load_study(folder[0] / "study.toml", {"slope.field": "slop"}))
+    assert (caught.value.code, caught.value.where) == ("field-missing", "[slope] field")
+
+
+def test_roads_that_meet_no_stream_are_a_finding(folder):
+    far = roads(folder[1])
+    far.geometry = far.geometry.translate(0.0, 2000.0)
+    far.to_file(folder[0] / "far.gpkg", layer="roads")
+    options = {
+        "crossings.roads": str(folder[0] / "far.gpkg|layer=roads"),
+        "crossings.rank": ["probability"],
+        "output.folder": str(folder[0] / "none"),
+    }
+    (finding,) = check_study(load_study(folder[0] / "study.toml", options))
+    assert (finding.code, finding.severity) == ("crossings-none", "failed")
+    assert "apart" in finding.message
+    found = run(folder[0] / "study.toml", options)
+    assert [f.code for f in found.findings_list] == ["crossings-none"]
+    assert "0 crossings, 0 without a full answer\n" in found.summary_text()
+
+
+def test_flows_and_crossings_that_do_not_meet_are_findings(folder):
+    study = folder[0] / "study.toml"
+    text = study.read_text(encoding="utf-8").replace('[flows]\npath = "flows.csv"\n', "")
+    dry = folder[0] / "no_flows.toml"
+    dry.write_text(text, encoding="utf-8")
+    (finding,) = check_study(load_study(dry))
+    assert (finding.code, finding.severity) == ("flow-missing", "failed")
+    assert "[flows]" in finding.message
+    rows = "event,discharge,crossing\n10-year,20,\n10-year,25,R0 at S0\n10-year,30,R1 at S11\n"
+    (folder[0] / "by_crossing.csv").write_text(rows, encoding="utf-8")
+    found = check_study(load_study(study, {"flows.path": str(folder[0] / "by_crossing.csv")}))
+    (finding,) = [f for f in found if f.code == "crossing-unknown"]
+    assert finding.feature_id == "R1 at S11"
+    assert "'R1 at S1'" in finding.message
 
 
 def test_the_demonstration_has_three_verdicts(tmp_path):
@@ -524,20 +622,34 @@ def test_a_wrong_number_would_not_pass(demonstration, column):
         assert_by_hand(wrong, worked)
 
 
-@pytest.mark.parametrize(
-    ("crossing", "place"),
-    [
-        ("C-1", r"(?<=\s)831\.078(?=\s)"),  # a point of the road
-        ("C-1", r"(?<=\s)773\.19(?=\s)"),  # an area of the approach section
-        ("C-1", r"(?<=\s)815\.19(?=\s)"),  # of the tailwater section
-        ("C-2", r"(?<=\s)401\.65(?=\s)"),  # of the opening
-    ],
-)
-def test_a_number_misprinted_would_not_pass(demonstration, crossing, place):
+def largest_area(sheet: str) -> str:
+    """Return the largest area in the tables of a sheet by subarea."""
+    return max((numbers.split()[0] for *_, numbers in ROW.findall(sheet)), key=float)
+
+
+MISPRINTS = {
+    "a point of the road": ("C-1", lambda sheet: f"{road_of(sheet, 2)[60, 1]:.3f}"),
+    "an area of the approach section": ("C-1", largest_area),
+    "an area of the tailwater section": (
+        "C-1", lambda sheet: largest_area(sheet[sheet.index("C-1 tailwater") :]),
+    ),
+    "an area of the opening": (
+        "C-2", lambda sheet: re.search(r"\n10-year +\S+ – \S+ +\S+ +\d+ +0\.\d+ +([\d.]+) ", sheet)[1],
+    ),
+}  # fmt: skip
+"""By what is misprinted, the crossing and the number as its sheet has it."""
+
+
+@pytest.mark.parametrize("what", MISPRINTS)
+def test_a_number_misprinted_would_not_pass(demonstration, what):
     table, sheets = demonstration
+    crossing, find = MISPRINTS[what]
     sheet = sheets[crossing]
-    assert re.search(place, sheet)
-    wrong = re.sub(place, lambda found: f"{1.005 * float(found[0]):.3f}", sheet, count=1)
+    printed = find(sheet)
+    wrong = re.sub(
+        rf"(?<=\s){re.escape(printed)}(?=\s)", lambda found: f"{1.005 * float(found[0]):.3f}", sheet, count=1
+    )
+    assert wrong != sheet
     with pytest.raises(AssertionError):
         assert_by_hand(table[table["crossing_id"] == crossing], by_hand(wrong))
 

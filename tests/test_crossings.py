@@ -7,25 +7,29 @@ from dataclasses import replace
 
 import geopandas
 import numpy as np
+import pandas
 import pytest
 import shapely
+import shapely.affinity
 from _county import CRS, HALF_TOP, LONG, NORTH, ROAD_AT, WEST, N, make_valleys, roads, streams, write_dem
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from shapely.geometry import LineString, Point
 
+from terrain2q.columns import CAUTION
 from terrain2q.flows import Flow
 from terrain2q.ground.cover import UniformCover
 from terrain2q.ground.local_ground import LocalGround
-from terrain2q.ground.road_surface import find_crest, find_road_surface
+from terrain2q.ground.road_surface import _outline, find_crest, find_road_surface
 from terrain2q.ground.roads import RoadNetwork, crossings_from_points, crossings_from_roads, structure_of
 from terrain2q.ground.streams import StreamNetwork
 from terrain2q.ground.terrain import Terrain
 from terrain2q.hydraulics.weir import greatest_coefficient, road_overflow, weir_discharge, wetted_road
 from terrain2q.jobs import crossings as crossing_job
-from terrain2q.jobs.crossings import CrossingInputs, _probability, ranked, screen_crossings
+from terrain2q.jobs.crossings import CrossingInputs, _probability, field_findings, ranked, screen_crossings
 from terrain2q.jobs.sections import SectionInputs
 from terrain2q.jobs.slopes import OneSlope
+from terrain2q.output.crossing_panels import draw_map, draw_panel, draw_table
 from terrain2q.units import SI, US
 
 EVENTS = {"10-year": 0.1, "50-year": 0.02, "100-year": 0.01}
@@ -119,6 +123,14 @@ def test_two_carriageways_are_one_crossing_and_say_so():
     assert len(apart) == 2
 
 
+@pytest.mark.parametrize("crs", [CRS, "EPSG:4269", "EPSG:3857", "EPSG:5070"])
+def test_the_same_one_of_two_carriageways_stays_in_any_crs(crs):
+    pair = {"East": [(200, -100), (200, 100)], "West": [(218, -100), (218, 100)]}
+    stream = StreamNetwork(lines(Mill=STRAIGHT).to_crs(crs), crs)
+    found, _ = crossings_from_roads(RoadNetwork(lines(**pair).to_crs(crs)), stream, 30.0)
+    assert [c.crossing_id for c in found] == ["East at Mill"]
+
+
 def test_a_road_split_at_its_bridge_is_one_road():
     table = lines(a=[(200, -100), (200, -8)], b=[(200, -8), (200, 8)], c=[(200, 8), (200, 100)])
     table["bridge"] = ["no", "yes", "no"]
@@ -180,10 +192,49 @@ def test_a_tunnel_is_a_finding_and_a_bridge_a_flag():
     assert structure_of({"tunnel": 0, "bridge": None, "structure": "pipes"}) == ""
 
 
+@pytest.mark.parametrize(
+    ("fields", "expected"),
+    [
+        ({"IsBridge": True}, "bridge"),
+        ({"BRIDGE_FLAG": "Y"}, "bridge"),
+        ({"bridge": -1}, "bridge"),
+        ({"bridge": "Bridge No. 12"}, "bridge"),
+        ({"STRUCT_TYPE": "Bridge, steel"}, "bridge"),
+        ({"structure": "RAIL-BRIDGE"}, "bridge"),
+        ({"structure": "Viaduct"}, "bridge"),
+        ({"structure_type": "Tunnel;box"}, "tunnel"),
+        ({"brunnel": "tunnel"}, "tunnel"),
+        ({"tunnel": "unknown"}, ""),
+        ({"tunnel": "N/A"}, ""),
+        ({"tunnel": "-"}, ""),
+        ({"tunnel": "culvert"}, ""),
+        ({"bridge": "no bridge"}, ""),
+        ({"bridge": float("nan")}, ""),
+        ({"structure": "not a bridge"}, ""),
+        ({"structure": "bridge/culvert"}, ""),
+        ({"type": "residential"}, ""),
+    ],
+)
+def test_flags_are_read_as_they_are_spelled(fields, expected):
+    assert structure_of(fields) == expected
+
+
 def points(places, **columns):
     shapes = [None if p is None else Point(np.add(p, (WEST, NORTH))) for p in places]
     ids = [f"C{k}" for k in range(1, len(places) + 1)]
     return geopandas.GeoDataFrame({"feature_id": ids, **columns}, geometry=shapes, crs=CRS)
+
+
+def test_a_point_on_a_road_in_a_tunnel_keeps_its_row_without_an_answer():
+    table = lines(A=[(204, -100), (204, 100)], B=[(604, -100), (604, 100)])
+    table["tunnel"] = ["yes", "no"]
+    found = crossings_from_points(
+        points([(200, 2), (600, 2)]), network(Mill=STRAIGHT), RoadNetwork(table), 30.0, 30.0
+    )
+    assert [[(f.code, f.severity) for f in c.findings] for c in found] == [
+        [("road-in-tunnel", "failed")],
+        [],
+    ]
 
 
 def test_points_are_brought_to_stream_and_road_and_keep_their_places():
@@ -347,6 +398,49 @@ def test_numbers_can_be_worked_out_by_hand(county):
     assert last["required_opening"] == pytest.approx(
         section.required_opening(last["discharge"], allowed, answer.slope)
     )
+
+
+@pytest.mark.parametrize("radius", [200.0, 30.0, 4.0])
+def test_the_ground_under_a_fill_is_that_of_its_pieces(radius):
+    # a road round half a circle, its fill up to 20 m wide: about a bend of 4 m its outline crosses itself
+    angle = np.linspace(0.0, np.pi, 60)
+    normals = np.column_stack([np.cos(angle), np.sin(angle)])
+    points = radius * normals
+    up = 6.0 + 2.0 * np.sin(5 * angle)
+    down = 12.0 + 8.0 * np.cos(3 * angle)
+    fill = _outline(points, normals, up, down)
+    a, b = points + normals * up[:, None], points - normals * down[:, None]
+    pieces = [
+        shapely.convex_hull(shapely.MultiPoint([a[i], a[i + 1], b[i + 1], b[i]])) for i in range(len(a) - 1)
+    ]
+    whole = shapely.union_all(pieces)
+    assert fill.is_valid
+    assert fill.symmetric_difference(whole).area < 1e-3 * whole.area
+    assert (shapely.Polygon(np.vstack([a, b[::-1]])).is_valid) == (radius > 20.0)
+
+
+def test_a_short_fill_between_steep_hillsides_has_its_crest(tmp_path):
+    """The drawn line runs on up hillsides of 1 in 2.5 to 1 in 4.5, on which there is no road to see."""
+    valleys = [
+        replace(v, side=2.5 + 0.1 * v.number, sag=0.0, crest=v.crest + 1.0, drawn_off=0.5 * v.drawn_off)
+        for v in make_valleys(20)
+    ]
+    write_dem(tmp_path / "dem.tif", valleys, noise=0.1, seed=4)
+    terrain = Terrain(tmp_path / "dem.tif")
+    off, middle = {}, {}
+    for v in valleys:
+        ground = LocalGround(terrain, v.centre, NORTH - ROAD_AT, 200.0)
+        line = LineString(ground.to_local(shapely.get_coordinates(v.road)))
+        at = line.project(Point(0.0, 0.0))
+        surface = find_road_surface(
+            ground, line, at, np.array([0.0, -1.0]), reach=110.0, width=6.0, search=12.0
+        )
+        assert (surface.deck is not None) == bool(v.opening), v
+        off[v.number] = find_crest(surface, ground, 100.0).height - v.crest_height
+        x, y = surface.place(0.0)
+        middle[v.number] = v.along_and_across(v.centre + x, NORTH - ROAD_AT + y)[1]
+    assert max(map(abs, off.values())) < 0.05, off
+    assert max(map(abs, middle.values())) < 1.0, middle
 
 
 def test_a_line_drawn_aside_gives_the_same_crest(county):
@@ -563,6 +657,112 @@ def test_tide_and_surveyed_crest_and_opening(tmp_path):
     assert values["opening_share"] == pytest.approx(12.0 / values["required_opening"])
 
 
+@pytest.mark.parametrize(("off", "side"), [(25.0, "downstream"), (-25.0, "upstream")])
+def test_a_fill_beside_a_line_drawn_far_off_is_told_of(tmp_path, off, side):
+    valley, inputs = one_valley(tmp_path, crest=2.5)
+    table = roads([valley])
+    table.geometry = table.geometry.translate(0.0, off)
+    found, _ = crossings_from_roads(RoadNetwork(table), inputs.network, 30.0)
+    (answer,) = screen_crossings(replace(inputs, crossings=found))
+    (finding,) = [f for f in answer.findings if "where no road is drawn" in f.message]
+    assert finding.code == "crest-doubtful"
+    assert f"{side}, where" in finding.message
+    assert finding.y == pytest.approx(NORTH - ROAD_AT, abs=HALF_TOP + 1.0)
+    # the valley falls less than the height that is told
+    told = float(finding.message.split(" m higher")[0].split()[-1])
+    assert answer.crest + told == pytest.approx(valley.crest_height, abs=0.1)
+    # where that road is drawn too, nothing is to be told
+    both = RoadNetwork(pandas.concat([table, roads([valley]).assign(name="the fill's own")]))
+    (answer,) = screen_crossings(replace(inputs, crossings=found, roads=both))
+    assert not any("where no road is drawn" in f.message for f in answer.findings)
+
+
+def test_a_steep_stream_is_no_fill(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=1.0, slope=0.05)
+    (answer,) = screen_crossings(inputs)
+    assert "crest-doubtful" not in codes(answer)
+
+
+def test_a_crossing_without_a_place_for_its_section_says_why(tmp_path):
+    valley, inputs = one_valley(tmp_path, crest=2.0)
+    short = streams([valley])
+    top = NORTH - ROAD_AT + HALF_TOP + 4.0
+    short.geometry = [LineString([(valley.centre, top), (valley.centre, NORTH - LONG + 2.0)])]
+    net = StreamNetwork(short.assign(feature_id=short["stream_id"]), CRS)
+    found, _ = crossings_from_roads(RoadNetwork(roads([valley])), net, 30.0)
+    (answer,) = screen_crossings(replace(inputs, network=net, crossings=found))
+    (finding,) = [f for f in answer.findings if f.code == "crossing-failed"]
+    assert "the stream line begins" in finding.message
+
+    def gap(z, x, y):
+        return np.where((np.abs(x - valley.centre) < 3.0) & (y > NORTH - ROAD_AT + 5.0), np.nan, z)
+
+    _, inputs = one_valley(tmp_path, change=gap, crest=2.0)
+    (answer,) = screen_crossings(inputs)
+    (finding,) = [f for f in answer.findings if f.code == "crossing-failed"]
+    assert "the terrain has a gap along the stream there" in finding.message
+
+
+def test_a_filler_is_no_surveyed_crest(tmp_path):
+    valley, inputs = one_valley(tmp_path, crest=2.0)
+    (plain,) = screen_crossings(inputs)
+    for filler in (-9999.0, 0.0, valley.bed - 1.0):
+        one = replace(inputs.crossings[0], attributes={"crest": filler})
+        (answer,) = screen_crossings(replace(inputs, crossings=[one], crest_field="crest"))
+        assert answer.crest == plain.crest
+        (finding,) = [f for f in answer.findings if f.code == "crest-survey-differs"]
+        assert finding.severity == "doubtful"
+        assert "the one in the ground was used" in finding.message
+
+
+@pytest.mark.parametrize(
+    ("surveys", "added"),
+    [
+        ((None, 0.25), 0.25),
+        ((0.1, 0.25), 0.25),
+        ((0.25, 0.1), 0.25),
+        ((0.2, None), 0.2),
+        ((-9999.0, 0.1), 0.1),
+    ],
+)
+def test_of_two_surveyed_carriageways_the_higher_one_counts(tmp_path, surveys, added):
+    valley, inputs = one_valley(tmp_path, crest=2.0)
+    pair = pandas.concat([roads([valley]).assign(name=name) for name in ("East", "West")])
+    # two lines along one fill, so that their surveys alone tell them apart
+    pair.geometry = [valley.road, shapely.affinity.translate(valley.road, 0.0, -2.0)]
+    pair["crest"] = [np.nan if s is None else valley.crest_height + s for s in surveys]
+    found, _ = crossings_from_roads(RoadNetwork(pair), inputs.network, 30.0)
+    (answer,) = screen_crossings(replace(inputs, crossings=found, crest_field="crest"))
+    assert answer.crest == pytest.approx(valley.crest_height + added, abs=1e-6)
+
+
+def test_fields_that_hold_no_number_are_findings(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=2.0)
+    fields = {
+        "crest": "498.2 ft",
+        "traffic": "1,200",
+        "width": 0.0,
+        "gap": -3,
+        "full": " 12.5 ",
+        "empty": None,
+    }
+    one = replace(inputs.crossings[0], attributes=fields)
+    opening = [(name, "the opening", True) for name in ("width", "gap", "full", "empty")]
+    wanted = [("crest", "the surveyed crest", False), ("traffic", "the rank", False), *opening]
+    found = [(f.message.split()[0], f.severity) for f in field_findings(one, wanted)]
+    assert found == [("crest", "doubtful"), ("traffic", "note"), ("width", "note"), ("gap", "doubtful")]
+
+
+def test_an_empty_field_of_a_point_leaves_room_for_the_roads(tmp_path):
+    table = lines(A=[(204, -100), (204, 100)])
+    table["crest"], table["traffic"] = [101.5], [900]
+    found = crossings_from_points(
+        points([(200, 2)], crest=[None], traffic=[40]),
+        network(Mill=STRAIGHT), RoadNetwork(table), 30.0, 30.0,
+    )  # fmt: skip
+    assert (found[0].attributes["crest"], found[0].attributes["traffic"]) == (101.5, 40)
+
+
 def test_a_section_cut_by_a_road_is_a_finding(tmp_path):
     valley, inputs = one_valley(tmp_path, crest=2.0)
     # the road turns and runs up the valley beside the stream
@@ -599,3 +799,64 @@ def test_a_crossing_without_a_flow_keeps_its_place(tmp_path):
     own = [Flow("flood", 5.0, crossing=inputs.crossings[0].crossing_id), *flows]
     (answer,) = screen_crossings(replace(inputs, flows=own))
     assert answer.events[0].values["discharge"] == 5.0
+
+
+# --- pages for people --------------------------------------------------------------------------------
+
+
+def words(figure):
+    return "\n".join(text.get_text() for text in figure.texts)
+
+
+def test_every_page_says_that_it_is_a_screening_estimate(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=2.0)
+    answers = screen_crossings(inputs)
+    lost = replace(answers[0], road=None, approach=None, events=())
+    pages = [draw_table(answers, SI), draw_map(answers, inputs), draw_panel(answers[0], inputs)]
+    for page in (*pages, draw_panel(lost, inputs)):
+        assert CAUTION in words(page)
+
+
+def test_a_page_has_the_largest_events_however_many_there_are(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=2.0)
+    flows = [Flow(f"event {k}", 4.0 * k) for k in range(1, 16)]
+    (answer,) = screen_crossings(replace(inputs, flows=flows))
+    text = words(draw_panel(answer, inputs))
+    assert "event 15: 60.0 m³/s" in text
+    assert "event 14: 56.0 m³/s" in text
+    assert "event 1: " not in text
+    assert "smaller events in crossings.csv" in text
+    assert f"first event over: {answer.first_event_over}" in text
+
+
+def test_a_page_without_an_answer_says_why(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=2.0)
+    why = "the ground ends here, " * 30
+    one = replace(inputs.crossings[0], findings=(inputs.crossings[0].finding("crossing-failed", why),))
+    (answer,) = screen_crossings(replace(inputs, crossings=[one]))
+    text = words(draw_panel(answer, inputs))
+    assert "No answer" in text
+    assert " ".join(why.split()) in " ".join(text.split())
+
+
+def test_labels_of_a_map_do_not_lie_over_each_other(tmp_path):
+    _, inputs = one_valley(tmp_path, crest=2.0)
+    (answer,) = screen_crossings(inputs)
+    one = answer.crossing
+    places = [(0.0, 0.0), (25.0, 0.0), (0.0, 20.0), (600.0, 5.0)]
+    moved = [
+        replace(one, crossing_id=f"crossing {k}", x=one.x + x, y=one.y + y)
+        for k, (x, y) in enumerate(places, 1)
+    ]
+    many = [replace(answer, rank=k, crossing=at) for k, at in enumerate(moved, 1)]
+    figure = draw_map(many, inputs)
+    figure.draw_without_rendering()
+    ax = figure.axes[0]
+    boxes = [t.get_window_extent() for t in ax.texts if "crossing" in t.get_text()]
+    assert len(boxes) == 4
+    assert not any(a.overlaps(b) for k, a in enumerate(boxes) for b in boxes[:k])
+    frame = ax.get_window_extent()
+    assert all(b.x0 >= frame.x0 and b.x1 <= frame.x1 for b in boxes)
+    lengths = [t.get_text() for t in ax.texts if t.get_text().endswith(" m")]
+    (bar,) = [line for line in ax.lines if line.get_zorder() == 9]
+    assert lengths == [f"{np.ptp(bar.get_xdata()):.0f} m"]

@@ -27,7 +27,7 @@ MAY_IMPORT = {
     "jobs": {"errors", "units", "flows", "ground", "hydraulics"},
     "output": {"errors", "units", "columns", "ground", "hydraulics", "jobs"},
     "laying_out": {"errors", "units", "study", "ground", "jobs", "output", "screening"},
-    "screening": {"errors", "flows", "study", "ground", "hydraulics", "jobs", "output"},
+    "screening": {"batches", "errors", "flows", "study", "ground", "hydraulics", "jobs", "output"},
     "batches": {"errors", "units", "columns", "flows", "ground", "hydraulics", "jobs", "output"},
     "process": {"batches", "errors", "units", "columns", "flows", "study", "ground", "hydraulics", "jobs",
                 "output", "roughness_tables", "laying_out", "screening"},

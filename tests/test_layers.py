@@ -11,7 +11,7 @@ import pandas
 import pyogrio
 import pytest
 import shapely
-from shapely.geometry import LineString, MultiLineString, Point, Polygon
+from shapely.geometry import LineString, MultiLineString, MultiPoint, Point, Polygon
 
 from terrain2q.errors import InputError
 from terrain2q.ground.layers import (
@@ -178,12 +178,16 @@ def test_rows_without_geometry_are_kept(tmp_path):
         (LINES[0], "polygon", False),
         (Point(0, 0), "point", True),
         (LINES[0], "point", False),
+        (MultiPoint([(0, 0)]), "point", True),
+        (MultiPoint([(0, 0), (1, 1)]), "point", False),
     ],
 )
 def test_kind_of_geometry(tmp_path, shape, kind, accepted):
     path = write(tmp_path / "layer.gpkg", [shape])
     if accepted:
-        assert len(read_layer(path, purpose="cut lines", geometry=kind)) == 1
+        frame = read_layer(path, purpose="cut lines", geometry=kind)
+        assert len(frame) == 1
+        assert kind != "point" or frame.geometry[0].geom_type == "Point"
     else:
         error = error_of(path, geometry=kind)
         assert error.code == "geometry-kind"

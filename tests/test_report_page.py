@@ -663,6 +663,31 @@ def test_crossings_are_on_the_map_and_in_their_table(open_page, tmp_path):
     assert opened.complaints == []
 
 
+def test_a_study_of_crossings_alone_shows_them(open_page, tmp_path):
+    source = _made_up(0)
+    columns = (
+        "crossing_id road stream event discharge stage crest freeboard crest_discharge first_event_over "
+        "required_opening verdict rank status geometry"
+    )
+    verdicts = {"2-year": "crest not reached", "4-year": "over the crest"}
+    place = shapely.Point(512020, 4640137)
+    rows = [
+        ("C-1", "Mill Road", "Long Creek", event, 100.0 * (e + 1), 803.21 + e, 805.0, 1.79 - e, 512.0,
+         "4-year", 2.5, verdict, 1, "ok", place)
+        for e, (event, verdict) in enumerate(verdicts.items())
+    ]  # fmt: skip
+    source.layers["crossings"] = pd.DataFrame(rows, columns=columns.split())
+    opened = open_page(write_report(source, tmp_path / "alone.html"))
+    for event, verdict in verdicts.items():
+        opened.choose_event(event)
+        assert opened.column("Verdict", "crossings") == [verdict]
+    text = re.sub(r"\s+", " ", opened.page.locator("main").inner_text())
+    assert "Design flows: 2-year (100 ft³/s); 4-year (200 ft³/s)." in text
+    assert "ratings only" not in text
+    assert "Crossings at 4-year: 1 over the crest." in text
+    assert opened.complaints == []
+
+
 # --------------------------------------------------------------------------------------------------
 # In a notebook
 

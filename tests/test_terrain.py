@@ -849,6 +849,13 @@ def test_many_points_are_those_of_few(tmp_path, monkeypatch, kind, sampling):
     ]
     # along cell centres, edges of cells and the outer edge
     lines += [np.array([place(0, r), place(260, r)]) for r in (0.0, 0.5, 16.0, 16.5, 200.0)]
+    # by a hair to this or that side of where blocks part, and from one side to the other
+    for off in (-1e-6, -1e-9, 1e-9, 1e-6, 3e-6):
+        lines += [np.array([place(0, 32.5 + off), place(260, 32.5 + off)])]
+        lines += [np.array([place(64.5 - off, 3), place(64.5 + off, 190)])]
+    # more vertices than cells, wavering about such a place
+    waver = 96.5 + 0.4 * np.sin(np.arange(600))
+    lines += [np.column_stack(place(waver, np.linspace(2, 180, 600)))]
     terrain = Terrain(path, "m", sampling=sampling)
     few = terrain.sample(lines)
     for module in (terrain_module, tiles_module):

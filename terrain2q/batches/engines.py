@@ -1,7 +1,7 @@
 """Who works on the batches: this process, several on this machine, or a Dask cluster.
 
-Each gives the parts as they come, in any order, and keeps each before that; what they hold is the same. A
-part that is not at hand comes as None, to be read where it is kept.
+Each gives the parts as they come, in any order, and keeps each before that where parts are kept; what they
+hold is the same. A part that is not at hand comes as None, to be read where it is kept.
 """
 
 from __future__ import annotations
@@ -15,27 +15,31 @@ import threading
 from collections.abc import Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from contextlib import contextmanager, suppress
+from typing import Any, Protocol
 
 from terrain2q.batches.kept import KeptParts
-from terrain2q.batches.work import Part, Work, answer_batch
 from terrain2q.errors import InputError, Terrain2qError
 from terrain2q.ground import tiles
-from terrain2q.ground.cut_lines import CutLine
 
-Batch = tuple[int, Sequence[CutLine], Sequence[int]]
-"""Number of a batch, its lines, and their places among all lines."""
+Batch = tuple[int, Sequence, Sequence[int]]
+"""Number of a batch, its cut lines or crossings, and their places among all."""
 
 
-def serial(
-    work: Work, batches: Sequence[Batch], kept: KeptParts | None = None
-) -> Iterator[tuple[int, Part | None]]:
+class Job(Protocol):
+    """What is the same for all batches, and can be sent to those that work on them."""
+
+    def answer(self, items: Sequence, places: Sequence[int]) -> Any:
+        """Return the part that comes of a batch, by what is given alone."""
+
+
+def serial(work: Job, batches: Sequence[Batch], kept: KeptParts | None = None) -> Iterator[tuple[int, Any]]:
     """Work on one batch after another in this process."""
-    for number, lines, places in batches:
-        yield number, _answered(work, number, lines, places, kept)
+    for number, items, places in batches:
+        yield number, _answered(work, number, items, places, kept)
 
 
-def _answered(work: Work, number: int, lines, places, kept: KeptParts | None) -> Part:
-    part = answer_batch(work, lines, places)
+def _answered(work: Job, number: int, items: Sequence, places, kept: KeptParts | None):
+    part = work.answer(items, places)
     if kept is not None:
         kept.keep(number, part)
     return part
@@ -86,7 +90,7 @@ class _Worker:
         self._process.stdin.write(message)
         self._process.stdin.flush()
 
-    def answer(self, batch: Batch) -> Part | None:
+    def answer(self, batch: Batch):
         try:
             self.send(pickle.dumps(batch, protocol=5))
             part = pickle.load(self._process.stdout)
@@ -109,22 +113,22 @@ class _Worker:
 class _Here:
     """The process itself as one of the workers: it is at work while the others still start."""
 
-    def __init__(self, work: Work, kept: KeptParts | None) -> None:
+    def __init__(self, work: Job, kept: KeptParts | None) -> None:
         self._work, self._kept = work, kept
         # one thread reads the terrain for each that works
         self._threads, tiles.MOST_THREADS = tiles.MOST_THREADS, 1
 
-    def answer(self, batch: Batch) -> Part:
-        number, lines, places = batch
-        return _answered(self._work, number, lines, places, self._kept)
+    def answer(self, batch: Batch):
+        number, items, places = batch
+        return _answered(self._work, number, items, places, self._kept)
 
     def close(self) -> None:
         tiles.MOST_THREADS = self._threads
 
 
 def processes(
-    work: Work, batches: Sequence[Batch], jobs: int, kept: KeptParts | None = None, crew: Crew | None = None
-) -> Iterator[tuple[int, Part | None]]:
+    work: Job, batches: Sequence[Batch], jobs: int, kept: KeptParts | None = None, crew: Crew | None = None
+) -> Iterator[tuple[int, Any]]:
     """Work on several batches at once: this process, and others of which each keeps its parts itself."""
     crew = crew or Crew(0)
     message = pickle.dumps((work, kept), protocol=5)
@@ -140,7 +144,7 @@ def processes(
         workers.append(mine.worker)
         mine.worker.send(message)
 
-    def one(batch: Batch) -> tuple[int, Part | None]:
+    def one(batch: Batch) -> tuple[int, Any]:
         return batch[0], mine.worker.answer(batch)
 
     pool = ThreadPoolExecutor(min(jobs, len(batches)), initializer=begin)
@@ -183,11 +187,11 @@ def _serve() -> None:
     gc.freeze()
     while True:
         try:
-            number, lines, places = pickle.load(source)
+            number, items, places = pickle.load(source)
         except EOFError:
             return
         try:
-            answer: object = _answered(work, number, lines, places, kept)
+            answer: object = _answered(work, number, items, places, kept)
             if kept is not None:
                 answer = None
         except Terrain2qError as error:
@@ -203,8 +207,8 @@ def _serve() -> None:
 
 
 def cluster(
-    work: Work, batches: Sequence[Batch], address: str, kept: KeptParts | None = None
-) -> Iterator[tuple[int, Part]]:
+    work: Job, batches: Sequence[Batch], address: str, kept: KeptParts | None = None
+) -> Iterator[tuple[int, Any]]:
     """Work on a Dask cluster; a batch whose worker dies is given to another.
 
     Raises
@@ -218,8 +222,8 @@ def cluster(
         # a task and not scattered data, so that it can be made again where the worker that held it dies
         shared = client.submit(pickle.loads, pickle.dumps(work, protocol=5), pure=False, retries=3)
         futures = {
-            client.submit(answer_batch, shared, lines, places, pure=False, retries=3): number
-            for number, lines, places in batches
+            client.submit(_answer, shared, items, places, pure=False, retries=3): number
+            for number, items, places in batches
         }
         for future in as_completed(list(futures), loop=client.loop):
             number = futures.pop(future)
@@ -228,6 +232,10 @@ def cluster(
             if kept is not None:
                 kept.keep(number, part)
             yield number, part
+
+
+def _answer(work: Job, items: Sequence, places: Sequence[int]):
+    return work.answer(items, places)
 
 
 @contextmanager

@@ -7,10 +7,11 @@ import time
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import closing, contextmanager
 from itertools import chain
+from typing import Any
 
-from terrain2q.batches.engines import Batch, Crew, cluster, processes, serial
+from terrain2q.batches.engines import Batch, Crew, Job, cluster, processes, serial
 from terrain2q.batches.kept import KeptParts
-from terrain2q.batches.work import Part, Work, answer_batch
+from terrain2q.batches.work import Part, Work
 from terrain2q.errors import Finding
 from terrain2q.ground.cut_lines import CutLine
 from terrain2q.jobs.design_flows import SectionAnswer
@@ -53,7 +54,7 @@ def answer_lines(
         Processes that were called already.
     """
     ready = {number for number in range(len(batches)) if kept is not None and number in kept}
-    pace = _Pace(len(lines), progress)
+    pace = Pace(len(lines), progress)
     if ready:
         pace.take(sum(len(batches[number]) for number in ready), fresh=False)
     waiting: list[Batch] = [
@@ -61,12 +62,7 @@ def answer_lines(
         for number, places in enumerate(batches)
         if number not in ready
     ]
-    if scheduler is not None and waiting:
-        coming = cluster(work, waiting, scheduler, kept)
-    elif jobs > 1 and len(waiting) > 1:
-        coming = processes(work, waiting, jobs, kept, crew)
-    else:
-        coming = serial(work, waiting, kept)
+    coming = answered(work, waiting, kept, jobs, scheduler, crew)
     held: dict[int, Part] = {}
     with closing(coming), _old_objects_left_alone():
         for number, places in enumerate(batches):
@@ -81,9 +77,25 @@ def answer_lines(
             if part is None:
                 part = kept.load(number, places)
             if part is None:  # damaged since it was kept
-                part = answer_batch(work, [lines[i] for i in places], places)
+                part = work.answer([lines[i] for i in places], places)
             pace.findings += part.finding_count
             yield part
+
+
+def answered(
+    work: Job,
+    batches: Sequence[Batch],
+    kept: KeptParts | None,
+    jobs: int,
+    scheduler: str | None,
+    crew: Crew | None = None,
+) -> Iterator[tuple[int, Any]]:
+    """Give number and part of each batch as they come, whoever works on them; see :func:`answer_lines`."""
+    if scheduler is not None and batches:
+        return cluster(work, batches, scheduler, kept)
+    if jobs > 1 and len(batches) > 1:
+        return processes(work, batches, jobs, kept, crew)
+    return serial(work, batches, kept)
 
 
 @contextmanager
@@ -96,19 +108,29 @@ def _old_objects_left_alone() -> Iterator[None]:
         gc.unfreeze()
 
 
-class _Pace:
-    """Tells how far the work is."""
+class Pace:
+    """Tells how far the work is.
 
-    def __init__(self, total: int, progress: Callable[[int, int, str], None]) -> None:
-        self._total, self._progress = total, progress
+    Parameters
+    ----------
+    total : int
+    progress : callable
+        ``progress(done, total, label)``.
+    label : str
+        What is worked on.
+    """
+
+    def __init__(self, total: int, progress: Callable[[int, int, str], None], label: str = LABEL) -> None:
+        self._total, self._progress, self._label = total, progress, label
         self._began = time.perf_counter()
         self._done = self._fresh = self.findings = 0
 
     def take(self, count: int, *, fresh: bool = True) -> None:
+        """Count so many more as done; those that are not fresh tell nothing of the rate."""
         self._done += count
         self._fresh += count if fresh else 0
         taken = time.perf_counter() - self._began
-        label = f"{LABEL}: {self.findings} findings"
+        label = f"{self._label}: {self.findings} findings"
         if fresh and taken > 0:
             rate = self._fresh / taken
             label += f", {rate:.3g} a second, {_duration((self._total - self._done) / rate)} left"

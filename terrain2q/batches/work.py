@@ -66,6 +66,10 @@ class Work:
     compiled: bool
     as_layers: bool
 
+    def answer(self, items: Sequence[CutLine], places: Sequence[int]) -> Part:
+        """Return what comes of some cut lines (:func:`answer_batch`)."""
+        return answer_batch(self, items, places)
+
 
 @dataclass(frozen=True)
 class Part:

@@ -132,7 +132,8 @@ def read_layer(
     purpose : str
         What the layer is for, in the words of the errors: ``cut lines``, ``streams``, ``land cover``, ...
     geometry : str
-        ``line``, ``polygon`` or ``point``. Multipart features count as their parts' kind (not points).
+        ``line``, ``polygon`` or ``point``. Multipart features count as their parts' kind; of points only
+        those of a single part, which is what many a GIS makes of plain points.
     crs : object, optional
         CRS to bring the layer to (anything pyproj takes); its horizontal part is used.
     id_field : str, optional
@@ -194,6 +195,8 @@ def read_layer(
             f"layer {layer!r} of {path.name} is a table without geometry; {purpose} need {geometry}s",
             where=where,
         )
+    if geometry == "point":
+        frame = frame.set_geometry(_single_points(frame.geometry.to_numpy()), crs=frame.crs)
     _check_geometry(frame, geometry, purpose, layer, path, where)
     if frame.crs is None:
         raise InputError("crs-missing", f"layer {layer!r} of {path.name} has no CRS", where=where)
@@ -227,6 +230,15 @@ def in_plan(shapes: np.ndarray) -> np.ndarray:
     shapes = shapes.copy()
     more = shapely.get_coordinate_dimension(shapes) > 2
     shapes[more] = shapely.force_2d(shapes[more])
+    return shapes
+
+
+def _single_points(shapes: np.ndarray) -> np.ndarray:
+    """Return shapes with each multipoint of one part as that point."""
+    shapes = shapes.copy()
+    one = shapely.get_type_id(shapes) == shapely.GeometryType.MULTIPOINT
+    one &= shapely.get_num_geometries(shapes) == 1
+    shapes[one] = shapely.get_geometry(shapes[one], 0)
     return shapes
 
 

@@ -20,6 +20,7 @@ upstream. All in metres.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -33,6 +34,12 @@ STEEPEST = 0.2
 
 FACE = 0.3
 """Least slope of an abutment's face over three metres, across the whole road (built at 1:2 or steeper)."""
+
+NO_ROAD = 2.5
+"""Cost from which on a place does not look like a road at all; one that leans by a tenth costs 4."""
+
+STANDS_OUT = 0.3
+"""Metres of a road above the ground to both its sides by which its edges are seen."""
 
 DIP = 0.3
 """Metres a dip must be deep, beyond the noise, to be one."""
@@ -48,6 +55,9 @@ LONGEST_DECK = 200.0
 
 SPREADS = (10.0, 15.0, 25.0, 40.0, 60.0)
 """Half lengths, metres, over which the road's height is fitted."""
+
+_MISFIT, _EVEN = 1.6, 0.005
+"""Of the noise, and m: misfit about a parabola from which on a kink lies within its span."""
 
 _AGREE = 2.5
 
@@ -115,7 +125,10 @@ def _outline(points, normals, upstream: np.ndarray, downstream: np.ndarray) -> s
     """Return the ground from one distance to another beside a line."""
     up = points + normals * upstream[:, None]
     down = points - normals * downstream[:, None]
-    # piece by piece: at a sharp bend a single outline would cross itself
+    whole = shapely.Polygon(np.concatenate([up, down[::-1]]))
+    if whole.is_valid:
+        return whole
+    # piece by piece: at a sharp bend a single outline crosses itself
     corners = np.stack([up[:-1], up[1:], down[1:], down[:-1], up[:-1]], axis=1)
     return shapely.union_all(shapely.convex_hull(shapely.linestrings(corners)))
 
@@ -198,14 +211,15 @@ def find_road_surface(
     cost = _cost(strip, half, search)
     offset = _best_way(cost, strip, search, np.ones(strip.stations.size, dtype=bool))
     mean = _across_mean(strip, offset, half, half)
-    deck, others = _decks(strip.stations, mean)
+    deck, others = _decks(strip, offset, mean, half)
     if deck is not None or others:
         # again, without the ground under decks
         offset = _best_way(cost, strip, search, _outside(strip.stations, deck, others))
         mean = _across_mean(strip, offset, half, half)
-        again, others = _decks(strip.stations, mean)
+        again, others = _decks(strip, offset, mean, half)
         deck = again or deck
     there = _outside(strip.stations, deck, others)
+    offset = offset + _off_middle(strip, offset, there, half)
     upper, lower, *_ = _edges(strip, offset, there & np.isfinite(mean), half)
     offset = offset + 0.5 * (upper - lower)
     upper, lower, core, crown, crossfall = _edges(strip, offset, there & np.isfinite(mean), half)
@@ -380,7 +394,11 @@ def _cost(strip: _Strip, half: float, search: float) -> np.ndarray:
 def _best_way(cost: np.ndarray, strip: _Strip, search: float, there: np.ndarray) -> np.ndarray:
     """Offset of the road's middle at each station: least sum of costs, at most one column a station."""
     within = np.flatnonzero(np.abs(strip.offsets) <= search + 1e-9)
-    local = np.where(there[:, None], cost[:, within], 0.0)
+    local = cost[:, within]
+    # what looks like a road nowhere, or everywhere alike, does not lead it aside
+    best, worst = local.min(axis=1), np.quantile(local, 0.9, axis=1)
+    weight = np.clip(NO_ROAD - best, 0.0, 1.0) * np.clip(worst - best - 1.0, 0.0, 1.0) * there
+    local = local * weight[:, None] + 0.02 * (strip.offsets[within] / search) ** 2
     bend = 2.0
     total = local[0].copy()
     back = np.zeros(local.shape, dtype=np.int8)
@@ -429,20 +447,66 @@ def _level_of_noise(mean: np.ndarray) -> float:
     return float(1.4826 * np.median(np.abs(bend)) / np.sqrt(6.0)) if bend.size else 0.0
 
 
-def _decks(stations: np.ndarray, mean: np.ndarray):
+def _standing(values: np.ndarray, middle: np.ndarray) -> np.ndarray:
+    """Return by how much the middle lies above the ground furthest to both sides, shape (stations,)."""
+    return middle - 0.5 * (values[:, 0] + values[:, -1])
+
+
+def _beside(strip: _Strip, offset: np.ndarray, half: float) -> np.ndarray:
+    """Return the ground across a road and as far again to each side, shape (stations, columns)."""
+    return _about(strip, offset, 3.0 * half, 3.0 * half)
+
+
+def _off_middle(strip: _Strip, offset: np.ndarray, there: np.ndarray, half: float) -> np.ndarray:
+    """Return how far the middle between a road's edges lies from a way along it, shape (stations,)."""
+    step = strip.step
+    z = _smooth(_smooth(strip.ground, _cells(7.0, step) | 1, 0), _cells(3.0, step) | 1, 1)
+    values = _about(replace(strip, ground=z), offset, 3.0 * half, 3.0 * half)
+    count, inner = values.shape[1] // 2, int(np.floor(half / step))
+    middle = values[:, count - inner : count + inner + 1].mean(axis=1)
+    seen = np.flatnonzero(there & (_standing(values, middle) > STANDS_OUT))
+    if seen.size < _cells(5.0, step):
+        return np.zeros(offset.size)
+    level = np.abs(values - middle[:, None]) <= 0.1
+    upper = np.argmin(np.column_stack([level[:, count + 1 :], np.zeros(offset.size, dtype=bool)]), axis=1)
+    lower = np.argmin(np.column_stack([level[:, count - 1 :: -1], np.zeros(offset.size, dtype=bool)]), axis=1)
+    edged = seen[(upper[seen] < count) & (lower[seen] < count)]
+    if edged.size < _cells(5.0, step):
+        return np.zeros(offset.size)
+    shift = 0.5 * step * (upper - lower)[edged]
+    span = _cells(15.0, step) | 1
+    padded = np.pad(shift, span // 2, mode="edge")
+    shift = np.median(np.lib.stride_tricks.sliding_window_view(padded, span), axis=1)
+    return np.interp(np.arange(offset.size), edged, shift)
+
+
+def _decks(strip: _Strip, offset: np.ndarray, mean: np.ndarray, half: float):
     """Return where the ground dips as no road does: about the stream (None where not), and elsewhere."""
     known = np.isfinite(mean)
     if not known.any():
         return None, ()
+    # a hillside that the line runs up may be steeper than any road: first without what does not stand out
+    out = known & (_standing(_beside(strip, offset, half), mean) > STANDS_OUT)
+    near = np.abs(strip.stations) <= LONGEST_DECK
+    if (out & near & (strip.stations < 0)).any() and (out & near & (strip.stations > 0)).any():
+        deck, others = _dips(strip.stations, mean, out)
+        if deck is not None:
+            return deck, others
+    return _dips(strip.stations, mean, known)
+
+
+def _dips(stations: np.ndarray, mean: np.ndarray, road_there: np.ndarray):
+    """Return dips below a line over the ground where there may be a road; see :func:`_decks`."""
+    known = np.isfinite(mean)
     noise = _level_of_noise(mean)
-    z = np.where(known, mean, -np.inf)
+    z = np.where(road_there, mean, -np.inf)
     climb = STEEPEST * stations
     # the lowest line over the ground that nowhere climbs or falls faster
     road = np.maximum(
         np.maximum.accumulate(z + climb) - climb, np.maximum.accumulate((z - climb)[::-1])[::-1] + climb
     )
     # water without data at the stream is under the deck too
-    below = np.where(known, road - z, np.inf)
+    below = np.where(known, road - np.where(known, mean, 0.0), np.inf)
     dips = _runs(below > max(DIP, 4.0 * noise))
     quiet = max(0.05, 2.0 * noise)
 
@@ -505,7 +569,8 @@ def _edges(strip: _Strip, offset, there, half: float):
     if not usable.any():
         return half, half, (half, half), 0.0, 0.0
     # nearest to the stream the road stands out; further up the valley's side it may lie in the ground
-    chosen = np.flatnonzero(usable)
+    standing = usable & (_standing(values, middle.mean(axis=1)) > STANDS_OUT)
+    chosen = np.flatnonzero(standing if np.count_nonzero(standing) >= _cells(5.0, step) else usable)
     chosen = chosen[np.argsort(np.abs(strip.stations[chosen]), kind="stable")[: _cells(60.0, step)]]
     shape = values[chosen] - middle[chosen].mean(axis=1)[:, None]
     typical = np.array([np.median(c[np.isfinite(c)]) if np.isfinite(c).any() else np.nan for c in shape.T])
@@ -535,40 +600,68 @@ def _fitted(strip: _Strip, mean: np.ndarray, there: np.ndarray) -> tuple[np.ndar
 
     A parabola is fitted about each station to what is known of the road, on both sides of a missing deck, and
     outliers are drawn in; at each station over the longest span whose fit agrees with those of all shorter
-    ones within their errors.
+    ones within their errors. Where the road has a kink nearby, as where it comes out of a hillside, no
+    parabola goes through both its arms, and the one to the side that one fits is taken.
     """
     heights = np.full(mean.size, np.nan)
     if not there.any():
         return heights, 0.0
-    tame = mean
-    fits, errors = [], []
-    for spread in SPREADS:
-        half = _cells(spread, strip.step)
-        fit, error = _local_parabolas(tame, there, half)
-        if not fits:
-            off = np.where(there, mean - fit, np.nan)
-            limit = 3.0 * 1.4826 * np.nanmedian(np.abs(off)) + 1e-6
-            tame = fit + np.clip(np.nan_to_num(off), -limit, limit)
-            fit, error = _local_parabolas(tame, there, half)
-        fits.append(fit)
-        errors.append(error)
-        if 2 * half > mean.size:
-            break
-    noise = float(1.4826 * np.median(np.abs((mean - fits[0])[there])))
-    heights = np.where(there, _longest_agreeing(fits, errors, noise), np.nan)
+    half = _cells(SPREADS[0], strip.step)
+    fit = _local_parabolas(mean, there, half, half)[0]
+    off = np.where(there, mean - fit, np.nan)
+    limit = 3.0 * 1.4826 * np.nanmedian(np.abs(off)) + 1e-6
+    tame = fit + np.clip(np.nan_to_num(off), -limit, limit)
+    fit = _local_parabolas(tame, there, half, half)[0]
+    noise = float(1.4826 * np.median(np.abs((mean - fit)[there])))
+    (whole, _, fits_it), *arms = (
+        _one_fit(values, there, before, after, strip.step, noise)
+        # outliers are those of the parabola through both arms, which says nothing about one of them
+        for values, before, after in ((tame, 1, 1), (mean, 1, 0), (mean, 0, 1))
+    )
+    heights = np.where(fits_it, whole, _at_kink(arms, whole, noise))
+    heights = np.where(there, heights, np.nan)
     inside, span = np.arange(mean.size), np.flatnonzero(there)
     bridged = np.interp(inside, span, heights[span])
     return np.where((inside >= span[0]) & (inside <= span[-1]), bridged, np.nan), noise
 
 
-def _local_parabolas(values: np.ndarray, known: np.ndarray, half: int) -> tuple[np.ndarray, np.ndarray]:
-    """Return parabolas fitted about each point to what is known within some points, and their errors.
+def _one_fit(
+    values: np.ndarray, there: np.ndarray, before: int, after: int, step: float, noise: float
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Return heights, their errors, and whether a parabola goes through what is near, to one side or both."""
+    fits = []
+    for spread in SPREADS:
+        half = _cells(spread, step)
+        fits.append(_local_parabolas(values, there, before * half, after * half))
+        if 2 * half > values.size:
+            break
+    return *_longest_agreeing(fits, noise), fits[0][2] <= _MISFIT * noise + _EVEN
 
-    The errors are for noise of 1. Where little is known, the fit leans towards a straight line.
+
+def _at_kink(arms: Sequence, whole: np.ndarray, noise: float) -> np.ndarray:
+    """Return the height of the better arm where one or both fit, else that of the whole."""
+    (left, left_error, left_fits), (right, right_error, right_fits) = arms
+    better = np.where(left_error <= right_error, left, right)
+    # a point next to a kink hardly tells from which arm it is: where arms differ it is from the higher one,
+    # as a road that comes out of a hillside lies on what is higher
+    apart = np.abs(left - right) > _AGREE * noise * np.hypot(left_error, right_error)
+    both = np.where(apart, np.maximum(left, right), better)
+    one = np.where(left_fits, left, np.where(right_fits, right, whole))
+    return np.where(left_fits & right_fits, both, one)
+
+
+def _local_parabolas(
+    values: np.ndarray, known: np.ndarray, before: int, after: int
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Return parabolas fitted at each point to what is known within some points, their errors and misfits.
+
+    The errors are for noise of 1. Where little is known, the fit leans towards a straight line. The misfit is
+    the standard deviation of the values about the parabola.
     """
-    weight = np.pad(known.astype(float), half)
-    value = np.pad(np.where(known, values, 0.0), half)
-    k = np.arange(-half, half + 1) / max(half, 1)
+    weight = np.pad(known.astype(float), (before, after))
+    middle = np.median(values[known])
+    value = np.pad(np.where(known, values - middle, 0.0), (before, after))
+    k = np.arange(-before, after + 1) / max(before, after, 1)
     moments = [np.correlate(weight, k**j, mode="valid") for j in range(5)]
     right = np.stack([np.correlate(value, k**j, mode="valid") for j in range(3)], axis=-1)
     matrix = np.stack([np.stack([moments[i + j] for j in range(3)], axis=-1) for i in range(3)], axis=-2)
@@ -576,21 +669,23 @@ def _local_parabolas(values: np.ndarray, known: np.ndarray, half: int) -> tuple[
     matrix[:, 2, 2] += 1e-3
     matrix[:, 0, 0] = np.maximum(matrix[:, 0, 0], 1e-9)
     inverse = np.linalg.inv(matrix)
-    fit = np.einsum("ij,ij->i", inverse[:, 0], right)
-    return fit, np.sqrt(np.maximum(inverse[:, 0, 0], 0.0))
+    parabola = np.einsum("ijk,ik->ij", inverse, right)
+    squares = np.correlate(value**2, np.ones(k.size), mode="valid") - (parabola * right).sum(axis=1)
+    misfit = np.sqrt(np.maximum(squares, 0.0) / np.maximum(moments[0] - 3.0, 1.0))
+    return parabola[:, 0] + middle, np.sqrt(np.maximum(inverse[:, 0, 0], 0.0)), misfit
 
 
-def _longest_agreeing(fits: list, errors: list, noise: float) -> np.ndarray:
-    best = fits[0].copy()
-    low = fits[0] - _AGREE * noise * errors[0]
-    high = fits[0] + _AGREE * noise * errors[0]
+def _longest_agreeing(fits: list, noise: float) -> tuple[np.ndarray, np.ndarray]:
+    """Return of each point the fit over the longest span that agrees with those over shorter ones; errors."""
+    best, best_error, _ = fits[0]
+    low, high = best - _AGREE * noise * best_error, best + _AGREE * noise * best_error
     going = np.ones(best.size, dtype=bool)
-    for fit, error in zip(fits[1:], errors[1:], strict=True):
+    for fit, error, _ in fits[1:]:
         going &= (fit >= low - 1e-9) & (fit <= high + 1e-9)
-        best = np.where(going, fit, best)
+        best, best_error = np.where(going, fit, best), np.where(going, error, best_error)
         low = np.maximum(low, fit - _AGREE * noise * error)
         high = np.minimum(high, fit + _AGREE * noise * error)
-    return best
+    return best, best_error
 
 
 def _toes(strip: _Strip, offset: np.ndarray, edges, there) -> tuple[np.ndarray, np.ndarray]:

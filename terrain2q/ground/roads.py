@@ -15,6 +15,7 @@
 from __future__ import annotations
 
 import itertools
+import re
 from collections import defaultdict
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
@@ -42,8 +43,14 @@ BRIDGE, TUNNEL = "bridge", "tunnel"
 _LAYER = "crossings"
 _ROAD_NAMES = ("road", "road_name", "name", "street", "ref", "road_id")
 _STREAM_NAMES = ("stream", "stream_id")
-_STRUCTURES = ("structure", "structure_type", "type", "kind")
-_NO = ("", "0", "no", "n", "false", "f", "none")
+_STRUCTURES = ("structure", "structuretype", "structtype", "type", "kind", "brunnel")
+_FLAGS = ("{}", "is{}", "has{}", "on{}", "in{}", "{}flag", "{}yn")
+_NO = ("no", "n", "false", "f", "none", "not")
+_UNKNOWN = ("unknown", "unk", "null", "na", "nan")
+_WORDS = {
+    "tunnel": ("tunnel", "tunnels"),
+    "bridge": ("bridge", "bridges", "roadbridge", "footbridge", "viaduct", "viaducts", "overpass"),
+}
 
 
 @dataclass(frozen=True)
@@ -66,6 +73,8 @@ class Crossing:
         The road, in the terrain's CRS; None where only the point is known.
     others : tuple of shapely.LineString
         Roads of the crossings that were merged into this one.
+    other_attributes : tuple of mapping
+        The fields of each of these.
     structure : str
         ``bridge``, ``tunnel`` or empty, as an attribute says.
     attributes : mapping
@@ -83,6 +92,7 @@ class Crossing:
     stream_distance: float
     line: shapely.LineString | None = None
     others: tuple[shapely.LineString, ...] = ()
+    other_attributes: tuple[Mapping, ...] = ()
     structure: str = ""
     attributes: Mapping = field(default_factory=dict)
     findings: tuple[Finding, ...] = ()
@@ -99,22 +109,48 @@ class Crossing:
 def structure_of(attributes: Mapping) -> str:
     """Return ``bridge``, ``tunnel`` or an empty string from the fields of a road or crossing.
 
-    A field called ``tunnel`` or ``bridge`` (or ``is_tunnel``, ``is_bridge``) that says anything but no
-    counts; so does a field ``structure`` that names one.
+    A field called ``tunnel`` or ``bridge`` (or ``is_tunnel``, ``IsBridge``, ``bridge_flag``) counts unless it
+    says no, or that nobody knows; so does a field ``structure`` that names one. A culvert is neither: it is
+    the stream that is in the pipe, and the road runs over it.
 
     Examples
     --------
     >>> [structure_of(f) for f in ({"bridge": "yes"}, {"bridge": "F"}, {"Structure": "Box bridge"})]
     ['bridge', '', 'bridge']
+    >>> [structure_of(f) for f in ({"IsTunnel": True}, {"tunnel": "unknown"}, {"tunnel": "culvert"})]
+    ['tunnel', '', '']
     """
-    texts = {str(name).lower(): clean_text(value).lower() for name, value in attributes.items()}
+    texts = {
+        "".join(c for c in str(name).lower() if c.isalnum()): clean_text(value).lower()
+        for name, value in attributes.items()
+    }
     for kind in (TUNNEL, BRIDGE):
-        if any(texts.get(name, "") not in _NO for name in (kind, f"is_{kind}", f"{kind}_flag")):
+        if any(says_so(texts.get(name.format(kind), "")) for name in _FLAGS):
             return kind
     for kind in (TUNNEL, BRIDGE):
-        if any(kind in texts.get(name, "").split() for name in _STRUCTURES):
-            return kind
+        for name in _STRUCTURES:
+            words = _words(texts.get(name, ""))
+            if says_so(texts.get(name, "")) and any(word in words for word in _WORDS[kind]):
+                return kind
     return ""
+
+
+def _words(text: str) -> list[str]:
+    return re.findall(r"[^\W\d_]+", text)
+
+
+def says_so(text: str) -> bool:
+    """Whether a flag says anything but no, that nobody knows, or that the stream is piped.
+
+    Examples
+    --------
+    >>> [says_so(t) for t in ("yes", "-1", "Bridge no. 5", "", "0", "N/A", "not here", "box culvert")]
+    [True, True, True, False, False, False, False, False]
+    """
+    words = _words(text.lower().replace("n/a", "na"))
+    if not words:
+        return any(c in "123456789" for c in text)
+    return words[0] not in (*_NO, *_UNKNOWN) and not {"culvert", "culverts"} & {*words}
 
 
 class RoadNetwork:
@@ -218,7 +254,7 @@ def crossings_from_roads(
             one = Crossing(
                 "", _named(fields, _ROAD_NAMES), stream, point.x, point.y, chain, along,
                 float(network.distance_at(np.array([chain]), np.array([along]))[0]),
-                roads.lines[line], (), structure_of(fields), fields,
+                roads.lines[line], structure=structure_of(fields), attributes=fields,
             )  # fmt: skip
             if one.structure == TUNNEL:
                 message = f"{one.road or 'a road'} runs in a tunnel at stream {stream}"
@@ -332,7 +368,9 @@ def _from_point(name, shape, fields, network: StreamNetwork, roads, snap, units)
         if away <= snap:
             line = nearest
             part = roads.part_at(shape)
-            fields = {**roads.attributes(part), **fields}
+            about = roads.attributes(part)
+            # an empty field of the point leaves room for the road's
+            fields = {**about, **{k: v for k, v in fields.items() if k not in about or clean_text(v)}}
             reach = 2.0 * snap / network.ground.metres_per_map_unit * 1.5
             near = shapely.intersection(
                 shapely.clip_by_rect(
@@ -349,6 +387,9 @@ def _from_point(name, shape, fields, network: StreamNetwork, roads, snap, units)
                 road=blank.road or _named(roads.attributes(part), _ROAD_NAMES),
                 structure=blank.structure or structure_of(roads.attributes(part)),
             )
+            if blank.structure == TUNNEL:
+                name = blank.road or "the road"
+                return blank.noted(blank.finding("road-in-tunnel", f"{name} runs in a tunnel here", "failed"))
     along = float(network.chains[chain].project(place))
     return replace(
         blank, stream=str(network.chain_stream[chain]), x=place.x, y=place.y, chain=chain, along=along,
@@ -385,18 +426,24 @@ def merged(
         furthest = max(members, key=lambda i: crossings[i].stream_distance)
         own = [i for i in members if crossings[i].chain == crossings[furthest].chain]
         middle = np.mean([[crossings[i].x, crossings[i].y] for i in members], axis=0)
-        kept = min(own, key=lambda i: np.hypot(crossings[i].x - middle[0], crossings[i].y - middle[1]))
+        off = {i: np.hypot(crossings[i].x - middle[0], crossings[i].y - middle[1]) for i in own}
+        # two lie equally far from their middle, but for rounding: the first of them, whatever the CRS
+        least = (1.0 + 1e-6) * min(off.values())
+        kept = next(i for i in own if off[i] <= least)
         others = [i for i in members if i != kept]
         gone.update(others)
         one = crossings[kept]
         lines: list[shapely.LineString] = []
+        fields: list[Mapping] = []
         for i in others:
             line = crossings[i].line
             if line is not None and line is not one.line and all(line is not known for known in lines):
                 lines.append(line)
+                fields.append(crossings[i].attributes)
         listed = ", ".join(crossings[i].crossing_id for i in others)
         message = f"{listed} within {length_text(distance, units)} of it is counted with this crossing"
-        answer[kept] = replace(one, others=tuple(lines)).noted(one.finding("crossings-merged", message))
+        one = one.noted(one.finding("crossings-merged", message))
+        answer[kept] = replace(one, others=tuple(lines), other_attributes=tuple(fields))
     return [one for i, one in enumerate(answer) if i not in gone]
 
 

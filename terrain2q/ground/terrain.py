@@ -9,8 +9,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Sequence
-from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass, fields
+from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 
@@ -21,7 +20,7 @@ from rasterio.transform import Affine
 
 from terrain2q.errors import Finding, InputError
 from terrain2q.ground.distances import GroundDistances, horizontal_crs
-from terrain2q.ground.tiles import MANY, Mosaic, Tile, in_threads, open_tile, shifted
+from terrain2q.ground.tiles import MANY, Mosaic, Tile, in_threads, open_tile, ranges, shifted
 from terrain2q.units import ELEVATION_UNITS
 
 SAMPLINGS = ("bilinear", "nearest")
@@ -101,9 +100,6 @@ class Profile:
             In the terrain's CRS, of the same shape.
         """
         return np.interp(station, self.stations, self.x), np.interp(station, self.stations, self.y)
-
-
-_COLUMNS = tuple(field.name for field in fields(Profile))
 
 
 class Terrain:
@@ -296,7 +292,7 @@ class Terrain:
         x, y = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
         if x.size >= MANY and len(self._mosaic.tiles) == 1:
             values = np.full(x.size, np.nan)
-            self._fill_elevations(x, y, values)
+            self._fill_elevations(x, y, values, np.arange(x.size))
             return values
         column, row = self._to_grid(x, y)
         values = self._mosaic.elevations(column, row, bilinear=self.sampling == "bilinear")
@@ -318,10 +314,15 @@ class Terrain:
         column, row = self._to_grid(np.asarray(x, dtype=float), np.asarray(y, dtype=float))
         return self._mosaic.blocks_at(column, row)
 
-    def _fill_elevations(self, x: np.ndarray, y: np.ndarray, values: np.ndarray) -> None:
-        """Fill in the elevations of many points where there is one tile; `values` are NaN."""
+    def _fill_elevations(
+        self, x: np.ndarray, y: np.ndarray, values: np.ndarray, straight: np.ndarray
+    ) -> None:
+        """Fill in the elevations of many points where there is one tile; `values` are NaN.
+
+        See :meth:`Mosaic.many_elevations`.
+        """
         place = (*self._inverse, self.transform.c, self.transform.f)
-        self._mosaic.many_elevations(x, y, place, self.sampling == "bilinear", values)
+        self._mosaic.many_elevations(x, y, place, self.sampling == "bilinear", values, straight)
         if self.metres_per_unit != 1.0:
             values *= self.metres_per_unit
 
@@ -430,7 +431,7 @@ class Terrain:
         points = np.add.reduceat(intervals, first)
         last = np.append(first[1:], x.size)
         for batch in self._batches(points, x[first], y[first]):
-            vertex = _ranges(first[batch], last[batch])
+            vertex = ranges(first[batch], last[batch])
             self._fill(
                 profiles,
                 line[first[batch]],
@@ -534,17 +535,14 @@ class Terrain:
         ends = np.cumsum(points).tolist()
         starts = [0, *ends[:-1]]
         if ends[-1] >= MANY:
-            columns, read = self._many_points(vertex, parts, x, y, drawn, measured)
-            with ThreadPoolExecutor(1) as pool:
-                # the profiles are made of the arrays while these are filled
-                reading = pool.submit(read) if elevations else None
-                pieces = [
-                    [column[start:end] for start, end in zip(starts, ends, strict=True)] for column in columns
-                ]
-                for line, *piece in zip(lines.tolist(), *pieces, strict=True):
-                    profiles[line] = _profile_of(piece)
-                if reading is not None:
-                    reading.result()
+            columns, read = self._many_points(vertex, parts, ends, x, y, drawn, measured)
+            # first the profiles, of arrays filled later: made beside the reading they would stop its threads
+            own = list(map(slice, starts, ends))
+            pieces = [map(column.__getitem__, own) for column in columns]
+            for line, *piece in zip(lines.tolist(), *pieces, strict=True):
+                profiles[line] = _profile_of(*piece)
+            if elevations:
+                read()
             return
         owner = np.repeat(vertex, parts)
         number = np.arange(owner.size) - np.repeat(np.cumsum(parts) - parts, parts)
@@ -565,8 +563,11 @@ class Terrain:
         for line, start, end in zip(lines.tolist(), starts, ends, strict=True):
             profiles[line] = Profile(*[column[start:end] for column in columns])
 
-    def _many_points(self, vertex, parts, x, y, drawn, measured) -> tuple[list[np.ndarray], Callable]:
-        """Return what profiles have of each point, by compiled code, and what fills in the elevations."""
+    def _many_points(self, vertex, parts, ends, x, y, drawn, measured) -> tuple[list[np.ndarray], Callable]:
+        """Return what profiles have of each point, by compiled code, and what fills in the elevations.
+
+        `ends` says where the points of each line end.
+        """
         from terrain2q.ground.compiled_sampling import lay_points
 
         begin = np.cumsum(parts) - parts
@@ -585,7 +586,9 @@ class Terrain:
 
         def read() -> None:
             if len(self._mosaic.tiles) == 1:
-                self._fill_elevations(point_x, point_y, ground)
+                # a line's last vertex lies straight on from the points before it
+                straight = np.delete(begin, np.searchsorted(begin, np.array(ends) - 1))
+                self._fill_elevations(point_x, point_y, ground, straight)
             else:
                 ground[:] = self.elevations(point_x, point_y)
 
@@ -595,22 +598,16 @@ class Terrain:
         return columns, read
 
 
-def _profile_of(columns: list[np.ndarray]) -> Profile:
-    """Return a profile of columns in order; a frozen class's own way takes three times as long."""
+def _profile_of(stations, elevations, x, y, is_vertex) -> Profile:
+    """Return a profile of columns; a frozen class's own way takes three times as long."""
     profile = object.__new__(Profile)
-    profile.__dict__.update(zip(_COLUMNS, columns, strict=True))
+    profile.__dict__.update(stations=stations, elevations=elevations, x=x, y=y, is_vertex=is_vertex)
     return profile
 
 
 def _no_points() -> Profile:
     none = np.zeros(0)
     return Profile(none, none, none, none, np.zeros(0, dtype=bool))
-
-
-def _ranges(starts: np.ndarray, ends: np.ndarray) -> np.ndarray:
-    """Return the whole numbers from each start up to its end, one range after another."""
-    counts = ends - starts
-    return np.arange(counts.sum()) + np.repeat(starts - (np.cumsum(counts) - counts), counts)
 
 
 def _same(one: float, other: float) -> bool:

@@ -81,6 +81,12 @@ def in_threads(work: Callable[[slice], None], count: int) -> None:
         list(pool.map(work, [slice(i, min(i + share, count)) for i in range(0, count, share)]))
 
 
+def ranges(starts: np.ndarray, ends: np.ndarray) -> np.ndarray:
+    """Return the whole numbers from each start up to its end, one range after another."""
+    counts = ends - starts
+    return np.arange(counts.sum()) + np.repeat(starts - (np.cumsum(counts) - counts), counts)
+
+
 def metres_in(unit: str) -> float | None:
     """Return how many metres one unit of length makes, from the many ways its name is written.
 
@@ -560,7 +566,13 @@ class Mosaic:
         return columns, rows, right, down
 
     def many_elevations(
-        self, x: np.ndarray, y: np.ndarray, place: tuple, bilinear: bool, values: np.ndarray
+        self,
+        x: np.ndarray,
+        y: np.ndarray,
+        place: tuple,
+        bilinear: bool,
+        values: np.ndarray,
+        straight: np.ndarray,
     ) -> None:
         """Find elevations at many places of the map, by compiled code; there is one tile.
 
@@ -573,8 +585,10 @@ class Mosaic:
             See :meth:`elevations`, which gives the same numbers.
         values : ndarray, shape (n,)
             NaN everywhere; filled.
+        straight : ndarray of int, shape (pieces,)
+            Where pieces begin whose places lie in order on a straight line.
         """
-        many = _ManyPoints(self, x, y, place, bilinear, values)
+        many = _ManyPoints(self, x, y, place, bilinear, values, straight)
         a, b, d, e, c, f = place
         open_x, open_y = x[many.open] - c, y[many.open] - f
         left, top, right, down = self._cells_about(a * open_x + b * open_y, d * open_x + e * open_y, bilinear)
@@ -616,7 +630,9 @@ class _ManyPoints:
         The other points within the grid.
     """
 
-    def __init__(self, mosaic: Mosaic, x, y, place: tuple, bilinear: bool, values: np.ndarray) -> None:
+    def __init__(
+        self, mosaic: Mosaic, x, y, place: tuple, bilinear: bool, values: np.ndarray, straight: np.ndarray
+    ) -> None:
         from terrain2q.ground import compiled_sampling as compiled
 
         self._compiled, self._values = compiled, values
@@ -626,35 +642,37 @@ class _ManyPoints:
         self._across = int(mosaic._across[0])
         self._nodata = np.nan if tile.nodata is None else float(tile.nodata)
         self._no_mask = np.zeros((0, 0), dtype=np.uint8)
-        chunks = int(mosaic._first_chunk[-1])
-        keys, counts = np.empty(x.size, dtype=np.int32), {}
+        found = {}
 
         def find(part: slice) -> None:
-            counts[part.start] = np.zeros(chunks, dtype=np.int64)
-            compiled.find_chunks(
-                part.start, part.stop, *self._points, EDGE_TOLERANCE, tile.chunk_rows, tile.chunk_columns,
-                int(mosaic._across[0]), keys, counts[part.start],
+            begin = straight[part.start]
+            end = straight[part.stop] if part.stop < straight.size else x.size
+            runs = np.empty((3, end - begin), dtype=np.int32)  # memory is only taken as far as it is filled
+            count = compiled.find_runs(
+                part.start, part.stop, straight, *self._points, EDGE_TOLERANCE, tile.chunk_rows,
+                tile.chunk_columns, self._across, *runs,
             )  # fmt: skip
+            found[part.start] = runs[:, :count]
 
-        def sort(part: slice) -> None:
-            compiled.sort_by_chunk(part.start, part.stop, keys, free[part.start], self._order)
+        in_threads(find, straight.size)
+        keys, starts, ends = np.concatenate([found[start] for start in sorted(found)], axis=1)
+        if mosaic._first_chunk[-1] < 2**15:
+            keys = keys.astype(np.int16)  # these are sorted by counting
+        order = np.argsort(keys, kind="stable")
+        keys, self._starts, self._ends = keys[order], starts[order], ends[order]
+        numbers = np.arange(compiled.OUTSIDE, mosaic._first_chunk[-1] + 1)
+        self._first = dict(zip(numbers.tolist(), np.searchsorted(keys, numbers).tolist(), strict=True))
+        self.chunks = np.unique(keys[keys >= 0]).astype(np.int64)
+        self.open = ranges(*self._runs(compiled.OPEN))
 
-        in_threads(find, x.size)
-        # where each chunk begins, and in each chunk the points of each thread's part
-        each = np.stack([counts[start] for start in sorted(counts)])
-        self._first = np.concatenate([[0], np.cumsum(each.sum(axis=0))])
-        free = dict(zip(sorted(counts), self._first[:-1] + np.cumsum(each, axis=0) - each, strict=True))
-        self._order = np.empty(self._first[-1], dtype=np.int32)
-        in_threads(sort, x.size)
-        self.chunks = np.flatnonzero(np.diff(self._first))
-        self.open = np.flatnonzero(keys == compiled.OPEN)
-
-    def _here(self, chunk: int) -> np.ndarray:
-        return self._order[self._first[chunk] : self._first[chunk + 1]]
+    def _runs(self, key: int) -> tuple[np.ndarray, np.ndarray]:
+        """Return first places and ends of the runs with a key."""
+        here = slice(self._first[key], self._first[key + 1])
+        return self._starts[here], self._ends[here]
 
     def serve(self, chunk: int, readers: _Readers, columns: np.ndarray, rows: np.ndarray) -> np.ndarray:
         """Read a chunk, fill in the elevations of its points, and return those of single cells in it."""
-        tile, here = self._tile, self._here(chunk)
+        tile, (starts, ends) = self._tile, self._runs(chunk)
         # all of it, as GDAL decodes all of it anyway
         down, right = divmod(chunk, self._across)
         top, left = down * tile.chunk_rows, right * tile.chunk_columns
@@ -667,8 +685,10 @@ class _ManyPoints:
             left,
         )
         about = self._nodata, IMPOSSIBLE, float(tile.scale), float(tile.offset)
-        if here.size:
-            self._compiled.interpolate(*piece, here, *self._points, EDGE_TOLERANCE, *about, self._values)
+        if starts.size:
+            self._compiled.interpolate(
+                *piece, starts, ends, *self._points, EDGE_TOLERANCE, *about, self._values
+            )
         single = np.empty(columns.size)
         if columns.size:
             self._compiled.cells_at(*piece, columns, rows, *about, single)

@@ -14,6 +14,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 import shapely
 import shapely.ops
+from scipy.ndimage import minimum_filter1d
 
 from terrain2q.errors import DOUBTFUL, FAILED, NOTE, Finding, NoAnswerError, Terrain2qError
 from terrain2q.flows import Flow, event_names, flow_for
@@ -31,7 +32,7 @@ from terrain2q.ground.cut_lines import CutLine
 from terrain2q.ground.layers import clean_text
 from terrain2q.ground.local_ground import LocalGround
 from terrain2q.ground.road_surface import Crest, RoadSurface, fill_about, find_crest, find_road_surface
-from terrain2q.ground.roads import BRIDGE, Crossing, RoadNetwork
+from terrain2q.ground.roads import BRIDGE, Crossing, RoadNetwork, says_so
 from terrain2q.ground.stream_slope import robust_slope
 from terrain2q.ground.streams import StreamNetwork, length_text
 from terrain2q.ground.terrain import Profile, Terrain
@@ -88,6 +89,9 @@ LOOKS_DOWNSTREAM = 500.0
 
 SURVEY_DIFFERS = 0.3
 """Metres between a surveyed crest and the one in the ground that are worth a finding."""
+
+CLOSED_WITHIN = 60.0
+"""Metres up- and downstream of a road within which higher ground across the stream is looked for."""
 
 STRIP = 2
 """Cells to each side of a section, along the stream, over which its ground is averaged."""
@@ -335,35 +339,56 @@ def screen_crossings(inputs: CrossingInputs, progress: Callable | None = None) -
     -----
     Ground is read about one crossing at a time, in an order in which neighbours follow each other.
     """
-    crossings = list(inputs.crossings)
-    events = event_names(inputs.flows)
+    batches = neighbouring_crossings(inputs.crossings, inputs.sections.terrain)
     courses = Courses(inputs.network)
-    answers: list[CrossingAnswer | None] = [None] * len(crossings)
-    order = _neighbours(crossings, inputs)
-    for start in range(0, len(order), BATCH):
-        batch = order[start : start + BATCH]
-        prepared = {}
-        for i in batch:
-            try:
-                prepared[i] = _prepare(crossings[i], inputs, courses)
-            except _EXPECTED as error:
-                answers[i] = _failed(crossings[i], events, _reason(error))
-        own = replace(
-            inputs.sections,
-            terrain=_Strips(inputs.sections.terrain),
-            slopes=_AttributeSlopes(),
-            area_field=None,
-        )
-        for i, made in _sections_of(prepared, own).items():
-            try:
-                if isinstance(made, Exception):
-                    raise made
-                answers[i] = _answer(prepared[i], made, inputs, events)
-            except _EXPECTED as error:
-                answers[i] = _failed(crossings[i], events, _reason(error), prepared[i].findings)
+    answers: list[CrossingAnswer | None] = [None] * len(inputs.crossings)
+    done = 0
+    for batch in batches:
+        found = answer_crossings([inputs.crossings[i] for i in batch], inputs, courses)
+        for i, answer in zip(batch, found, strict=True):
+            answers[i] = answer
+        done += len(batch)
         if progress is not None:
-            progress(min(start + BATCH, len(order)), len(order), "crossings")
+            progress(done, len(answers), "crossings")
     return ranked([a for a in answers if a is not None], inputs.rank)
+
+
+def answer_crossings(
+    crossings: Sequence[Crossing], inputs: CrossingInputs, courses: Courses
+) -> list[CrossingAnswer]:
+    """Answer some crossings that lie near each other, not ranked; see :func:`screen_crossings`.
+
+    Parameters
+    ----------
+    crossings : sequence of Crossing
+        Of which there are few, as the ground of all their sections is held at once.
+    inputs : CrossingInputs
+        Its own crossings are not used.
+    courses : Courses
+        Of the inputs' network.
+    """
+    events = event_names(inputs.flows)
+    answers: dict[int, CrossingAnswer] = {}
+    prepared = {}
+    for i, crossing in enumerate(crossings):
+        try:
+            prepared[i] = _prepare(crossing, inputs, courses)
+        except _EXPECTED as error:
+            answers[i] = _failed(crossing, events, _reason(error))
+    own = replace(
+        inputs.sections,
+        terrain=_Strips(inputs.sections.terrain),
+        slopes=_AttributeSlopes(),
+        area_field=None,
+    )
+    for i, made in _sections_of(prepared, own).items():
+        try:
+            if isinstance(made, Exception):
+                raise made
+            answers[i] = _answer(prepared[i], made, inputs, events)
+        except _EXPECTED as error:
+            answers[i] = _failed(crossings[i], events, _reason(error), prepared[i].findings)
+    return [answers[i] for i in range(len(crossings))]
 
 
 @dataclass(frozen=True, eq=False)
@@ -395,7 +420,7 @@ def places_beside(inputs: CrossingInputs, progress: Callable | None = None) -> l
     courses = Courses(inputs.network)
     crossings = list(inputs.crossings)
     found: dict[int, Beside] = {}
-    for done, i in enumerate(_neighbours(crossings, inputs), 1):
+    for done, i in enumerate(_neighbours(crossings, inputs.sections.terrain), 1):
         try:
             ready = _prepare(crossings[i], inputs, courses)
         except _EXPECTED as error:
@@ -433,9 +458,15 @@ def _reason(error: Exception) -> str:
     return error.what if isinstance(error, Terrain2qError) else f"{type(error).__name__}: {error}"
 
 
-def _neighbours(crossings: Sequence[Crossing], inputs: CrossingInputs) -> list[int]:
+def neighbouring_crossings(crossings: Sequence[Crossing], terrain: Terrain) -> list[list[int]]:
+    """Return the places of crossings in batches that lie together, for :func:`answer_crossings`."""
+    order = _neighbours(crossings, terrain)
+    return [order[start : start + BATCH] for start in range(0, len(order), BATCH)]
+
+
+def _neighbours(crossings: Sequence[Crossing], terrain: Terrain) -> list[int]:
     """Return an order in which crossings that lie together follow each other."""
-    _, bottom, _, top = inputs.sections.terrain.bounds
+    _, bottom, _, top = terrain.bounds
     x = np.array([c.x for c in crossings])
     y = np.array([c.y for c in crossings])
     band = np.floor(np.nan_to_num((y - bottom) / max(top - bottom, 1e-12) * 40.0))
@@ -466,7 +497,8 @@ class _Ready:
 
 def _failed(crossing: Crossing, events, why: str, findings: Sequence[Finding] = ()) -> CrossingAnswer:
     found = [*crossing.findings, *findings]
-    if why:
+    # where the place itself is wrong, that says it all
+    if why and not any(f.severity == FAILED for f in crossing.findings):
         found.append(crossing.finding("crossing-failed", why))
     return CrossingAnswer(
         crossing, events=tuple(CrossingEvent(e, FAILED) for e in events), findings=_once(found)
@@ -479,12 +511,50 @@ def _once(findings: Sequence[Finding]) -> tuple[Finding, ...]:
 
 def _number(crossing: Crossing, name: str | None) -> float:
     """Return the number in a field of a crossing, NaN where there is none."""
-    if name is None:
-        return float("nan")
+    return float("nan") if name is None else number_in(crossing.attributes.get(name))
+
+
+def number_in(value: object) -> float:
+    """Return a field's value as a number; NaN where it is empty, infinite or no plain number.
+
+    Examples
+    --------
+    >>> number_in(" 12.5 "), number_in("1,200"), number_in(None)
+    (12.5, nan, nan)
+    """
     try:
-        return float(clean_text(crossing.attributes.get(name)) or "nan")
+        number = float(clean_text(value) or "nan")
     except ValueError:
         return float("nan")
+    return number if np.isfinite(number) else float("nan")
+
+
+def field_findings(crossing: Crossing, wanted: Sequence[tuple[str, str, bool]]) -> list[Finding]:
+    """Return what is wrong with the numbers in a crossing's fields.
+
+    Parameters
+    ----------
+    crossing : Crossing
+    wanted : sequence of (str, str, bool)
+        Name of a field, what it is for, and whether it must be above zero.
+    """
+    found = []
+    for name, purpose, positive in wanted:
+        text = clean_text(crossing.attributes.get(name))
+        if not text or text.lower() == "nan":
+            continue
+        number = number_in(text)
+        if np.isnan(number):
+            wrong = "is not a plain number"
+        elif positive and number <= 0:
+            wrong = "is not above zero"
+        else:
+            continue
+        # nothing but its place in the list hangs on the rank, and many tables write 0 for nothing
+        mild = purpose == "the rank" or number == 0
+        message = f"{name} = {text!r} {wrong}; it was left out for {purpose}"
+        found.append(crossing.finding("field-not-number", message, NOTE if mild else ""))
+    return found
 
 
 # --- the ground at one crossing ----------------------------------------------------------------------
@@ -503,7 +573,7 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
         raise NoAnswerError("there is no ground at the crossing", where=crossing.crossing_id)
     downstream = along_line(stream, np.array([at]))[1][0]
     bed = bed_along(ground, stream)
-    surface, lines = _surface(crossing, inputs, ground, stream, at, downstream, findings)
+    surface, lines, survey = _surface(crossing, inputs, ground, stream, bed, at, downstream, findings)
     drawn_at, at = at, _meeting(surface, stream, at)
     crest = find_crest(surface, ground, inputs.reach)
     if crest is None:
@@ -515,8 +585,8 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     fill_at = _leaves(stream, at, own, ground.cell)
     bed = bed.without(fill_at[0] - 3.0, fill_at[1] + 3.0)
     slope, source = _slope(crossing, inputs, bed, fill_at, findings)
-    crest, surface = _surveyed(crossing, inputs, crest, surface, findings)
     low = bed.near(edges_at[0])
+    crest, surface, surveyed = _surveyed(crossing, inputs, crest, surface, survey, low, findings)
     top = crest.height + max(CLEAR_ABOVE, crest.height - low)
     clear = (STRIP + 2) * ground.cell
     places, over = [], []
@@ -541,7 +611,10 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
             )
         )
     if places[0] is None:
-        raise NoAnswerError("there is no place for an approach section upstream", where=crossing.crossing_id)
+        why = _no_place(ground, stream, fill_at[0], own, clear, units)
+        raise NoAnswerError(
+            f"there is no place for an approach section upstream: {why}", where=crossing.crossing_id
+        )
     cut = [
         f"the {name} section"
         for name, p in zip(("approach", "tailwater"), places, strict=True)
@@ -556,7 +629,8 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
             )
         )
     crest_xy = ground.to_map(surface.place(crest.station))
-    _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, findings)
+    _closed_beside(crossing, inputs, ground, stream, bed, fills, fill_at, slope, crest, findings)
+    _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, surveyed, findings)
     made = [
         _cut_line(
             crossing,
@@ -595,6 +669,26 @@ def _prepare(crossing: Crossing, inputs: CrossingInputs, courses: Courses) -> _R
     )  # fmt: skip
 
 
+def _no_place(ground: LocalGround, stream, start: float, own, clear: float, units: UnitSystem) -> str:
+    """Return why no section can stand upstream of a fill that the stream enters at `start`."""
+    room = start - clear
+    if room <= 0.0:
+        return (
+            f"the stream line begins {length_text(max(start, 0.0), units)} above the road's fill, and a "
+            f"section keeps {length_text(clear, units)} clear of it; draw the stream further up"
+        )
+    at = np.arange(max(room - FARTHEST, 0.0), room, max(2.0, ground.cell))
+    points = shapely.get_coordinates(shapely.line_interpolate_point(stream, at))
+    if not np.isfinite(ground.at(points)).any():
+        return "the terrain has a gap along the stream there, or ends; fill the gap or add the tile"
+    if shapely.contains_xy(own.buffer(clear), *points.T).all():
+        return "the stream runs along the road's own fill; correct the road or the stream line"
+    return (
+        "the stream line does not run in a valley, or a road leaves too little of it; look at the stream "
+        "line on the hillshade"
+    )
+
+
 def _read(crossing: Crossing, inputs: CrossingInputs, course):
     """Read the ground about a crossing; return it with the stream in local metres and the crossing on it."""
     terrain = inputs.sections.terrain
@@ -616,8 +710,8 @@ def _read(crossing: Crossing, inputs: CrossingInputs, course):
     return ground, shapely.LineString(far.coords), float(at - upper)
 
 
-def _surface(crossing, inputs: CrossingInputs, ground, stream, at, downstream, findings):
-    """Return the road's surface, and those of the roads merged into the crossing."""
+def _surface(crossing, inputs: CrossingInputs, ground, stream, bed: Bed, at, downstream, findings):
+    """Return the road's surface, those of the roads merged into the crossing, and the surveyed crest, m."""
     reach = max(inputs.reach, ALONG_ROADS)
     options = {"reach": reach, "width": inputs.road_width, "search": inputs.search}
     if crossing.line is None:
@@ -637,19 +731,32 @@ def _surface(crossing, inputs: CrossingInputs, ground, stream, at, downstream, f
     surface = find_road_surface(ground, line, place, downstream, **options)
     if surface is None or not np.isfinite(surface.heights).any():
         raise NoAnswerError("there is no ground under the road", where=crossing.crossing_id)
+    surveys = [_survey(crossing.attributes, inputs)]
     others = []
-    for other in crossing.others:
+    for other, fields in zip(crossing.others, crossing.other_attributes, strict=True):
         line = _clipped(shapely.LineString(ground.to_local(shapely.get_coordinates(other))), reach + 60.0)
         found = find_road_surface(
             ground, line, float(line.project(stream.interpolate(at))), downstream, **options
         )
         if found is not None:
             others.append(found)
+            surveys.append(_survey(fields, inputs))
     # of two carriageways the higher one is passed last
     every = [surface, *others]
     crests = [find_crest(s, ground, inputs.reach) for s in every]
-    best = max(range(len(every)), key=lambda i: -np.inf if crests[i] is None else crests[i].height)
-    return every[best], [s for i, s in enumerate(every) if i != best]
+    heights = [-np.inf if c is None else c.height for c in crests]
+    # a filler for "not known" is no height
+    lowest = np.nanmin(bed.heights) if np.isfinite(bed.heights).any() else -np.inf
+    heights = [s if s > lowest else h for h, s in zip(heights, surveys, strict=True)]
+    best = int(np.argmax(heights))
+    return every[best], [s for i, s in enumerate(every) if i != best], surveys[best]
+
+
+def _survey(fields: Mapping, inputs: CrossingInputs) -> float:
+    """Return the surveyed crest in a road's fields, m; NaN where there is none."""
+    if inputs.crest_field is None:
+        return float("nan")
+    return number_in(fields.get(inputs.crest_field)) / inputs.units.per_si("length")
 
 
 def _fills_beside(crossing, inputs: CrossingInputs, ground: LocalGround) -> list[shapely.Geometry]:
@@ -746,7 +853,7 @@ def _slope(crossing, inputs: CrossingInputs, bed: Bed, fill_at, findings) -> tup
     found = robust_slope(bed.at[away], bed.heights[away]) if away.sum() >= 5 else None
     if found is None:
         raise NoAnswerError("too little ground is known along the stream to take a slope from")
-    source = f"ground away from the fill, 90 % interval {found.low:.2g} to {found.high:.2g}"
+    source = f"ground away from the fill, 90 % interval {found.low:.3g} to {found.high:.3g}"
     if not found.slope > 0:
         raise NoAnswerError(
             f"the ground along the stream does not fall away from the fill: slope {found.slope:.2g}"
@@ -755,7 +862,7 @@ def _slope(crossing, inputs: CrossingInputs, bed: Bed, fill_at, findings) -> tup
         findings.append(
             crossing.finding(
                 "slope-uncertain",
-                f"the slope is {found.slope:.2g}, 90 % interval {found.low:.2g} to {found.high:.2g}",
+                f"the slope is {found.slope:.2g}, 90 % interval {found.low:.3g} to {found.high:.3g}",
             )
         )
     if found.slope < FLAT:
@@ -763,20 +870,60 @@ def _slope(crossing, inputs: CrossingInputs, bed: Bed, fill_at, findings) -> tup
     return found.slope, source
 
 
-def _surveyed(crossing, inputs: CrossingInputs, crest: Crest, surface: RoadSurface, findings):
-    """Return crest and surface at the surveyed height, where there is one."""
-    survey = _number(crossing, inputs.crest_field) / inputs.units.per_si("length")
+def _surveyed(crossing, inputs, crest: Crest, surface: RoadSurface, survey: float, low: float, findings):
+    """Return crest and surface at the surveyed height, and whether there is one that can be used."""
     if not np.isfinite(survey):
-        return crest, surface
+        return crest, surface, False
+    if survey <= low:
+        # a filler for "not known", another datum or another unit
+        bed, given = (length_text(v, inputs.units) for v in (low, survey))
+        message = (
+            f"the surveyed crest, {given}, is no higher than the stream's bed, {bed}; the one in the ground "
+            "was used"
+        )
+        findings.append(crossing.finding("crest-survey-differs", message))
+        return crest, surface, False
     off = survey - crest.height
     if abs(off) > SURVEY_DIFFERS:
         text = length_text(abs(off), inputs.units)
-        message = f"the surveyed crest is {text} {'above' if off > 0 else 'below'} the one in the ground"
+        message = (
+            f"the surveyed crest is {text} {'above' if off > 0 else 'below'} the one in the ground; the "
+            "surveyed one was used"
+        )
         findings.append(crossing.finding("crest-survey-differs", message))
-    return replace(crest, height=float(survey)), surface.raised(off)
+    return replace(crest, height=float(survey)), surface.raised(off), True
 
 
-def _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, findings) -> None:
+def _closed_beside(crossing, inputs, ground, stream, bed, fills, fill_at, slope, crest, findings) -> None:
+    """Find ground that closes the valley higher than the crest beside a road, where no road is drawn."""
+    known = np.isfinite(bed.heights)
+    at, heights = bed.at[known], bed.heights[known]
+    if not at.size:
+        return
+    # a steep stream is soon higher than the crest, but its bed never rises on the way down
+    steps = max(1, round(CLOSED_WITHIN / (bed.at[1] - bed.at[0])))
+    rise = heights - minimum_filter1d(heights, steps, origin=(steps - 1) // 2, mode="nearest")
+    level = crest.height + slope * np.maximum(fill_at[0] - at, 0.0)
+    higher = (at >= fill_at[0] - CLOSED_WITHIN) & (at <= fill_at[1] + CLOSED_WITHIN)
+    higher &= (heights > level + 0.1) & (rise > 0.5)
+    at, heights = at[higher], heights[higher]
+    points = shapely.get_coordinates(shapely.line_interpolate_point(stream, at))
+    undrawn = ~shapely.contains_xy(fills.buffer(3.0 * ground.cell), *points.T)
+    if not undrawn.any():
+        return
+    k = int(np.argmax(np.where(undrawn, heights, -np.inf)))
+    up = at[k] < fill_at[0]
+    away = fill_at[0] - at[k] if up else at[k] - fill_at[1]
+    higher, distance = (length_text(v, inputs.units) for v in (heights[k] - crest.height, max(away, 0.0)))
+    message = (
+        f"the ground across the stream is {higher} higher than the crest {distance} {'up' if up else 'down'}"
+        "stream, where no road is drawn; if the road is there, correct its line or set a larger `search`"
+    )
+    place = ground.to_map(points[k])
+    findings.append(crossing.finding("crest-doubtful", message).at(*place))
+
+
+def _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, survey: bool, findings) -> None:
     def text(metres: float) -> str:
         return length_text(metres, inputs.units)
 
@@ -793,7 +940,6 @@ def _remarks_on_road(crossing, inputs, ground, surface, crest, crest_xy, low, fi
         findings.append(
             crossing.finding("deck-bridged", message, NOTE if crossing.structure == BRIDGE else "")
         )
-    survey = np.isfinite(_number(crossing, inputs.crest_field))
     if abs(crest.station) > 30.0:
         here = float(np.interp(0.0, surface.stations, surface.heights))
         side = "right" if crest.station > 0 else "left"
@@ -1057,8 +1203,8 @@ def _wrong_question(ready: _Ready, inputs: CrossingInputs, row, flow: Flow | Non
             message += f", {100 * share:.0f} % of the water of {flow.event}"
             severity = NOTE if share < SMALL_STORAGE else ""
         found.append(crossing.finding("culvert-ponds", message, severity))
-    tide = clean_text(crossing.attributes.get(inputs.tide_field)).lower() if inputs.tide_field else ""
-    if tide not in ("", "0", "no", "n", "false", "f", "none"):
+    tide = clean_text(crossing.attributes.get(inputs.tide_field)) if inputs.tide_field else ""
+    if says_so(tide):
         found.append(crossing.finding("tidal", f"field {inputs.tide_field} says {tide}"))
     return found
 

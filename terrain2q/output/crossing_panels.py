@@ -13,6 +13,7 @@ from pathlib import Path
 
 import numpy as np
 import shapely
+from matplotlib import patheffects
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_pdf import PdfPages
 from matplotlib.figure import Figure
@@ -24,9 +25,9 @@ from terrain2q.errors import SEVERITIES
 from terrain2q.ground.local_ground import LocalGround
 from terrain2q.ground.terrain import Terrain
 from terrain2q.hydraulics.section import DepthRoughness, Section, Subarea
-from terrain2q.jobs.crossings import OVER, WITHIN, CrossingAnswer, CrossingInputs
+from terrain2q.jobs.crossings import OVER, WITHIN, CrossingAnswer, CrossingEvent, CrossingInputs
 from terrain2q.output.looks import EARTHS, GROUND_EDGE, INK, WALL, WATER_LINES, WATERS, water_tones
-from terrain2q.output.plots import plot_rating, plot_section
+from terrain2q.output.plots import free_places, plot_rating, plot_section
 from terrain2q.output.whole_file import whole_file
 from terrain2q.units import UnitSystem
 
@@ -38,8 +39,14 @@ ROWS = 34
 PAGE = (11.0, 8.5)
 """Inches: a letter page on its side; it prints on A4 too."""
 
+NUMBERS_WIDE, FINDINGS_WIDE = 130, 105
+"""Letters in a line of the numbers and of the findings below the pictures."""
+
 PLAN_CELLS = 700
 """Most cells of the hillshade along a side; more are thinned out."""
+
+NUMBERED = 150
+"""Most crossings whose ranks are written on the map; more would hide it."""
 
 _MARKS = {OVER: ("v", WATERS[4]), WITHIN: ("D", WATERS[2]), "": ("X", WALL)}
 
@@ -74,21 +81,27 @@ def write_crossings_pdf(
     }
     with whole_file(target) as temporary, PdfPages(temporary, metadata=about) as pdf:
         for start in range(0, max(len(ordered), 1), ROWS):
-            pdf.savefig(draw_table(ordered[start : start + ROWS], inputs.units, name, first=start == 0))
-        pdf.savefig(draw_map(ordered, inputs))
+            pdf.savefig(draw_table(ordered[start : start + ROWS], inputs.units, name))
+        pdf.savefig(draw_map(ordered, inputs, name))
         for answer in ordered[:panels]:
-            pdf.savefig(draw_panel(answer, inputs))
+            pdf.savefig(draw_panel(answer, inputs, name))
     return target
 
 
 # --- the table ---------------------------------------------------------------------------------------
 
 
-def draw_table(
-    answers: Sequence[CrossingAnswer], units: UnitSystem, name: str = "", *, first: bool = True
-) -> Figure:
-    """Return a page with one line for each crossing, as ordered."""
+def _page(name: str) -> Figure:
+    """Return an empty page with what every page says at its foot, as pages are handed on one by one."""
     figure = Figure(figsize=PAGE)
+    figure.text(0.04, 0.02, CAUTION, fontsize=6.5, color=INK)
+    figure.text(0.97, 0.02, name, fontsize=6.5, color=INK, ha="right")
+    return figure
+
+
+def draw_table(answers: Sequence[CrossingAnswer], units: UnitSystem, name: str = "") -> Figure:
+    """Return a page with one line for each crossing, as ordered."""
+    figure = _page("")
     ax = figure.add_axes((0.04, 0.06, 0.92, 0.86))
     ax.set_axis_off()
     length, flow = units.symbol("length"), units.symbol("flow")
@@ -120,8 +133,6 @@ def draw_table(
             )  # fmt: skip
     ax.set_xlim(0, 1)
     ax.set_ylim(0, 1)
-    if first:
-        figure.text(0.04, 0.03, CAUTION, fontsize=6.5, color=INK)
     return figure
 
 
@@ -187,50 +198,89 @@ def _figures(value: float) -> str:
 # --- the map -----------------------------------------------------------------------------------------
 
 
-def draw_map(answers: Sequence[CrossingAnswer], inputs: CrossingInputs) -> Figure:
+def draw_map(answers: Sequence[CrossingAnswer], inputs: CrossingInputs, name: str = "") -> Figure:
     """Return a page with every crossing on its streams, numbered by rank, its verdict told by its mark."""
-    figure = Figure(figsize=PAGE)
-    ax = figure.add_axes((0.06, 0.07, 0.74, 0.86))
-    chains = inputs.network.chains
-    for line in chains:
+    figure = _page(name)
+    ax = figure.add_axes((0.06, 0.09, 0.74, 0.84))
+    for line in inputs.network.chains:
         ax.plot(*shapely.get_coordinates(line).T, color=WATERS[2], lw=0.9, zorder=2)
     for answer in answers:
         if answer.road is not None:
             ax.plot(answer.road.x, answer.road.y, color=GROUND_EDGE, lw=1.6, zorder=3)
+    shown = [a for a in answers if np.isfinite(a.crossing.x)]
+    xy = np.array([[a.crossing.x, a.crossing.y] for a in shown]).reshape(-1, 2)
+    if len(xy):
+        low, high = xy.min(axis=0), xy.max(axis=0)
+        scale = LocalGround(inputs.sections.terrain, *(0.5 * (low + high)), 0.0).scale
+        # the page is filled: crossings along one stream would leave a map of a few lines
+        box = ax.get_window_extent()
+        page = np.array([box.width, box.height])
+        span = np.maximum(1.12 * (high - low) * scale, 300.0)
+        half = 0.5 * page * (span / page).max() / scale
+        middle = 0.5 * (low + high)
+        ax.set_xlim(middle[0] - half[0], middle[0] + half[0])
+        ax.set_ylim(middle[1] - half[1], middle[1] + half[1])
+        ax.set_aspect(float(scale[1] / scale[0]), adjustable="box")
+        _scale_and_north(ax, float(scale[0]), inputs.units)
     seen = set()
-    largest = {a.crossing.crossing_id: _largest_verdict(a) for a in answers}
-    for answer in answers:
-        crossing = answer.crossing
-        if not np.isfinite(crossing.x):
-            continue
-        verdict = largest[crossing.crossing_id]
+    for answer, (x, y) in zip(shown, xy, strict=True):
+        verdict = _largest_verdict(answer)
         mark, colour = _MARKS.get(verdict, ("o", "white"))
         label = verdict or "no answer"
         ax.plot(
-            crossing.x, crossing.y, marker=mark, ms=7, mfc=colour, mec=INK, mew=1.0, ls="none", zorder=5,
+            x, y, marker=mark, ms=7, mfc=colour, mec=INK, mew=1.0, ls="none", zorder=5,
             label=None if label in seen else label,
         )  # fmt: skip
         seen.add(label)
-        if len(answers) <= 150:
+    if len(shown) <= NUMBERED:
+        whole = len(shown) <= 15
+        texts = [f"{a.rank}  {a.crossing.crossing_id}" if whole else str(a.rank) for a in shown]
+        beside = [(6, 5), (-6, 5), (6, -11), (-6, -11), (6, 14), (-6, 14), (6, -20), (-6, -20)]
+        places = free_places(ax, xy, texts, 7.0, [beside] * len(xy))
+        for text, place, offset in zip(texts, xy, places, strict=True):
             ax.annotate(
-                f"{answer.rank}  {crossing.crossing_id}" if len(answers) <= 15 else str(answer.rank),
-                (crossing.x, crossing.y), xytext=(6, 5), textcoords="offset points", fontsize=7, color=INK,
-                zorder=6,
+                text, place, xytext=offset, textcoords="offset points", fontsize=7, color=INK, zorder=6,
+                ha="left" if offset[0] > 0 else "right", annotation_clip=True,
             )  # fmt: skip
-    xy = np.array([[a.crossing.x, a.crossing.y] for a in answers if np.isfinite(a.crossing.x)])
-    if len(xy):
-        low, high = xy.min(axis=0), xy.max(axis=0)
-        pad = 0.06 * max(*(high - low), 300.0 / inputs.network.ground.metres_per_map_unit)
-        ax.set_xlim(low[0] - pad, high[0] + pad)
-        ax.set_ylim(low[1] - pad, high[1] + pad)
-    ax.set_aspect("equal", adjustable="box")
     _plain_map(ax)
     figure.text(
         0.06, 0.955, "Crossings, numbered by rank; verdict at the largest event", fontsize=12, color=INK
     )
+    figure.text(0.82, 0.11, _crs_text(inputs.sections.terrain), fontsize=6.5, color=INK)
     if seen:
         ax.legend(loc="upper left", bbox_to_anchor=(1.01, 1.0), frameon=False, fontsize=8, labelcolor=INK)
     return figure
+
+
+def _crs_text(terrain: Terrain) -> str:
+    return "\n".join(["coordinates:", *textwrap.wrap(terrain.crs.name, 30)])
+
+
+def _scale_and_north(ax: Axes, metres: float, units: UnitSystem) -> None:
+    """Draw a scale bar and an arrow to the map's north into a map's lower left corner.
+
+    `metres` of ground lie in one unit of the map along x.
+    """
+    (left, right), (bottom, top) = ax.get_xlim(), ax.get_ylim()
+    factor = units.per_si("length")
+    room = 0.22 * (right - left) * metres * factor
+    size = 10.0 ** np.floor(np.log10(room))
+    length = max(size * k for k in (1, 2, 5) if size * k <= room)
+    x, y = left + 0.04 * (right - left), bottom + 0.04 * (top - bottom)
+    end = x + length / factor / metres
+    halo = [patheffects.withStroke(linewidth=3.0, foreground="white")]
+    ax.plot([x, end], [y, y], color=INK, lw=2.0, solid_capstyle="butt", zorder=9, path_effects=halo)
+    ax.annotate(
+        f"{length:,.0f} {units.symbol('length')}", (0.5 * (x + end), y), xytext=(0, 3),
+        textcoords="offset points", ha="center", fontsize=7, color=INK, zorder=9, path_effects=halo,
+    )  # fmt: skip
+    foot = ax.transData.transform((x, y)) + np.array([4.0, 16.0]) * ax.figure.dpi / 72.0
+    head = foot + np.array([0.0, 22.0]) * ax.figure.dpi / 72.0
+    foot, head = ax.transData.inverted().transform([foot, head])
+    ax.annotate(
+        "N", head, foot, ha="center", va="top", fontsize=8, color=INK, zorder=9, path_effects=halo,
+        arrowprops={"arrowstyle": "-|>", "color": INK, "lw": 1.2, "path_effects": halo},
+    )  # fmt: skip
 
 
 def _largest_verdict(answer: CrossingAnswer) -> str:
@@ -250,9 +300,9 @@ def _plain_map(ax: Axes) -> None:
 # --- one crossing ------------------------------------------------------------------------------------
 
 
-def draw_panel(answer: CrossingAnswer, inputs: CrossingInputs) -> Figure:
+def draw_panel(answer: CrossingAnswer, inputs: CrossingInputs, name: str = "") -> Figure:
     """Return a page on one crossing: plan, approach section, road with water, rating with the crest."""
-    figure = Figure(figsize=PAGE)
+    figure = _page(name)
     units = inputs.units
     crossing = answer.crossing
     title = f"{answer.rank}.  {crossing.crossing_id}"
@@ -260,17 +310,17 @@ def draw_panel(answer: CrossingAnswer, inputs: CrossingInputs) -> Figure:
     figure.text(0.04, 0.955, title, fontsize=13, color=INK)
     figure.text(0.04, 0.932, f"stream {crossing.stream}" if crossing.stream else "", fontsize=8, color=INK)
     if answer.road is None or answer.approach is None or answer.approach.section is None:
-        _text_block(figure, answer, units)
+        _reasons(figure, answer)
         return figure
     tones = _tones(answer)
     # first, as it draws the page once to find its scale
-    section = figure.add_axes((0.06, 0.205, 0.33, 0.20))
+    section = figure.add_axes((0.06, 0.235, 0.33, 0.185))
     _draw_section(answer, units, section)
-    plan = figure.add_axes((0.06, 0.535, 0.38, 0.375))
-    draw_plan(answer, inputs.sections.terrain, ax=plan)
-    road = figure.add_axes((0.53, 0.615, 0.44, 0.285))
+    plan = figure.add_axes((0.06, 0.55, 0.38, 0.365))
+    draw_plan(answer, inputs.sections.terrain, units, ax=plan)
+    road = figure.add_axes((0.53, 0.635, 0.44, 0.265))
     draw_road(answer, units, tones, inputs.reach, ax=road)
-    rating = figure.add_axes((0.63, 0.205, 0.34, 0.24))
+    rating = figure.add_axes((0.63, 0.235, 0.34, 0.225))
     _draw_rating(answer, units, rating)
     _text_block(figure, answer, units)
     return figure
@@ -285,7 +335,7 @@ def _tones(answer: CrossingAnswer) -> dict[str, tuple[str, object]]:
     }
 
 
-def draw_plan(answer: CrossingAnswer, terrain: Terrain, ax: Axes) -> Axes:
+def draw_plan(answer: CrossingAnswer, terrain: Terrain, units: UnitSystem, ax: Axes) -> Axes:
     """Draw the ground about a crossing as a hillshade, with road, fill, sections and the overflow place."""
     road, crossing = answer.road, answer.crossing
     lines = [
@@ -348,6 +398,8 @@ def draw_plan(answer: CrossingAnswer, terrain: Terrain, ax: Axes) -> Axes:
     ax.set_xlim(x0, x1)
     ax.set_ylim(y0, y1)
     ax.set_aspect(float(ground.scale[1] / ground.scale[0]), adjustable="box")
+    ax.apply_aspect()
+    _scale_and_north(ax, float(ground.scale[0]), units)
     _plain_map(ax)
     ax.legend(
         loc="upper center", bbox_to_anchor=(0.5, -0.06), ncols=3, frameon=False, fontsize=6.5, labelcolor=INK
@@ -507,41 +559,81 @@ def _small(ax: Axes) -> None:
     ax.set_title(ax.get_title(loc="left"), loc="left", fontsize=9, color=INK)
 
 
+def _event_line(event: CrossingEvent, units: UnitSystem) -> str:
+    v = event.values
+    if not v:
+        return f"{event.event}: no answer"
+    length, unit = units.per_si("length"), units.symbol("length")
+    flow, flow_unit = units.per_si("flow"), units.symbol("flow")
+    text = (
+        f"{event.event}: {_figures(v['discharge'] * flow)} {flow_unit}, stage {v['stage'] * length:.2f} "
+        f"{unit}, freeboard {v['freeboard'] * length:+.2f} {unit}: {event.verdict}"
+    )
+    if v["largest_depth_on_road"] > 0:
+        text += (
+            f"; {v['road_width_under_water'] * length:.0f} {unit} of road under up to "
+            f"{v['largest_depth_on_road'] * length:.2f} {unit}, weir "
+            f"{_figures(v['weir_discharge'] * flow)} {flow_unit}"
+        )
+    if np.isfinite(v["required_opening"]):
+        text += f"; required opening {v['required_opening'] * length:.1f} {unit}"
+    if np.isfinite(v["opening_share"]):
+        text += f", {100 * v['opening_share']:.0f} % of it there"
+    return text
+
+
 def _text_block(figure: Figure, answer: CrossingAnswer, units: UnitSystem) -> None:
-    """Write the numbers and the findings below the pictures."""
+    """Write the numbers below the pictures on the left, and the findings on the right."""
     length, flow = units.per_si("length"), units.per_si("flow")
     unit, flow_unit = units.symbol("length"), units.symbol("flow")
     lines = []
-    for event in answer.events:
-        v = event.values
-        if not v:
-            lines.append(f"{event.event}: no answer")
-            continue
-        text = (
-            f"{event.event}: {_figures(v['discharge'] * flow)} {flow_unit}, stage {v['stage'] * length:.2f} "
-            f"{unit}, freeboard {v['freeboard'] * length:+.2f} {unit}: {event.verdict}"
-        )
-        if v["largest_depth_on_road"] > 0:
-            text += (
-                f"; {v['road_width_under_water'] * length:.0f} {unit} of road under up to "
-                f"{v['largest_depth_on_road'] * length:.2f} {unit}, weir "
-                f"{_figures(v['weir_discharge'] * flow)} {flow_unit}"
-            )
-        if np.isfinite(v["required_opening"]):
-            text += f"; required opening {v['required_opening'] * length:.1f} {unit}"
-        lines.append(text)
     if np.isfinite(answer.crest_discharge):
-        lines.append(
-            f"Crest {answer.crest * length:.2f} {unit} is reached at "
+        lines = [
+            f"Crest {answer.crest * length:.2f} {unit}, reached at "
             f"{_figures(answer.crest_discharge * flow)} {flow_unit} "
-            f"(probability {_probability_text(answer) or 'not known'}); slope {answer.slope:.5f}, "
-            f"{answer.slope_source}; approach section {answer.to_road * length:.0f} {unit} upstream"
-        )
-    figure.text(0.04, 0.135, "\n".join(lines[:7]), fontsize=6.8, color=INK, va="top", linespacing=1.35)
+            f"(probability {_probability_text(answer) or 'not known'}); first event over: "
+            f"{answer.first_event_over or 'none'}",
+            *textwrap.wrap(
+                f"Slope {answer.slope:.5f}, {answer.slope_source}; approach section "
+                f"{answer.to_road * length:.0f} {unit} upstream",
+                NUMBERS_WIDE,
+            ),
+        ]
+    top, step, foot = 0.17, 0.0145, 0.035
+    room = int((top - foot) / step) - len(lines)
+    # the larger the event, the more it matters whether there is room for it
+    known = sorted((e for e in answer.events if e.values), key=lambda e: -e.values["discharge"])
+    texts = [_event_line(e, units) for e in (*known, *(e for e in answer.events if not e.values))]
+    wrapped = [textwrap.wrap(text, NUMBERS_WIDE, subsequent_indent="    ") for text in texts]
+    shown = 0
+    while wrapped and sum(map(len, wrapped[: shown + 1])) <= room - (shown + 1 < len(wrapped)):
+        shown += 1
+        if shown == len(wrapped):
+            break
+    lines += [line for text in wrapped[:shown] for line in text]
+    if shown < len(wrapped):
+        lines.append(f"… and {len(wrapped) - shown} smaller events in crossings.csv")
+    figure.text(0.04, top, "\n".join(lines), fontsize=6.2, color=INK, va="top", linespacing=1.3)
+    found = [textwrap.wrap(text, FINDINGS_WIDE, subsequent_indent="    ") for text in _finding_texts(answer)]
+    room = int((top - foot) / (0.93 * step))
+    lines, number = [], 0
+    for number, text in enumerate(found):
+        if len(lines) + len(text) > room - (number + 1 < len(found)):
+            lines.append(f"… and {len(found) - number} more in the layer findings")
+            break
+        lines += text
+    figure.text(0.56, top, "\n".join(lines), fontsize=6.0, color=INK, va="top", linespacing=1.3)
+
+
+def _finding_texts(answer: CrossingAnswer) -> list[str]:
+    """Return what was found at a crossing, the worst first."""
     found = sorted(answer.findings, key=lambda f: SEVERITIES.index(f.severity))
-    texts = [textwrap.shorten(f"{f.severity}: {f.message} [{f.code}]", 175, placeholder=" …") for f in found]
-    place = 0.135 - 0.0165 * (min(len(lines), 7) + 0.4)
-    room = max(1, int((place - 0.01) / 0.0155))
-    if len(texts) > room:
-        texts = [*texts[: room - 1], f"… and {len(texts) - room + 1} more in the layer findings"]
-    figure.text(0.04, place, "\n".join(texts), fontsize=6.2, color=INK, va="top", linespacing=1.3)
+    return [f"{f.severity}: {f.message} [{f.code}]" for f in found]
+
+
+def _reasons(figure: Figure, answer: CrossingAnswer) -> None:
+    """Write why a crossing has no answer on its page, which has no pictures."""
+    lines = ["No answer at any event.", ""]
+    for text in _finding_texts(answer):
+        lines += textwrap.wrap(text, 130, subsequent_indent="    ")
+    figure.text(0.04, 0.89, "\n".join(lines[:60]), fontsize=8, color=INK, va="top", linespacing=1.4)

@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 
 import geopandas
 import numpy as np
 import pandas as pd
+import pyarrow as pa
 import shapely
 
 from terrain2q.columns import COLUMNS, LAYERS
@@ -26,11 +27,9 @@ CSV_NAME = "crossings.csv"
 _NARROWER = 0.999
 """How much narrower an opening is that must not pass the event."""
 
-_PIECE = 50
-"""Crossings whose rows are made together, so that thousands are not held at once."""
-
 _SECTION_LAYERS = ("sections", "subareas", "ratings", "design_stages", "subarea_flows")
 _STEP_LAYERS = ("road_profiles", "crossing_steps", "opening_parts")
+_ROW_LAYERS = (*_SECTION_LAYERS, *_STEP_LAYERS, "findings")
 
 
 def crossings_layer(
@@ -168,14 +167,42 @@ def step_layers(answers: Sequence[CrossingAnswer], units: UnitSystem) -> dict[st
     return {layer: table_in_units(layer, columns, units) for layer, columns in rows.items()}
 
 
-def write_crossing_sections(
-    folder: Path,
+def crossing_tables(
     answers: Sequence[CrossingAnswer],
     units: UnitSystem,
     terrain_crs,
     crs,
     stages: int = 30,
     top: float | None = None,
+) -> dict[str, pa.Table]:
+    """Return the rows of ``crossing_sections.gpkg`` but for its cut lines, by layer; crossings by rank.
+
+    Parameters
+    ----------
+    answers : sequence of CrossingAnswer
+        In SI, in the terrain's CRS.
+    units : UnitSystem
+        The study's.
+    terrain_crs, crs : pyproj.CRS
+        Of the answers' coordinates, and of the layers.
+    stages, top : int, float or None
+        Of a rating; `top` in m.
+    """
+    own = [without_workings(a) for a in answers]
+    answered = answered_sections(own, units, stages, top)
+    # why a section's row is doubtful; what is only good to know is left out
+    doubts = [f for a in answered for f in a.findings if f.severity == DOUBTFUL]
+    layers = make_layers(answered, doubts, units, terrain_crs, crs) | step_layers(own, units)
+    return {name: table_of_frame(name, layers[name]) for name in _ROW_LAYERS}
+
+
+def write_crossing_sections(
+    folder: Path,
+    answers: Sequence[CrossingAnswer],
+    units: UnitSystem,
+    terrain_crs,
+    crs,
+    tables: Iterable[Mapping[str, pa.Table]],
 ) -> Path | None:
     """Write the approach and tailwater sections into ``crossing_sections.gpkg``; return the file.
 
@@ -183,8 +210,8 @@ def write_crossing_sections(
     (``sections`` to ``subarea_flows``, and ``findings`` with what is doubtful in their rows), for each event
     of the crossing and at the discharge that reaches the crest; what else the numbers are worked out with
     (:func:`step_layers`); and the lines of the sections in the layer ``cut_lines``, which another study can
-    take. None where no crossing has a section. `stages` and `top` are those of a rating. Rows are made some
-    crossings at a time.
+    take. None where no crossing has a section. `tables` are the rows of some crossings after others, by
+    :func:`crossing_tables`.
     """
     rows: dict[str, list] = {
         name: []
@@ -206,24 +233,17 @@ def write_crossing_sections(
     if not lines:
         return None
     target = Path(folder) / SECTIONS_NAME
-    ordered = sorted(answers, key=lambda a: a.rank)
     with whole_file(target) as temporary:
         with GeoPackageWriter(
             temporary,
-            (*_SECTION_LAYERS, *_STEP_LAYERS, "findings"),
+            _ROW_LAYERS,
             units=units,
             crs=crs,
             description="Sections above and below the roads of crossings",
         ) as writer:
-            for start in range(0, len(ordered), _PIECE):
-                piece = [without_workings(a) for a in ordered[start : start + _PIECE]]
-                answered = answered_sections(piece, units, stages, top)
-                # why a section's row is doubtful; what is only good to know is left out
-                doubts = [f for a in answered for f in a.findings if f.severity == DOUBTFUL]
-                layers = make_layers(answered, doubts, units, terrain_crs, crs)
-                layers |= step_layers(piece, units)
+            for some in tables:
                 for name in writer.counts:
-                    writer.append(name, table_of_frame(name, layers[name]))
+                    writer.append(name, some[name])
         geopandas.GeoDataFrame(rows, geometry=lines, crs=crs).to_file(
             temporary, layer="cut_lines", driver="GPKG", engine="pyogrio", mode="a"
         )

@@ -141,9 +141,9 @@ class OutputFolder:
 
     @cached_property
     def events(self) -> list[str]:
-        """Names of the events, in the order of the study."""
-        stages = self.layers.get("design_stages")
-        return [] if stages is None else list(stages["event"].unique())
+        """Names of the events, in the order of the study: of sections, and of crossings without any."""
+        tables = [self.layers[name] for name in ("design_stages", "crossings") if name in self.layers]
+        return list(dict.fromkeys(event for table in tables for event in table["event"].unique()))
 
     @cached_property
     def is_of_record(self) -> bool:

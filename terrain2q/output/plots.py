@@ -29,6 +29,9 @@ _NARROW = 0.055
 _UPRIGHT = 0.024
 """Room for an upright label, as a share of the section's width."""
 
+_ROOMY = 5.0
+"""Inches of width below which labels need a larger share of the picture."""
+
 _PAPER = MappingProxyType({"boxstyle": "round,pad=0.15", "fc": "white", "ec": "none", "alpha": 0.8})
 
 
@@ -152,12 +155,19 @@ def plot_rating(
         ax.set_xlim(right=most)
         highest = max([float(np.interp(most, discharge, stage)), *(marks or {}).values()])
         ax.set_ylim(top=stage[0] + 1.06 * (highest - stage[0]))
-    for number, (name, flow) in enumerate(sorted(shown.items(), key=lambda item: item[1])):
-        at = float(np.interp(flow, discharge, stage))
+    ax.set_xlim(left=0)
+    ordered = sorted(shown.items(), key=lambda item: item[1])
+    places = [(flow, float(np.interp(flow, discharge, stage))) for _, flow in ordered]
+    below, aside = [(4, -14), (4, -25)], [(4, -36), (-4, 6), (-4, 17), (8, -3)]
+    choices = [[*(below if k % 2 == 0 else below[::-1]), *aside] for k in range(len(places))]
+    names = [name for name, _ in ordered]
+    offsets = free_places(ax, places, names, 8.0, choices, list((marks or {}).values()))
+    for (name, _), (flow, at), offset in zip(ordered, places, offsets, strict=True):
         ax.plot([flow], [at], marker="o", ms=5.5, mfc="white", mec=INK, mew=1.3, zorder=5)
         ax.annotate(
-            name, (flow, at), xytext=(4, -14 - 11 * (number % 2)), textcoords="offset points", fontsize=8,
-            color=INK, arrowprops={"arrowstyle": "-", "color": INK, "lw": 0.5, "shrinkB": 3},
+            name, (flow, at), xytext=offset, textcoords="offset points", fontsize=8, color=INK,
+            ha="left" if offset[0] > 0 else "right",
+            arrowprops={"arrowstyle": "-", "color": INK, "lw": 0.5, "shrinkB": 3},
         )  # fmt: skip
     for name, level in (marks or {}).items():
         ax.axhline(level, color=WALL, lw=1.1, ls=(0, (5, 2)))
@@ -167,7 +177,6 @@ def plot_rating(
         )  # fmt: skip
     if fills.size:
         ax.legend(frameon=False, fontsize=8, loc="lower right", labelcolor=INK)
-    ax.set_xlim(left=0)
     ax.set_xlabel(column_title("discharge", system), color=INK)
     ax.set_ylabel(column_title("stage", system), color=INK)
     ax.set_title(title or "", loc="left", color=INK)
@@ -176,6 +185,64 @@ def plot_rating(
     for side in ("top", "right"):
         ax.spines[side].set_visible(False)
     return ax
+
+
+def free_places(
+    ax: Axes, places, texts, size: float, offsets, levels=(), mark: float = 3.5
+) -> list[tuple[float, float]]:
+    """Return where labels may stand beside their points without lying over each other.
+
+    Parameters
+    ----------
+    ax : matplotlib.axes.Axes
+        Its limits are as they will be drawn.
+    places : sequence of (float, float)
+        Points in the units of the axes.
+    texts : sequence of str
+    size : float
+        Of the letters, in points.
+    offsets : sequence of sequence of (float, float)
+        For each point where its label may be, in points from it, the best first: its lower left corner where
+        the first number is positive, else its lower right corner.
+    levels : sequence of float
+        Level lines that labels keep clear of.
+    mark : float
+        Half the size of the marks at the points, in points.
+
+    Returns
+    -------
+    list of (float, float)
+        One of the offsets for each point: the first that is free, else the one that lies over the least.
+    """
+    if not len(places):
+        return []
+    frame = ax.get_window_extent()
+    point = ax.figure.dpi / 72.0
+    xy = ax.transData.transform(np.asarray(places, dtype=float)) / point
+    bounds = np.array([frame.x0, frame.y0, frame.x1, frame.y1]) / point
+    taken = [(x - mark, y - mark, x + mark, y + mark) for x, y in xy]
+    for level in levels:
+        y = ax.transData.transform((0.0, level))[1] / point
+        taken.append((bounds[0], y - 1.0, bounds[2], y + 1.0))
+    chosen = []
+    for (x, y), text, choices in zip(xy, texts, offsets, strict=True):
+        width, height = 0.62 * size * len(text), 1.15 * size
+        found = []
+        for number, (dx, dy) in enumerate(choices):
+            left = x + dx if dx > 0 else x + dx - width
+            box = np.array([left, y + dy, left + width, y + dy + height])
+            out = np.maximum(bounds[:2] - box[:2], 0.0).sum() + np.maximum(box[2:] - bounds[2:], 0.0).sum()
+            hidden = sum(_shared(box, other) for other in taken) + out * size
+            found.append((hidden, number, box))
+        _, number, box = min(found, key=lambda f: f[:2])
+        taken.append(tuple(box))
+        chosen.append(choices[number])
+    return chosen
+
+
+def _shared(a, b) -> float:
+    """Area that two boxes share."""
+    return max(min(a[2], b[2]) - max(a[0], b[0]), 0.0) * max(min(a[3], b[3]) - max(a[1], b[1]), 0.0)
 
 
 def _waters(section, slope, discharges, stages) -> list[tuple[str, list[FlowPath]]]:
@@ -239,6 +306,8 @@ def _draw_subareas(ax: Axes, section: Section, floor: float, relief: float) -> N
     # the two cycles have no common length, so that a pair of tone and hatching comes back late
     fresh = zip(cycle(EARTHS), cycle(HATCHES), strict=False)
     width = x[-1] - x[0]
+    # letters do not shrink with the picture
+    crowded = max(1.0, _ROOMY / (ax.get_window_extent().width / ax.figure.dpi))
     narrow = []
     for number, subarea in enumerate(section.subareas):
         key = (subarea.label, str(subarea.n), subarea.zone)
@@ -259,10 +328,10 @@ def _draw_subareas(ax: Axes, section: Section, floor: float, relief: float) -> N
             )
         share = (end - start) / width
         text = _n_text(subarea.n)
-        if share < _NARROW:
+        if share < crowded * _NARROW:
             narrow.append((0.5 * (start + end), text))
             continue
-        wide = share > 0.085
+        wide = share > 0.085 * crowded
         if subarea.label and wide:
             text = f"{_short(subarea.label, share)}\n{text}"
         ax.annotate(
@@ -270,18 +339,18 @@ def _draw_subareas(ax: Axes, section: Section, floor: float, relief: float) -> N
             (0.5 * (start + end), floor + 0.03 * relief),
             ha="center", va="bottom", fontsize=7.5, color=INK, zorder=7, bbox=_PAPER,
         )  # fmt: skip
-    _label_narrow(ax, narrow, floor, relief, x[0], width)
+    _label_narrow(ax, narrow, floor, relief, x[0], width, crowded * _UPRIGHT)
 
 
-def _label_narrow(ax: Axes, narrow, floor: float, relief: float, left: float, width: float) -> None:
+def _label_narrow(ax: Axes, narrow, floor, relief, left: float, width: float, apart: float) -> None:
     """Write the n of narrow subareas upright, moved apart where they would meet, a line to each place."""
     if not narrow:
         return
-    gap = _UPRIGHT * width
+    gap = apart * width
     places = np.array([place for place, _ in narrow])
-    apart = gap * np.arange(places.size)
+    steps = gap * np.arange(places.size)
     # the least moves that keep every two a gap apart: rising values nearest to these
-    moved = isotonic_regression(places - apart).x + apart
+    moved = isotonic_regression(places - steps).x + steps
     moved += min(0.0, left + width - 0.5 * gap - moved[-1])
     moved += max(0.0, left + 0.5 * gap - moved[0])
     for (place, text), at in zip(narrow, moved, strict=True):

@@ -332,13 +332,19 @@ def _water(row: Mapping, profile: np.ndarray, lowest: float) -> list[list[float]
     return sorted(out)
 
 
+def _flows(source: OutputFolder) -> pd.DataFrame:
+    """Return event and discharge of each section and crossing, in the order of the study's events."""
+    tables = [source.layers[name] for name in ("design_stages", "crossings") if name in source.layers]
+    return pd.concat([table[["event", "discharge"]] for table in tables if len(table)])
+
+
 def _tones(source: OutputFolder) -> list[str]:
     """Return the tone of each event: the more discharge, the deeper."""
-    stages = source.layers.get("design_stages")
     events = source.events
     if not events:
         return []
-    typical = {e: g["discharge"].median() for e, g in stages.groupby("event")}
+    flows = _flows(source)
+    typical = {event: flows.loc[flows["event"] == event, "discharge"].median() for event in events}
     order = sorted(events, key=lambda e: (not np.isfinite(typical[e]), typical[e]))
     tones = dict(zip(order, water_tones(len(order)), strict=True))
     return [tones[event] for event in events]
@@ -424,12 +430,13 @@ def _asked(source: OutputFolder) -> list[str]:
     layers = source.layers
     count = len(layers["sections"])
     unit = source.units.symbol("flow")
-    lines = [
-        f"{_count(count, 'cut line')}: sections, ratings and stages by Manning’s equation, normal depth."
-    ]
+    what = "sections, ratings and stages by Manning’s equation, normal depth."
+    lines = [f"{_count(count, 'cut line')}: {what}"]
+    if not count and "crossings" in layers:
+        lines = [f"No cut lines of its own; up- and downstream of each crossing {what}"]
     stages = layers.get("design_stages")
     if source.events:
-        flows = stages.groupby("event", sort=False)["discharge"].agg(["min", "max"])
+        flows = _flows(source).groupby("event", sort=False)["discharge"].agg(["min", "max"])
         texts = []
         for event, low, high in flows.itertuples():
             if not np.isfinite(low):
@@ -466,7 +473,7 @@ def _came_out(source: OutputFolder) -> list[str]:
     layers = source.layers
     stages = layers.get("design_stages")
     lines = []
-    if source.events:
+    if stages is not None and len(stages):
         status = stages.groupby("section_id", sort=False)["status"].agg(set)
         counts = Counter(next(s for s in ("failed", "doubtful", "ok") if s in found) for found in status)
         lines.append(
@@ -482,7 +489,7 @@ def _came_out(source: OutputFolder) -> list[str]:
         ]
         if texts:
             lines.append("Depth above the lowest ground: " + "; ".join(texts) + ".")
-    else:
+    elif len(layers["sections"]) or "crossings" not in layers:
         lines.append(f"{layers['ratings']['section_id'].nunique()} sections with a rating.")
     extent = layers.get("flood_extent")
     if extent is not None and len(extent):

@@ -16,11 +16,14 @@ from multiprocessing import Process
 from pathlib import Path
 
 import numpy as np
+import pytest
 
 sys.path.insert(0, str(Path(__file__).parents[1]))
 
 from _county import CRS, WIDE, N, make_valleys, roads, streams, write_dem
 
+from terrain2q.batches.crossings import SectionRows, rows_in_batches, screen_in_batches
+from terrain2q.batches.work import cores
 from terrain2q.flows import Flow
 from terrain2q.ground.cover import UniformCover
 from terrain2q.ground.roads import RoadNetwork, crossings_from_roads
@@ -109,10 +112,17 @@ def main(count: int, folder: Path) -> None:
     seconds = time.perf_counter() - began
     most = peak_memory()
     began = time.perf_counter()
-    kept = write_crossing_sections(folder, answers, SI, CRS, CRS)
+    rows = rows_in_batches(answers, SectionRows(SI, CRS, CRS, 30, None), 1, None)
+    kept = write_crossing_sections(folder, answers, SI, CRS, CRS, rows)
     print(
         f"sections and steps of all written in {time.perf_counter() - began:.1f} s: "
         f"{kept.stat().st_size / 1e6:.0f} MB; memory then {peak_memory():.0f} MB"
+    )
+    began = time.perf_counter()
+    together = screen_in_batches(inputs, cores(), None, lambda *_: None)
+    several = time.perf_counter() - began
+    assert [a.crest_discharge for a in together] == pytest.approx(
+        [a.crest_discharge for a in answers], rel=0, abs=0, nan_ok=True
     )
     failed = [a.crossing.crossing_id for a in answers if a.status == "failed"]
     off = np.array([
@@ -123,6 +133,7 @@ def main(count: int, folder: Path) -> None:
         a.crest - every[int(a.crossing.stream[1:])].crest_height for a in answers if a.status != "failed"
     ])  # fmt: skip
     print(f"{len(answers)} crossings at 3 events in {seconds:.1f} s: {len(answers) / seconds:.1f} a second")
+    print(f"by {cores()} processes, as a run does it, {len(answers) / several:.1f} a second")
     print(f"reading the DEM took {100 * clock.seconds / seconds:.0f} % of the time")
     print(f"memory of the screening {most:.0f} MB, of which {few:.0f} MB before the first crossing")
     print(f"failed: {', '.join(failed) or 'none'}")
