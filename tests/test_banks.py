@@ -174,6 +174,29 @@ def test_noise_and_micro_pits_move_a_top_by_little(seed):
         assert abs(right - 84) <= 2
 
 
+@pytest.mark.parametrize("half_bed", [0.0, 6.0])
+@pytest.mark.parametrize("side", [2.5, 4.0, 8.0])
+@pytest.mark.parametrize("noise", [0.045, 0.1])
+def test_noise_makes_no_banks_where_there_is_no_shelf(half_bed, side, noise):
+    # closed form: sides that rise evenly to the ends have no top but the ends
+    half = half_bed + 5.0 * side
+    x = np.arange(0.0, 2.0 * half)
+    for seed in range(20):
+        random = np.random.default_rng(seed)
+        z = np.maximum(np.abs(x - half + random.uniform(0, 1)) - half_bed, 0.0) / side
+        z += random.normal(0.0, noise, x.size)
+        assert tops(x, z) == tops(x, z, half) == (x[0], x[-1])
+
+
+@pytest.mark.parametrize(("depth", "noise"), [(0.5, 0.045), (1.0, 0.1)])
+def test_a_low_bank_is_told_from_noise(depth, noise):
+    x = np.arange(0.0, 151.0)
+    shape = [0, 60, 60 + 2 * depth, 74, 74 + 2 * depth, 150], [depth + 1, depth, 0, 0, depth, depth + 1]
+    for seed in range(20):
+        z = np.interp(x, *shape) + np.random.default_rng(seed).normal(0.0, noise, x.size)
+        assert tops(x, z, 68.0) == pytest.approx((60.0, 74.0 + 2 * depth), abs=3.0)
+
+
 # --- laws ---------------------------------------------------------------------------------------------
 
 

@@ -9,9 +9,11 @@ import geopandas
 import numpy as np
 import pandas
 import pytest
+import rasterio
 import shapely
 import shapely.affinity
 from _county import CRS, HALF_TOP, LONG, NORTH, ROAD_AT, WEST, N, make_valleys, roads, streams, write_dem
+from affine import Affine
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from shapely.geometry import LineString, Point
@@ -441,6 +443,35 @@ def test_a_short_fill_between_steep_hillsides_has_its_crest(tmp_path):
         middle[v.number] = v.along_and_across(v.centre + x, NORTH - ROAD_AT + y)[1]
     assert max(map(abs, off.values())) < 0.05, off
     assert max(map(abs, middle.values())) < 1.0, middle
+
+
+@pytest.mark.parametrize("slant", [0.0, -40.0])
+@pytest.mark.parametrize("side", [1.2, 2.5])
+def test_a_wide_opening_in_a_low_fill_is_bridged(slant, side, tmp_path):
+    """The ground goes down over 20 m no more steeply than a road may, from abutments 0.8 m high."""
+    angle = np.radians(slant)
+
+    def ground(x, y):
+        bank = np.minimum(np.maximum(np.abs(x) - 4.4, 0.0) / side, 1.3)
+        natural = 200.0 + bank + np.maximum(np.abs(x) - 45.0, 0.0) / 3.0
+        s, t = -x * np.cos(angle) - y * np.sin(angle), y * np.cos(angle) - x * np.sin(angle)
+        fill = 202.1 - np.maximum(np.abs(t) - 5.6, 0.0) / 2.0
+        return np.maximum(natural, np.minimum(fill, natural + 3.0 * np.maximum(np.abs(s) - 9.5, 0.0)))
+
+    at = np.arange(240) + 0.5 - 120.0
+    z = ground(at[None, :], -at[:, None]) + np.random.default_rng(6).normal(0.0, 0.1, (240, 240))
+    with rasterio.open(
+        tmp_path / "dem.tif", "w", driver="GTiff", height=240, width=240, count=1, dtype="float32", crs=CRS,
+        transform=Affine(1.0, 0.0, WEST - 120.0, 0.0, -1.0, NORTH + 120.0),
+    ) as target:  # fmt: skip
+        target.write(z.astype(np.float32), 1)
+        target.units = ["m"]
+    local = LocalGround(Terrain(tmp_path / "dem.tif"), WEST, NORTH, 110.0)
+    way = np.array([-np.cos(angle), -np.sin(angle)])
+    line = LineString([way * -100.0, way * 100.0])
+    surface = find_road_surface(local, line, 100.0, np.array([0.0, -1.0]), reach=90.0, width=6.0, search=12.0)
+    assert surface.deck == pytest.approx((-11.0, 11.0), abs=3.0)
+    assert find_crest(surface, local, 60.0).height == pytest.approx(202.1, abs=0.05)
 
 
 def test_a_line_drawn_aside_gives_the_same_crest(county):

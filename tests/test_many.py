@@ -112,10 +112,21 @@ def test_what_is_not_plain_is_left_to_the_section():
     assert solve(varying, SLOPE, STEPS, None, [1.0]) is None
 
 
+def noisy_valleys(random, count):
+    """Yield evenly sampled valleys with noise: a V, a trapezoid, or a channel in a flood plain."""
+    for k in range(count):
+        x = np.arange(0.0, random.uniform(12.0, 120.0), 1.0)
+        u = np.abs(x - random.uniform(0.3, 0.7) * x[-1])
+        z = np.maximum(u - [0.0, 4.0, 4.0][k % 3], 0.0) / random.uniform(1.5, 8.0)
+        if k % 3 == 2:
+            z = np.minimum(z, 1.0) + 0.01 * u
+        yield x, z + random.normal(0.0, random.choice([0.02, 0.1, 0.3]), x.size)
+
+
 def test_banks_are_those_of_the_arrays():
     random = np.random.default_rng(3)
     found = 0
-    for x, z in valleys(random, 250):
+    for x, z in [*valleys(random, 250), *noisy_valleys(random, 120)]:
         if x[0] == x[-1]:
             continue
         for origin in (None, float(random.uniform(x[0], x[-1])), float(random.choice(x))):

@@ -25,15 +25,22 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 import shapely
-from scipy.ndimage import uniform_filter1d
+from scipy.ndimage import grey_closing, uniform_filter1d
 
 from terrain2q.ground.local_ground import LocalGround
 
 STEEPEST = 0.2
 """Grade above which the sides of a dip are no road (common practice: public roads stay below 12 to 15 %)."""
 
+SHARPEST_SAG = 100.0
+"""Least radius, metres, of a road's sag (common practice: public roads have some hundreds of metres)."""
+
 FACE = 0.3
-"""Least slope of an abutment's face over three metres, across the whole road (built at 1:2 or steeper)."""
+"""Least slope of an abutment's face over three metres, or over less where it is low, across the whole road
+(built at 1:2 or steeper)."""
+
+SETS_BACK = 6.0
+"""Metres from the edge of a dip within which the dip's slanting or rounded edge may lower the road."""
 
 NO_ROAD = 2.5
 """Cost from which on a place does not look like a road at all; one that leans by a tenth costs 4."""
@@ -507,7 +514,9 @@ def _dips(stations: np.ndarray, mean: np.ndarray, road_there: np.ndarray):
     )
     # water without data at the stream is under the deck too
     below = np.where(known, road - np.where(known, mean, 0.0), np.inf)
-    dips = _runs(below > max(DIP, 4.0 * noise))
+    # a wide dip may be no steeper than a road, but it bends as none does
+    deep = np.maximum(below, np.where(known, _sagging(stations, z) - np.where(known, mean, 0.0), np.inf))
+    dips = _runs(deep > max(DIP, 4.0 * noise))
     quiet = max(0.05, 2.0 * noise)
 
     def between(first: int, last: int) -> tuple[float, float] | None:
@@ -519,6 +528,7 @@ def _dips(stations: np.ndarray, mean: np.ndarray, road_there: np.ndarray):
             last += 1
         # one station more on each side: an abutment's edge is rounded off in a raster
         first, last = max(first - 1, 0), min(last + 1, z.size - 1)
+        first, last = (_set_back(stations, mean, k, way, noise) for k, way in ((first, -1), (last, 1)))
         if first == 0 or last == z.size - 1 or stations[last] - stations[first] > LONGEST_DECK:
             return None
         return float(stations[first]), float(stations[last])
@@ -543,14 +553,52 @@ def _dips(stations: np.ndarray, mean: np.ndarray, road_there: np.ndarray):
 def _face(stations: np.ndarray, mean: np.ndarray, edge: int, outward: int) -> float:
     """Rise, m, of a face that goes up outward at the edge of a dip, if it is steep as an abutment; else 0."""
     step = stations[1] - stations[0]
-    span = max(2, _cells(3.0, step))
-    around = np.clip(edge + outward * np.arange(-2 * span, span + 1), 0, mean.size - 1)
-    rise = mean[around[span:]] - mean[around[:-span]]
-    rise = rise[np.isfinite(rise)]
+    longest = max(2, _cells(3.0, step))
+    around = np.clip(edge + outward * np.arange(-2 * longest, longest + 1), 0, mean.size - 1)
+    best, known = 0.0, False
+    for span in range(1, longest + 1):
+        rise = mean[around[span:]] - mean[around[:-span]]
+        rise = rise[np.isfinite(rise)]
+        known |= bool(rise.size)
+        if rise.size and rise.max() > FACE * span * step:
+            best = max(best, float(rise.max()))
     # water without data below the face leaves nothing to measure
-    if not rise.size:
-        return np.inf
-    return float(rise.max()) if rise.max() > FACE * span * step else 0.0
+    return best if known else np.inf
+
+
+def _sagging(stations: np.ndarray, ground: np.ndarray) -> np.ndarray:
+    """Return the lowest line over the ground that nowhere sags more sharply than a road does."""
+    known = np.isfinite(ground)
+    step = stations[1] - stations[0]
+    reach = _cells(0.5 * LONGEST_DECK, step)
+    arc = -((np.arange(-reach, reach + 1) * step) ** 2) / (2.0 * SHARPEST_SAG)
+    return grey_closing(np.where(known, ground, ground[known].min()), structure=arc, mode="nearest")
+
+
+def _set_back(stations: np.ndarray, mean: np.ndarray, edge: int, outward: int, noise: float) -> int:
+    """Return the edge of a dip, moved outward to where the ground is as high as the road beyond lets expect.
+
+    Where a stream passes at a slant, the ground's mean across the road goes down little by little.
+    """
+    step = stations[1] - stations[0]
+    near, far = _cells(SETS_BACK, step), _cells(SETS_BACK + 15.0, step)
+    beyond = np.clip(edge + outward * np.arange(near, far + 1), 0, mean.size - 1)
+    beyond = beyond[np.isfinite(mean[beyond])]
+    if beyond.size < 3 or np.ptp(beyond) * step < 5.0:
+        return edge
+    line = np.polyfit(stations[beyond], mean[beyond], 1)
+    off = np.std(mean[beyond] - np.polyval(line, stations[beyond]))
+    if abs(line[0]) > STEEPEST or off > 2.0 * noise + 0.02:
+        return edge
+    moved = edge
+    for _ in range(near):
+        if not 0 < moved < mean.size - 1:
+            break
+        short = np.polyval(line, stations[moved]) - mean[moved]
+        if not short > max(0.03, 2.0 * noise):
+            break
+        moved += outward
+    return moved
 
 
 def _runs(flags: np.ndarray) -> list[tuple[int, int]]:

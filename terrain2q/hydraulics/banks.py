@@ -25,6 +25,12 @@ _ASTRAY = 4.0
 """What each channel's width between the origin and a channel's low point costs."""
 _DEEPER = 3.0
 """A channel beside the origin counts only where it is this much deeper than any that holds the origin."""
+_LEAST_EVEN, _EVEN, _MOSTLY = 15, 0.2, 0.75
+"""Noise is told in so many points at least, of whose steps this last share are near (a share) the median."""
+_TOGETHER = 5
+"""Points whose mean is looked at where noise is told."""
+_STANDS_OUT, _LITTLE = 3.5, 0.15
+"""A shelf stands out of a hollow by more than so many times the noise, or by this share of the depth."""
 _SAME = 1e-9
 """Differences of this share are rounding."""
 _MOST_TOPS, _MOST_PITS = 80, 6
@@ -105,6 +111,13 @@ def find_banks(stations: ArrayLike, elevations: ArrayLike, origin: float | None 
        is the channel, with :math:`e` = 1 for a top that is the section's end, else 0. Of equal pairs
        the outermost tops count.
 
+    *No bank at all.* The sides of a V or of a trapezoid rise evenly, or ever more steeply, from the bed to
+    the ends of the section, which are its only tops. In noise each point that sticks out of such a side
+    looks like the top of a bank. So this is asked first where a profile shows its noise, as evenly spaced
+    points do: :math:`\sigma` is 1.4826 times the median of their absolute second differences, over
+    :math:`\sqrt 6`. Where the means of five points lie nowhere higher above the largest convex line below
+    them than :math:`3.5\,\sigma`, or 0.15 of the depth if that is less, the section's ends are the tops.
+
     The first term is Wolman's (1955) least ratio of width to depth, with one more power of depth: a V,
     whose ratio is the same at every stage, is filled to the highest. The tops need not be level.
 
@@ -153,6 +166,8 @@ def find_banks(stations: ArrayLike, elevations: ArrayLike, origin: float | None 
     ground = _Ground(x - middle, z - z.min())
     if z.max() - z.min() <= _SAME * np.abs(z).max():
         raise _no_channel(f"the ground is flat at elevation {z[0]:g}")
+    if is_hollow(x, z):
+        return Banks(float(x[0]), float(x[-1]), float(min(z[0], z[-1])))
     if origin is None:
         pits = _lowest(ground.z)
     else:
@@ -169,6 +184,42 @@ def find_banks(stations: ArrayLike, elevations: ArrayLike, origin: float | None 
     # Channels that are equally good (two alike, side by side) are one: no side is preferred.
     left, right = min(left for left, _ in answers), max(right for _, right in answers)
     return Banks(float(x[left]), float(x[right]), float(min(z[left], z[right])))
+
+
+def noise_of(x: Floats, z: Floats) -> float:
+    """Return the standard deviation of the noise in a profile; 0 where it cannot be told.
+
+    Of points spaced evenly, as ground is sampled from a raster, few are corners of the ground's shape.
+    Surveyed points are put on the corners, and say nothing about noise.
+    """
+    run = np.diff(x)
+    step = np.median(run)
+    if x.size < _LEAST_EVEN or np.count_nonzero(np.abs(run - step) <= _EVEN * step) < _MOSTLY * run.size:
+        return 0.0
+    return float(1.4826 * np.median(np.abs(z[2:] - 2.0 * z[1:-1] + z[:-2])) / np.sqrt(6.0))
+
+
+def is_hollow(x: Floats, z: Floats) -> bool:
+    """Whether a profile is one hollow without a shelf: convex from end to end, but for its noise."""
+    noise = noise_of(x, z)
+    if noise <= _SAME * np.ptp(z):
+        return False
+    share = np.full(_TOGETHER, 1 / _TOGETHER)
+    x, z = (np.convolve(values - values[0], share, mode="valid") for values in (x, z))
+    depth = min(z[0], z[-1]) - z.min()
+    if depth <= _STANDS_OUT * noise:
+        return False
+    most = min(_STANDS_OUT * noise, _LITTLE * depth)
+    # the largest convex line below the points: its corners
+    corners = [0]
+    for k in range(1, x.size):
+        while len(corners) > 1:
+            i, j = corners[-2:]
+            if (z[j] - z[i]) * (x[k] - x[j]) < (z[k] - z[j]) * (x[j] - x[i]):
+                break
+            corners.pop()
+        corners.append(k)
+    return bool((z - np.interp(x, x[corners], z[corners])).max() <= most)
 
 
 def _about(ground: _Ground, origin: float, found: list) -> list:

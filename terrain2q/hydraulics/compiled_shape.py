@@ -18,6 +18,8 @@ _KNEE, _STEEP, _CLIMB, _LOW, _HIGH, _END = (
     banks._KNEE, banks._STEEP, banks._CLIMB, banks._LOW, banks._HIGH, banks._END,
 )  # fmt: skip
 _ASTRAY, _DEEPER, _SAME = banks._ASTRAY, banks._DEEPER, banks._SAME
+_LEAST_EVEN, _EVEN, _MOSTLY, _TOGETHER = banks._LEAST_EVEN, banks._EVEN, banks._MOSTLY, banks._TOGETHER
+_STANDS_OUT, _LITTLE = banks._STANDS_OUT, banks._LITTLE
 _MOST_TOPS, _MOST_PITS = banks._MOST_TOPS, banks._MOST_PITS
 _LEAST_POINTS, _LEVEL, _MOST_LEVEL, _BANK = (
     submerged.LEAST_POINTS, submerged.LEVEL, submerged.MOST_LEVEL, submerged.BANK,
@@ -319,6 +321,52 @@ def _beside(x, z, origin):
 
 
 @njit(cache=True, error_model="numpy")
+def _is_hollow(x, z):
+    """Whether a profile is convex from end to end but for its noise; see `is_hollow`."""
+    n = x.size
+    if n < _LEAST_EVEN:
+        return False
+    run = x[1:] - x[:-1]
+    step = np.median(run)
+    even = 0
+    for i in range(n - 1):
+        if abs(run[i] - step) <= _EVEN * step:
+            even += 1
+    if even < _MOSTLY * (n - 1):
+        return False
+    noise = 1.4826 * np.median(np.abs(z[2:] - 2.0 * z[1:-1] + z[:-2])) / np.sqrt(6.0)
+    if noise <= _SAME * (z.max() - z.min()):
+        return False
+    count = n - _TOGETHER + 1
+    at, mean = np.zeros(count), np.zeros(count)
+    for i in range(count):
+        for k in range(i, i + _TOGETHER):
+            at[i] += (x[k] - x[0]) / _TOGETHER
+            mean[i] += (z[k] - z[0]) / _TOGETHER
+    depth = min(mean[0], mean[-1]) - mean.min()
+    if depth <= _STANDS_OUT * noise:
+        return False
+    most = min(_STANDS_OUT * noise, _LITTLE * depth)
+    corners = np.zeros(count, dtype=np.int64)
+    last = 0
+    for k in range(1, count):
+        while last > 0:
+            i, j = corners[last - 1], corners[last]
+            if (mean[j] - mean[i]) * (at[k] - at[j]) < (mean[k] - mean[j]) * (at[j] - at[i]):
+                break
+            last -= 1
+        last += 1
+        corners[last] = k
+    for c in range(last):
+        i, j = corners[c], corners[c + 1]
+        slope = (mean[j] - mean[i]) / (at[j] - at[i])
+        for k in range(i + 1, j):
+            if mean[k] - (mean[i] + slope * (at[k] - at[i])) > most:
+                return False
+    return True
+
+
+@njit(cache=True, error_model="numpy")
 def tops_of_bank(x, z, origin):
     """Return the points of the two tops of bank as stations and heights, and whether there are any.
 
@@ -340,6 +388,8 @@ def tops_of_bank(x, z, origin):
     station, height = x[keep], z[keep]
     if height.max() - height.min() <= _SAME * np.abs(height).max():
         return False, 0.0, 0.0, 0.0
+    if _is_hollow(station, height):
+        return True, station[0], station[-1], min(height[0], height[-1])
     middle = station[0] + (station[-1] - station[0]) / 2
     x, z = station - middle, height - height.min()
     n = x.size
