@@ -595,7 +595,7 @@ def _set_back(stations: np.ndarray, mean: np.ndarray, edge: int, outward: int, n
         if not 0 < moved < mean.size - 1:
             break
         short = np.polyval(line, stations[moved]) - mean[moved]
-        if not short > max(0.03, 2.0 * noise):
+        if not short > max(0.05, 2.0 * noise):
             break
         moved += outward
     return moved
