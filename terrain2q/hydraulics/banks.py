@@ -27,6 +27,8 @@ _DEEPER = 3.0
 """A channel beside the origin counts only where it is this much deeper than any that holds the origin."""
 _LEAST_EVEN, _EVEN, _MOSTLY = 15, 0.2, 0.75
 """Noise is told in so many points at least, of whose steps this last share are near (a share) the median."""
+_LAGS = (1, 3)
+"""Points apart between which noise is told: interpolated from a raster, it is alike from one to the next."""
 _TOGETHER = 5
 """Points whose mean is looked at where noise is told."""
 _STANDS_OUT, _LITTLE = 3.5, 0.15
@@ -115,8 +117,9 @@ def find_banks(stations: ArrayLike, elevations: ArrayLike, origin: float | None 
     the ends of the section, which are its only tops. In noise each point that sticks out of such a side
     looks like the top of a bank. So this is asked first where a profile shows its noise, as evenly spaced
     points do: :math:`\sigma` is 1.4826 times the median of their absolute second differences, over
-    :math:`\sqrt 6`. Where the means of five points lie nowhere higher above the largest convex line below
-    them than :math:`3.5\,\sigma`, or 0.15 of the depth if that is less, the section's ends are the tops.
+    :math:`\sqrt 6`, from one point to the next or to the third, whichever is more. Where the means of five
+    points lie nowhere higher above the largest convex line below them than :math:`3.5\,\sigma`, or 0.15 of
+    the depth if that is less, the section's ends are the tops.
 
     The first term is Wolman's (1955) least ratio of width to depth, with one more power of depth: a V,
     whose ratio is the same at every stage, is filled to the highest. The tops need not be level.
@@ -196,7 +199,8 @@ def noise_of(x: Floats, z: Floats) -> float:
     step = np.median(run)
     if x.size < _LEAST_EVEN or np.count_nonzero(np.abs(run - step) <= _EVEN * step) < _MOSTLY * run.size:
         return 0.0
-    return float(1.4826 * np.median(np.abs(z[2:] - 2.0 * z[1:-1] + z[:-2])) / np.sqrt(6.0))
+    bends = (z[2 * lag :] - 2.0 * z[lag:-lag] + z[: -2 * lag] for lag in _LAGS)
+    return float(1.4826 / np.sqrt(6.0) * max(np.median(np.abs(bend)) for bend in bends))
 
 
 def is_hollow(x: Floats, z: Floats) -> bool:

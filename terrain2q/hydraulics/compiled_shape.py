@@ -19,6 +19,7 @@ _KNEE, _STEEP, _CLIMB, _LOW, _HIGH, _END = (
 )  # fmt: skip
 _ASTRAY, _DEEPER, _SAME = banks._ASTRAY, banks._DEEPER, banks._SAME
 _LEAST_EVEN, _EVEN, _MOSTLY, _TOGETHER = banks._LEAST_EVEN, banks._EVEN, banks._MOSTLY, banks._TOGETHER
+_LAGS = banks._LAGS
 _STANDS_OUT, _LITTLE = banks._STANDS_OUT, banks._LITTLE
 _MOST_TOPS, _MOST_PITS = banks._MOST_TOPS, banks._MOST_PITS
 _LEAST_POINTS, _LEVEL, _MOST_LEVEL, _BANK = (
@@ -334,7 +335,10 @@ def _is_hollow(x, z):
             even += 1
     if even < _MOSTLY * (n - 1):
         return False
-    noise = 1.4826 * np.median(np.abs(z[2:] - 2.0 * z[1:-1] + z[:-2])) / np.sqrt(6.0)
+    bend = 0.0
+    for lag in _LAGS:
+        bend = max(bend, np.median(np.abs(z[2 * lag :] - 2.0 * z[lag:-lag] + z[: -2 * lag])))
+    noise = 1.4826 / np.sqrt(6.0) * bend
     if noise <= _SAME * (z.max() - z.min()):
         return False
     count = n - _TOGETHER + 1
