@@ -478,6 +478,14 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "There is no discharge to find a stage for. The section keeps its row with empty numbers.",
             "Flows given for `Mill Creek` and a section on `Mill Creek tributary`.",
         ),
+        "flow-place-unknown": (
+            "Rows of the flows are for a section, stream or crossing whose id no cut line, stream or crossing"
+            " has. They are not used.",
+            "The place that was meant gets a discharge of a more general row, or none; its stage is then"
+            " that of another flow.",
+            "A row for section `12` where the cut lines are `A-12`; a table for the whole county and a study of"
+            " one stream of it.",
+        ),
         "drainage-area-missing": (
             "The field with the drainage area is empty for this cut line, or holds no number above zero.",
             "A discharge is then taken as it is given, and a depth below water by drainage area cannot be"

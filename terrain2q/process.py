@@ -26,7 +26,7 @@ from terrain2q.batches.run import answer_lines, in_order
 from terrain2q.batches.work import BATCH, LAYER_NAMES, Part, Work, cores, is_failed, plan_batches
 from terrain2q.columns import CAUTION
 from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError, worst_first
-from terrain2q.flows import Flow, event_names, read_flows
+from terrain2q.flows import Flow, event_names, flows_of_nowhere, read_flows
 from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
 from terrain2q.ground.layers import read_layer, require_field, split_spec
@@ -405,6 +405,14 @@ def _read_inputs(study: Study) -> _Inputs:
     return _Inputs(lines, sections, out_crs, findings, streams)
 
 
+def _flow_findings(study: Study, inputs: _Inputs, flows: Sequence[Flow]) -> list[Finding]:
+    """Return what is to know about the places that the flows name; those of crossings are told with them."""
+    # the flows of a study of crossings alone may name the sections of another study, and the other way
+    sections = None if study.cut_lines is None else [line.section_id for line in inputs.lines]
+    streams = [] if inputs.streams is None else inputs.streams["feature_id"].unique().tolist()
+    return flows_of_nowhere(flows, sections, streams)
+
+
 def _cut_line_fields(study: Study) -> list[tuple[str, str]]:
     """Return key and name of every field that the cut lines must have."""
     named = [
@@ -582,7 +590,7 @@ def _screen(
     return screen_study(study, inputs.sections, inputs.streams, flows, progress, who.jobs, who.scheduler)
 
 
-def _check_crossings(study: Study, inputs: _Inputs) -> list[Finding]:
+def _check_crossings(study: Study, inputs: _Inputs, flows: Sequence[Flow]) -> list[Finding]:
     """Return what is to know about the places of crossings, before any of them is screened."""
     if study.crossings is None:
         return []
@@ -592,6 +600,7 @@ def _check_crossings(study: Study, inputs: _Inputs) -> list[Finding]:
     points, roads = crossing_layers(study, crs)
     network = StreamNetwork(inputs.streams, crs, study.system)
     crossings, findings = find_crossings(study, points, roads, network)
+    findings = [*findings, *flows_of_nowhere(flows, crossings=[c.crossing_id for c in crossings])]
     return [*findings, *(f for c in crossings for f in c.findings)]
 
 
@@ -648,10 +657,13 @@ def check_study(study: Study, progress: Progress | None = None) -> list[Finding]
     InputError
         An input is wrong.
     """
-    _extent_events(study, read_flows(study))
+    flows = read_flows(study)
+    _extent_events(study, flows)
     inputs = _read_inputs(study)
+    inputs.findings.extend(_flow_findings(study, inputs, flows))
     built = build_sections(inputs.lines, inputs.sections, progress or _silent)
-    return _all_findings(inputs, [f for b in built for f in b.findings], _check_crossings(study, inputs))
+    about_crossings = _check_crossings(study, inputs, flows)
+    return _all_findings(inputs, [f for b in built for f in b.findings], about_crossings)
 
 
 def run_study(
@@ -691,6 +703,7 @@ def run_study(
     who = _Workers(jobs, scheduler)
     with closing(_crew(study, jobs, scheduler)) as crew, hashed_ahead(_files_of(study)):
         inputs = _read_inputs(study)
+        inputs.findings.extend(_flow_findings(study, inputs, flows))
         # the flood extent and the benches need the answers themselves, the layers only their rows
         work, batches, kept = _begin(study, inputs, flows, not (events or widths), progress)
         parts = answer_lines(work, inputs.lines, batches, kept, jobs, scheduler, progress, crew)

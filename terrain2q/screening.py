@@ -10,7 +10,7 @@ from pathlib import Path
 import geopandas
 
 from terrain2q.errors import Finding, InputError
-from terrain2q.flows import Flow
+from terrain2q.flows import Flow, flows_of_nowhere
 from terrain2q.ground.layers import columns_of, read_layer
 from terrain2q.ground.roads import Crossing, RoadNetwork, crossings_from_points, crossings_from_roads
 from terrain2q.ground.streams import StreamNetwork
@@ -181,6 +181,7 @@ def screen_study(
 
     inputs, findings = crossing_inputs(study, sections, streams, flows)
     answers = tuple(screen_in_batches(inputs, jobs, scheduler, progress))
+    findings += flows_of_nowhere(flows, crossings=[c.crossing_id for c in inputs.crossings])
     findings = [*findings, *(f for a in answers for f in a.findings)]
     return Screened(inputs, answers, tuple(findings))
 
