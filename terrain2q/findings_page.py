@@ -483,8 +483,8 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             " has. They are not used.",
             "The place that was meant gets a discharge of a more general row, or none; its stage is then"
             " that of another flow.",
-            "A row for section `12` where the cut lines are `A-12`; a table for the whole county and a study of"
-            " one stream of it.",
+            "A row for section `12` where the cut lines are `A-12`; a table of a county and a study of one of"
+            " its streams.",
         ),
         "drainage-area-missing": (
             "The field with the drainage area is empty for this cut line, or holds no number above zero.",

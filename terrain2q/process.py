@@ -7,7 +7,7 @@ import os
 import time
 from collections import Counter
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from contextlib import closing, suppress
+from contextlib import ExitStack, closing, suppress
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, NamedTuple
@@ -52,6 +52,7 @@ from terrain2q.output.run_record import (
     run_record,
     write_run_record,
 )
+from terrain2q.output.whole_file import whole_folder
 from terrain2q.study import Study, load_study
 from terrain2q.units import UnitSystem
 
@@ -701,46 +702,52 @@ def run_study(
     events = _extent_events(study, flows)
     jobs = jobs or cores()
     who = _Workers(jobs, scheduler)
-    with closing(_crew(study, jobs, scheduler)) as crew, hashed_ahead(_files_of(study)):
+    earlier = files_of_record(folder)
+    with ExitStack() as helpers:
+        crew = helpers.enter_context(closing(_crew(study, jobs, scheduler)))
+        helpers.enter_context(hashed_ahead(_files_of(study)))
         inputs = _read_inputs(study)
         inputs.findings.extend(_flow_findings(study, inputs, flows))
         # the flood extent and the benches need the answers themselves, the layers only their rows
         work, batches, kept = _begin(study, inputs, flows, not (events or widths), progress)
         parts = answer_lines(work, inputs.lines, batches, kept, jobs, scheduler, progress, crew)
         try:
-            if work.as_layers:
-                made = _finish_rows(study, inputs, flows, parts, progress, who)
-            else:
-                made = _finish_answers(study, inputs, flows, events, widths, parts, progress, who)
+            # results and pages come into the folder together: one without the other would be half a run
+            with whole_folder(folder, first=[RESULT_NAME], last=[RECORD_NAME]) as place:
+                if work.as_layers:
+                    made = _finish_rows(study, inputs, flows, parts, progress, who, place)
+                else:
+                    made = _finish_answers(study, inputs, flows, events, widths, parts, progress, who, place)
+                helpers.close()
+                record = run_record(
+                    inputs=study.inputs(),
+                    settings=study.as_dict(),
+                    units=study.system.name,
+                    crs=inputs.crs.to_string(),
+                    counts=made.counts,
+                    findings=made.findings,
+                    seconds=time.perf_counter() - began,
+                    outputs=made.files,
+                    earlier=earlier,
+                )
+                for entry in record["outputs"]:
+                    entry["path"] = str(folder / Path(entry["path"]).name)
+                write_run_record(place / RECORD_NAME, record)
+                pages = write_pages(place, study.as_dict()["output"])
         except InputError:
             if kept is not None:
                 kept.remove(all_new=True)
             raise
     if kept is not None:
         kept.remove()
-    record = folder / RECORD_NAME
-    write_run_record(
-        record,
-        run_record(
-            inputs=study.inputs(),
-            settings=study.as_dict(),
-            units=study.system.name,
-            crs=inputs.crs.to_string(),
-            counts=made.counts,
-            findings=made.findings,
-            seconds=time.perf_counter() - began,
-            outputs=made.files,
-            earlier=made.earlier,
-        ),
-    )
-    pages = write_pages(folder, study.as_dict()["output"])
-    files = (*made.files, record, *pages)
+    pages = [folder / path.name for path in pages]
+    files = (*(folder / path.name for path in made.files), folder / RECORD_NAME, *pages)
     # only now that all is there: what a run before wrote and this one did not would be taken for its own
-    left = remove_earlier(folder, made.earlier, files)
+    left = remove_earlier(folder, earlier, files)
     note_pages(folder, pages, alone=True)
     progress(1, 1, "writing")
     return Results(
-        made.layers,
+        StoredLayers(folder / RESULT_NAME, made.counts) if made.layers is None else made.layers,
         tuple(made.findings),
         study.system,
         inputs.crs,
@@ -762,14 +769,16 @@ class _Workers(NamedTuple):
 
 @dataclass(frozen=True)
 class _Made:
-    """What a run has written before its record, and what the record and the results tell of it."""
+    """What a run has written before its record, and what the record and the results tell of it.
 
-    layers: Mapping[str, pd.DataFrame]
+    Without `layers` these are to be read from the file.
+    """
+
+    layers: Mapping[str, pd.DataFrame] | None
     counts: Mapping[str, int]
     findings: list[Finding]
     failed: frozenset[str]
     files: tuple[Path, ...]
-    earlier: Sequence
 
 
 def _package(study: Study, inputs: _Inputs) -> dict:
@@ -784,13 +793,17 @@ def _package(study: Study, inputs: _Inputs) -> dict:
 
 
 def _finish_rows(
-    study: Study, inputs: _Inputs, flows, parts: Iterable[Part], progress: Progress, who: _Workers
+    study: Study,
+    inputs: _Inputs,
+    flows,
+    parts: Iterable[Part],
+    progress: Progress,
+    who: _Workers,
+    folder: Path,
 ) -> _Made:
-    """Write the rows of many sections as they come, with what there is beside them."""
-    folder = Path(study.output.folder)
+    """Write the rows of many sections as they come, with what there is beside them, into a folder."""
     package = folder / RESULT_NAME
     terrain_crs = inputs.sections.terrain.crs
-    earlier = files_of_record(folder)
     names = [*LAYER_NAMES, *(["crossings"] if study.crossings is not None else []), "findings"]
     with GeoPackageWriter(package, names, **_package(study, inputs)) as writer:
         about_sections, failed = _write_rows(writer, parts, inputs)
@@ -812,8 +825,7 @@ def _finish_rows(
         from terrain2q.screening import write_crossings
 
         about_crossings = write_crossings(screened, crossings, study, folder, *who)
-    layers = StoredLayers(package, writer.counts)
-    return _Made(layers, writer.counts, findings, failed, (package, *about_crossings), earlier)
+    return _Made(None, writer.counts, findings, failed, (package, *about_crossings))
 
 
 def _finish_answers(
@@ -825,19 +837,17 @@ def _finish_answers(
     parts: Iterable[Part],
     progress: Progress,
     who: _Workers,
+    folder: Path,
 ) -> _Made:
-    """Write what comes of the answers of all sections together."""
+    """Write what comes of the answers of all sections together into a folder."""
     from terrain2q.output.benches import PICTURES_NAME, required_widths_layer, write_benches
     from terrain2q.output.crossing_table import crossings_layer
     from terrain2q.output.rasters import flood_rasters
     from terrain2q.screening import write_crossings
 
-    folder = Path(study.output.folder)
     about_sections, answers, failed = in_order(list(parts))
     screened = _screen(study, inputs, flows, progress, who)
     terrain_crs = inputs.sections.terrain.crs
-    folder.mkdir(parents=True, exist_ok=True)
-    earlier = files_of_record(folder)
     package = folder / RESULT_NAME
     with closing(_map_floods(study, events, flows, inputs, answers, progress)) as floods:
         if floods.answers:
@@ -865,7 +875,7 @@ def _finish_answers(
     pictures = [] if not sized else write_benches(folder / PICTURES_NAME, sized, study.system)
     files = (package, *rasters, *about_crossings, *pictures)
     counts = {name: len(table) for name, table in layers.items()}
-    return _Made(layers, counts, findings, failed, files, earlier)
+    return _Made(layers, counts, findings, failed, files)
 
 
 def run(

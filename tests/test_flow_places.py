@@ -19,7 +19,9 @@ def messages(tmp_path, rows, **options):
 
 
 def test_check_tells_of_each_kind_of_place(tmp_path):
-    found = messages(tmp_path, "Q,200,,M-999,\nQ,200,,M-100,\nQ,300,Tansi,,\nQ,300,Tansy,,\nQ,400,,,C3\nQ,4,,,C-3\n")
+    found = messages(
+        tmp_path, "Q,200,,M-999,\nQ,200,,M-100,\nQ,300,Tansi,,\nQ,300,Tansy,,\nQ,400,,,C3\nQ,4,,,C-3\n"
+    )
     assert found[0].startswith('1 row is for a section that is not there: "M-999" (the nearest is "M-')
     assert found[1] == '1 row is for a stream that is not there: "Tansi" (the nearest is "Tansy")'
     assert found[2] == '1 row is for a crossing that is not there: "C3" (the nearest is "C-3")'
