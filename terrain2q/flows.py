@@ -227,9 +227,15 @@ def _read_csv(path: Path, flow_factor: float, length_factor: float) -> list[Flow
     try:
         with path.open(newline="", encoding="utf-8-sig") as file:
             reader = csv.reader(file)
-            rows = [(reader.line_num, [cell.strip() for cell in row]) for row in reader if any(row)]
+            rows = [
+                (reader.line_num, [cell.strip() for cell in row])
+                for row in reader
+                if any(c.strip() for c in row)
+            ]
     except (OSError, UnicodeDecodeError, csv.Error) as error:
-        raise InputError("file-unreadable", f"the flows cannot be read: {error}", where=str(path)) from None
+        fix = "save the table in UTF-8" if isinstance(error, UnicodeDecodeError) else ""
+        what = f"the flows cannot be read: {error}"
+        raise InputError("file-unreadable", what, where=str(path), fix=fix) from None
     if not rows:
         raise InputError("layer-empty", "the table of flows is empty", where=str(path), fix=_HEADER_FIX)
     header_line, header = rows[0]

@@ -26,7 +26,7 @@ from terrain2q.batches.run import answer_lines, in_order
 from terrain2q.batches.work import BATCH, LAYER_NAMES, Part, Work, cores, is_failed, plan_batches
 from terrain2q.columns import CAUTION
 from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError, worst_first
-from terrain2q.flows import Flow, event_names, flows_of_nowhere, read_flows
+from terrain2q.flows import Flow, event_names, flow_for, flows_of_nowhere, read_flows
 from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
 from terrain2q.ground.layers import read_layer, require_field, split_spec
@@ -132,6 +132,14 @@ class Results:
         if not len(stages):
             return self.layers["ratings"]["section_id"].nunique()
         return stages.loc[stages["status"] != FAILED, "section_id"].nunique()
+
+    @property
+    def failed_widths(self) -> int:
+        """How many sections have no bench that passes some event, where benches are asked for."""
+        widths = self.layers.get("required_widths")
+        if widths is None:
+            return 0
+        return widths.loc[widths["status"] == FAILED, "section_id"].nunique()
 
     @property
     def failed_crossings(self) -> int:
@@ -562,6 +570,35 @@ def _extent_events(study: Study, flows: Sequence[Flow]) -> tuple[str, ...]:
     return tuple(event for event in known if event in wanted)
 
 
+def _check_bench_event(study: Study, flows: Sequence[Flow]) -> None:
+    """Say no where a bench is asked for an event that no flow has."""
+    known = event_names(flows)
+    if study.bench is None or study.bench.event is None or not known or study.bench.event in known:
+        return
+    raise InputError(
+        "value-not-allowed",
+        f"no flow has the event {study.bench.event!r}",
+        where="[bench] event",
+        fix=f"the flows have {', '.join(map(repr, known))}",
+    )
+
+
+def _missing_flows(inputs: _Inputs, flows: Sequence[Flow]) -> list[Finding]:
+    """Return a finding for each cut line to which no discharge of some event applies."""
+    names = event_names(flows)
+    everywhere = {f.event for f in flows if not (f.stream or f.section or f.crossing)}
+    names = [name for name in names if name not in everywhere]
+    found = []
+    for line in inputs.lines if names else ():
+        lacks = [
+            n for n in names if flow_for(flows, n, line.section_id, line.stream, line.stream_distance) is None
+        ]
+        if lacks:
+            message = f"{', '.join(lacks)}: no discharge is given for it"
+            found.append(Finding("flow-missing", message, "cut_lines", line.section_id))
+    return found
+
+
 def _map_floods(study: Study, events, flows, inputs: _Inputs, answers, progress) -> FloodMap:
     from terrain2q.jobs.extent import ExtentInputs, FloodMap, map_floods
 
@@ -658,10 +695,18 @@ def check_study(study: Study, progress: Progress | None = None) -> list[Finding]
     InputError
         An input is wrong.
     """
+    from terrain2q.ground.observed import read_observations
+
     flows = read_flows(study)
     _extent_events(study, flows)
+    _check_bench_event(study, flows)
     inputs = _read_inputs(study)
     inputs.findings.extend(_flow_findings(study, inputs, flows))
+    inputs.findings.extend(_missing_flows(inputs, flows))
+    if study.observed is not None:
+        ids = [line.section_id for line in inputs.lines]
+        crs = inputs.sections.terrain.crs
+        inputs.findings.extend(read_observations(study.observed.path, study.system, ids, crs)[1])
     built = build_sections(inputs.lines, inputs.sections, progress or _silent)
     about_crossings = _check_crossings(study, inputs, flows)
     return _all_findings(inputs, [f for b in built for f in b.findings], about_crossings)
@@ -683,7 +728,8 @@ def run_study(
     progress : callable, optional
         ``progress(done, total, label)``.
     widths : bool
-        Find the required benches too, with their layer and pictures; the study must have [bench].
+        Whether the required benches are what is asked for; the study must have [bench]. They are found
+        for every study that has [bench] and flows.
     jobs : int, optional
         Processes that work on the sections and crossings of a large study; one a core if left out.
     scheduler : str, optional
@@ -700,6 +746,8 @@ def run_study(
     check_output(folder, study.output.overwrite)
     flows = read_flows(study)
     events = _extent_events(study, flows)
+    _check_bench_event(study, flows)
+    widths = widths or (study.bench is not None and bool(flows))
     jobs = jobs or cores()
     who = _Workers(jobs, scheduler)
     earlier = files_of_record(folder)

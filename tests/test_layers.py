@@ -338,3 +338,13 @@ def test_only_shapes_with_heights_or_measures_are_made_anew():
     assert shapely.equals_exact(flat[:5], shapely.force_2d(shapes[:5])).all()
     assert flat[0] is shapes[0]
     assert shapely.get_coordinate_dimension(shapes).tolist() == [2, 3, 3, 4, 2, -1]
+
+
+def test_semicolons_with_decimal_commas_are_named(tmp_path):
+    path = tmp_path / "roughness.csv"
+    path.write_text("class;n\npasture;0,035\nforest;0,1\n", encoding="utf-8-sig")
+    with pytest.raises(InputError) as caught:
+        read_table(path, ("class", "n"), "land-cover table")
+    assert caught.value.code == "file-unreadable"
+    assert "semicolons" in caught.value.what
+    assert caught.value.fix == "separate the columns with commas, and write decimals with a point"
