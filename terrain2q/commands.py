@@ -427,7 +427,8 @@ def run(
     else:
         click.echo(results.summary_text())
     answered = results.answered_sections + results.answered_crossings
-    if not answered or (strict and results.failed_sections + results.failed_crossings):
+    failed = results.failed_sections + results.failed_crossings + results.failed_widths
+    if not answered or (strict and failed):
         return NO_ANSWER
     return DONE
 
@@ -438,8 +439,9 @@ def run(
 def size(ctx: click.Context, study_path: Path | None, as_json: bool, strict: bool) -> int:
     """Find the widths of a bench required to pass each flow within a stage.
 
-    Does all that `run` does, and cuts the bench that [bench] describes into each section until the section
-    passes the flow: the layer required_widths, and benches.pdf with each section before and after.
+    Cuts the bench that [bench] describes into each section until the section passes the flow: the layer
+    required_widths, and benches.pdf with each section before and after. It does all that `run` does, and
+    prints the widths first.
 
     \b
     Examples:

@@ -119,6 +119,7 @@ CATALOGUE: MappingProxyType[str, Kind] = MappingProxyType({
     "bed-below-water": Kind(NOTE, "The channel was deepened below the water that the terrain shows", "Check the depth against a survey."),
     "water-not-found": Kind(NOTE, "No level water was found in a channel that was to be deepened", "Look at the section; where the channel is narrower than about four stations, lower its bed in the terrain or give a smaller `spacing`."),
     "flow-missing": Kind(FAILED, "No design flow applies to a section", "Add a row for this stream or section to the flows."),
+    "flow-place-unknown": Kind(DOUBTFUL, "Rows of the flows name a place that the study does not have", "Correct the name, or take the row away."),
     "drainage-area-missing": Kind(DOUBTFUL, "A section has no drainage area where one is needed", "Fill in the field of the cut lines."),
     "drainage-area-far": Kind(DOUBTFUL, "A discharge was carried over to a very different drainage area", "Use a flow estimate nearer to the section; a ratio of areas from 0.5 to 1.5 is common practice."),
     "above-section-ends": Kind(DOUBTFUL, "Water stands above an end of the section", "Lengthen the line to higher ground; the stage is on the high side."),

@@ -478,6 +478,14 @@ WRITTEN: MappingProxyType[str, tuple[str, str, str]] = MappingProxyType(
             "There is no discharge to find a stage for. The section keeps its row with empty numbers.",
             "Flows given for `Mill Creek` and a section on `Mill Creek tributary`.",
         ),
+        "flow-place-unknown": (
+            "Rows of the flows are for a section or stream whose id no cut line or stream has. They are not"
+            " used.",
+            "The place that was meant gets a discharge of a more general row, or none; its stage is then"
+            " that of another flow.",
+            "A row for section `12` where the cut lines are `A-12`; a table of a county and a study of one of"
+            " its streams.",
+        ),
         "drainage-area-missing": (
             "The field with the drainage area is empty for this cut line, or holds no number above zero.",
             "A discharge is then taken as it is given, and a depth below water by drainage area cannot be"

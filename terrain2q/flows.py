@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import csv
+import difflib
 import math
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from terrain2q.errors import InputError, raise_together
+from terrain2q.errors import Finding, InputError, raise_together
 
 if TYPE_CHECKING:
     from terrain2q.study import Study
@@ -179,13 +180,61 @@ def flow_for(
     return best
 
 
+def flows_of_nowhere(
+    flows: Sequence[Flow],
+    sections: Collection[str] | None = None,
+    streams: Collection[str] | None = None,
+) -> list[Finding]:
+    """Return a finding for each kind of place that rows of the flows name and the study does not have.
+
+    Parameters
+    ----------
+    flows : sequence of Flow
+    sections, streams : collection of str, optional
+        The ids there are; None where rows for such places are none of this study's business.
+
+    Examples
+    --------
+    >>> [f.message for f in flows_of_nowhere([Flow("a", 1.0, section="A1")], ["A-1", "B-1"])]
+    ['1 row is for a section that is not there: "A1" (the nearest is "A-1")']
+    """
+    found = []
+    for kind, known in (("section", sections), ("stream", streams)):
+        if known is None:
+            continue
+        ids = dict.fromkeys(known)
+        lost = [name for flow in flows if (name := getattr(flow, kind)) and name not in ids]
+        if not lost:
+            continue
+        names = list(dict.fromkeys(lost))
+        shown = []
+        for name in names[:_SHOWN]:
+            near = difflib.get_close_matches(name, ids, n=1, cutoff=0.0)
+            shown.append(f'"{name}" (the nearest is "{near[0]}")' if near else f'"{name}"')
+        more = f" and {len(names) - _SHOWN} more" if len(names) > _SHOWN else ""
+        rows = "1 row is" if len(lost) == 1 else f"{len(lost)} rows are"
+        message = f"{rows} for a {kind} that is not there: {', '.join(shown)}{more}"
+        found.append(Finding("flow-place-unknown", message, "flows"))
+    return found
+
+
+_SHOWN = 5
+"""Names shown in one finding."""
+
+
 def _read_csv(path: Path, flow_factor: float, length_factor: float) -> list[Flow]:
     try:
         with path.open(newline="", encoding="utf-8-sig") as file:
             reader = csv.reader(file)
-            rows = [(reader.line_num, [cell.strip() for cell in row]) for row in reader if any(row)]
+            rows = [
+                (reader.line_num, [cell.strip() for cell in row])
+                for row in reader
+                if any(c.strip() for c in row)
+            ]
     except (OSError, UnicodeDecodeError, csv.Error) as error:
-        raise InputError("file-unreadable", f"the flows cannot be read: {error}", where=str(path)) from None
+        fix = "save the table in UTF-8" if isinstance(error, UnicodeDecodeError) else ""
+        what = f"the flows cannot be read: {error}"
+        raise InputError("file-unreadable", what, where=str(path), fix=fix) from None
     if not rows:
         raise InputError("layer-empty", "the table of flows is empty", where=str(path), fix=_HEADER_FIX)
     header_line, header = rows[0]

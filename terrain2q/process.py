@@ -7,7 +7,7 @@ import os
 import time
 from collections import Counter
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from contextlib import closing, suppress
+from contextlib import ExitStack, closing, suppress
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, NamedTuple
@@ -26,7 +26,7 @@ from terrain2q.batches.run import answer_lines, in_order
 from terrain2q.batches.work import BATCH, LAYER_NAMES, Part, Work, cores, is_failed, plan_batches
 from terrain2q.columns import CAUTION
 from terrain2q.errors import FAILED, SEVERITIES, Finding, InputError, worst_first
-from terrain2q.flows import Flow, event_names, read_flows
+from terrain2q.flows import Flow, event_names, flow_for, flows_of_nowhere, read_flows
 from terrain2q.ground.cover import ChannelPolygons, Cover, RoughnessTable, UniformCover
 from terrain2q.ground.cut_lines import CutLine, orient_cut_lines
 from terrain2q.ground.layers import read_layer, require_field, split_spec, texts_in
@@ -52,6 +52,7 @@ from terrain2q.output.run_record import (
     run_record,
     write_run_record,
 )
+from terrain2q.output.whole_file import whole_folder
 from terrain2q.study import Study, load_study
 from terrain2q.units import UnitSystem
 
@@ -131,6 +132,14 @@ class Results:
         if not len(stages):
             return self.layers["ratings"]["section_id"].nunique()
         return stages.loc[stages["status"] != FAILED, "section_id"].nunique()
+
+    @property
+    def failed_widths(self) -> int:
+        """How many sections have no bench that passes some event, where benches are asked for."""
+        widths = self.layers.get("required_widths")
+        if widths is None:
+            return 0
+        return widths.loc[widths["status"] == FAILED, "section_id"].nunique()
 
     @property
     def failed_crossings(self) -> int:
@@ -410,6 +419,14 @@ def _read_inputs(study: Study) -> _Inputs:
     return _Inputs(lines, sections, out_crs, findings, streams)
 
 
+def _flow_findings(study: Study, inputs: _Inputs, flows: Sequence[Flow]) -> list[Finding]:
+    """Return what is to know about the places that the flows name; those of crossings are told with them."""
+    # the flows of a study of crossings alone may name the sections of another study, and the other way
+    sections = None if study.cut_lines is None else [line.section_id for line in inputs.lines]
+    streams = [] if inputs.streams is None else inputs.streams["feature_id"].unique().tolist()
+    return flows_of_nowhere(flows, sections, streams)
+
+
 def _cut_line_fields(study: Study) -> list[tuple[str, str]]:
     """Return key and name of every field that the cut lines must have."""
     named = [
@@ -579,6 +596,35 @@ def _extent_events(study: Study, flows: Sequence[Flow]) -> tuple[str, ...]:
     return tuple(event for event in known if event in wanted)
 
 
+def _check_bench_event(study: Study, flows: Sequence[Flow]) -> None:
+    """Say no where a bench is asked for an event that no flow has."""
+    known = event_names(flows)
+    if study.bench is None or study.bench.event is None or not known or study.bench.event in known:
+        return
+    raise InputError(
+        "value-not-allowed",
+        f"no flow has the event {study.bench.event!r}",
+        where="[bench] event",
+        fix=f"the flows have {', '.join(map(repr, known))}",
+    )
+
+
+def _missing_flows(inputs: _Inputs, flows: Sequence[Flow]) -> list[Finding]:
+    """Return a finding for each cut line to which no discharge of some event applies."""
+    names = event_names(flows)
+    everywhere = {f.event for f in flows if not (f.stream or f.section or f.crossing)}
+    names = [name for name in names if name not in everywhere]
+    found = []
+    for line in inputs.lines if names else ():
+        lacks = [
+            n for n in names if flow_for(flows, n, line.section_id, line.stream, line.stream_distance) is None
+        ]
+        if lacks:
+            message = f"{', '.join(lacks)}: no discharge is given for it"
+            found.append(Finding("flow-missing", message, "cut_lines", line.section_id))
+    return found
+
+
 def _map_floods(study: Study, events, flows, inputs: _Inputs, answers, progress) -> FloodMap:
     from terrain2q.jobs.extent import ExtentInputs, FloodMap, map_floods
 
@@ -675,12 +721,21 @@ def check_study(study: Study, progress: Progress | None = None) -> list[Finding]
     InputError
         An input is wrong.
     """
+    from terrain2q.ground.observed import read_observations
+
     flows = read_flows(study)
     _extent_events(study, flows)
+    _check_bench_event(study, flows)
     inputs = _read_inputs(study)
+    inputs.findings.extend(_flow_findings(study, inputs, flows))
+    inputs.findings.extend(_missing_flows(inputs, flows))
+    if study.observed is not None:
+        ids = [line.section_id for line in inputs.lines]
+        crs = inputs.sections.terrain.crs
+        inputs.findings.extend(read_observations(study.observed.path, study.system, ids, crs)[1])
     built = build_sections(inputs.lines, inputs.sections, progress or _silent)
-    about = _check_crossings(study, inputs, flows)
-    return _all_findings(inputs, [f for b in built for f in b.findings], about)
+    about_crossings = _check_crossings(study, inputs, flows)
+    return _all_findings(inputs, [f for b in built for f in b.findings], about_crossings)
 
 
 def run_study(
@@ -699,7 +754,8 @@ def run_study(
     progress : callable, optional
         ``progress(done, total, label)``.
     widths : bool
-        Find the required benches too, with their layer and pictures; the study must have [bench].
+        Whether the required benches are what is asked for; the study must have [bench]. They are found
+        for every study that has [bench] and flows.
     jobs : int, optional
         Processes that work on the sections and crossings of a large study; one a core if left out.
     scheduler : str, optional
@@ -716,47 +772,56 @@ def run_study(
     check_output(folder, study.output.overwrite)
     flows = read_flows(study)
     events = _extent_events(study, flows)
+    _check_bench_event(study, flows)
+    widths = widths or (study.bench is not None and bool(flows))
     jobs = jobs or cores()
     who = _Workers(jobs, scheduler)
-    with closing(_crew(study, jobs, scheduler)) as crew, hashed_ahead(_files_of(study)):
+    earlier = files_of_record(folder)
+    with ExitStack() as helpers:
+        crew = helpers.enter_context(closing(_crew(study, jobs, scheduler)))
+        helpers.enter_context(hashed_ahead(_files_of(study)))
         inputs = _read_inputs(study)
+        inputs.findings.extend(_flow_findings(study, inputs, flows))
         # the flood extent and the benches need the answers themselves, the layers only their rows
         work, batches, kept = _begin(study, inputs, flows, not (events or widths), progress)
         parts = answer_lines(work, inputs.lines, batches, kept, jobs, scheduler, progress, crew)
         try:
-            if work.as_layers:
-                made = _finish_rows(study, inputs, flows, parts, progress, who)
-            else:
-                made = _finish_answers(study, inputs, flows, events, widths, parts, progress, who)
+            # results and pages come into the folder together: one without the other would be half a run
+            with whole_folder(folder, first=[RESULT_NAME], last=[RECORD_NAME]) as place:
+                if work.as_layers:
+                    made = _finish_rows(study, inputs, flows, parts, progress, who, place)
+                else:
+                    made = _finish_answers(study, inputs, flows, events, widths, parts, progress, who, place)
+                helpers.close()
+                record = run_record(
+                    inputs=study.inputs(),
+                    settings=study.as_dict(),
+                    units=study.system.name,
+                    crs=inputs.crs.to_string(),
+                    counts=made.counts,
+                    findings=made.findings,
+                    seconds=time.perf_counter() - began,
+                    outputs=made.files,
+                    earlier=earlier,
+                )
+                for entry in record["outputs"]:
+                    entry["path"] = str(folder / Path(entry["path"]).name)
+                write_run_record(place / RECORD_NAME, record)
+                pages = write_pages(place, study.as_dict()["output"])
         except InputError:
             if kept is not None:
                 kept.remove(all_new=True)
             raise
     if kept is not None:
         kept.remove()
-    record = folder / RECORD_NAME
-    write_run_record(
-        record,
-        run_record(
-            inputs=study.inputs(),
-            settings=study.as_dict(),
-            units=study.system.name,
-            crs=inputs.crs.to_string(),
-            counts=made.counts,
-            findings=made.findings,
-            seconds=time.perf_counter() - began,
-            outputs=made.files,
-            earlier=made.earlier,
-        ),
-    )
-    pages = write_pages(folder, study.as_dict()["output"])
-    files = (*made.files, record, *pages)
+    pages = [folder / path.name for path in pages]
+    files = (*(folder / path.name for path in made.files), folder / RECORD_NAME, *pages)
     # only now that all is there: what a run before wrote and this one did not would be taken for its own
-    left = remove_earlier(folder, made.earlier, files)
+    left = remove_earlier(folder, earlier, files)
     note_pages(folder, pages, alone=True)
     progress(1, 1, "writing")
     return Results(
-        made.layers,
+        StoredLayers(folder / RESULT_NAME, made.counts) if made.layers is None else made.layers,
         tuple(made.findings),
         study.system,
         inputs.crs,
@@ -778,14 +843,16 @@ class _Workers(NamedTuple):
 
 @dataclass(frozen=True)
 class _Made:
-    """What a run has written before its record, and what the record and the results tell of it."""
+    """What a run has written before its record, and what the record and the results tell of it.
 
-    layers: Mapping[str, pd.DataFrame]
+    Without `layers` these are to be read from the file.
+    """
+
+    layers: Mapping[str, pd.DataFrame] | None
     counts: Mapping[str, int]
     findings: list[Finding]
     failed: frozenset[str]
     files: tuple[Path, ...]
-    earlier: Sequence
 
 
 def _package(study: Study, inputs: _Inputs) -> dict:
@@ -800,13 +867,17 @@ def _package(study: Study, inputs: _Inputs) -> dict:
 
 
 def _finish_rows(
-    study: Study, inputs: _Inputs, flows, parts: Iterable[Part], progress: Progress, who: _Workers
+    study: Study,
+    inputs: _Inputs,
+    flows,
+    parts: Iterable[Part],
+    progress: Progress,
+    who: _Workers,
+    folder: Path,
 ) -> _Made:
-    """Write the rows of many sections as they come, with what there is beside them."""
-    folder = Path(study.output.folder)
+    """Write the rows of many sections as they come, with what there is beside them, into a folder."""
     package = folder / RESULT_NAME
     terrain_crs = inputs.sections.terrain.crs
-    earlier = files_of_record(folder)
     names = [*LAYER_NAMES, *(["crossings"] if study.crossings is not None else []), "findings"]
     with GeoPackageWriter(package, names, **_package(study, inputs)) as writer:
         about_sections, failed = _write_rows(writer, parts, inputs)
@@ -828,8 +899,7 @@ def _finish_rows(
         from terrain2q.screening import write_crossings
 
         about_crossings = write_crossings(screened, crossings, study, folder, *who)
-    layers = StoredLayers(package, writer.counts)
-    return _Made(layers, writer.counts, findings, failed, (package, *about_crossings), earlier)
+    return _Made(None, writer.counts, findings, failed, (package, *about_crossings))
 
 
 def _finish_answers(
@@ -841,19 +911,17 @@ def _finish_answers(
     parts: Iterable[Part],
     progress: Progress,
     who: _Workers,
+    folder: Path,
 ) -> _Made:
-    """Write what comes of the answers of all sections together."""
+    """Write what comes of the answers of all sections together into a folder."""
     from terrain2q.output.benches import PICTURES_NAME, required_widths_layer, write_benches
     from terrain2q.output.crossing_table import crossings_layer
     from terrain2q.output.rasters import flood_rasters
     from terrain2q.screening import write_crossings
 
-    folder = Path(study.output.folder)
     about_sections, answers, failed = in_order(list(parts))
     screened = _screen(study, inputs, flows, progress, who)
     terrain_crs = inputs.sections.terrain.crs
-    folder.mkdir(parents=True, exist_ok=True)
-    earlier = files_of_record(folder)
     package = folder / RESULT_NAME
     with closing(_map_floods(study, events, flows, inputs, answers, progress)) as floods:
         if floods.answers:
@@ -881,7 +949,7 @@ def _finish_answers(
     pictures = [] if not sized else write_benches(folder / PICTURES_NAME, sized, study.system)
     files = (package, *rasters, *about_crossings, *pictures)
     counts = {name: len(table) for name, table in layers.items()}
-    return _Made(layers, counts, findings, failed, files, earlier)
+    return _Made(layers, counts, findings, failed, files)
 
 
 def run(

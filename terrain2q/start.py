@@ -82,7 +82,7 @@ class Found:
     values : dict of str to Value
         By ``table.key``.
     unused : tuple of str
-        Data recognised as something that no key takes, or not recognised, each with a reason.
+        Data that the study file does not name, each with the reason or with the key that may take it.
     missing : tuple of str
         What a run still needs, in words.
     """
@@ -222,6 +222,8 @@ def _tables(files: Sequence[Path], folder: Path, unused: list[str]) -> dict[str,
             values[name] = Value(_relative(path, folder), f"has the columns {what}")
         else:
             reason = f"{values[name].value} was taken" if name else "no columns event, discharge or class, n"
+            if not name and {"section", "stage", "discharge"} <= header:
+                reason = "observed stages; observed.path may take them"
             unused.append(f"{_relative(path, folder)}: {reason}")
     return values
 
@@ -381,7 +383,9 @@ def _layers(
     found |= _cover_and_channel(polygons, folder, values, unused)
     found |= _streams_and_cut_lines(lines, unused)
     for layer in layers:
-        if layer.kind not in ("polygon", "line"):
+        if layer.kind == "points":
+            unused.append(f"{layer.spec}: points; crossings.path or observed.path may take them")
+        elif layer.kind not in ("polygon", "line"):
             unused.append(f"{layer.spec}: {layer.kind}, which no key takes")
     return found
 
@@ -491,7 +495,7 @@ def _streams_and_cut_lines(lines: Sequence[_Layer], unused: list[str]) -> dict[s
             roles["cut_lines"] = layer
             found["cut_lines.path"] = Value(layer.spec, "lines named like cut lines")
         elif _has_word(layer.name, ROAD_WORDS):
-            unused.append(f"{layer.spec}: by its name roads, which no key takes")
+            unused.append(f"{layer.spec}: by its name roads; crossings.roads may take them")
         elif _has_word(layer.name, STREAM_WORDS) and "streams" not in roles:
             roles["streams"] = layer
             found["streams.path"] = Value(layer.spec, "lines named like streams")

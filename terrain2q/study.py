@@ -317,7 +317,8 @@ class FlowsTable(Table):
     either = (("path", "events"), ("events", "area_field"))
     only_with = MappingProxyType({"exponent": "area_field"})
     path: Path | None = key(
-        "CSV with the columns event, discharge and optionally probability, stream, section, distance, area",
+        "CSV with the columns event, discharge and optionally probability, stream, section, distance, "
+        "crossing, area, volume",
         "file", '"flows.csv"',
     )  # fmt: skip
     events: Mapping[str, float] | None = key(
@@ -441,7 +442,7 @@ class CrossingsTable(Table):
 
 @dataclass(frozen=True)
 class BenchTable(Table):
-    """A bench to be cut beside the channel; `terrain2q size` finds the width required to pass each flow."""
+    """A bench to be cut beside the channel; `run` and `size` find the width required to pass each flow."""
 
     base: float = key(
         "height of the bench's floor above the lowest ground",

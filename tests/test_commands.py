@@ -62,7 +62,7 @@ def call(capsys):
 class Results(types.SimpleNamespace):
     """What a run hands back, as far as the commands look at it."""
 
-    answered_crossings = failed_crossings = 0
+    answered_crossings = failed_crossings = failed_widths = 0
 
     def summary(self):
         return {"sections": self.answered_sections, "seconds": float("nan")}

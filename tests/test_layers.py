@@ -369,3 +369,13 @@ def test_of_a_large_layer_what_is_near_is_read(tmp_path, monkeypatch, crs, kind)
     # where nothing is near, the whole is there to tell
     far = read_layer(tmp_path / f"a.{kind}", **(options | {"within": (6e5, 4.8e6, 6.1e5, 4.81e6)}))
     assert len(far) == 1600
+
+
+def test_semicolons_with_decimal_commas_are_named(tmp_path):
+    path = tmp_path / "roughness.csv"
+    path.write_text("class;n\npasture;0,035\nforest;0,1\n", encoding="utf-8-sig")
+    with pytest.raises(InputError) as caught:
+        read_table(path, ("class", "n"), "land-cover table")
+    assert caught.value.code == "file-unreadable"
+    assert "semicolons" in caught.value.what
+    assert caught.value.fix == "separate the columns with commas, and write decimals with a point"

@@ -220,6 +220,40 @@ def test_size_gives_widths_for_every_section_and_event_of_the_sample(tmp_path, c
         assert database.execute(names).fetchall() == [("LINESTRING",)]
 
 
+def test_run_finds_the_benches_that_a_study_asks_for(tmp_path, capsys):
+    options = ["--output.folder", tmp_path, "--output.report", "false", "--output.sheets", "none"]
+    options += ["--bench.event", "10-year", "--strict"]
+    with pytest.raises(SystemExit) as stopped:
+        main(["run", str(SAMPLE / "study.toml"), "--json", *map(str, options)])
+    told = json.loads(capsys.readouterr().out)
+    assert stopped.value.code == 0
+    assert told["rows"]["required_widths"] == 2 * told["sections"]
+    assert (tmp_path / "benches.pdf").exists()
+    # a flow that no bench passes is a feature without an answer
+    options += ["--flows.events", "10-year=3000000", "--output.overwrite", "true"]
+    with pytest.raises(SystemExit) as stopped:
+        main(["run", str(SAMPLE / "study.toml"), "--json", *map(str, options)])
+    assert stopped.value.code == 3
+
+
+@pytest.mark.parametrize("command", ["check", "run", "size"])
+def test_a_bench_for_an_event_that_no_flow_has_is_refused(tmp_path, capsys, command):
+    with pytest.raises(SystemExit) as stopped:
+        main(
+            [
+                command,
+                str(SAMPLE / "study.toml"),
+                "--bench.event",
+                "5-year",
+                "--output.folder",
+                str(tmp_path / "o"),
+            ]
+        )
+    assert stopped.value.code == 2
+    assert "no flow has the event '5-year'" in capsys.readouterr().err
+    assert not (tmp_path / "o").exists()
+
+
 def test_size_needs_a_bench_and_flows(tmp_path, capsys):
     text = (SAMPLE / "study.toml").read_text(encoding="utf-8")
     for name in ("valley.tif", "valley.gpkg", "roughness.csv", "flows.csv"):

@@ -37,8 +37,8 @@ def test_a_whole_folder_becomes_a_study_that_loads(tmp_path):
     assert study.slope.field == "bed_slope"
     assert study.flows.path == folder / "flows.csv"
     assert found.unused == (
-        "data.gpkg|layer=roads: by its name roads, which no key takes",
-        "data.gpkg|layer=wells: points, which no key takes",
+        "data.gpkg|layer=roads: by its name roads; crossings.roads may take them",
+        "data.gpkg|layer=wells: points; crossings.path or observed.path may take them",
     )
 
 

@@ -406,6 +406,7 @@ def test_the_study_wins_over_the_raster_and_a_finding_says_so(tmp_path):
     assert terrain.metres_per_unit == 0.3048
     assert [finding.code for finding in terrain.findings] == ["elevation-unit-contradicted"]
     assert "'ft'" in terrain.findings[0].message
+    assert terrain.findings[0].layer == "terrain"
     assert Terrain(path, elevation_unit="m").findings == []
 
 

@@ -461,6 +461,15 @@ def read_table(
             "layer-empty", f"{path.name} is empty", where=where, fix="give a table with rows"
         ) from None
     except pandas.errors.ParserWarning as error:
+        with path.open(encoding="utf-8-sig") as file:
+            semicolons = ";" in (header := file.readline()) and "," not in header
+        if semicolons:
+            raise InputError(
+                "file-unreadable",
+                f"{path.name} has semicolons between its columns, and commas in its rows",
+                where=where,
+                fix="separate the columns with commas, and write decimals with a point",
+            ) from error
         raise InputError("file-unreadable", f"{path.name}: {error}", where=where) from error
     except (ValueError, OSError) as error:  # the parser's errors and a wrong encoding are ValueErrors
         raise InputError(

@@ -219,7 +219,8 @@ class Terrain:
                             "elevation-unit-contradicted",
                             f"the study says that elevations are in {asked!r}; {unit.source} of the raster "
                             f"says a unit of {unit.metres:.7g} m",
-                            layer=tile.path,
+                            layer="terrain",
+                            feature_id=str(tile.path),
                         )
                     )
                     break

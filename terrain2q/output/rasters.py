@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import os
 import re
+import unicodedata
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager, suppress
 from pathlib import Path
@@ -31,6 +32,10 @@ FINENESS = 1024
 """Values are kept to this part of their unit, a millimetre or less: finer digits only fill the file."""
 
 
+_MOST_LETTERS = 60
+"""Of an event's name in a file's: file systems take 255 bytes for the whole."""
+
+
 def file_words(events: Sequence[str]) -> dict[str, str]:
     """Return for each event a word that any file system takes, no two alike.
 
@@ -38,11 +43,15 @@ def file_words(events: Sequence[str]) -> dict[str, str]:
     --------
     >>> file_words(["10-year", "1 % chance", "1 ? chance"])
     {'10-year': '10-year', '1 % chance': '1_chance', '1 ? chance': '1_chance_2'}
+    >>> file_words(["Crue décennale"])
+    {'Crue décennale': 'Crue_decennale'}
     """
     words: dict[str, str] = {}
     taken: set[str] = set()
     for event in events:
-        plain = re.sub(r"[^A-Za-z0-9.-]+", "_", event).strip("._") or "event"
+        # a letter without its accents says more than none
+        letters = "".join(c for c in unicodedata.normalize("NFKD", event) if not unicodedata.combining(c))
+        plain = re.sub(r"[^A-Za-z0-9.-]+", "_", letters)[:_MOST_LETTERS].strip("._") or "event"
         word, number = plain, 1
         while word.lower() in taken:
             number += 1

@@ -1,4 +1,4 @@
-"""A file is there whole or not at all: written beside its place, then renamed into it."""
+"""Files are there whole or not at all: written beside their places, then renamed into them."""
 
 from __future__ import annotations
 
@@ -6,8 +6,11 @@ import os
 import platform
 import re
 import secrets
+import shutil
+import signal
+import threading
 import time
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager, suppress
 from pathlib import Path
 
@@ -64,6 +67,90 @@ def whole_file(path: str | os.PathLike) -> Iterator[Path]:
                 left.unlink()
 
 
+_FOLDER_MARK = ".unfinished.partial-"
+
+
+@contextmanager
+def whole_folder(
+    folder: str | os.PathLike, first: Sequence[str] = (), last: Sequence[str] = ()
+) -> Iterator[Path]:
+    """Give an empty folder within `folder`; move its files up into `folder` when the block ends well.
+
+    Where the block raises, `folder` is as it was: without the new files, and not there at all where it was
+    not there before and nothing else was put into it. An interruption by the keyboard that comes while the
+    files are moved waits until all are in their places. What a killed run left is removed by the next.
+
+    Parameters
+    ----------
+    folder : path
+        Made where it is not there. Files with the names of new ones are replaced.
+    first, last : sequence of str
+        Names of the files that are moved before, and after, all others: one that is open elsewhere stops
+        the rest where it goes first; one that speaks of the others goes last.
+
+    Yields
+    ------
+    pathlib.Path
+        Where to write.
+
+    Raises
+    ------
+    OutputError
+        The folder cannot be written, or a file cannot be replaced (code ``output-not-writable``).
+    """
+    target = Path(folder)
+    made = [path for path in (target, *target.parents) if not path.exists()]
+    try:
+        target.mkdir(parents=True, exist_ok=True)
+        _remove_stale_folders(target)
+        inner = target / f"{_FOLDER_MARK}{_host()}-{os.getpid()}-{secrets.token_hex(4)}"
+        inner.mkdir()
+    except OSError as error:
+        raise not_writable(target, error) from error
+    try:
+        yield inner
+        files = sorted(path for path in inner.iterdir() if path.is_file())
+        files.sort(key=lambda path: (path.name in last, path.name not in first))
+        with _uninterrupted():
+            for path in files:
+                try:
+                    path.replace(target / path.name)
+                except OSError as error:
+                    raise not_writable(target / path.name, error) from error
+            if os.name == "posix":
+                _flush_to_disk(target)
+    except OutputError as error:
+        # said of the place that the user knows
+        error.where = error.where.replace(str(inner), str(target))
+        raise
+    finally:
+        shutil.rmtree(inner, ignore_errors=True)
+        for path in made:
+            # stops at the first that holds something
+            with suppress(OSError):
+                path.rmdir()
+
+
+@contextmanager
+def _uninterrupted() -> Iterator[None]:
+    """Let an interruption by the keyboard wait until the block has ended."""
+    if threading.current_thread() is not threading.main_thread():
+        yield  # another thread is not interrupted, and may not say what is
+        return
+    came = []
+    before = signal.getsignal(signal.SIGINT)
+    if before is None:  # set by something other than Python
+        yield
+        return
+    signal.signal(signal.SIGINT, lambda *about: came.append(about))
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGINT, before)
+    if came and callable(before):
+        before(*came[0])
+
+
 def not_writable(target: Path, error: BaseException) -> OutputError:
     """Return the error that says why `target` cannot be written."""
     reason = getattr(error, "strerror", None) or str(error)
@@ -97,6 +184,18 @@ def _remove_stale(target: Path) -> None:
             old = time.time() - found.stat().st_mtime > _STALE_SECONDS
             if old or (match[1] == _host() and not _is_running(int(match[2]))):
                 found.unlink()
+
+
+def _remove_stale_folders(target: Path) -> None:
+    pattern = re.compile(re.escape(_FOLDER_MARK) + r"(\w+)-(\d+)-[0-9a-f]{8}")
+    for found in target.glob(f"{_FOLDER_MARK}*"):
+        match = pattern.fullmatch(found.name)
+        if match is None or not found.is_dir():
+            continue
+        with suppress(FileNotFoundError):
+            old = time.time() - found.stat().st_mtime > _STALE_SECONDS
+            if (match[1] == _host() and not _is_running(int(match[2]))) or (old and match[1] != _host()):
+                shutil.rmtree(found, ignore_errors=True)
 
 
 def _is_running(process: int) -> bool:
