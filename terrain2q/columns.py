@@ -162,7 +162,7 @@ LAYERS: MappingProxyType[str, Layer] = _by_name(
         "required_widths",
         "LineString",
         "Required widths",
-        "One row for each side of a section at an event; only from `terrain2q size`.",
+        "One row for each side of a section at an event; of a study with [bench] and flows.",
         ("section_id", "event", "discharge", "stage", "side", "width", "discharge_before", "status"),
         "The bench in plan, from the channel bank to the top of its outer slope; empty where none is needed.",
     ),

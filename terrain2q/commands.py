@@ -9,8 +9,10 @@ is imported inside the commands, so that help answers at once.
 
 from __future__ import annotations
 
+import atexit
 import json
 import math
+import signal
 import sys
 import time
 from collections.abc import Callable, Iterator, Sequence
@@ -70,12 +72,23 @@ class _Program(click.Group):
                 _print_json({"errors": [one.as_dict() for one in each]})
         except (click.Abort, KeyboardInterrupt):
             click.echo("Interrupted; nothing is half-written.", err=True)
+            _end_by_code()
             code = INTERRUPTED
         sys.exit(code or DONE)
 
     def list_commands(self, ctx: click.Context) -> list[str]:
         """Return the commands in the order they are used."""
         return list(self.commands)
+
+
+def _end_by_code() -> None:
+    """Let this process end by its exit code after an interruption, not by the signal.
+
+    ``python -m`` sends itself the signal at its end where an interruption, though caught, came while text was
+    run as code, as the making of a named tuple does. A signal that is held back leaves the code to be said.
+    """
+    if hasattr(signal, "pthread_sigmask"):
+        atexit.register(signal.pthread_sigmask, signal.SIG_BLOCK, {signal.SIGINT})
 
 
 class _StudyCommand(click.Command):

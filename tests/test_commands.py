@@ -287,6 +287,26 @@ def test_interrupted_by_a_signal(folder):
     assert err.strip() == "Interrupted; nothing is half-written."
 
 
+@pytest.mark.skipif(os.name != "posix", reason="the signal ends a process in POSIX alone")
+def test_interrupted_while_text_is_run_as_code(folder):
+    # a module that is run by its name would end by the signal then: 130 to a shell, -2 to other callers
+    code = (
+        "import sys, types\n"
+        "jobs = types.ModuleType('terrain2q.process')\n"
+        "def run_study(study, *, progress):\n"
+        "    exec('raise KeyboardInterrupt')\n"
+        "jobs.run_study = run_study\n"
+        "sys.modules['terrain2q.process'] = jobs\n"
+        "from terrain2q.commands import main\n"
+        "main(['run', 'study.toml'])\n"
+    )
+    (folder / "stopped.py").write_text(code, encoding="utf-8")
+    command = [sys.executable, "-m", "stopped"]
+    ended = subprocess.run(command, capture_output=True, text=True, env=ENVIRONMENT, cwd=folder)
+    assert (ended.returncode, ended.stdout) == (130, "")
+    assert ended.stderr.strip() == "Interrupted; nothing is half-written."
+
+
 # --- wrong inputs -----------------------------------------------------------------------------------
 
 
