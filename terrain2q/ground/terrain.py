@@ -7,8 +7,10 @@ laid along the lines and the elevation unit is settled.
 
 from __future__ import annotations
 
+import gc
 import os
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -540,8 +542,9 @@ class Terrain:
             # first the profiles, of arrays filled later: made beside the reading they would stop its threads
             own = list(map(slice, starts, ends))
             pieces = [map(column.__getitem__, own) for column in columns]
-            for line, *piece in zip(lines.tolist(), *pieces, strict=True):
-                profiles[line] = _profile_of(*piece)
+            with _nothing_collected():
+                for line, *piece in zip(lines.tolist(), *pieces, strict=True):
+                    profiles[line] = _profile_of(*piece)
             if elevations:
                 read()
             return
@@ -597,6 +600,18 @@ class Terrain:
         for column in columns:
             column.flags.writeable = False
         return columns, read
+
+
+@contextmanager
+def _nothing_collected() -> Iterator[None]:
+    """Make many objects without a look through all others for what can go; none of these can."""
+    was = gc.isenabled()
+    gc.disable()
+    try:
+        yield
+    finally:
+        if was:
+            gc.enable()
 
 
 def _profile_of(stations, elevations, x, y, is_vertex) -> Profile:
